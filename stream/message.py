@@ -1,0 +1,118 @@
+"""Raw messages as they come from a source, and decoded ones: the nouns Block, Source, Examples, Reject."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any, Protocol
+
+import numpy as np
+import numpy.typing as npt
+
+__all__ = ["Block", "Examples", "Message", "Reject", "Source"]
+
+Int64s = npt.NDArray[np.int64]
+Position = dict[str, Any]
+"""Where to read next, as a source understands it: JSON types only, kept whole in a checkpoint."""
+
+
+@dataclass(frozen=True, slots=True)
+class Message:
+    """One raw message. For a log, `topic` is the file and `offset` a byte position in it."""
+
+    topic: str
+    partition: int
+    offset: int
+    timestamp_ms: int | None
+    key: bytes | None
+    value: bytes
+
+
+@dataclass(frozen=True, slots=True)
+class Block:
+    """Consecutive raw messages of one partition, side by side in one buffer.
+
+    `starts`, `ends`: int64[m], byte range of each value in `buffer` (line ends excluded);
+    `offsets`: int64[m], where each message begins in its file. `buffer` holds the m values in
+    order, one per line, so that buffer[starts[0]:ends[-1]] is JSON Lines.
+    """
+
+    topic: str
+    partition: int
+    buffer: bytes
+    starts: Int64s
+    ends: Int64s
+    offsets: Int64s
+
+    def __len__(self) -> int:
+        return len(self.starts)
+
+    def value(self, row: int) -> bytes:
+        """The bytes of message `row`."""
+        return self.buffer[self.starts[row] : self.ends[row]]
+
+    def message(self, row: int) -> Message:
+        """Message `row` on its own."""
+        return Message(self.topic, self.partition, int(self.offsets[row]), None, None, self.value(row))
+
+
+@dataclass(frozen=True, slots=True)
+class Reject:
+    """A message of a block that cannot be used: which row, a reason code, and what was found.
+
+    `reason` is a fixed snake_case word (it is counted by reason); `detail` says place, value and
+    limit for a person.
+    """
+
+    row: int
+    reason: str
+    detail: str
+
+
+class Source(Protocol):
+    """Reads messages in order. `read` returns an empty block at the end of what is there.
+
+    A block never spans two files. `position` is the *next* message to read after the last
+    block returned; `seek` goes there.
+    """
+
+    def read(self, limit: int) -> Block:
+        """Up to `limit` (>= 1) further messages."""
+        ...
+
+    def position(self) -> Position:
+        """Where the next `read` begins."""
+        ...
+
+    def seek(self, position: Position) -> None:
+        """Goes to a position that `position` gave, or raises BadSettings with the difference."""
+        ...
+
+    def fraction_read(self) -> float | None:
+        """Share of the input read so far, 0 to 1; None where it cannot be known."""
+        ...
+
+    def close(self) -> None:
+        """Releases files."""
+        ...
+
+
+@dataclass(slots=True)
+class Examples:
+    """Decoded messages, column by column; a rejected message has no place here.
+
+    `rows`: int64[m], which message of the block each example is;
+    `columns`: one list of m values for each distinct path that fields and crosses read
+    (str, int, float, bool, list or None as decoded), by path;
+    `labels`: int8[m], 1, 0, or -1 without a label; `weights`: float64[m];
+    `ids`, `times`: m values when they were asked for, else empty.
+    """
+
+    rows: Int64s
+    columns: dict[str, list[Any]]
+    labels: npt.NDArray[np.int8]
+    weights: npt.NDArray[np.float64]
+    ids: list[Any] = field(default_factory=list)
+    times: list[Any] = field(default_factory=list)
+
+    def __len__(self) -> int:
+        return len(self.rows)
