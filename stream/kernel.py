@@ -10,9 +10,11 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 import numba
-from numba.core import config
+from llvmlite import ir
+from numba.core import config, types
+from numba.extending import intrinsic
 
-__all__ = ["kernel", "small"]
+__all__ = ["kernel", "load_u64", "small", "store_u64"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -52,3 +54,30 @@ def kernel(function: F) -> F:
 def small(function: F) -> F:
     """A helper that kernels call, inlined into each of them by the compiler."""
     return _compile(function, forceinline=True)
+
+
+@intrinsic
+def load_u64(typing: Any, data: Any, index: Any) -> Any:
+    """The 8 bytes of uint8[...] `data` from `index`, little-endian, at any alignment, unchecked."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        array = context.make_array(signature.args[0])(context, builder, args[0])
+        place = builder.bitcast(builder.gep(array.data, [args[1]]), ir.IntType(64).as_pointer())
+        word = builder.load(place)
+        word.align = 1
+        return word
+
+    return types.uint64(data, types.intp), generate
+
+
+@intrinsic
+def store_u64(typing: Any, data: Any, index: Any, word: Any) -> Any:
+    """Writes 8 bytes to uint8[...] `data` from `index`, little-endian, at any alignment, unchecked."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        array = context.make_array(signature.args[0])(context, builder, args[0])
+        place = builder.bitcast(builder.gep(array.data, [args[1]]), ir.IntType(64).as_pointer())
+        builder.store(args[2], place).align = 1
+        return context.get_dummy_value()
+
+    return types.void(data, types.intp, types.uint64), generate
