@@ -1,0 +1,53 @@
+"""The row of one coordinate, 32 bytes in one cache line, and its touch word: what table and learners share.
+
+    0  key     (mixed address << 1) | 1; 0 is an empty slot            (tables only)
+    1  FIRST   the learner's first float64, seen as its bits
+    2  SECOND  the learner's second float64
+    3  TOUCH   example number of the last touch << 29 | named << 28 | tally
+
+`named` tells that the token's name is in the ledger. The tally counts the learned messages that
+held the token in 28 bits: exponent e (5 bits) and count m (23 bits) stand for m * 2**e; from 2**23 on
+only every 2**e-th example number counts, which keeps the share right to a few parts in a million on
+any feed that does not repeat with a period of a power of two.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from stream.kernel import small
+
+__all__ = ["FIRST", "NAMED", "SECOND", "TOUCH", "TOUCH_SHIFT", "example_of", "tally_of", "touched"]
+
+FIRST, SECOND, TOUCH = 1, 2, 3
+TOUCH_SHIFT = np.uint64(29)
+NAMED = np.uint64(1 << 28)
+TALLY = np.uint64((1 << 28) - 1)
+EXPONENT_SHIFT = np.uint64(23)
+FULL = np.uint64(1 << 23)
+ONE = np.uint64(1)
+
+
+@small
+def touched(word: np.uint64, example: np.uint64) -> np.uint64:
+    """The touch word after example number `example` (from 1) was learned; NAMED is kept."""
+    tally = word & TALLY
+    exponent = tally >> EXPONENT_SHIFT
+    if example & ((ONE << exponent) - ONE) == np.uint64(0):
+        tally += ONE
+        if tally & (FULL - ONE) == np.uint64(0):  # m ran over into the exponent: e grew by one, m is 2**22
+            tally |= FULL >> ONE
+    return (example << TOUCH_SHIFT) | (word & NAMED) | tally
+
+
+def example_of(words: npt.NDArray[np.uint64]) -> npt.NDArray[np.uint64]:
+    """Example number of the last touch."""
+    return words >> TOUCH_SHIFT
+
+
+def tally_of(words: npt.NDArray[np.uint64]) -> npt.NDArray[np.float64]:
+    """Learned messages that held the token."""
+    tally = words & TALLY
+    count = (tally & (FULL - ONE)).astype(np.float64)
+    return np.asarray(np.ldexp(count, (tally >> EXPONENT_SHIFT).astype(np.int32)))

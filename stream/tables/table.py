@@ -1,0 +1,189 @@
+"""The table of live coordinates: addresses in, slots of rows out; bounded by admission and removal."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator
+
+import numpy as np
+import numpy.typing as npt
+
+from stream.batch import Batch
+from stream.coordinate import FIRST, NAMED, SECOND, TOUCH
+from stream.errors import CannotCreate
+from stream.settings.models import State
+from stream.tables import probing
+
+__all__ = ["Table"]
+
+SPARE = 8192
+SMALL = 1 << 22
+"""Slots up to which speed comes before memory: filled to 3/4 and doubled. Beyond, filled to 23/25 and grown by 1/32."""
+
+
+def _random_secret() -> npt.NDArray[np.uint64]:
+    """xor word, two odd multipliers, their inverses modulo 2**63. It never reaches the state."""
+    word, one, two = (int.from_bytes(os.urandom(8), "little") >> 1 for _ in range(3))
+    one, two = one | 1, two | 1
+    return np.array([word, one, two, pow(one, -1, 1 << 63), pow(two, -1, 1 << 63)], np.uint64)
+
+
+def _limit(capacity: int) -> int:
+    return capacity * 3 // 4 if capacity <= SMALL else capacity * 23 // 25
+
+
+class Table:
+    """Open addressing over 64-bit addresses; only live coordinates take memory.
+
+    `rows`: uint64[slots, 4] as in `stream.coordinate`; `floats`: the same memory as float64. Both are
+    valid until the next `admit`, `load` or `forget`.
+    """
+
+    def __init__(self, settings: State, capacity: int = 1 << 12) -> None:
+        self._settings = settings
+        self._secret = _random_secret()
+        self._capacity = capacity
+        self._filter = np.zeros(settings.admission_bytes if settings.admit_after > 1 else 1, np.uint8)
+        self._slots = np.empty(0, np.int64)
+        self.rows = np.zeros((capacity + SPARE, 4), np.uint64)
+        self.live = 0
+        self.refused = 0
+
+    @property
+    def floats(self) -> npt.NDArray[np.float64]:
+        """`rows` as float64[slots, 4]: columns FIRST and SECOND are the learner's."""
+        return self.rows.view(np.float64)
+
+    @property
+    def table_bytes(self) -> int:
+        """Memory of the rows, spare slots included."""
+        return self.rows.nbytes
+
+    @property
+    def filter_bytes(self) -> int:
+        """Memory of the admission filter; 1 when it is off."""
+        return self._filter.nbytes
+
+    def find(self, batch: Batch) -> npt.NDArray[np.int64]:
+        """Slot of each entry of the batch, -1 without state. Changes nothing. The array is reused."""
+        slots = self._slots_for(batch)
+        probing.find(
+            self.rows, np.uint64(self._capacity), self._secret, batch.addresses, 0, len(batch.addresses), slots
+        )
+        return slots
+
+    def admit(self, batch: Batch, first: int, last: int) -> tuple[npt.NDArray[np.int64], int]:
+        """Slots for the entries of examples first to last - 1, new coordinates of labelled ones admitted.
+
+        Returns the slots (int64[nnz], -1 without state; the array is reused) and the example that it
+        stopped before. The slots hold until the next call, so learn what was done, then go on from
+        there. When it stops at `first` itself, the example's new coordinates would take the table over
+        `max_live`: make room with `forget`, or go on with `admit_crowded`.
+        """
+        self._grow(int(batch.row_ptr[first + 1] - batch.row_ptr[first]))
+        return self._admit(batch, first, last, refuse=False)
+
+    def admit_crowded(self, batch: Batch, example: int) -> tuple[npt.NDArray[np.int64], int]:
+        """`admit` for one example; coordinates beyond `max_live` are refused and counted in `refused`."""
+        self._grow(int(batch.row_ptr[example + 1] - batch.row_ptr[example]))
+        return self._admit(batch, example, example + 1, refuse=True)
+
+    def forget(self, doomed: npt.NDArray[np.int64]) -> None:
+        """Takes the rows at the given slots out."""
+        if len(doomed):
+            self.rows[doomed, 0] = probing.DEAD
+            self.live -= probing.respread(self.rows, len(self.rows), np.uint64(self._capacity))
+
+    def age_filter(self) -> None:
+        """Halves every count of the admission filter."""
+        self._filter >>= 1
+
+    def occupied(self) -> tuple[npt.NDArray[np.uint64], npt.NDArray[np.int64]]:
+        """Addresses (uint64[live]) in ascending order and their slots (int64[live])."""
+        addresses = np.empty(self.live, np.uint64)
+        slots = np.empty(self.live, np.int64)
+        probing.unmixed(self.rows, len(self.rows), self._secret, addresses, slots)
+        order = np.argsort(addresses)
+        return addresses[order], slots[order]
+
+    def chunks(self, size: int = 1 << 16) -> Iterator[tuple[int, int]]:
+        """Slot ranges that cover the table, for sweeps that must not copy it whole."""
+        for begin in range(0, len(self.rows), size):
+            yield begin, min(begin + size, len(self.rows))
+
+    def state(self) -> dict[str, npt.NDArray[np.generic]]:
+        """Everything needed to go on, sorted by address; free of slots, capacity and secret."""
+        addresses, slots = self.occupied()
+        floats = self.floats
+        arrays: dict[str, npt.NDArray[np.generic]] = {
+            "addresses": addresses,
+            "first": floats[slots, FIRST],
+            "second": floats[slots, SECOND],
+            "touch": self.rows[slots, TOUCH] & ~NAMED,
+        }
+        if self._settings.admit_after > 1:
+            arrays["admission"] = self._filter.copy()
+        return arrays
+
+    def load(self, arrays: dict[str, npt.NDArray[np.generic]]) -> None:
+        """Replaces the contents by what `state` gave."""
+        addresses = arrays["addresses"].astype(np.uint64, copy=False)
+        self.live = 0
+        while _limit(self._capacity) < len(addresses):
+            self._capacity = self._next_capacity()
+        self.rows = np.zeros((self._capacity + SPARE, 4), np.uint64)
+        state = np.stack([arrays[name].view(np.uint64) for name in ("first", "second", "touch")], axis=1)
+        probing.place(self.rows, np.uint64(self._capacity), self._secret, addresses, state)
+        self.live = len(addresses)
+        if self._settings.admit_after > 1:
+            self._filter[:] = arrays["admission"]
+
+    def _slots_for(self, batch: Batch) -> npt.NDArray[np.int64]:
+        if len(self._slots) < len(batch.addresses):
+            self._slots = np.empty(2 * len(batch.addresses), np.int64)
+        return self._slots
+
+    def _admit(
+        self, batch: Batch, first: int, last: int, *, refuse: bool
+    ) -> tuple[npt.NDArray[np.int64], int]:
+        slots = self._slots_for(batch)
+        counts = np.zeros(2, np.int64)
+        room = _limit(self._capacity) - self.live
+        if self._settings.max_live is not None:
+            room = min(room, self._settings.max_live - self.live)
+        stopped: int = probing.admit(
+            self.rows,
+            np.uint64(self._capacity),
+            self._secret,
+            batch.addresses,
+            batch.row_ptr,
+            batch.labels,
+            first,
+            last,
+            slots,
+            self._filter,
+            self._settings.admit_after,
+            room,
+            counts,
+            refuse,
+        )
+        self.live += int(counts[0])
+        self.refused += int(counts[1])
+        return slots, stopped
+
+    def _next_capacity(self) -> int:
+        return 2 * self._capacity if self._capacity < SMALL else self._capacity + self._capacity // 32
+
+    def _grow(self, needed: int) -> None:
+        """Makes room for `needed` more rows: the memory is stretched (never doubled), rows spread in place."""
+        before = len(self.rows)
+        while _limit(self._capacity) - self.live < needed:
+            self._capacity = self._next_capacity()
+        if self._capacity >= 1 << 32:
+            raise CannotCreate(
+                f"the table holds {self.live:,} coordinates and cannot grow beyond 2**32 slots; "
+                "set state.max_live or state.idle_after, or a stronger learner.l1_per_example"
+            )
+        if self._capacity + SPARE > before:
+            self.rows.resize((self._capacity + SPARE, 4), refcheck=False)
+            probing.respread(self.rows, before, np.uint64(self._capacity))
