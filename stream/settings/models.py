@@ -1,10 +1,27 @@
-"""The settings of a run as pydantic models: one class a section of the file."""
+"""The settings of a run as pydantic models, one class a section: plain values in, checked ones out.
+
+Each key has its one home here: type, limits, default and a sentence of meaning, which errors, `bedload init`
+and the test of docs/settings.md read back through `stream.settings.keys`.
+"""
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    PrivateAttr,
+    StrictBool,
+    field_validator,
+    model_validator,
+)
+
+from stream.settings import checks
 
 __all__ = [
     "Category",
@@ -25,42 +42,83 @@ __all__ = [
 UNICODE_VERSION = "14.0.0"
 """Unicode version of the tokenizer's tables (`stream/features/unicode_tables`)."""
 
+MOST = 10**15
+"""Upper limit of plain counts: far past any feed, well inside 64 bits."""
+
 TokenValue = Literal["presence", "count", "log_count"]
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
+Whole = Annotated[int, BeforeValidator(checks.number), Field(le=MOST)]
+Number = Annotated[float, BeforeValidator(checks.number), Field(allow_inf_nan=False)]
+Strength = Annotated[Number, Field(ge=0, le=1e9)]
+DottedPath = Annotated[str, AfterValidator(checks.dotted_path)]
 
 
 class Section(BaseModel):
     """Unknown keys are errors; nothing changes after loading."""
 
-    model_config = ConfigDict(extra="forbid", frozen=True, strict=False)
+    model_config = ConfigDict(extra="forbid", frozen=True)
 
 
 class Feed(Section):
-    """Where messages come from. `paths` are glob patterns, relative to the settings file."""
+    """Where messages come from."""
 
-    kind: Literal["log"] = "log"
-    paths: tuple[str, ...] = ()
-    max_line_bytes: int = Field(1_048_576, ge=64, le=1 << 30)
+    kind: Literal["log"] = Field(default="log", description="What the feed is; this release reads logs.")
+    paths: tuple[str, ...] = Field(
+        default=(),
+        description='JSON Lines files, plain, .gz or .zst: glob patterns relative to this file; "-" is '
+        "standard input. One text counts as a list of one.",
+    )
+    max_line_bytes: Whole = Field(
+        default=1_048_576, ge=64, le=1 << 30, description="A longer line is rejected (bytes)."
+    )
+
+    @field_validator("kind", mode="before")
+    @classmethod
+    def _logs_only(cls, kind: Any) -> Any:
+        return checks.logs_only(kind)
+
+    @field_validator("paths", mode="before")
+    @classmethod
+    def _one_is_a_list(cls, paths: Any) -> Any:
+        return (paths,) if isinstance(paths, str) else paths
 
 
 class MessagePaths(Section):
-    """Dotted paths into the JSON object of a message, and the limits a message must keep."""
+    """Where the parts of a message stand in its JSON object, and the limits that a message must keep."""
 
-    id: str | None = None
-    time: str | None = None
-    label: str | None = None
-    weight: str | None = None
-    max_tokens: int = Field(16_384, ge=1, le=1 << 20)
-    max_reject_share: float = Field(0.01, ge=0, le=1)
-    rejects_allowed_before: int = Field(1_000, ge=0)
+    id: DottedPath | None = Field(default=None, description="Dotted path of the id that scores carry.")
+    time: DottedPath | None = Field(
+        default=None,
+        description="Dotted path of the event time: RFC 3339 text, or epoch seconds / milliseconds.",
+    )
+    label: DottedPath | None = Field(
+        default=None,
+        description="Dotted path of the outcome: true, false, 1 or 0. Absent or null: scored, not learned.",
+    )
+    weight: DottedPath | None = Field(
+        default=None, description="Dotted path of the example weight, a number >= 0 that multiplies the loss."
+    )
+    max_tokens: Whole = Field(
+        default=16_384, ge=1, le=1 << 20, description="A message that makes more tokens is rejected."
+    )
+    max_reject_share: Number = Field(
+        default=0.01,
+        ge=0,
+        le=1,
+        description="A run stops when a larger share of its messages was rejected ...",
+    )
+    rejects_allowed_before: Whole = Field(
+        default=1_000, ge=0, description="... but not before this many messages."
+    )
 
 
 class Named(Section):
     """A field: `path` in the message, `name` in the hash and in reports (the path by default)."""
 
-    path: str = Field(min_length=1)
-    name: str = ""
+    path: DottedPath = Field(description="Dotted path in the message; missing or null makes no token.")
+    name: str = Field(
+        default="",
+        description="Name in addresses and reports; the path where it is not given. Unlike all others.",
+    )
 
     @model_validator(mode="before")
     @classmethod
@@ -69,85 +127,160 @@ class Named(Section):
             return {**data, "name": data["path"]}
         return data
 
+    @field_validator("name")
+    @classmethod
+    def _name_fits_address(cls, name: str) -> str:
+        return checks.field_name(name)
+
 
 class Words(Named):
     """Free text, cut into folded runs of letters and digits."""
 
-    kind: Literal["words"] = "words"
-    value: TokenValue = "presence"
-    pairs: bool = False
-    drop: tuple[str, ...] = ()
+    kind: Literal["words"] = Field(default="words", description="What the field holds.")
+    value: TokenValue = Field(
+        default="presence", description="Value of a token seen c times in the field: 1, c or ln(1 + c)."
+    )
+    pairs: StrictBool = Field(default=False, description="Neighbouring words as tokens too.")
+    drop: tuple[str, ...] = Field(default=(), description="Words that make no token.")
 
 
 class Category(Named):
     """One text, whole number or yes/no taken whole: one token."""
 
-    kind: Literal["category"] = "category"
+    kind: Literal["category"] = Field(default="category", description="What the field holds.")
 
 
 class Quantity(Named):
     """A number: as it is, as sign(x) ln(1 + |x|), or by the bin it falls in (`bins` are edges)."""
 
-    kind: Literal["quantity"] = "quantity"
-    scale: Literal["plain", "logarithmic"] = "plain"
-    bins: tuple[float, ...] = ()
+    kind: Literal["quantity"] = Field(default="quantity", description="What the field holds.")
+    scale: Literal["plain", "logarithmic"] = Field(
+        default="plain", description="Value of the one token: x, or sign(x) ln(1 + |x|)."
+    )
+    bins: tuple[Number, ...] = Field(
+        default=(), description="Ascending edges that cut the number into tokens of value 1; none: not cut."
+    )
+
+    @field_validator("bins")
+    @classmethod
+    def _bins_ascend(cls, bins: tuple[float, ...]) -> tuple[float, ...]:
+        return checks.edges(bins)
+
+    @model_validator(mode="after")
+    def _one_way(self) -> Quantity:
+        checks.refuse(checks.quantity_problems(self))
+        return self
 
 
 class ListOf(Named):
     """A list of texts or whole numbers, each a token."""
 
-    kind: Literal["list"] = "list"
-    value: TokenValue = "presence"
+    kind: Literal["list"] = Field(default="list", description="What the field holds.")
+    value: TokenValue = Field(
+        default="presence", description="Value of a token seen c times in the field: 1, c or ln(1 + c)."
+    )
 
 
 FieldSettings = Annotated[Words | Category | Quantity | ListOf, Field(discriminator="kind")]
 
 
 class Cross(Section):
-    """Tokens of two or more fields taken together; `paths` name fields (by name)."""
+    """Tokens of two or more fields taken together."""
 
-    paths: tuple[str, ...] = Field(min_length=2, max_length=8)
+    paths: tuple[str, ...] = Field(
+        min_length=2, max_length=8, description="Names of fields whose tokens are taken together."
+    )
 
 
 class Space(Section):
     """The weight space: 2**address_bits addresses, hashed with `seed`."""
 
-    address_bits: int = Field(40, ge=20, le=63)
-    seed: int = Field(0, ge=0, le=0xFFFFFFFF)
-    unit_length: bool = False
+    address_bits: Whole = Field(
+        default=40,
+        ge=20,
+        le=63,
+        description="The space has 2**address_bits addresses; memory does not depend on it.",
+    )
+    seed: Whole = Field(default=0, ge=0, le=0xFFFFFFFF, description="Seed of the address hash.")
+    unit_length: StrictBool = Field(
+        default=False, description="Divide the values of a message by the root of the sum of their squares."
+    )
 
 
 class Learner(Section):
-    """How weights are updated; `horizon` is in learned messages. See docs/settings.md."""
+    """How weights are updated."""
 
-    method: Literal["ftrl", "truncated-gradient"] = "ftrl"
-    learning_rate: float = Field(0.1, gt=0, le=1e6, allow_inf_nan=False)
-    damping: float = Field(1.0, gt=0, le=1e9, allow_inf_nan=False)
-    l1: NotNegative = 0.0
-    l1_per_example: NotNegative = 1e-4
-    l2: NotNegative = 0.0
-    horizon: int | None = Field(None, ge=1)
+    method: Literal["ftrl", "truncated-gradient"] = Field(
+        default="ftrl", description="How weights are learned."
+    )
+    learning_rate: Number = Field(
+        default=0.1, gt=0, le=1e6, description="Size of the steps; the constant step of truncated-gradient."
+    )
+    damping: Number = Field(
+        default=1.0, gt=0, le=1e9, description="Holds back the first steps of a coordinate (ftrl only)."
+    )
+    l1: Strength = Field(
+        default=0.0, description="Pressure towards zero on the sum of losses: a start-up budget (ftrl only)."
+    )
+    l1_per_example: Strength = Field(
+        default=1e-4,
+        description="Pressure towards zero on each example: the lambda of a batch fit of the mean loss.",
+    )
+    l2: Strength = Field(
+        default=0.0, description="Shrinkage without zeros, on the sum of losses (ftrl only)."
+    )
+    horizon: Whole | None = Field(
+        default=None, ge=1, description="Learned messages after which the accumulated strength stops growing."
+    )
+
+    @model_validator(mode="after")
+    def _penalties_fit_method(self) -> Learner:
+        checks.refuse(checks.learner_problems(self))
+        return self
 
 
 class State(Section):
     """What is kept: the folder, how often it is written, and what bounds the memory."""
 
-    folder: str = "state"
-    checkpoint_every: int = Field(1_000_000, ge=1)
-    keep_checkpoints: int = Field(3, ge=1)
-    keep_snapshots: int = Field(10, ge=1)
-    admit_after: int = Field(1, ge=1, le=200)
-    admission_bytes: int = Field(16 << 20, ge=1 << 10, le=1 << 36)
-    admission_halved_every: int = Field(10_000_000, ge=1)
-    idle_after: int | None = Field(None, ge=1)
-    max_live: int | None = Field(None, ge=1_000)
+    folder: str = Field(
+        default="state",
+        min_length=1,
+        description="Folder of checkpoints, snapshots, rejects; relative to this file.",
+    )
+    checkpoint_every: Whole = Field(default=1_000_000, ge=1, description="Messages between checkpoints.")
+    keep_checkpoints: Whole = Field(default=3, ge=1, description="Checkpoints kept; older ones are removed.")
+    keep_snapshots: Whole = Field(default=10, ge=1, description="Snapshots kept; older ones are removed.")
+    admit_after: Whole = Field(
+        default=1, ge=1, le=200, description="Sightings before a coordinate gets state; 1: at once."
+    )
+    admission_bytes: Whole = Field(
+        default=16 << 20,
+        ge=1 << 10,
+        le=1 << 36,
+        description="Bytes of the sightings filter, when admit_after > 1.",
+    )
+    admission_halved_every: Whole = Field(
+        default=10_000_000,
+        ge=1,
+        description="Sightings count half after this many examples, so that old ones fade.",
+    )
+    idle_after: Whole | None = Field(
+        default=None, ge=1, description="Zero-weight coordinates not seen for this many examples are removed."
+    )
+    max_live: Whole | None = Field(
+        default=None,
+        ge=1_000,
+        description="Most coordinates with state; past it, idle zero-weight ones are removed.",
+    )
 
 
 class Metrics(Section):
-    """Progressive metrics: `window` in messages; `slice_by` names a category field."""
+    """Progressive metrics."""
 
-    window: int = Field(100_000, ge=1)
-    slice_by: str | None = None
+    window: Whole = Field(default=100_000, ge=1, description="Messages a row of the table of metrics.")
+    slice_by: str | None = Field(
+        default=None, description="Name of a category field: metrics for each of its values too."
+    )
 
 
 class Settings(Section):
@@ -161,6 +294,27 @@ class Settings(Section):
     learner: Learner = Learner()
     state: State = State()
     metrics: Metrics = Metrics()
+    _folder: Path = PrivateAttr(default=Path())
+
+    @model_validator(mode="after")
+    def _parts_fit(self) -> Settings:
+        checks.refuse(checks.settings_problems(self))
+        return self
+
+    @property
+    def folder(self) -> Path:
+        """What relative feed paths and `state.folder` are relative to: the settings file's folder."""
+        return self._folder
+
+    def placed_in(self, folder: Path) -> Settings:
+        """The same settings with another `folder`."""
+        copy = self.model_copy()
+        copy._folder = folder
+        return copy
+
+    def resolve(self, path: str) -> Path:
+        """A path of the settings as seen from the working folder."""
+        return self._folder / path
 
     def fingerprint(self) -> dict[str, Any]:
         """The feature space as JSON types: two models whose fingerprints differ do not mix."""

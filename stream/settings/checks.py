@@ -1,0 +1,178 @@
+"""Checks that pydantic's types cannot say: values or models in, refusals with reason and cure out."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable
+from itertools import pairwise
+from typing import TYPE_CHECKING, Any
+
+from pydantic_core import PydanticCustomError
+
+if TYPE_CHECKING:
+    from stream.settings.models import Learner, Quantity, Settings
+
+__all__ = [
+    "CONFLICT",
+    "Problem",
+    "dotted_path",
+    "edges",
+    "field_name",
+    "learner_problems",
+    "logs_only",
+    "number",
+    "quantity_problems",
+    "refuse",
+    "settings_problems",
+]
+
+Problem = tuple[tuple[str | int, ...], str]
+"""Where in the model, and why it is refused with the cure."""
+
+REFUSED = "refused"
+CONFLICT = "conflict"
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f]")
+
+
+def _refused(text: str) -> PydanticCustomError:
+    return PydanticCustomError(REFUSED, "{text}", {"text": text})
+
+
+def refuse(problems: list[Problem]) -> None:
+    """Raises one error that carries all `problems`, if there are any."""
+    if problems:
+        text = "; ".join(f"{'.'.join(map(str, where))}: {why}" for where, why in problems)
+        raise PydanticCustomError(CONFLICT, "{text}", {"text": text, "problems": problems})
+
+
+def number(value: Any) -> Any:
+    """Lets numbers pass; text and true/false are never taken for one."""
+    if isinstance(value, str | bool):
+        raise PydanticCustomError("not_a_number", "must be a number")
+    return value
+
+
+def logs_only(kind: Any) -> Any:
+    """Refuses feeds that this release cannot read."""
+    if kind == "topic":
+        raise _refused('this release reads logs only; use "log" and give feed.paths')
+    return kind
+
+
+def dotted_path(path: str) -> str:
+    """A path whose segments are all non-empty."""
+    if not all(path.split(".")):
+        raise _refused('must be keys joined by single dots, such as "parcel.weight", none of them empty')
+    return path
+
+
+def field_name(name: str) -> str:
+    """A name that stays readable and unmistakable in an address text (`name 0x1F token`, `a&b`)."""
+    if "&" in name:
+        raise _refused('must not contain "&", which joins names in a cross; give the field another `name`')
+    if _CONTROL.search(name):
+        raise _refused("must not contain control characters (0x1F ends it); give another `name`")
+    return name
+
+
+def edges(bins: tuple[float, ...]) -> tuple[float, ...]:
+    """Edges in strictly ascending order; -0.0 becomes 0.0."""
+    for left, right in pairwise(bins):
+        if not left < right:
+            raise _refused(f"edges must ascend, each above the one before; {right!r} follows {left!r}")
+    return tuple(edge + 0.0 for edge in bins)
+
+
+def quantity_problems(field: Quantity) -> list[Problem]:
+    """A number is either cut into bins or scaled."""
+    if field.bins and field.scale == "logarithmic":
+        return [
+            (("scale",), "bins cut the number as it is, a scale would change nothing; leave one of them out")
+        ]
+    return []
+
+
+def learner_problems(learner: Learner) -> list[Problem]:
+    """Truncated gradient has one penalty and a constant rate; what it does not use is refused."""
+    if learner.method != "truncated-gradient":
+        return []
+    problems: list[Problem] = []
+    if learner.l1:
+        why = (
+            "l1 presses on the sum of losses, but truncated-gradient shrinks at every example and takes "
+            "l1_per_example as its gravity; set l1_per_example and leave l1 out"
+        )
+        problems.append((("l1",), why))
+    if learner.l2:
+        why = (
+            "l2 presses on the sum of losses, which truncated-gradient does not keep; leave l2 out, "
+            'or take method = "ftrl"'
+        )
+        problems.append((("l2",), why))
+    if learner.damping != type(learner).model_fields["damping"].default:
+        why = (
+            "damping holds back the per-coordinate steps of ftrl; truncated-gradient has a constant rate. "
+            'Leave damping out, or take method = "ftrl"'
+        )
+        problems.append((("damping",), why))
+    return problems
+
+
+def settings_problems(settings: Settings) -> list[Problem]:
+    """What sections must keep among each other."""
+    return [
+        *_field_problems(settings),
+        *_cross_problems(settings),
+        *_slice_problems(settings),
+        *_memory_problems(settings),
+    ]
+
+
+def _field_problems(settings: Settings) -> Iterable[Problem]:
+    seen: dict[str, int] = {}
+    for at, field in enumerate(settings.fields):
+        if field.name in seen:
+            why = f"[[fields]] number {seen[field.name] + 1} has this name; give one of them another `name`"
+            yield ("fields", at, "name"), why
+        seen.setdefault(field.name, at)
+        if field.path == settings.message.label:
+            yield (
+                ("fields", at, "path"),
+                "message.label reads the same path: an outcome cannot predict itself",
+            )
+
+
+def _cross_problems(settings: Settings) -> Iterable[Problem]:
+    fields = {field.name: field for field in settings.fields}
+    seen: dict[tuple[str, ...], int] = {}
+    for at, cross in enumerate(settings.crosses):
+        where = ("crosses", at, "paths")
+        for name in dict.fromkeys(cross.paths):
+            if name not in fields:
+                yield where, f'no field is named "{name}"; fields: {_listed(fields)}'
+            elif fields[name].kind == "quantity" and not getattr(fields[name], "bins", ()):
+                yield where, f'"{name}" is a quantity; only one that is cut into `bins` can be crossed'
+            if cross.paths.count(name) > 1:
+                yield where, f'"{name}" stands in it twice'
+        together = tuple(sorted(cross.paths))
+        if together in seen:
+            yield where, f"[[crosses]] number {seen[together] + 1} takes the same fields together"
+        seen.setdefault(together, at)
+
+
+def _slice_problems(settings: Settings) -> Iterable[Problem]:
+    name = settings.metrics.slice_by
+    categories = [field.name for field in settings.fields if field.kind == "category"]
+    if name is not None and name not in categories:
+        yield ("metrics", "slice_by"), f"must name a category field; category fields: {_listed(categories)}"
+
+
+def _memory_problems(settings: Settings) -> Iterable[Problem]:
+    live, bits = settings.state.max_live, settings.space.address_bits
+    if live is not None and live > 1 << bits:
+        why = f"the space has only 2**{bits} = {1 << bits:,} addresses: this limit never acts; leave it out"
+        yield ("state", "max_live"), why
+
+
+def _listed(names: Iterable[str]) -> str:
+    return ", ".join(f'"{name}"' for name in names) or "none"
