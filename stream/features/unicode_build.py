@@ -70,7 +70,7 @@ def build() -> UnicodeTables:
     kinds = np.array([kind_of(point) for point in range(CODE_POINTS)], dtype=np.uint8)
     folds, long_fold = _folds(kinds)
     page, kind, fold = _shared_pages(kinds, folds)
-    pairs = sorted(_compositions())
+    pairs = sorted(_compositions(kinds))
     return UnicodeTables(
         page=page,
         kind=kind,
@@ -112,7 +112,7 @@ def _shared_pages(
     return page, kind_pages[kept].reshape(-1), fold_pages[kept].reshape(-1)
 
 
-def _compositions() -> Iterator[tuple[int, int, int]]:
+def _compositions(kinds: npt.NDArray[np.uint8]) -> Iterator[tuple[int, int, int]]:
     """Every (first, mark, whole) with NFC(first + mark) = whole.
 
     first + mark and whole have the same canonical decomposition up to the order of its marks, so candidates
@@ -124,7 +124,7 @@ def _compositions() -> Iterator[tuple[int, int, int]]:
         letter = chr(point)
         parts = unicodedata.normalize("NFD", letter)
         by_parts["".join(sorted(parts))].append(point)
-        if kind_of(point) == MARK:
+        if kinds[point] == MARK:
             marks[parts[0]].append((point, parts))
     for parts in by_parts:
         for mark, mark_parts in [each for letter in sorted(set(parts)) for each in marks.get(letter, ())]:
