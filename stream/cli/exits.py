@@ -10,9 +10,10 @@ from collections.abc import Callable
 
 import typer
 
+from stream.cli.screen import visible
 from stream.errors import BedloadError, CannotCreate, FileTrouble, InputMissing, NoPermission, UsageError
 
-__all__ = ["BROKEN_PIPE", "INTERRUPTED", "exit_code_of"]
+__all__ = ["BROKEN_PIPE", "INTERRUPTED", "TRACEBACK", "exit_code_of"]
 
 INTERRUPTED = 130
 """Stopped by Ctrl-C: 128 + SIGINT, as shells report it."""
@@ -21,6 +22,9 @@ BROKEN_PIPE = 141
 """Whoever read our output went away: 128 + SIGPIPE, as shells report it."""
 
 BUG = 70
+
+TRACEBACK = "BEDLOAD_TRACEBACK"
+"""Environment variable: at 1, errors show where they were raised."""
 
 
 def exit_code_of(call: Callable[[], None]) -> int:
@@ -45,12 +49,13 @@ def exit_code_of(call: Callable[[], None]) -> int:
 
 def _say(text: str, code: int) -> int:
     _show_traceback()
-    print(f"bedload: {text}", file=sys.stderr)
+    for line in text.splitlines():
+        print(f"bedload: {visible(line)}", file=sys.stderr)
     return code
 
 
 def _show_traceback() -> None:
-    if os.environ.get("BEDLOAD_TRACEBACK") == "1":
+    if os.environ.get(TRACEBACK) == "1":
         traceback.print_exc()
 
 
@@ -80,5 +85,5 @@ def _system_code(error: OSError) -> int:
 
 
 def _bug(error: Exception) -> int:
-    cure = "" if os.environ.get("BEDLOAD_TRACEBACK") == "1" else "; BEDLOAD_TRACEBACK=1 shows where"
+    cure = "" if os.environ.get(TRACEBACK) == "1" else f"; {TRACEBACK}=1 shows where"
     return _say(f"a bug in bedload, please report it: {type(error).__name__}: {error}{cure}", BUG)
