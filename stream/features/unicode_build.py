@@ -126,7 +126,7 @@ def _compositions(kinds: npt.NDArray[np.uint8]) -> Iterator[tuple[int, int, int]
         by_parts["".join(sorted(parts))].append(point)
         if kinds[point] == MARK:
             marks[parts[0]].append((point, parts))
-    for parts in by_parts:
+    for parts in [parts for parts in by_parts if len(parts) > 1]:
         for mark, mark_parts in [each for letter in sorted(set(parts)) for each in marks.get(letter, ())]:
             for first in by_parts.get(_without(parts, mark_parts), ()):
                 whole = unicodedata.normalize("NFC", chr(first) + chr(mark))
