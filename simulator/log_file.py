@@ -1,0 +1,170 @@
+"""A courier feed in, a message log and the truth behind it out, as files."""
+
+from __future__ import annotations
+
+import gzip
+import json
+import math
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import IO, Any
+
+import numpy as np
+
+from simulator.courier import Courier, FeedBlock
+from simulator.feed import CourierFeed
+
+__all__ = ["Progress", "Truth", "open_log", "write_log"]
+
+Progress = Callable[[int, int], None]
+"""Called with messages written so far and messages in all."""
+
+
+@dataclass(frozen=True, slots=True)
+class Truth:
+    """What a simulated log was drawn from, and what came out.
+
+    `intercept`; `weights`: {field, token, weight} of each token whose true weight is not zero;
+    `crosses`: {fields, tokens, weight}, the same for a route and an hour together;
+    `mean_probability`: mean of the true probabilities, before label noise;
+    `redelivered_share`: share of outcomes that are true as written; `flipped`: outcomes that label noise turned;
+    `words`: words in all notes; `words_known`: streets, codes and shops, of each, at the end;
+    `settings`: of the feed.
+    """
+
+    intercept: float
+    weights: list[dict[str, Any]]
+    crosses: list[dict[str, Any]]
+    messages: int
+    mean_probability: float
+    redelivered_share: float
+    flipped: int
+    words: int
+    words_known: int
+    settings: dict[str, Any]
+
+    def to_json(self) -> str:
+        """One indented JSON document, ending in a line end."""
+        return json.dumps(asdict(self), ensure_ascii=False, indent=1) + "\n"
+
+
+def write_log(
+    feed: CourierFeed,
+    path: str | Path,
+    *,
+    truth_path: str | Path | None = None,
+    probability_path: str | Path | None = None,
+    progress: Progress | None = None,
+) -> Truth:
+    """Writes the feed as JSON Lines and returns its truth, about 2 µs a short message.
+
+    `path` ending in .gz or .zst is compressed; "-" is standard output. The truth goes to `truth_path`, by default
+    `<path>.truth.json` (nowhere for "-"). `probability_path`: JSON Lines of id and p_true beside it, on request.
+    Files take their names when they are whole and replace older ones. Raises OSError, and ImportError for .zst
+    without zstandard.
+    """
+    courier = Courier(feed)
+    tally = _Tally()
+    with open_log(path) as log, _maybe(probability_path) as probabilities:
+        for number in range(feed.block_count):
+            block = courier.block(number)
+            log.write(block.lines)
+            if probabilities is not None:
+                probabilities.write(_probability_lines(block))
+            tally.add(block)
+            if progress is not None:
+                progress(tally.messages, feed.messages)
+        truth = tally.truth(courier)
+        if truth_path is None and str(path) != "-":
+            truth_path = f"{path}.truth.json"
+        if truth_path is not None:
+            with open_log(truth_path) as out:
+                out.write(truth.to_json().encode())
+    return truth
+
+
+class _Tally:
+    """Sums over the blocks written; probabilities are summed exactly rounded, block by block."""
+
+    def __init__(self) -> None:
+        self.messages = 0
+        self._words = 0
+        self._redelivered = 0
+        self._flipped = 0
+        self._probability: list[float] = []
+
+    def add(self, block: FeedBlock) -> None:
+        self.messages += len(block)
+        self._words += block.words
+        self._redelivered += int(np.count_nonzero(block.outcome))
+        self._flipped += int(np.count_nonzero(block.flipped))
+        self._probability.append(math.fsum(block.probability.tolist()))
+
+    def truth(self, courier: Courier) -> Truth:
+        return Truth(
+            intercept=courier.intercept,
+            weights=courier.planting.tokens(),
+            crosses=courier.planting.crosses(),
+            messages=self.messages,
+            mean_probability=math.fsum(self._probability) / self.messages,
+            redelivered_share=self._redelivered / self.messages,
+            flipped=self._flipped,
+            words=self._words,
+            words_known=courier.words_known,
+            settings=asdict(courier.feed),
+        )
+
+
+def _probability_lines(block: FeedBlock) -> bytes:
+    """id and p_true (nine decimals) of each message of the block."""
+    numbers = range(block.first, block.first + len(block))
+    pairs: Iterator[tuple[int, float]] = zip(numbers, block.probability.tolist(), strict=True)
+    return "".join(f'{{"id":"h{i:09d}","p_true":{p:.9f}}}\n' for i, p in pairs).encode()
+
+
+@contextmanager
+def _maybe(path: str | Path | None) -> Iterator[IO[bytes] | None]:
+    if path is None:
+        yield None
+    else:
+        with open_log(path) as out:
+            yield out
+
+
+@contextmanager
+def open_log(path: str | Path) -> Iterator[IO[bytes]]:
+    """A binary file to write, compressed by its ending; it gets its name at the end, or is removed on an error.
+
+    "-" is standard output, and what exists and is no regular file (a pipe, a device) is written in place.
+    """
+    if str(path) == "-":
+        yield sys.stdout.buffer
+        sys.stdout.buffer.flush()
+        return
+    path = Path(path)
+    if path.exists() and not path.is_file():
+        with path.open("wb") as place:
+            yield place
+        return
+    part = path.with_name(path.name + ".part")
+    try:
+        with part.open("wb") as raw, _compressor(raw, path.suffix) as out:
+            yield out
+        part.replace(path)
+    except BaseException:
+        part.unlink(missing_ok=True)
+        raise
+
+
+def _compressor(raw: IO[bytes], suffix: str) -> Any:
+    """Context manager giving a writer over `raw`; nothing of the clock or the file name gets into it."""
+    if suffix == ".gz":
+        return gzip.GzipFile(filename="", mode="wb", compresslevel=6, fileobj=raw, mtime=0)
+    if suffix == ".zst":
+        import zstandard
+
+        return zstandard.ZstdCompressor(level=3).stream_writer(raw, closefd=False)
+    return raw
