@@ -95,8 +95,10 @@ def _keys(section: str, model: type[BaseModel]) -> Iterable[Key]:
 
 
 def _allowed(schema: Mapping[str, Any]) -> str:
-    """What a JSON schema of one key lets in, in words."""
-    schema = next((s for s in schema.get("anyOf", ()) if s.get("type") != "null"), schema)
+    """What a JSON schema of one key lets in, in words; the model's own words under "allowed" come first."""
+    schema = {**schema, **next((s for s in schema.get("anyOf", ()) if s.get("type") != "null"), {})}
+    if "allowed" in schema:
+        return str(schema["allowed"])
     if "const" in schema or "enum" in schema:
         return _one_of(schema.get("enum") or [schema["const"]])
     if schema["type"] == "boolean":
@@ -124,6 +126,8 @@ def _range(noun: str, schema: Mapping[str, Any]) -> str:
 
 
 def _plain(limit: float) -> str:
+    if limit >= 1e9 and f"{limit:.0e}".startswith("1e") and limit == float(f"{limit:.0e}"):
+        return f"10^{f'{limit:.0e}'[3:].lstrip('0')}"
     return f"{int(limit):,}" if limit == int(limit) else f"{limit:g}"
 
 

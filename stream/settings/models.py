@@ -49,7 +49,9 @@ TokenValue = Literal["presence", "count", "log_count"]
 Whole = Annotated[int, BeforeValidator(checks.number), Field(le=MOST)]
 Number = Annotated[float, BeforeValidator(checks.number), Field(allow_inf_nan=False)]
 Strength = Annotated[Number, Field(ge=0, le=1e9)]
-DottedPath = Annotated[str, AfterValidator(checks.dotted_path)]
+DottedPath = Annotated[
+    str, AfterValidator(checks.dotted_path), Field(json_schema_extra={"allowed": "a dotted path"})
+]
 
 
 class Section(BaseModel):
@@ -104,10 +106,10 @@ class MessagePaths(Section):
         default=0.01,
         ge=0,
         le=1,
-        description="A run stops when a larger share of its messages was rejected ...",
+        description="Largest share of rejected messages; a run that goes past it stops.",
     )
     rejects_allowed_before: Whole = Field(
-        default=1_000, ge=0, description="... but not before this many messages."
+        default=1_000, ge=0, description="Messages before max_reject_share is looked at."
     )
 
 
@@ -117,7 +119,8 @@ class Named(Section):
     path: DottedPath = Field(description="Dotted path in the message; missing or null makes no token.")
     name: str = Field(
         default="",
-        description="Name in addresses and reports; the path where it is not given. Unlike all others.",
+        description="Name in addresses and reports, unlike all others; the path where it is not given.",
+        json_schema_extra={"allowed": 'a text without "&" and control characters'},
     )
 
     @model_validator(mode="before")
@@ -158,7 +161,9 @@ class Quantity(Named):
         default="plain", description="Value of the one token: x, or sign(x) ln(1 + |x|)."
     )
     bins: tuple[Number, ...] = Field(
-        default=(), description="Ascending edges that cut the number into tokens of value 1; none: not cut."
+        default=(),
+        json_schema_extra={"allowed": "a list of ascending numbers"},
+        description="Ascending edges that cut the number into tokens of value 1; none: not cut.",
     )
 
     @field_validator("bins")
@@ -277,9 +282,11 @@ class State(Section):
 class Metrics(Section):
     """Progressive metrics."""
 
-    window: Whole = Field(default=100_000, ge=1, description="Messages a row of the table of metrics.")
+    window: Whole = Field(default=100_000, ge=1, description="Messages in a window of the metrics.")
     slice_by: str | None = Field(
-        default=None, description="Name of a category field: metrics for each of its values too."
+        default=None,
+        json_schema_extra={"allowed": "the name of a category field"},
+        description="Name of a category field: metrics for each of its values too.",
     )
 
 

@@ -1,0 +1,222 @@
+"""Guessing the parts of a message: columns of a sample in, roles and field kinds with reasons out."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from stream.runs.columns import FLOAT32_MOST, Column
+
+__all__ = ["FieldGuess", "Role", "guess_field", "guess_roles"]
+
+ID_HINT = re.compile(r"(^|_)(id|uuid|guid|key)$")
+TIME_HINT = re.compile(r"(^|_)(at|on|time|timestamp|ts|date|datetime|when|created)$|_(s|ms)$")
+LABEL_HINT = re.compile(r"label|outcome|target|result|converted|success|fail|^is_|ed$")
+WEIGHT_NAMES = {"example_weight", "sample_weight", "importance"}
+CODE_HINT = re.compile(r"(^|_)(id|code|no|nr|number|zip|postcode|type|kind|class)$")
+
+FEW_NUMBERS = 50
+"""Whole numbers with no more different values than this are taken for codes, not amounts."""
+FEW_MESSAGES = 20
+"""Below this many messages, different values in each are no sign of an id."""
+
+
+@dataclass(frozen=True, slots=True)
+class Role:
+    """A path for message.id, time, label or weight (None: none found), and a remark for the reader."""
+
+    path: str | None
+    remark: str
+
+
+@dataclass(frozen=True, slots=True)
+class FieldGuess:
+    """A field as it would stand in the settings; `kind` None: cannot be one; not `active`: commented out."""
+
+    path: str
+    kind: str | None
+    active: bool
+    reason: str
+    options: dict[str, Any] = field(default_factory=dict)
+
+
+def guess_roles(columns: Sequence[Column]) -> dict[str, Role]:
+    """Which paths look like id, time, label and weight."""
+    usable = [column for column in columns if column.values and not _unfit(column)]
+    roles = {"label": _label(usable)}
+    roles["time"] = _time(usable)
+    roles["id"] = _id(
+        [column for column in usable if column.path not in (roles["label"].path, roles["time"].path)]
+    )
+    roles["weight"] = _weight(usable)
+    return {name: roles[name] for name in ("id", "time", "label", "weight")}
+
+
+def _id(columns: Sequence[Column]) -> Role:
+    found = []
+    for column in columns:
+        unique = (
+            (column.types == {str} or column.types == {int})
+            and not column.missing
+            and column.distinct == column.messages
+        )
+        hinted = bool(ID_HINT.search(column.last))
+        many = column.messages >= FEW_MESSAGES and not column.instants and not column.epochs
+        if unique and (hinted or (many and not (column.types == {str} and column.mostly_texts_with_spaces))):
+            found.append((column.last != "id", not hinted, column.path.count("."), column.path))
+    found.sort(key=lambda candidate: candidate[:3])
+    return _role(
+        [path for *_, path in found], "different in every message", "No path is different in every message."
+    )
+
+
+def _time(columns: Sequence[Column]) -> Role:
+    found = []
+    for column in columns:
+        hinted = bool(TIME_HINT.search(column.last))
+        if not column.missing and (column.instants or (column.epochs and hinted)):
+            rising = sum(a <= b for a, b in zip(column.values, column.values[1:], strict=False))
+            found.append((not hinted, -rising, column.path))
+    found.sort(key=lambda candidate: candidate[:2])
+    return _role(
+        [path for *_, path in found], "a time in every message", "No path holds a time in every message."
+    )
+
+
+def _label(columns: Sequence[Column]) -> Role:
+    found = []
+    for place, column in enumerate(columns):
+        if column.types <= {bool, int} and set(column.counts) <= {0, 1}:
+            hinted = bool(LABEL_HINT.search(column.last))
+            both = column.distinct == 2
+            if both or hinted:
+                evidence = 2 * bool(column.missing) + 2 * hinted + (column.types == {bool})
+                found.append((not both, -evidence, not hinted, -place, column.path))
+    found.sort()
+    absent = "No path holds true / false or 1 / 0: messages would be scored, never learned."
+    worded = [
+        f'"{column.path}"'
+        for column in columns
+        if column.types == {str} and column.distinct == 2 and not column.constant
+    ]
+    if not found and worded:
+        absent += f" Two texts stand in {', '.join(worded[:5])}; a label must be true, false, 1 or 0."
+    return _role([path for *_, path in found], "true / false or 1 / 0", absent)
+
+
+def _weight(columns: Sequence[Column]) -> Role:
+    numbers = [c for c in columns if c.types <= {int, float} and min(c.values) >= 0]
+    found = [c.path for c in numbers if c.last in WEIGHT_NAMES]
+    similar = [f'"{c.path}"' for c in numbers if c.last == "weight"]
+    absent = "No path is named like an example weight."
+    if similar:
+        absent = f"{similar[0]} was taken for a property of the message, not for an example weight."
+    return _role(found, "numbers, none negative", absent)
+
+
+def _role(paths: list[str], why: str, absent: str) -> Role:
+    if not paths:
+        return Role(None, absent)
+    others = ", ".join(f'"{path}"' for path in paths[1:6])
+    also = (
+        f" Other candidates: {others}{', ...' if len(paths) > 6 else ''}; check which one it is."
+        if others
+        else ""
+    )
+    return Role(paths[0], f"Guess: {why}.{also}")
+
+
+def guess_field(column: Column, label: Column | None) -> FieldGuess | None:
+    """The field that `column` would make; None where it only holds objects."""
+    if column.objects and not column.values:
+        return None
+    unfit = _unfit(column)
+    if unfit or not column.values:
+        return FieldGuess(column.path, None, False, unfit or "null in every message of the sample")
+    kind, reason, options = _kind(column)
+    if kind is None:
+        return FieldGuess(column.path, None, False, reason)
+    against = _not_worth_it(column, kind, label)
+    return FieldGuess(column.path, kind, not against, against or reason, options)
+
+
+def _unfit(column: Column) -> str:
+    """Why a path cannot be read as a field at all."""
+    if not column.addressable:
+        return "a dotted path cannot name it: a key is empty or has a dot in it"
+    above = column.parent
+    while above is not None:
+        if above.values:
+            return f'"{above.path}" is an object in some messages and none in others'
+        above = above.parent
+    if column.objects and column.values:
+        return "an object in some messages and none in others"
+    if list in column.types and len(column.types) > 1:
+        return "a list in some messages and none in others"
+    if list in column.types:
+        items = {type(item) for values in column.values for item in values}
+        return "" if items <= {str, int} else "a list whose items are not all texts or whole numbers"
+    if float in column.types and not column.types <= {int, float}:
+        return "numbers with a fraction in some messages and no numbers in others"
+    if any(not math.isfinite(v) or abs(v) > FLOAT32_MOST for v in column.values if isinstance(v, float)):
+        return "numbers beyond 3.4e38"
+    if any(abs(v) >= 1 << 63 for v in column.values if isinstance(v, int)):
+        return "whole numbers of more than 64 bits; write them as texts"
+    return ""
+
+
+def _kind(column: Column) -> tuple[str | None, str, dict[str, Any]]:
+    count = f"{column.distinct:,} different value{'s' * (column.distinct != 1)}"
+    if column.types == {list}:
+        if not column.counts:
+            return None, "an empty list in every message of the sample", {}
+        return "list", f"lists of {column.distinct:,} different items", {}
+    if column.types == {str}:
+        few = column.distinct <= 50 and column.distinct * 10 <= len(column.values)
+        if not few and not column.instants and _is_prose(column):
+            return "words", f"free text, {_mean_length(column):.0f} characters on average", {}
+        return "category", count, {}
+    if not column.types <= {int, float}:
+        return "category", count, {}
+    codes = column.distinct <= FEW_NUMBERS or bool(CODE_HINT.search(column.last))
+    if column.types == {int} and codes:
+        return "category", f"whole numbers, {count}", {}
+    low, high = min(column.values), max(column.values)
+    return "quantity", f"numbers from {low:g} to {high:g}", {"bins": _deciles(column.values)}
+
+
+def _is_prose(column: Column) -> bool:
+    long = sum(len(value.split()) >= 3 for value in column.values)
+    unspaced = sum(sum(ord(c) >= 0x2E80 for c in value) >= 6 for value in column.values)
+    several = column.nearly_unique and column.mostly_texts_with_spaces
+    return 10 * (long + unspaced) >= 3 * len(column.values) or several
+
+
+def _mean_length(column: Column) -> float:
+    return sum(map(len, column.values)) / len(column.values)
+
+
+def _deciles(values: Sequence[float]) -> list[float]:
+    """Edges near the deciles, to two digits: as many messages in each bin, whatever the unit."""
+    ordered = sorted(values)
+    cuts = {float(f"{ordered[len(ordered) * tenth // 10]:.2g}") + 0.0 for tenth in range(1, 10)}
+    return sorted(cuts)
+
+
+def _not_worth_it(column: Column, kind: str, label: Column | None) -> str:
+    """Why a field that could be read is better left out, or nothing."""
+    if label is not None and label.missing >= 5 and column.rows == label.rows:
+        return f'is there only where "{label.path}" is: it seems to come with the outcome'
+    if column.constant:
+        return "the same in every message: the intercept says as much"
+    if column.instants or (column.epochs and TIME_HINT.search(column.last)):
+        return "a time: its values do not come back"
+    if kind in ("category", "list") and column.nearly_unique:
+        return (
+            f"{column.distinct:,} different values in {len(column.values):,} messages: most tokens would be "
+            "seen once, learn nothing and fill memory"
+        )
+    return ""
