@@ -5,6 +5,9 @@
     2  SECOND  the learner's second float64
     3  TOUCH   example number of the last touch << 29 | named << 28 | tally
 
+The table is flat: cell c of the row in slot s is element 4 * s + c, so that the kernels' indices are
+a shift and no stride.
+
 `named` tells that the token's name is in the ledger. The tally counts the learned messages that
 held the token in 28 bits: exponent e (5 bits) and count m (23 bits) stand for m * 2**e; from 2**23 on
 only every 2**e-th example number counts, which keeps the share right to a few parts in a million on
@@ -18,15 +21,22 @@ import numpy.typing as npt
 
 from stream.kernel import small
 
-__all__ = ["FIRST", "NAMED", "SECOND", "TOUCH", "TOUCH_SHIFT", "example_of", "tally_of", "touched"]
+__all__ = ["CELLS", "FIRST", "NAMED", "SECOND", "TOUCH", "TOUCH_SHIFT", "example_of", "row_of", "tally_of", "touched"]
 
-FIRST, SECOND, TOUCH = 1, 2, 3
+CELLS = 4
+FIRST, SECOND, TOUCH = np.uint64(1), np.uint64(2), np.uint64(3)
 TOUCH_SHIFT = np.uint64(29)
 NAMED = np.uint64(1 << 28)
 TALLY = np.uint64((1 << 28) - 1)
 EXPONENT_SHIFT = np.uint64(23)
 FULL = np.uint64(1 << 23)
 ONE = np.uint64(1)
+
+
+@small
+def row_of(slot: int) -> np.uint64:
+    """Index of cell 0 of the row in `slot` (>= 0)."""
+    return np.uint64(slot) << np.uint64(2)
 
 
 @small

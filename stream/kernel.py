@@ -14,7 +14,7 @@ from llvmlite import ir
 from numba.core import config, types
 from numba.extending import intrinsic
 
-__all__ = ["kernel", "load_u64", "small", "store_u64"]
+__all__ = ["kernel", "load_u64", "prefetch", "small", "store_u64"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -81,3 +81,20 @@ def store_u64(typing: Any, data: Any, index: Any, word: Any) -> Any:
         return context.get_dummy_value()
 
     return types.void(data, types.intp, types.uint64), generate
+
+
+@intrinsic
+def prefetch(typing: Any, data: Any, index: Any) -> Any:
+    """Asks for the cache line of element `index` of a flat array; changes nothing."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        array = context.make_array(signature.args[0])(context, builder, args[0])
+        byte = ir.IntType(8).as_pointer()
+        place = builder.bitcast(builder.gep(array.data, [args[1]]), byte)
+        flag = ir.IntType(32)
+        kind = ir.FunctionType(ir.VoidType(), [byte, flag, flag, flag])
+        function = builder.module.declare_intrinsic("llvm.prefetch", [byte], kind)
+        builder.call(function, [place, flag(0), flag(3), flag(1)])
+        return context.get_dummy_value()
+
+    return types.void(data, types.intp), generate

@@ -6,10 +6,10 @@ descent", AISTATS 2011. Letters of the papers against the settings:
 
     alpha  learning_rate        beta  damping        lambda_2  l2
     lambda_1 in force for example k = l1 + strength; strength = sum of l1_per_example * weight before k
-    z, n   FIRST and SECOND of a row, float64
+    z, n   FIRST and SECOND of a row, float64; of the intercept, without a penalty, in `sums`
 
 A weight is a function of its row and the strength in force, so one that is not touched lapses to zero
-by itself as the strength grows. The intercept has a z and n of its own and no penalty.
+by itself as the strength grows.
 """
 
 from __future__ import annotations
@@ -19,42 +19,43 @@ import math
 import numpy as np
 import numpy.typing as npt
 
-from stream.coordinate import FIRST, NAMED, SECOND, TOUCH, touched
+from stream.coordinate import FIRST, NAMED, SECOND, TOUCH, row_of, touched
 from stream.exact import sigmoid
-from stream.kernel import kernel, small
+from stream.kernel import kernel, prefetch, small
+from stream.learners.layout import (
+    AHEAD,
+    DAMPING,
+    HORIZON,
+    INTERCEPT_FIRST,
+    INTERCEPT_SECOND,
+    L1,
+    L2,
+    LEARNED,
+    LIMIT,
+    PER_EXAMPLE,
+    RATE,
+    REFUSED,
+    STRENGTH,
+)
 
-__all__ = ["LIMIT", "ftrl_intercept", "ftrl_learn", "ftrl_weights"]
-
-LIMIT = 1e300
-"""Sums beyond this are not stored: the update is refused, so that a weight can never stop being finite."""
-
-# places in `sums`, `counts`, `options`: see stream.learners.learner
-STRENGTH, INTERCEPT_FIRST, INTERCEPT_SECOND = 0, 1, 2
-LEARNED, REFUSED = 0, 1
-RATE, DAMPING, L1, PER_EXAMPLE, L2, HORIZON = 0, 1, 2, 3, 4, 5
+__all__ = ["ftrl_intercept", "ftrl_learn", "ftrl_weights"]
 
 
 @small
-def ftrl_weight(z: float, n: float, strength: float, options: npt.NDArray[np.float64]) -> float:
-    """w = 0 if |z| <= lambda_1, else -(z - sgn(z) lambda_1) / ((beta + sqrt n) / alpha + lambda_2)."""
-    if z > strength:
-        return (strength - z) / ((options[DAMPING] + math.sqrt(n)) / options[RATE] + options[L2])
-    if z < -strength:
-        return (-strength - z) / ((options[DAMPING] + math.sqrt(n)) / options[RATE] + options[L2])
-    return 0.0
+def _weight(z: float, n: float, strength: float, beta: float, per_alpha: float, lambda_2: float) -> float:
+    """-(z - sgn(z) lambda_1) / ((beta + sqrt n) / alpha + lambda_2) where |z| > lambda_1."""
+    return (math.copysign(strength, z) - z) / ((beta + math.sqrt(n)) * per_alpha + lambda_2)
 
 
 @kernel
 def ftrl_intercept(sums: npt.NDArray[np.float64], options: npt.NDArray[np.float64]) -> float:
     """The unpenalised constant: -z / ((beta + sqrt n) / alpha)."""
-    return -sums[INTERCEPT_FIRST] / (
-        (options[DAMPING] + math.sqrt(sums[INTERCEPT_SECOND])) / options[RATE]
-    )
+    return -sums[INTERCEPT_FIRST] / ((options[DAMPING] + math.sqrt(sums[INTERCEPT_SECOND])) / options[RATE])
 
 
 @kernel
 def ftrl_learn(
-    rows: npt.NDArray[np.uint64],
+    cells: npt.NDArray[np.uint64],
     floats: npt.NDArray[np.float64],
     slots: npt.NDArray[np.int64],
     row_ptr: npt.NDArray[np.int64],
@@ -70,27 +71,32 @@ def ftrl_learn(
     margins: npt.NDArray[np.float64],
     named: npt.NDArray[np.int64],
 ) -> int:
-    """Predicts, then updates, examples first to last - 1 in order.
+    """Predicts, then updates, examples first to last - 1, one after the other.
 
-    `rows` uint64[slots, 4] and `floats` its float64 view; `slots` int64[nnz]; CSR arrays as in Batch;
-    `row_weights` float64[longest row] is scratch; `margins` float64[m] is filled before each update;
-    `named` int64[nnz] receives entries whose weight became non-zero without a name in the ledger.
-    Returns how many.
+    `cells` uint64[4 * slots] and `floats` its float64 view; `slots` int64[nnz], -1 without state;
+    CSR arrays as in Batch; `sums`, `counts`, `options` as in `stream.learners.layout`; `row_weights`
+    float64[longest row] is scratch; `margins` float64[m] is filled, each before its update;
+    `named` int64[nnz] receives the entries whose weight became non-zero and has no name in the
+    ledger. Returns how many.
     """
     events = 0
-    alpha = options[RATE]
+    beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
+    top = np.uint64(max(row_ptr[last] - 1, 0))
     for example in range(first, last):
-        begin = row_ptr[example]
-        end = row_ptr[example + 1]
+        begin = np.uint64(row_ptr[example])
+        end = np.uint64(row_ptr[example + 1])
         strength = options[L1] + sums[STRENGTH]
         intercept = ftrl_intercept(sums, options)
         margin = intercept
         for e in range(begin, end):
-            slot = slots[e]
+            prefetch(floats, row_of(max(slots[min(e + AHEAD, top)], 0)))
             w = 0.0
-            if slot >= 0:
-                w = ftrl_weight(floats[slot, FIRST], floats[slot, SECOND], strength, options)
-                margin += w * values[e]
+            if slots[e] >= 0:
+                row = row_of(slots[e])
+                z = floats[row + FIRST]
+                if abs(z) > strength:
+                    w = _weight(z, floats[row + SECOND], strength, beta, per_alpha, lambda_2)
+                    margin += w * values[e]
             row_weights[e - begin] = w
         margins[example] = margin
         if labels[example] < 0:
@@ -105,30 +111,30 @@ def ftrl_learn(
             sums[STRENGTH] += options[PER_EXAMPLE] * weights[example]
         strength = options[L1] + sums[STRENGTH]
         for e in range(begin, end):
-            slot = slots[e]
-            if slot < 0:
+            if slots[e] < 0:
                 continue
+            row = row_of(slots[e])
             g = gradient * values[e]
-            n = floats[slot, SECOND]
+            n = floats[row + SECOND]
             grown = n + g * g
-            z = floats[slot, FIRST] + g
+            z = floats[row + FIRST] + g
             w = row_weights[e - begin]
             if w != 0.0:
-                z -= (math.sqrt(grown) - math.sqrt(n)) / alpha * w
-            if not (abs(z) < LIMIT and grown < LIMIT):
+                z -= (math.sqrt(grown) - math.sqrt(n)) * per_alpha * w
+            if not abs(z) + grown < LIMIT:
                 counts[REFUSED] += 1
                 continue
-            floats[slot, FIRST] = z
-            floats[slot, SECOND] = grown
-            word = touched(rows[slot, TOUCH], number)
+            floats[row + FIRST] = z
+            floats[row + SECOND] = grown
+            word = touched(cells[row + TOUCH], number)
             if abs(z) > strength and word & NAMED == np.uint64(0):
                 word |= NAMED
                 named[events] = e
                 events += 1
-            rows[slot, TOUCH] = word
+            cells[row + TOUCH] = word
         n = sums[INTERCEPT_SECOND]
         grown = n + gradient * gradient
-        sums[INTERCEPT_FIRST] += gradient - (math.sqrt(grown) - math.sqrt(n)) / alpha * intercept
+        sums[INTERCEPT_FIRST] += gradient - (math.sqrt(grown) - math.sqrt(n)) * per_alpha * intercept
         sums[INTERCEPT_SECOND] = grown
     return events
 
@@ -142,7 +148,13 @@ def ftrl_weights(
     options: npt.NDArray[np.float64],
     out: npt.NDArray[np.float64],
 ) -> None:
-    """out[i] = weight of the row begin + i at the strength in force now (0 for an empty slot)."""
+    """out[i] = weight of the row in slot begin + i at the strength in force now (0 in an empty slot)."""
     strength = options[L1] + sums[STRENGTH]
+    beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
     for slot in range(begin, end):
-        out[slot - begin] = ftrl_weight(floats[slot, FIRST], floats[slot, SECOND], strength, options)
+        row = row_of(slot)
+        z = floats[row + FIRST]
+        w = 0.0
+        if abs(z) > strength:
+            w = _weight(z, floats[row + SECOND], strength, beta, per_alpha, lambda_2)
+        out[slot - begin] = w

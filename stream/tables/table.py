@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
-from stream.coordinate import FIRST, NAMED, SECOND, TOUCH
+from stream.coordinate import CELLS, FIRST, NAMED, SECOND, TOUCH
 from stream.errors import CannotCreate
 from stream.settings.models import State
 from stream.tables import probing
@@ -35,7 +35,7 @@ def _limit(capacity: int) -> int:
 class Table:
     """Open addressing over 64-bit addresses; only live coordinates take memory.
 
-    `rows`: uint64[slots, 4] as in `stream.coordinate`; `floats`: the same memory as float64. Both are
+    `cells`: uint64[4 * slots] as in `stream.coordinate`; `floats`: the same memory as float64. Both are
     valid until the next `admit`, `load` or `forget`.
     """
 
@@ -45,19 +45,24 @@ class Table:
         self._capacity = capacity
         self._filter = np.zeros(settings.admission_bytes if settings.admit_after > 1 else 1, np.uint8)
         self._slots = np.empty(0, np.int64)
-        self.rows = np.zeros((capacity + SPARE, 4), np.uint64)
+        self.cells = np.zeros(CELLS * (capacity + SPARE), np.uint64)
         self.live = 0
         self.refused = 0
 
     @property
     def floats(self) -> npt.NDArray[np.float64]:
-        """`rows` as float64[slots, 4]: columns FIRST and SECOND are the learner's."""
-        return self.rows.view(np.float64)
+        """`cells` as float64[4 * slots]: FIRST and SECOND of a row are the learner's."""
+        return self.cells.view(np.float64)
+
+    @property
+    def slots(self) -> int:
+        """Slots, spare ones included."""
+        return len(self.cells) // CELLS
 
     @property
     def table_bytes(self) -> int:
         """Memory of the rows, spare slots included."""
-        return self.rows.nbytes
+        return self.cells.nbytes
 
     @property
     def filter_bytes(self) -> int:
@@ -68,7 +73,7 @@ class Table:
         """Slot of each entry of the batch, -1 without state. Changes nothing. The array is reused."""
         slots = self._slots_for(batch)
         probing.find(
-            self.rows, np.uint64(self._capacity), self._secret, batch.addresses, 0, len(batch.addresses), slots
+            self.cells, np.uint64(self._capacity), self._secret, batch.addresses, 0, len(batch.addresses), slots
         )
         return slots
 
@@ -91,8 +96,8 @@ class Table:
     def forget(self, doomed: npt.NDArray[np.int64]) -> None:
         """Takes the rows at the given slots out."""
         if len(doomed):
-            self.rows[doomed, 0] = probing.DEAD
-            self.live -= probing.respread(self.rows, len(self.rows), np.uint64(self._capacity))
+            self.cells[CELLS * doomed] = probing.DEAD
+            self.live -= probing.respread(self.cells, self.slots, np.uint64(self._capacity))
 
     def age_filter(self) -> None:
         """Halves every count of the admission filter."""
@@ -102,24 +107,24 @@ class Table:
         """Addresses (uint64[live]) in ascending order and their slots (int64[live])."""
         addresses = np.empty(self.live, np.uint64)
         slots = np.empty(self.live, np.int64)
-        probing.unmixed(self.rows, len(self.rows), self._secret, addresses, slots)
+        probing.unmixed(self.cells, self.slots, self._secret, addresses, slots)
         order = np.argsort(addresses)
         return addresses[order], slots[order]
 
     def chunks(self, size: int = 1 << 16) -> Iterator[tuple[int, int]]:
         """Slot ranges that cover the table, for sweeps that must not copy it whole."""
-        for begin in range(0, len(self.rows), size):
-            yield begin, min(begin + size, len(self.rows))
+        for begin in range(0, self.slots, size):
+            yield begin, min(begin + size, self.slots)
 
     def state(self) -> dict[str, npt.NDArray[np.generic]]:
         """Everything needed to go on, sorted by address; free of slots, capacity and secret."""
         addresses, slots = self.occupied()
-        floats = self.floats
+        slots *= CELLS
         arrays: dict[str, npt.NDArray[np.generic]] = {
             "addresses": addresses,
-            "first": floats[slots, FIRST],
-            "second": floats[slots, SECOND],
-            "touch": self.rows[slots, TOUCH] & ~NAMED,
+            "first": self.floats[slots + int(FIRST)],
+            "second": self.floats[slots + int(SECOND)],
+            "touch": self.cells[slots + int(TOUCH)] & ~NAMED,
         }
         if self._settings.admit_after > 1:
             arrays["admission"] = self._filter.copy()
@@ -131,9 +136,9 @@ class Table:
         self.live = 0
         while _limit(self._capacity) < len(addresses):
             self._capacity = self._next_capacity()
-        self.rows = np.zeros((self._capacity + SPARE, 4), np.uint64)
+        self.cells = np.zeros(CELLS * (self._capacity + SPARE), np.uint64)
         state = np.stack([arrays[name].view(np.uint64) for name in ("first", "second", "touch")], axis=1)
-        probing.place(self.rows, np.uint64(self._capacity), self._secret, addresses, state)
+        probing.place(self.cells, np.uint64(self._capacity), self._secret, addresses, state)
         self.live = len(addresses)
         if self._settings.admit_after > 1:
             self._filter[:] = arrays["admission"]
@@ -152,7 +157,7 @@ class Table:
         if self._settings.max_live is not None:
             room = min(room, self._settings.max_live - self.live)
         stopped: int = probing.admit(
-            self.rows,
+            self.cells,
             np.uint64(self._capacity),
             self._secret,
             batch.addresses,
@@ -176,7 +181,7 @@ class Table:
 
     def _grow(self, needed: int) -> None:
         """Makes room for `needed` more rows: the memory is stretched (never doubled), rows spread in place."""
-        before = len(self.rows)
+        before = self.slots
         while _limit(self._capacity) - self.live < needed:
             self._capacity = self._next_capacity()
         if self._capacity >= 1 << 32:
@@ -185,5 +190,5 @@ class Table:
                 "set state.max_live or state.idle_after, or a stronger learner.l1_per_example"
             )
         if self._capacity + SPARE > before:
-            self.rows.resize((self._capacity + SPARE, 4), refcheck=False)
-            probing.respread(self.rows, before, np.uint64(self._capacity))
+            self.cells.resize(CELLS * (self._capacity + SPARE), refcheck=False)
+            probing.respread(self.cells, before, np.uint64(self._capacity))
