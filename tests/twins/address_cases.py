@@ -214,6 +214,11 @@ WORDS = [
         "e\u0323\u0301 e\u0301\u0323",
         {"\u1eb9\u0301": 1, "\u00e9\u0323": 1},
     ),
+    counted(
+        "accents: a mark behind one that does not compose",
+        "a\u0331\u0308 \u00e4\u0331",
+        {"a\u0331\u0308": 1, "\u00e4\u0331": 1},
+    ),
     counted("accents: on a letter that folds to two", "\u00df\u0301 ss\u0301", {"s\u015b": 2}),
     counted("accents: iota subscript becomes a letter", "\u1fb3 \u03b1\u0345", {"\u03b1\u03b9": 2}),
     counted("accents: a mark that is two", "\u03b9\u0344 \u0390 a\u0344", {"\u0390": 2, "a\u0308\u0301": 1}),
@@ -243,6 +248,9 @@ WORDS = [
     ),
     counted("wide: compatibility ideographs fold", "\uf900\uf900 \u8c48\u8c48", {"\u8c48\u8c48": 2}),
     note("wide: the halfwidth voiced sound mark is a word letter", "\uff8a\uff9e", "\uff8a", "\uff9e"),
+    counted(
+        "Hangul: jamo stay apart from syllables", "한 \u1112\u1161\u11ab", {"한": 1, "\u1112\u1161\u11ab": 1}
+    ),
     note("Hangul is cut into words", "한국어 사전", "한국어", "사전"),
     note("words: a very long word is one token", "Ab" * 400, "ab" * 400),
 ]
