@@ -1,4 +1,4 @@
-"""The address vectors, the plain twin and docs/addresses.md agree with each other and with published values."""
+"""The address vectors, the plain twin and docs/addresses.md agree with each other and published values."""
 
 from __future__ import annotations
 
