@@ -2,20 +2,18 @@
 
 from __future__ import annotations
 
-import re
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any
 
+from stream.decoding.times import epoch_ms
+
 __all__ = ["Column", "columns_of"]
 
 MOST_KEYS = 100
 """An object with more different keys over the sample is a map, not a record."""
-
-RFC3339 = re.compile(r"\d{4}-\d\d-\d\d[Tt]\d\d:\d\d:\d\d(\.\d+)?([Zz]|[+-]\d\d:\d\d)")
-FLOAT32_MOST = 3.4e38
 
 
 @dataclass
@@ -75,7 +73,7 @@ class Column:
     @property
     def instants(self) -> bool:
         """All values are RFC 3339 texts."""
-        return self.types == {str} and all(RFC3339.fullmatch(value) for value in self.values)
+        return self.types == {str} and all(map(_is_instant, self.values))
 
     @property
     def epochs(self) -> bool:
@@ -100,6 +98,14 @@ def columns_of(messages: Sequence[dict[str, Any]]) -> tuple[list[Column], dict[s
         if not any(keys[:depth] in maps for depth in range(1, len(keys) + 1))
     ]
     return kept, {".".join(keys): count for keys, count in maps.items()}
+
+
+def _is_instant(text: str) -> bool:
+    try:
+        epoch_ms(text)
+    except ValueError:
+        return False
+    return True
 
 
 def _walk(

@@ -8,7 +8,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-from stream.runs.columns import FLOAT32_MOST, Column
+from stream.decoding.uses import MAX_QUANTITY, MAX_WEIGHT
+from stream.runs.columns import Column
 
 __all__ = ["FieldGuess", "Role", "guess_field", "guess_roles"]
 
@@ -108,7 +109,9 @@ def _label(columns: Sequence[Column]) -> Role:
 
 
 def _weight(columns: Sequence[Column]) -> Role:
-    numbers = [c for c in columns if c.types <= {int, float} and min(c.values) >= 0]
+    numbers = [
+        c for c in columns if c.types <= {int, float} and min(c.values) >= 0 and max(c.values) <= MAX_WEIGHT
+    ]
     found = [c.path for c in numbers if c.last in WEIGHT_NAMES]
     similar = [f'"{c.path}"' for c in numbers if c.last == "weight"]
     absent = "No path is named like an example weight."
@@ -161,7 +164,7 @@ def _unfit(column: Column) -> str:
         return "" if items <= {str, int} else "a list whose items are not all texts or whole numbers"
     if float in column.types and not column.types <= {int, float}:
         return "numbers with a fraction in some messages and no numbers in others"
-    if any(not math.isfinite(v) or abs(v) > FLOAT32_MOST for v in column.values if isinstance(v, float)):
+    if any(not math.isfinite(v) or abs(v) > MAX_QUANTITY for v in column.values if isinstance(v, float)):
         return "numbers beyond 3.4e38"
     if any(abs(v) >= 1 << 63 for v in column.values if isinstance(v, int)):
         return "whole numbers of more than 64 bits; write them as texts"

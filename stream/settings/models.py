@@ -97,7 +97,8 @@ class MessagePaths(Section):
         description="Dotted path of the outcome: true, false, 1 or 0. Absent or null: scored, not learned.",
     )
     weight: DottedPath | None = Field(
-        default=None, description="Dotted path of the example weight, a number >= 0 that multiplies the loss."
+        default=None,
+        description="Dotted path of the example weight, 0 to 1,000,000, that multiplies the loss.",
     )
     max_tokens: Whole = Field(
         default=16_384, ge=1, le=1 << 20, description="A message that makes more tokens is rejected."

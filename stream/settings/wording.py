@@ -34,7 +34,7 @@ def wording(error: ValidationError, data: Any, place: str, origins: Sequence[Ori
         if why is None:
             why = _unknown(loc, data, origin is not None and origin.in_environment)
         shown = "" if value is _ABSENT else f" = {_shown(value)}"
-        lines.append(f"{origin.label if origin else place}: {_spelled(loc)}{shown}: {why}")
+        lines.append(_printable(f"{origin.label if origin else place}: {_spelled(loc)}{shown}: {why}"))
     return list(dict.fromkeys(lines))
 
 
@@ -89,6 +89,8 @@ def _unknown(loc: Loc, data: Any, in_environment: bool) -> str:
         if takers:
             return f'a field of kind "{kind}" does not take it, only {" or ".join(takers)}'
         known = [key.dotted for key in keys if kind in key.kinds]
+    elif loc[0] == "crosses":
+        known = [key.dotted for key in keys if key.section == "crosses"]
     close = nearest(".".join(part for part in loc if isinstance(part, str)), known)
     if in_environment:
         close = f"BEDLOAD_{close.upper().replace('.', '__')}"
@@ -131,3 +133,8 @@ def _keys_and_item(loc: Loc) -> str:
 def _shown(value: Any) -> str:
     text = json.dumps(value, ensure_ascii=False, default=str)
     return text if len(text) <= 60 else f"{text[:57]}..."
+
+
+def _printable(line: str) -> str:
+    """Line ends and terminal commands inside names and values are shown, not sent."""
+    return "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in line)
