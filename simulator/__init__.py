@@ -1,4 +1,7 @@
-"""Settings in, made-up message logs with known truth out; shares no code with `stream`. See docs/simulator.md."""
+"""Settings in, invented message logs with known truth out; see docs/simulator.md.
+
+Shares no code with `stream`, so that a bug in one cannot hide itself in the other.
+"""
 
 from simulator.bench import bench_log
 from simulator.courier import FeedBlock, blocks

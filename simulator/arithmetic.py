@@ -1,7 +1,8 @@
 """exp, log and power of float64 arrays from +, -, *, / and exact scaling only: same bits on every machine.
 
-The mathematical library of the system, and numpy's own vector versions of it, differ in the last bit from one
-processor to the next; a log that is promised byte for byte cannot use them. Errors stay below 1e-14, relative.
+The mathematical library of the system, and numpy's own vector versions of it, differ in the last bit from
+one processor to the next; a log that is promised byte for byte cannot use them. Relative errors stay below
+1e-13 up to |x| = 700.
 """
 
 from __future__ import annotations

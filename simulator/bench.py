@@ -1,8 +1,9 @@
-"""Counts and a seed in, a plain log for benches out: id, a note of Zipf words and y, about 470 bytes a line."""
+"""Counts and a seed in, a plain log for benches out: id, note of Zipf words and y, about 470 bytes a line."""
 
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -41,8 +42,9 @@ def bench_log(
     """Writes `messages` lines {"id":"...","note":"...","y":0 or 1}; same arguments, same bytes.
 
     A note is `tokens` words from `distinct` invented ones (lower-case ASCII, six or seven letters), drawn in
-    proportion to rank**-zipf_exponent; 500 of the 20,000 commonest have a true weight, which counts each time the
-    word stands in the note. Holds about 30 bytes a distinct word. Raises ValueError beyond 1,000,000 words.
+    proportion to rank**-zipf_exponent; 500 of the 20,000 commonest have a true weight, which counts as often
+    as the word stands in the note. Holds about 30 bytes a distinct word. Raises ValueError beyond 1,000,000
+    words.
     """
     if not 1 <= distinct <= MOST_WORDS:
         raise ValueError(f"distinct is {distinct}; allowed is 1 to {MOST_WORDS}")
@@ -64,7 +66,7 @@ def bench_log(
 
 
 def _words(distinct: int) -> Bytes:
-    """uint8[distinct, 8]: a space and three syllables; every third word ends in one more consonant, others in 0."""
+    """uint8[distinct, 8]: a space and three syllables; every third word has one more consonant, else 0."""
     number = np.arange(distinct) * SCRAMBLE % MOST_WORDS
     consonants, vowels = np.frombuffer(CONSONANTS, np.uint8), np.frombuffer(VOWELS, np.uint8)
     words = np.zeros((distinct, WORD_BYTES), np.uint8)
@@ -90,11 +92,17 @@ def _weights(distinct: int, seed: int) -> npt.NDArray[np.float64]:
 def _lines(first: int, notes: Bytes, positive: npt.NDArray[np.bool_]) -> bytes:
     """Lines of the notes uint8[m, tokens, 8]: laid out at full width, then the empty places taken out."""
     count, tokens = notes.shape[:2]
-    head, middle, tail = b'{"id":"b', b'","note":"', b'","y":'
     number = first + np.arange(count)
-    digits = np.stack([number // 10**power % 10 for power in range(8, -1, -1)], axis=1) + ord("0")
+    digits = number[:, None] // 10 ** np.arange(8, -1, -1) % 10 + ord("0")
     text = notes.reshape(count, tokens * WORD_BYTES)[:, 1:]  # no space before the first word
-    parts = [head, digits, middle, text, tail, (positive + ord("0"))[:, None], b"}\n"]
-    columns = [np.broadcast_to(np.frombuffer(p, np.uint8), (count, len(p))) if isinstance(p, bytes) else p for p in parts]
-    flat = np.concatenate([column.astype(np.uint8, copy=False) for column in columns], axis=1).ravel()
-    return flat[flat != 0].tobytes()
+    outcome = positive[:, None] + ord("0")
+    head, middle, tail = b'{"id":"b', b'","note":"', b'","y":'
+    parts: list[bytes | npt.NDArray[Any]] = [head, digits, middle, text, tail, outcome, b"}\n"]
+    return np.concatenate([_columns(part, count) for part in parts], axis=1).tobytes().translate(None, b"\0")
+
+
+def _columns(part: bytes | npt.NDArray[Any], count: int) -> Bytes:
+    """uint8[count, width]: a text on every line, or the bytes of each line."""
+    if isinstance(part, bytes):
+        return np.broadcast_to(np.frombuffer(part, np.uint8), (count, len(part)))
+    return part.astype(np.uint8)

@@ -21,7 +21,7 @@ __all__ = ["Courier", "FeedBlock", "blocks"]
 BLOCK_STREAM = 2
 PILOT_BLOCKS = 32
 RAWS_A_MESSAGE = 6
-SLIP_SHARE = 12  # of 1,024 words that can be misspelt
+SLIP_SHARE = 12  # of 1,024 units that can be misspelt
 LOCKER_STOP = STOPS.index("locker")
 STOP_SHARES = ((40, 6, 10, 8, 6, 20, 4, 6), (24, 36, 16, 8, 10, 1, 3, 2), (12, 24, 14, 18, 24, 0, 4, 4))
 """Stop kinds of country, suburb and town routes (every third route is of the same sort)."""
@@ -37,7 +37,7 @@ class FeedBlock:
     """Consecutive messages of a feed, m of them, the first of them message number `first`.
 
     `lines`: JSON Lines, bytes; `probability`: float64[m], true probability before label noise;
-    `outcome`: bool[m], as written, after label noise; `flipped`: bool[m]; `words`: words in all notes together.
+    `outcome`: bool[m], as written, after label noise; `flipped`: bool[m]; `words`: words in all notes.
     """
 
     first: int
@@ -62,7 +62,7 @@ class _Drawn:
 
 
 class Courier:
-    """One feed, ready to write any of its blocks, in any order: block i depends on the settings and i only."""
+    """One feed, ready to write its blocks in any order: block i depends on the settings and i only."""
 
     def __init__(self, feed: CourierFeed) -> None:
         self.feed = feed
@@ -81,13 +81,14 @@ class Courier:
         probability = sigmoid(drawn.margin + self.intercept)
         flipped = uniform(drawn.raws[:, 5]) < self.feed.label_noise
         outcome = (uniform(drawn.raws[:, 4]) < probability) != flipped
-        lines, words = self._lines.write(first, count, drawn.fields, drawn.notes, outcome)
+        lines = self._lines.write(first, count, drawn.fields, drawn.notes, outcome)
+        words = int(drawn.notes.words[:count].sum())
         return FeedBlock(first, lines, probability[:count], outcome[:count], flipped[:count], words)
 
     def _pilot_margins(self) -> Floats:
-        """Margins of up to 32 blocks spread evenly over the log: of all of a log of up to 131,072 messages."""
+        """Margins of up to 32 blocks, evenly spread: of the whole log if it has up to 131,072 messages."""
         count = self.feed.block_count
-        numbers = sorted({i * count // PILOT_BLOCKS for i in range(PILOT_BLOCKS)}) if count > PILOT_BLOCKS else range(count)
+        numbers = sorted({i * count // PILOT_BLOCKS for i in range(PILOT_BLOCKS)})
         return np.concatenate([self._draw(i).margin[: self.feed.messages - i * BLOCK] for i in numbers])
 
     def _draw(self, number: int) -> _Drawn:
@@ -103,11 +104,12 @@ class Courier:
         stop = self._stop_of[route % 3, bits(raws[:, 1], 16, 9)]
         locker = np.where(stop == LOCKER_STOP, bits(raws[:, 1], 25, 16) * len(LOCKERS) >> 16, len(LOCKERS))
         day, of_day = np.divmod(message, self.feed.messages_per_day)
-        moment = (of_day + bits(raws[:, 1], 41, 20) * 2.0**-20) / self.feed.messages_per_day * sum(HOUR_SHARES)
         shares = np.array(HOUR_SHARES)
         ends = np.cumsum(shares)
+        of_day = of_day + bits(raws[:, 1], 41, 20) * 2.0**-20
+        moment = of_day / self.feed.messages_per_day * ends[-1]
         hour = np.searchsorted(ends, moment, side="right")
-        second = np.minimum((moment - (ends - shares)[hour]) / shares[hour] * 3600, 3599).astype(np.int64)
+        second = (moment - (ends - shares)[hour]) / shares[hour] * 3600
         size = uniform(raws[:, 3])
         return Fields(
             route=route,
@@ -115,7 +117,7 @@ class Courier:
             locker=locker,
             day=day,
             hour=hour + FIRST_HOUR,
-            second=second,
+            second=np.minimum(second, 3599).astype(np.int64),
             sender=self._law.ranks(uniform(raws[:, 2]), known // 4),
             decagrams=10 + (size * size * size * 3000).astype(np.int64),
         )
@@ -128,17 +130,17 @@ class Courier:
         phrase_raw = stream.random_raw(int(phrases_in.sum()))
         phrase = lex.phrase_of[bits(phrase_raw, 0, DRAW_BITS)]
         length = lex.phrase_length[phrase]
-        first_word = np.cumsum(length) - length
+        first_unit = np.cumsum(length) - length
         raw = stream.random_raw(int(length.sum()))
-        place = np.arange(len(raw))
-        slot = lex.slots[np.repeat(lex.phrase_start[phrase] - first_word, length) + place]
-        word = lex.word_of[(slot << DRAW_BITS) + bits(raw, 64 - DRAW_BITS, DRAW_BITS)]
+        slot = lex.slots[np.repeat(lex.phrase_start[phrase] - first_unit, length) + np.arange(len(raw))]
+        unit = lex.unit_of[(slot << DRAW_BITS) + bits(raw, 64 - DRAW_BITS, DRAW_BITS)]
         slipped = np.flatnonzero(bits(raw, 0, 10) < SLIP_SHARE)
-        word[slipped] = lex.slips[word[slipped], bits(raw[slipped], 10, SLIP_BITS)]
+        unit[slipped] = lex.slips[unit[slipped], bits(raw[slipped], 10, SLIP_BITS)]
         kind = lex.open_kind[slot]
         is_open = np.flatnonzero(kind >= 0)
         rank = self._law.ranks(uniform(raw[is_open]), known)
-        return Notes(phrases_in, phrase_raw, length, word, is_open, rank, kind[is_open])
+        words = np.add.reduceat(lex.phrase_words[phrase], np.cumsum(phrases_in) - phrases_in)
+        return Notes(phrases_in, words, phrase_raw, length, unit, is_open, rank, kind[is_open])
 
     def _margins(self, fields: Fields, notes: Notes) -> Floats:
         """float64[BLOCK]: sums of the weights of the distinct tokens of each message, exact."""
@@ -146,18 +148,19 @@ class Courier:
         margin = truth.route[fields.route] + truth.stop[fields.stop] + truth.hour[fields.hour]
         margin += truth.locker[fields.locker] + truth.route_hour[fields.route, fields.hour]
         margin += truth.sender[np.minimum(fields.sender, PLANTED_SENDERS)]
-        column = truth.column_of_word[notes.word]
+        column = truth.column_of_unit[notes.unit]
         place = notes.rank * 3 + notes.kind
         in_reach = place < len(truth.column_of_open)
         column[notes.is_open] = np.where(in_reach, truth.column_of_open[np.where(in_reach, place, 0)], -1)
         planted = np.flatnonzero(column >= 0)
-        present = np.zeros((BLOCK, len(truth.note)), np.float32)
-        present[notes.row_of_word()[planted], column[planted]] = 1.0
-        return margin + present @ truth.note
+        present = np.zeros((BLOCK, len(truth.note)), np.bool_)
+        present[notes.row_of_unit()[planted], column[planted]] = True
+        row, token = np.divmod(np.flatnonzero(present), max(len(truth.note), 1))
+        return margin + np.bincount(row, truth.note[token], minlength=BLOCK)
 
 
 def blocks(feed: CourierFeed) -> Iterator[FeedBlock]:
-    """The messages of the feed in order, up to 4,096 at a time; holds one block and the vocabulary in memory."""
+    """The messages of the feed in order, 4,096 at a time; holds one block and the vocabulary in memory."""
     courier = Courier(feed)
     for number in range(feed.block_count):
         yield courier.block(number)

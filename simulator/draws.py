@@ -21,7 +21,7 @@ def raw_stream(seed: int, *place: int) -> np.random.PCG64:
 
 def uniform(raw: Raw) -> npt.NDArray[np.float64]:
     """The upper 53 bits as numbers in [0, 1)."""
-    return (raw >> np.uint64(11)) * 2.0**-53
+    return (raw >> np.uint64(11)).astype(np.float64) * 2.0**-53
 
 
 def bits(raw: Raw, low: int, count: int) -> npt.NDArray[np.int64]:

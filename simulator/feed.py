@@ -70,8 +70,8 @@ class CourierFeed:
                 raise ValueError(f"{name} is {value}; allowed is {low:g} to {high:g}")
         if self.words_known(self.messages - 1) > MOST_WORDS:
             raise ValueError(
-                f"growth {self.growth} over {self.messages} messages ends beyond {MOST_WORDS} words of a kind, "
-                "more than memory should hold; lower growth, first_words or messages"
+                f"growth {self.growth} over {self.messages} messages ends beyond {MOST_WORDS} words of a "
+                "kind, more than memory should hold; lower growth, first_words or messages"
             )
         if self.messages // self.messages_per_day >= MOST_DAYS:
             raise ValueError(

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from simulator.phrases import CLASSES, ENDS, JOINS, OPEN_CLASSES, PHRASES
-from simulator.words import slips
+from simulator.words import can_slip, slips
 
 __all__ = ["DRAW_BITS", "OPEN_KINDS", "SLIP_BITS", "Lexicon", "lexicon", "shared_out"]
 
@@ -29,52 +29,69 @@ def shared_out(weights: Sequence[int], cells: int) -> Ints:
 class Lexicon:
     """Everything about notes that does not depend on the settings.
 
-    `words`: the closed vocabulary and, after it, its misspellings; word i is written words[i];
-    `slips`: int64[words, 4], misspellings of a word, or the word itself where it has none;
+    A unit is a word of a class, a fixed run of words inside a phrase ("no answer at"), or one of these with
+    a slip of the pen. `units`: their texts; `slips`: int64[..., 4], four misspellings of a unit without one,
+    or the unit itself where nothing in it can be misspelt;
     `phrase_of`: int64[512], phrase by nine random bits; `phrase_start`, `phrase_length`: its slots;
-    `slots`: int64[...], slot number of each place in each phrase, phrases one after the other;
-    `word_of`: int64[slots * 512], word by slot and nine random bits;
-    `open_kind`: int64[slots], 0 street, 1 code, 2 shop, -1 for a slot of the closed vocabulary;
-    `join_of`, `end_of`: int64[256], punctuation by eight random bits.
+    `phrase_words`: its words; `slots`: int64[...], slot number of each place in each phrase, one phrase
+    after the other; `unit_of`: int64[slots * 512], unit by slot and nine random bits;
+    `open_kind`: int64[slots], 0 street, 1 code, 2 shop, -1 for a slot that is not open;
+    `join_of`, `end_of`: int64[256], punctuation by eight random bits; `mean_phrase`: words in a phrase.
     """
 
     def __init__(self) -> None:
-        phrases = [line.split() for line, _ in PHRASES]
-        literals = {w for phrase in phrases for w in phrase if w not in CLASSES and w not in OPEN_CLASSES}
-        classes = CLASSES | {word: (word,) for word in sorted(literals)}
-        self.words = sorted({word for members in classes.values() for word in members})
-        self.closed = len(self.words)
-        number = {word: i for i, word in enumerate(self.words)}
+        phrases = [_parts(line) for line, _ in PHRASES]
+        runs = {part for phrase in phrases for part in phrase} - {*CLASSES, *OPEN_CLASSES}
+        classes = CLASSES | {run: (run,) for run in sorted(runs)}
+        self.units = sorted({unit for members in classes.values() for unit in members})
+        number = {unit: i for i, unit in enumerate(self.units)}
         self._add_slips()
 
         names = [*classes, *OPEN_CLASSES]
         slot = {name: i for i, name in enumerate(names)}
         cells = 1 << DRAW_BITS
-        self.word_of = np.zeros(len(names) * cells, np.int64)
+        self.unit_of = np.zeros(len(names) * cells, np.int64)
         for i, members in enumerate(classes.values()):
             commonness = [2520 // (place + 2) for place in range(len(members))]
-            chosen = np.array([number[word] for word in members])
-            self.word_of[i * cells : (i + 1) * cells] = chosen[shared_out(commonness, cells)]
+            chosen = np.array([number[unit] for unit in members])
+            self.unit_of[i * cells : (i + 1) * cells] = chosen[shared_out(commonness, cells)]
         self.open_kind = np.full(len(names), -1, np.int64)
         self.open_kind[len(classes) :] = np.arange(OPEN_KINDS)
 
-        self.slots = np.array([slot[word] for phrase in phrases for word in phrase])
+        self.slots = np.array([slot[part] for phrase in phrases for part in phrase])
         self.phrase_length = np.array([len(phrase) for phrase in phrases])
         self.phrase_start = np.cumsum(self.phrase_length) - self.phrase_length
+        self.phrase_words = np.array([len(line.split()) for line, _ in PHRASES])
         self.phrase_of = shared_out([weight for _, weight in PHRASES], cells)
-        self.mean_phrase = float(self.phrase_length[self.phrase_of].mean())
+        self.mean_phrase = int(self.phrase_words[self.phrase_of].sum()) / cells
         self.join_of = shared_out([weight for _, weight in JOINS], 256)
         self.end_of = shared_out([weight for _, weight in ENDS], 256)
 
     def _add_slips(self) -> None:
-        taken = set(self.words)
+        """Misspells the first long word of each unit."""
+        taken = {word for unit in self.units for word in unit.split()}
+        made: dict[str, list[str]] = {}
         rows: list[list[int]] = []
-        for i in range(self.closed):
-            found = slips(self.words[i], taken)
-            first = len(self.words)
-            self.words += found
+        for i, unit in enumerate(tuple(self.units)):
+            word = next((word for word in unit.split() if can_slip(word)), "")
+            if word and word not in made:
+                made[word] = slips(word, taken)
+            found = [unit.replace(word, slip) for slip in made.get(word, [])]
+            first = len(self.units)
+            self.units += found
             rows.append([first + k % len(found) if found else i for k in range(1 << SLIP_BITS)])
         self.slips = np.array(rows)
+
+
+def _parts(line: str) -> list[str]:
+    """A phrase cut into classes and the runs of words between them."""
+    parts: list[str] = []
+    for word in line.split():
+        if parts and not word.isupper() and not parts[-1].isupper():
+            parts[-1] += " " + word
+        else:
+            parts.append(word)
+    return parts
 
 
 @cache

@@ -3,33 +3,36 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import date, timedelta
 
 import numpy as np
 import numpy.typing as npt
 
 from simulator.draws import Raw, bits
+from simulator.feed import BLOCK
 from simulator.lexicon import OPEN_KINDS, lexicon
 from simulator.phrases import ENDS, JOINS
-from simulator.planting import LOCKERS, ROUTES, STOPS, open_word, sender_number
+from simulator.planting import LOCKERS, ROUTES, STOPS, sender_number
+from simulator.words import MAKERS
 
-__all__ = ["FIRST_DAY", "Fields", "Lines", "Notes"]
+__all__ = ["Fields", "Lines", "Notes"]
 
-FIRST_DAY = "2031-03-03"
-FIRST_YEAR = 2031
-YEARS = 402
+FIRST_DAY = date(2031, 3, 3)
+HEAVIEST = 3_200
 CASES = 6
 SHOUT_SHARE = 6  # of 1,024 phrases
 CAPITAL_SHARE = 480  # of 1,024 notes
 FULL_STOPS = tuple(i for i, (text, _) in enumerate(JOINS) if text in (".", "!", "...", "\\n"))
-HEAD, TAIL = 7, 8
+HEAD = TAIL = 5
 
 Ints = npt.NDArray[np.int64]
+Flags = npt.NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True)
 class Fields:
-    """int64[m] each: numbers into ROUTES, STOPS, LOCKERS (its length: none), days since the first, hour and second
-    in the hour, rank of the sender, weight in units of 10 g."""
+    """int64[m] each: number into ROUTES, STOPS, LOCKERS (its length: none); days since the first; hour, and
+    second within it; rank of the sender; weight in units of 10 g."""
 
     route: Ints
     stop: Ints
@@ -43,141 +46,150 @@ class Fields:
 
 @dataclass(frozen=True, slots=True)
 class Notes:
-    """m notes as phrases (k of them in all) of words (w in all).
+    """m notes as phrases (k of them in all) of units (u in all).
 
-    `phrases_in`: int64[m]; `phrase_raw`: uint64[k], its bits from 9 up are for style; `length`: int64[k], words;
-    `word`: int64[w], number in the lexicon; `is_open`: int64[o], which words are of an open class instead, with
-    their `rank` and `kind`, int64[o].
+    `phrases_in`, `words`: int64[m], of each note; `phrase_raw`: uint64[k], bits 9 and up are for style;
+    `length`: int64[k], in units; `unit`: int64[u], number in the lexicon; `is_open`: int64[o], units that are
+    a word of an open class instead, with `rank` and `kind`, int64[o].
     """
 
     phrases_in: Ints
+    words: Ints
     phrase_raw: Raw
     length: Ints
-    word: Ints
+    unit: Ints
     is_open: Ints
     rank: Ints
     kind: Ints
 
-    def row_of_word(self) -> Ints:
-        """int64[w]: which note each word stands in."""
+    def row_of_unit(self) -> Ints:
+        """int64[u]: which note each unit stands in."""
         return np.repeat(np.repeat(np.arange(len(self.phrases_in)), self.phrases_in), self.length)
 
 
 class Lines:
-    """Writes blocks; grows its store of pieces as the vocabulary grows."""
+    """Writes blocks; its store of pieces grows with the vocabulary.
+
+    The first 2 * BLOCK pieces belong to the block in hand (beginnings of ids, days), then come the fixed
+    ones, then streets, codes and shops by rank.
+    """
 
     def __init__(self) -> None:
-        self._pieces: list[bytes] = []
-        thousand = range(1000)
+        self._store = np.empty(1 << 16, dtype=object)
+        self._filled = 2 * BLOCK
         add = self._add
-        self._id_start = add([f'{{"id":"h{i:03d}' for i in thousand])
-        self._digits = add([f"{i:03d}" for i in thousand])
-        self._id_end = add([f'{i:03d}","at":"' for i in thousand])
-        self._year = add([f"{FIRST_YEAR + i}-" for i in range(YEARS)])
-        self._date = add([f"{m:02d}-{d:02d}T" for m in range(1, 13) for d in range(1, 32)])
-        self._minute = add([f"{h:02d}:{m:02d}:" for h in range(24) for m in range(60)])
+        self._id_end = add([f'{i:03d}","at":"' for i in range(1_000)])
+        self._minute = add([f"T{h:02d}:{m:02d}:" for h in range(24) for m in range(60)])
         self._second = add([f'{s:02d}Z","note":"' for s in range(60)])
-        self._route = add([f'","route":"{name}"' for name in ROUTES])
-        self._stop = add([f',"stop":"{name}"' for name in STOPS])
-        self._hour = add([f',"hour":{i}' for i in range(24)])
-        self._sender = add([f',"sender":"S{i:03d}' for i in thousand])
-        self._sender_end = add([f'{i:03d}"' for i in thousand])
+        self._place = add(
+            [
+                f'","route":"{route}","stop":"{stop}","hour":{hour}'
+                for route in ROUTES
+                for stop in STOPS
+                for hour in range(24)
+            ]
+        )
+        self._sender = add([f',"sender":"S{i:03d}' for i in range(1_000)])
+        self._sender_end = add([f'{i:03d}"' for i in range(1_000)])
         self._locker = add([f',"locker":"{name}"' for name in LOCKERS] + [',"locker":null'])
-        self._weight = add([f',"weight_kg":{i // 100}.{i % 100:02d}' for i in range(3_200)])
-        self._outcome = add([f',"redelivered":{text}}}\n' for text in ("false", "true")])
+        self._end = add(
+            [
+                f',"weight_kg":{i // 100}.{i % 100:02d},"redelivered":{text}}}\n'
+                for i in range(HEAVIEST)
+                for text in ("false", "true")
+            ]
+        )
         self._join = add([text for text, _ in JOINS])
-        self._end = add([text for text, _ in ENDS])
-        self._word = add([form for word in lexicon().words for form in cased(word)])
-        self._open = len(self._pieces)
+        self._note_end = add([text for text, _ in ENDS])
+        self._unit = add([form for unit in lexicon().units for form in cased(unit)])
+        self._open = self._filled
 
-    def _add(self, texts: list[str]) -> int:
-        first = len(self._pieces)
-        self._pieces += [text.encode() for text in texts]
-        return first
-
-    def write(
-        self, first: int, count: int, fields: Fields, notes: Notes, outcome: npt.NDArray[np.bool_]
-    ) -> tuple[bytes, int]:
-        """Lines of the first `count` messages, numbered from `first`, and how many words their notes hold."""
+    def write(self, first: int, count: int, fields: Fields, notes: Notes, outcome: Flags) -> bytes:
+        """Lines of the first `count` messages, numbered from `first`."""
         rows = len(notes.phrases_in)
         last_phrase = np.cumsum(notes.phrases_in)
         first_phrase = last_phrase - notes.phrases_in
         row = np.repeat(np.arange(rows), notes.phrases_in)
-        last_word = np.cumsum(notes.length)
-        # A phrase takes its words and one piece of punctuation; a row its phrases, a head and a tail.
-        phrase_at = last_word - notes.length + np.arange(len(row)) + row * (HEAD + TAIL) + HEAD
+        first_unit = np.cumsum(notes.length) - notes.length
+        # A phrase takes its units and one piece of punctuation; a row its phrases, a head and a tail.
+        phrase_at = first_unit + np.arange(len(row)) + row * (HEAD + TAIL) + HEAD
         row_at = phrase_at[first_phrase] - HEAD
 
-        ids = np.empty(int(last_word[-1]) + len(row) + rows * (HEAD + TAIL), np.int64)
-        place = np.repeat(phrase_at - (last_word - notes.length), notes.length) + np.arange(len(notes.word))
-        ids[place] = self._word_pieces(notes, first_phrase, last_word - notes.length)
+        ids = np.empty(len(notes.unit) + len(row) + rows * (HEAD + TAIL), np.int64)
+        place = np.repeat(phrase_at - first_unit, notes.length) + np.arange(len(notes.unit))
+        ids[place] = self._unit_pieces(notes, first_phrase, first_unit)
         ids[phrase_at + notes.length] = self._punctuation(notes, last_phrase - 1)
         for column, piece in enumerate(self._head(first + np.arange(rows), fields)):
             ids[row_at + column] = piece
         tail_at = np.append(row_at[1:], len(ids)) - TAIL
         for column, piece in enumerate(self._tail(fields, outcome)):
             ids[tail_at + column] = piece
-        used = ids[: tail_at[count - 1] + TAIL]
-        return b"".join(map(self._pieces.__getitem__, used.tolist())), int(last_word[last_phrase[count - 1] - 1])
+        used = self._store[ids[: tail_at[count - 1] + TAIL]]
+        return b"".join(used.tolist())
 
-    def _word_pieces(self, notes: Notes, first_phrase: Ints, first_word: Ints) -> Ints:
-        """int64[w]: the piece of each word; cases are plain, Capital, SHOUTED, and each without a space before."""
-        lead = lexicon()
+    def _add(self, texts: list[str]) -> int:
+        """Adds pieces; the number of the first."""
+        first, self._filled = self._filled, self._filled + len(texts)
+        if self._filled > len(self._store):
+            longer = np.empty(max(self._filled, 2 * len(self._store)), dtype=object)
+            longer[:first] = self._store[:first]
+            self._store = longer
+        self._store[first : self._filled] = [text.encode() for text in texts]
+        return first
+
+    def _know(self, rank: int) -> None:
+        """Adds the open words up to this rank."""
+        known = (self._filled - self._open) // OPEN_KINDS
+        made = zip(*(maker(known, rank + 1) for maker in MAKERS), strict=True)
+        self._add([" " + word for words in made for word in words])
+
+    def _unit_pieces(self, notes: Notes, first_phrase: Ints, first_unit: Ints) -> Ints:
+        """int64[u]: the piece of each unit: as it is, with a Capital or SHOUTED, with or without a space."""
         shouted = bits(notes.phrase_raw, 9, 10) < SHOUT_SHARE
-        capital = np.zeros(len(shouted), np.bool_)
-        ended = np.isin(lead.join_of[bits(notes.phrase_raw, 19, 8)], FULL_STOPS)
-        capital[1:] = ended[:-1]
+        ended = np.isin(lexicon().join_of[bits(notes.phrase_raw, 19, 8)], FULL_STOPS)
+        capital = np.append(False, ended[:-1])
         capital[first_phrase] = bits(notes.phrase_raw[first_phrase], 27, 10) < CAPITAL_SHARE
-        case = np.repeat(shouted * 4, notes.length)
         opening = np.where(shouted, 4, capital * 2)
         opening[first_phrase] += 1
-        case[first_word] = opening
-        pieces = self._word + notes.word * CASES + case
+        case = np.repeat(shouted * 4, notes.length)
+        case[first_unit] = opening
+        pieces = self._unit + notes.unit * CASES + case
         self._know(int(notes.rank.max(initial=-1)))
         pieces[notes.is_open] = self._open + notes.rank * OPEN_KINDS + notes.kind
         return pieces
 
-    def _know(self, rank: int) -> None:
-        """Adds the open words up to this rank."""
-        known = (len(self._pieces) - self._open) // OPEN_KINDS
-        self._add([" " + open_word(r, kind) for r in range(known, rank + 1) for kind in range(OPEN_KINDS)])
-
     def _punctuation(self, notes: Notes, last_phrase: Ints) -> Ints:
         draw = bits(notes.phrase_raw, 19, 8)
         pieces = self._join + lexicon().join_of[draw]
-        pieces[last_phrase] = self._end + lexicon().end_of[draw[last_phrase]]
+        pieces[last_phrase] = self._note_end + lexicon().end_of[draw[last_phrase]]
         return pieces
 
     def _head(self, number: Ints, fields: Fields) -> list[Ints]:
-        date = np.datetime64(FIRST_DAY) + fields.day
-        month = date.astype("datetime64[M]")
-        year = date.astype("datetime64[Y]")
-        months = (month - year.astype("datetime64[M]")).astype(np.int64)
-        days = (date - month.astype("datetime64[D]")).astype(np.int64)
+        thousands = number // 1_000
+        first_thousand, first_day = int(thousands[0]), int(fields.day[0])
+        ids = [f'{{"id":"h{i:06d}' for i in range(first_thousand, int(thousands[-1]) + 1)]
+        days = [str(FIRST_DAY + timedelta(day)) for day in range(first_day, int(fields.day[-1]) + 1)]
+        self._store[: len(ids)] = [text.encode() for text in ids]
+        self._store[BLOCK : BLOCK + len(days)] = [text.encode() for text in days]
         return [
-            self._id_start + number // 1_000_000,
-            self._digits + number // 1_000 % 1_000,
+            thousands - first_thousand,
             self._id_end + number % 1_000,
-            self._year + (year.astype(np.int64) + 1970 - FIRST_YEAR),
-            self._date + months * 31 + days,
+            BLOCK + fields.day - first_day,
             self._minute + fields.hour * 60 + fields.second // 60,
             self._second + fields.second % 60,
         ]
 
-    def _tail(self, fields: Fields, outcome: npt.NDArray[np.bool_]) -> list[Ints]:
+    def _tail(self, fields: Fields, outcome: Flags) -> list[Ints]:
         sender = sender_number(fields.sender)
         return [
-            self._route + fields.route,
-            self._stop + fields.stop,
-            self._hour + fields.hour,
+            self._place + (fields.route * len(STOPS) + fields.stop) * 24 + fields.hour,
             self._sender + sender // 1_000,
             self._sender_end + sender % 1_000,
             self._locker + fields.locker,
-            self._weight + fields.decagrams,
-            self._outcome + outcome,
+            self._end + fields.decagrams * 2 + outcome,
         ]
 
 
-def cased(word: str) -> list[str]:
-    """The six forms of a word: as it is, with a capital, in capitals; each after a space and without one."""
-    return [space + form for form in (word, word.capitalize(), word.upper()) for space in (" ", "")]
+def cased(unit: str) -> list[str]:
+    """Six forms of a unit: as it is, with a capital, in capitals; each after a space and without one."""
+    return [space + form for form in (unit, unit.capitalize(), unit.upper()) for space in (" ", "")]

@@ -30,7 +30,7 @@ class Truth:
     `intercept`; `weights`: {field, token, weight} of each token whose true weight is not zero;
     `crosses`: {fields, tokens, weight}, the same for a route and an hour together;
     `mean_probability`: mean of the true probabilities, before label noise;
-    `redelivered_share`: share of outcomes that are true as written; `flipped`: outcomes that label noise turned;
+    `redelivered_share`: share of outcomes written as true; `flipped`: outcomes that label noise turned;
     `words`: words in all notes; `words_known`: streets, codes and shops, of each, at the end;
     `settings`: of the feed.
     """
@@ -59,12 +59,12 @@ def write_log(
     probability_path: str | Path | None = None,
     progress: Progress | None = None,
 ) -> Truth:
-    """Writes the feed as JSON Lines and returns its truth, about 2 µs a short message.
+    """Writes the feed as JSON Lines and returns the truth behind it.
 
-    `path` ending in .gz or .zst is compressed; "-" is standard output. The truth goes to `truth_path`, by default
-    `<path>.truth.json` (nowhere for "-"). `probability_path`: JSON Lines of id and p_true beside it, on request.
-    Files take their names when they are whole and replace older ones. Raises OSError, and ImportError for .zst
-    without zstandard.
+    A `path` that ends in .gz or .zst is compressed; "-" is standard output. The truth goes to `truth_path`,
+    by default `<path>.truth.json` (nowhere for "-"); id and p_true of each message go to `probability_path`,
+    if there is one. Files get their names when they are whole, and replace older ones. Raises OSError, and
+    ImportError for .zst without zstandard.
     """
     courier = Courier(feed)
     tally = _Tally()
@@ -136,7 +136,7 @@ def _maybe(path: str | Path | None) -> Iterator[IO[bytes] | None]:
 
 @contextmanager
 def open_log(path: str | Path) -> Iterator[IO[bytes]]:
-    """A binary file to write, compressed by its ending; it gets its name at the end, or is removed on an error.
+    """A binary file to write, compressed by its ending; gets its name at the end, or goes away on an error.
 
     "-" is standard output, and what exists and is no regular file (a pipe, a device) is written in place.
     """

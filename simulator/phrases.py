@@ -1,7 +1,7 @@
 """The invented language of courier notes: word classes, phrases made of them, and which way a word leans.
 
-A phrase is a line of words; a word in capitals stands for any word of that class. STREET, CODE and SHOP are the
-open classes whose words are made up on the fly (simulator/words.py). No phrase begins with an open class.
+A phrase is a line of words; a word in capitals stands for any word of that class. STREET, CODE and SHOP are
+open classes, whose words are made up without end (simulator/words.py). No phrase begins with an open class.
 """
 
 from __future__ import annotations
@@ -13,10 +13,10 @@ OPEN_CLASSES = ("STREET", "CODE", "SHOP")
 CLASSES: dict[str, tuple[str, ...]] = {
     name: tuple(line.split())
     for name, line in {
-        "PERSON": "neighbour caretaker receptionist guard tenant porter gardener clerk housemate cleaner foreman"
-        " landlord janitor cook plumber farmhand",
-        "PLACE": "porch shed garage hallway lobby mailroom doorstep carport stairwell workshop greenhouse cellar"
-        " barn balcony canteen café crèche kiosk",
+        "PERSON": "neighbour caretaker receptionist guard tenant porter gardener clerk housemate cleaner"
+        " foreman landlord janitor cook plumber farmhand",
+        "PLACE": "porch shed garage hallway lobby mailroom doorstep carport stairwell workshop greenhouse"
+        " cellar barn balcony canteen café crèche kiosk",
         "DOOR": "gate door barrier buzzer intercom keypad shutter bell lift hatch latch turnstile",
         "CONDITION": "locked jammed closed broken stuck open faulty unlocked silent repaired iced dismantled",
         "PACKAGE": "box parcel crate bundle tube envelope sack",
@@ -72,7 +72,7 @@ PHRASES: tuple[tuple[str, int], ...] = (
     ("wrong address", 8),
     ("moved away in spring", 4),
     ("refused at door", 6),
-    ("paid in full", 7),
+    ("paid at the door", 7),
     ("safe spot behind COLOUR shed", 7),
     ("COLOUR DOOR on the left", 8),
     ("LEVEL floor", 11),
@@ -81,7 +81,7 @@ PHRASES: tuple[tuple[str, int], ...] = (
     ("PAPER missing", 6),
     ("key under pot", 4),
     ("sign says FAR", 7),
-    ("COUNT of COUNT pieces", 6),
+    ("COUNT pieces", 6),
     ("collected already", 6),
     ("PERSON asleep", 4),
     ("office shut for holiday", 5),
@@ -92,19 +92,22 @@ PHRASES: tuple[tuple[str, int], ...] = (
 """Each phrase with how often it is used, relative to the others."""
 
 JOINS: tuple[tuple[str, int], ...] = (
-    (",", 120), (".", 48), (";", 16), (" -", 16), (" /", 10), ("!", 6), ("...", 8), (":", 4), ("", 24), ("\\n", 4),
-)  # fmt: skip
+    *((",", 120), (".", 48), (";", 16), (" -", 16), (" /", 10)),
+    *(("!", 6), ("...", 8), (":", 4), ("", 24), ("\\n", 4)),
+)
 """What stands between two phrases, as written inside a JSON text; shares of 256."""
 
 ENDS: tuple[tuple[str, int], ...] = (("", 150), (".", 80), ("!", 12), ("...", 8), (" ok?", 6))
 """What stands after the last phrase; shares of 256."""
 
-TOWARDS_YES = tuple(
-    "nobody no refused wrong moved closed locked jammed broken stuck faulty silent dismantled iced blocked missing"
-    " asleep shut again tomorrow later weekend evening unlabelled leaking torn oversized full dog geese roadworks"
-    " scaffold trench fog ice flood changed keypad intercom 留守 不在 late stairwell fourth top call".split()
+_LEANINGS = (
+    "nobody no refused wrong moved closed locked jammed broken stuck faulty silent dismantled iced blocked"
+    " missing asleep shut again tomorrow later weekend evening unlabelled leaking torn oversized full dog"
+    " geese roadworks scaffold trench fog ice flood changed keypad intercom 留守 不在 late stairwell fourth"
+    " top call",
+    "signed handed passed neighbour caretaker porter receptionist clerk took collected paid photo open"
+    " unlocked repaired intact sealed safe key shed porch mailroom canteen counter fine thanks ground café"
+    " morning",
 )
-TOWARDS_NO = tuple(
-    "signed handed passed neighbour caretaker porter receptionist clerk took collected paid photo open unlocked"
-    " repaired intact sealed safe key shed porch mailroom canteen counter fine thanks ground café morning".split()
-)
+TOWARDS_YES, TOWARDS_NO = (tuple(line.split()) for line in _LEANINGS)
+"""Words whose true weight, where they have one, is above zero, and those where it is below."""

@@ -17,7 +17,7 @@ from simulator.draws import raw_stream, uniform
 from simulator.feed import CourierFeed
 from simulator.lexicon import OPEN_KINDS, lexicon
 from simulator.phrases import TOWARDS_NO, TOWARDS_YES
-from simulator.words import code, shop, street
+from simulator.words import MAKERS
 
 __all__ = [
     "HOURS",
@@ -46,18 +46,20 @@ Ints = npt.NDArray[np.int64]
 
 def open_word(rank: int, kind: int) -> str:
     """The street (kind 0), code (1) or shop (2) of this rank, as written."""
-    return (street, code, shop)[kind](rank)
+    return MAKERS[kind](rank, rank + 1)[0]
 
 
 @dataclass(frozen=True, slots=True)
 class Planting:
-    """True weights. `note`: float32[p], weights of the planted note words;
-    `column_of_word`: int64[words], `column_of_open`: int64[300 * 3], place in `note` or -1;
-    `route` [36], `stop` [8], `hour` [24], `sender` [121] (the last for all others), `locker` [31] (the last for
-    none), `route_hour` [36, 24]: float64, mostly zero."""
+    """True weights. `note`: float64[p], those of the planted note words;
+    `column_of_unit`: int64[units], `column_of_open`: int64[300 * 3], place in `note` of the one planted
+    word of a unit, or -1; `leaning`: the planted words of units, the first of `note`;
+    `route` [36], `stop` [8], `hour` [24], `sender` [121] (the last for all others), `locker` [31] (the last
+    for none), `route_hour` [36, 24]: float64, mostly zero."""
 
-    note: npt.NDArray[np.float32]
-    column_of_word: Ints
+    note: Floats
+    leaning: tuple[str, ...]
+    column_of_unit: Ints
     column_of_open: Ints
     route: Floats
     stop: Floats
@@ -68,8 +70,7 @@ class Planting:
 
     def tokens(self) -> list[dict[str, Any]]:
         """Every non-zero weight of one token: field, token (case folded in notes), weight."""
-        words = lexicon().words
-        planted = {words[i]: self.note[c] for i, c in enumerate(self.column_of_word) if c >= 0}
+        planted = dict(zip(self.leaning, self.note.tolist(), strict=False))
         for place in np.flatnonzero(self.column_of_open >= 0):
             word = open_word(*divmod(int(place), OPEN_KINDS))
             planted[word.casefold()] = self.note[self.column_of_open[place]]
@@ -100,7 +101,7 @@ def sender_code(rank: int) -> str:
 
 def sender_number(rank: Ints) -> Ints:
     """int64 numbers below 1,000,000, different for different ranks below that."""
-    return rank * 387_421 % 1_000_000
+    return (rank + 1) * 387_421 % 1_000_000
 
 
 class _Planter:
@@ -133,19 +134,18 @@ class _Planter:
 
 
 def plant(feed: CourierFeed) -> Planting:
-    """The true weights of this feed: leaning words first (at most half of them), then streets, codes and shops."""
+    """The true weights of this feed; of those of notes, up to half stand on words that lean."""
     planter = _Planter(feed)
-    words = lexicon().words
-    leaning = [(words.index(w), 1.0) for w in TOWARDS_YES] + [(words.index(w), -1.0) for w in TOWARDS_NO]
-    chosen = planter.places(len(leaning), min(len(leaning) * 4 // 5, feed.planted_words // 2))
-    column_of_word = np.full(len(words), -1)
-    column_of_word[[leaning[i][0] for i in chosen]] = np.arange(len(chosen))
-    lean = planter.sizes(len(chosen)) * np.array([leaning[i][1] for i in chosen])
+    leanings = [(word, 1.0) for word in TOWARDS_YES] + [(word, -1.0) for word in TOWARDS_NO]
+    count = min(len(leanings) * 4 // 5, feed.planted_words // 2)
+    chosen = [leanings[i] for i in planter.places(len(leanings), count)]
+    lean = planter.sizes(count) * np.array([sign for _, sign in chosen])
+    leaning = tuple(word for word, _ in chosen)
 
-    rest = feed.planted_words - len(chosen)
+    rest = feed.planted_words - count
     column_of_open = np.full(PLANTED_OPEN * OPEN_KINDS, -1)
-    column_of_open[planter.places(PLANTED_OPEN * OPEN_KINDS, rest)] = len(chosen) + np.arange(rest)
-    note = np.concatenate([lean, planter.signed(rest)]).astype(np.float32)
+    column_of_open[planter.places(PLANTED_OPEN * OPEN_KINDS, rest)] = count + np.arange(rest)
+    note = np.concatenate([lean, planter.signed(rest)])
 
     open_hours = slice(6, 22)
     hour = np.zeros(HOURS)
@@ -154,7 +154,8 @@ def plant(feed: CourierFeed) -> Planting:
     route_hour[:, open_hours] = planter.spread(len(ROUTES) * 16, len(ROUTES) * 16, 30).reshape(-1, 16)
     return Planting(
         note=note,
-        column_of_word=column_of_word,
+        leaning=leaning,
+        column_of_unit=_columns_of_units(leaning),
         column_of_open=column_of_open,
         route=planter.spread(len(ROUTES), len(ROUTES), 8),
         stop=planter.spread(len(STOPS), len(STOPS), 3),
@@ -165,8 +166,14 @@ def plant(feed: CourierFeed) -> Planting:
     )
 
 
+def _columns_of_units(leaning: tuple[str, ...]) -> Ints:
+    """int64[units]: place in `leaning` of the word of it that the unit holds (no unit holds two), or -1."""
+    place = {word: i for i, word in enumerate(leaning)}
+    return np.array([max(place.get(word, -1) for word in unit.split()) for unit in lexicon().units])
+
+
 def intercept_for(margins: Floats, base_rate: float) -> float:
-    """The intercept (a multiple of 2**-20) at which the mean of sigmoid(intercept + margin) is the base rate."""
+    """The multiple of 2**-20 that makes the mean of sigmoid(intercept + margin) the base rate."""
     values, counts = np.unique(margins, return_counts=True)
     low, high = -600.0, 600.0
     while high - low > 2.0**-21:

@@ -2,61 +2,90 @@
 
 from __future__ import annotations
 
-__all__ = ["code", "shop", "slips", "street"]
+import numpy as np
+import numpy.typing as npt
+
+__all__ = ["MAKERS", "can_slip", "codes", "shops", "slips", "streets"]
 
 ONSETS = ("b", "br", "d", "dr", "gl", "h", "k", "l", "m", "p", "pr", "r", "sk", "st", "t", "v")
 NUCLEI = ("a", "e", "i", "o", "u", "ai", "oa", "ei")
-STREET_ENDS = ("quell", "vorn", "drel", "zeth", "plin", "gask", "yorl", "thund", "vask", "wenth", "morl", "zöl",
-               "quist", "lév", "drask", "blenth")  # fmt: skip
-SHOP_ENDS = ("zzit", "nkum", "ffro", "mblo", "ggins", "ppo", "zzap", "nkley", "ttaro", "ckoo", "bbex", "mmix",
-             "xxo", "rpto", "nzee", "ddlo")  # fmt: skip
+STREET_ENDS = (
+    *("quell", "vorn", "drel", "zeth", "plin", "gask", "yorl", "thund"),
+    *("vask", "wenth", "morl", "zöl", "quist", "lév", "drask", "blenth"),
+)
+SHOP_ENDS = (
+    *("zzit", "nkum", "ffro", "mblo", "ggins", "ppo", "zzap", "nkley"),
+    *("ttaro", "ckoo", "bbex", "mmix", "xxo", "rpto", "nzee", "ddlo"),
+)
 CODE_LETTERS = "abcdefghkmnpqrtvwxyz"
 SYLLABLE_BITS = 7
 END_BITS = 4
 SCRAMBLE = 0x2545F491  # odd, so that multiplying modulo a power of two permutes
 
+Ints = npt.NDArray[np.int64]
+Texts = npt.NDArray[np.object_]
 
-def _invented(rank: int, ends: tuple[str, ...]) -> str:
-    """The rank-th word: syllables of one onset and one nucleus, then an ending; longer as ranks grow.
+
+def _texts(parts: list[str]) -> Texts:
+    return np.array(parts, dtype=object)
+
+
+SYLLABLES = _texts([onset + nucleus for onset in ONSETS for nucleus in NUCLEI])
+OPENINGS = _texts([text.capitalize() for text in SYLLABLES])
+LETTERS = _texts(list(CODE_LETTERS))
+
+
+def _invented(first: int, last: int, openings: Texts, ends: Texts) -> list[str]:
+    """Words of ranks first <= rank < last: syllables of an onset and a nucleus, then an ending; longer as
+    ranks grow (2,048 words of one syllable and an ending, 262,144 of two, 33,554,432 of three).
 
     Onsets and endings begin with consonants and nuclei are vowels, so different digits give different words.
     """
-    syllables, bits = 1, SYLLABLE_BITS + END_BITS
-    while rank >= 1 << bits:
-        rank -= 1 << bits
-        syllables, bits = syllables + 1, bits + SYLLABLE_BITS
-    digits = (rank + 1) * SCRAMBLE % (1 << bits)
-    ending = ends[digits % len(ends)]
-    digits >>= END_BITS
-    word = ""
-    for _ in range(syllables):
-        word += ONSETS[digits % len(ONSETS)] + NUCLEI[(digits >> 4) % len(NUCLEI)]
-        digits >>= SYLLABLE_BITS
-    return word + ending
+    found: list[str] = []
+    start, bits = 0, SYLLABLE_BITS + END_BITS
+    while first < last:
+        stop = start + (1 << bits)
+        digits = (np.arange(first, min(last, stop)) - start + 1) * SCRAMBLE % (1 << bits)
+        ending, digits = ends[digits % len(ends)], digits >> END_BITS
+        word = openings[digits % len(openings)]
+        for _ in range(bits // SYLLABLE_BITS - 1):
+            digits = digits >> SYLLABLE_BITS
+            word = word + SYLLABLES[digits % len(SYLLABLES)]
+        found += (word + ending).tolist()
+        first, start, bits = max(first, stop), stop, bits + SYLLABLE_BITS
+    return found
 
 
-def street(rank: int) -> str:
-    """A street-like name, with a capital; some carry an accent."""
-    return _invented(rank, STREET_ENDS).capitalize()
+def streets(first: int, last: int) -> list[str]:
+    """Street-like names of these ranks, with a capital; some carry an accent."""
+    return _invented(first, last, OPENINGS, _texts(list(STREET_ENDS)))
 
 
-def shop(rank: int) -> str:
-    """A shop-like name, lower case."""
-    return _invented(rank, SHOP_ENDS)
+def shops(first: int, last: int) -> list[str]:
+    """Shop-like names of these ranks, lower case."""
+    return _invented(first, last, SYLLABLES, _texts(list(SHOP_ENDS)))
 
 
-def code(rank: int) -> str:
-    """A bay or shelf code: a letter and a number of two digits or more; every third in capitals."""
-    number, letter = divmod(rank, len(CODE_LETTERS))
-    text = CODE_LETTERS[(letter * 7 + number * 3) % len(CODE_LETTERS)] + str(10 + number)
-    return text.upper() if rank % 3 == 1 else text
+def codes(first: int, last: int) -> list[str]:
+    """Bay and shelf codes of these ranks: a letter and a number above 9, every third code in capitals."""
+    number, letter = np.divmod(np.arange(first, last), len(CODE_LETTERS))
+    letters = LETTERS[(letter * 7 + number * 3) % len(CODE_LETTERS)]
+    texts = [f"{a}{n + 10}" for a, n in zip(letters.tolist(), number.tolist(), strict=True)]
+    return [text.upper() if rank % 3 == 1 else text for rank, text in enumerate(texts, first)]
+
+
+MAKERS = (streets, codes, shops)
+"""Makers of open words, in the order of simulator.phrases.OPEN_CLASSES."""
+
+
+def can_slip(word: str) -> bool:
+    """Whether `slips` misspells this word: five or more plain letters."""
+    return len(word) >= 5 and word.isascii() and word.isalpha()
 
 
 def slips(word: str, taken: set[str], most: int = 4) -> list[str]:
-    """Up to `most` misspellings of a word of five or more plain letters, none of them in `taken`; adds them to it."""
+    """Up to `most` misspellings of a word that can slip, none of them in `taken`; adds them to it."""
     found: list[str] = []
-    if len(word) < 5 or not word.isascii() or not word.isalpha():
-        return found
     for at in range(1, len(word) - 1):
         for slip in (word[:at] + word[at + 1] + word[at] + word[at + 2 :], word[:at] + word[at + 1 :]):
             if slip not in taken and len(found) < most:

@@ -33,4 +33,5 @@ class ZipfLaw:
         place = uniform * (CELLS * (self._mass[known] / self._mass[-1]))
         cell = place.astype(np.int64)
         rank = self._rank_at[cell] + (place - cell) * self._width[cell]
-        return np.minimum(rank.astype(np.int64), known - 1)
+        below: npt.NDArray[np.int64] = np.minimum(rank, known - 1).astype(np.int64)
+        return below
