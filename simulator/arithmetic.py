@@ -48,7 +48,7 @@ def log(x: Floats) -> Floats:
 
 
 def power(x: Floats, exponent: float) -> Floats:
-    """x**exponent for x > 0."""
+    """x**exponent for normal x > 0, where that lies between e**-700 and e**700."""
     return exp(exponent * log(x))
 
 

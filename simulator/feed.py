@@ -17,7 +17,7 @@ BLOCK = 4_096
 LIMITS: dict[str, tuple[float, float]] = {
     "seed": (0, 2**63 - 1),
     "messages": (1, 10**9),
-    "words_per_note": (4, 200),
+    "words_per_note": (6, 200),
     "base_rate": (1e-4, 1 - 1e-4),
     "label_noise": (0, 0.5),
     "zipf_exponent": (0.5, 2),

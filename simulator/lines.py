@@ -22,6 +22,7 @@ HEAVIEST = 3_200
 CASES = 6
 SHOUT_SHARE = 6  # of 1,024 phrases
 CAPITAL_SHARE = 480  # of 1,024 notes
+LINE_END = next(i for i, (text, _) in enumerate(JOINS) if text == "\\n")
 FULL_STOPS = tuple(i for i, (text, _) in enumerate(JOINS) if text in (".", "!", "...", "\\n"))
 HEAD = TAIL = 5
 
@@ -146,11 +147,12 @@ class Lines:
     def _unit_pieces(self, notes: Notes, first_phrase: Ints, first_unit: Ints) -> Ints:
         """int64[u]: the piece of each unit: as it is, with a Capital or SHOUTED, with or without a space."""
         shouted = bits(notes.phrase_raw, 9, 10) < SHOUT_SHARE
-        ended = np.isin(lexicon().join_of[bits(notes.phrase_raw, 19, 8)], FULL_STOPS)
-        capital = np.append(False, ended[:-1])
+        join = lexicon().join_of[bits(notes.phrase_raw, 19, 8)]
+        capital = np.append(False, np.isin(join[:-1], FULL_STOPS))
+        unspaced = np.append(False, join[:-1] == LINE_END)
+        unspaced[first_phrase] = True
         capital[first_phrase] = bits(notes.phrase_raw[first_phrase], 27, 10) < CAPITAL_SHARE
-        opening = np.where(shouted, 4, capital * 2)
-        opening[first_phrase] += 1
+        opening = np.where(shouted, 4, capital * 2) + unspaced
         case = np.repeat(shouted * 4, notes.length)
         case[first_unit] = opening
         pieces = self._unit + notes.unit * CASES + case

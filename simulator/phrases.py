@@ -97,7 +97,7 @@ JOINS: tuple[tuple[str, int], ...] = (
 )
 """What stands between two phrases, as written inside a JSON text; shares of 256."""
 
-ENDS: tuple[tuple[str, int], ...] = (("", 150), (".", 80), ("!", 12), ("...", 8), (" ok?", 6))
+ENDS: tuple[tuple[str, int], ...] = (("", 150), (".", 80), ("!", 12), ("...", 8), ("?", 6))
 """What stands after the last phrase; shares of 256."""
 
 _LEANINGS = (
