@@ -1,0 +1,218 @@
+"""Text in, word tokens out: kernels that fold, cut and write `field-name 0x1F word` one after the other.
+
+The rules are those of docs/addresses.md. ASCII goes byte by byte; a run that holds anything else is
+walked again by code points, with the pinned Unicode tables.
+"""
+
+from __future__ import annotations
+
+from typing import TypeAlias
+
+import numpy as np
+import numpy.typing as npt
+
+from stream.features.unicode_tables import MARK, SEPARATOR, WIDE
+from stream.kernel import kernel, load_u64, small, store_u64
+
+__all__ = ["ASCII", "Unicode", "cut_words", "put_bytes"]
+
+Bytes = npt.NDArray[np.uint8]
+Int64s = npt.NDArray[np.int64]
+Unicode: TypeAlias = tuple[
+    npt.NDArray[np.uint16],
+    npt.NDArray[np.uint8],
+    npt.NDArray[np.int32],
+    npt.NDArray[np.int32],
+    npt.NDArray[np.uint64],
+    npt.NDArray[np.int32],
+]
+"""The arrays of UnicodeTables, in order."""
+
+NOT_ASCII = 255
+
+
+def _ascii_table() -> Bytes:
+    """Folded byte of each byte: 0 for a separator, NOT_ASCII from 0x80 on."""
+    table = np.zeros(256, np.uint8)
+    for code in range(128):
+        if chr(code).isalnum():
+            table[code] = ord(chr(code).lower())
+    table[128:] = NOT_ASCII
+    return table
+
+
+ASCII = _ascii_table()
+
+
+@small
+def put_bytes(source: Bytes, start: int, length: int, out: Bytes, place: int) -> int:
+    """Copies `length` bytes in words of eight (up to 7 more are written); returns the place after them."""
+    for step in range(0, length, 8):
+        store_u64(out, place + step, load_u64(source, start + step))
+    return place + length
+
+
+@small
+def _code_point(text: Bytes, at: int) -> tuple[int, int]:
+    """(code point, bytes it takes) at `at` of valid UTF-8."""
+    byte = np.int64(text[at])
+    if byte < 0x80:
+        return byte, 1
+    if byte < 0xE0:
+        return ((byte & 0x1F) << 6) | (np.int64(text[at + 1]) & 0x3F), 2
+    if byte < 0xF0:
+        high = ((byte & 0x0F) << 12) | ((np.int64(text[at + 1]) & 0x3F) << 6)
+        return high | (np.int64(text[at + 2]) & 0x3F), 3
+    high = ((byte & 0x07) << 18) | ((np.int64(text[at + 1]) & 0x3F) << 12)
+    return high | ((np.int64(text[at + 2]) & 0x3F) << 6) | (np.int64(text[at + 3]) & 0x3F), 4
+
+
+@small
+def _put_code_point(code: int, out: Bytes, place: int) -> int:
+    """Writes one code point as UTF-8; returns the place after it."""
+    if code < 0x80:
+        out[place] = code
+        return place + 1
+    if code < 0x800:
+        out[place] = 0xC0 | (code >> 6)
+        out[place + 1] = 0x80 | (code & 0x3F)
+        return place + 2
+    if code < 0x10000:
+        out[place] = 0xE0 | (code >> 12)
+        out[place + 1] = 0x80 | ((code >> 6) & 0x3F)
+        out[place + 2] = 0x80 | (code & 0x3F)
+        return place + 3
+    out[place] = 0xF0 | (code >> 18)
+    out[place + 1] = 0x80 | ((code >> 12) & 0x3F)
+    out[place + 2] = 0x80 | ((code >> 6) & 0x3F)
+    out[place + 3] = 0x80 | (code & 0x3F)
+    return place + 4
+
+
+@small
+def _append_folded(code: int, unicode: Unicode, run: npt.NDArray[np.int32], count: int) -> int:
+    """Appends NFC(casefold(code)) to run; returns the new count."""
+    folded = unicode[2][np.int64(unicode[0][code >> 8]) * 256 + (code & 255)]
+    if folded >= 0:
+        run[count] = code if folded == 0 else folded
+        return count + 1
+    for part in unicode[3][-1 - folded]:
+        if part >= 0:
+            run[count] = part
+            count += 1
+    return count
+
+
+@small
+def _composed(code: int, mark: int, unicode: Unicode) -> int:
+    """The code point that `code` and `mark` make together, or -1."""
+    key = (np.uint64(code) << np.uint64(21)) | np.uint64(mark)
+    at = np.searchsorted(unicode[4], key)
+    if at < len(unicode[4]) and unicode[4][at] == key:
+        return np.int64(unicode[5][at])
+    return -1
+
+
+@kernel
+def walk_run(
+    text: Bytes,
+    at: int,
+    end: int,
+    unicode: Unicode,
+    run: npt.NDArray[np.int32],
+    chars: Int64s,
+) -> tuple[int, int, int, bool]:
+    """Folds the run of word or wide code points at `at` into `run`.
+
+    Returns (where it ends, code points, characters, wide); without a code point, `at` was a separator
+    and the first value is behind it. `chars[j]` is where character j begins in `run`.
+    """
+    count = 0
+    characters = 0
+    kind = 0
+    while at < end:
+        code, width = _code_point(text, at)
+        found = unicode[1][np.int64(unicode[0][code >> 8]) * 256 + (code & 255)]
+        if found == MARK and count > 0:
+            together = _composed(run[count - 1], code, unicode)
+            if together >= 0:
+                count = _append_folded(together, unicode, run, count - 1)
+            else:
+                count = _append_folded(code, unicode, run, count)
+        elif found == MARK or found == SEPARATOR:
+            if count == 0:
+                at += width
+            break
+        else:
+            if count > 0 and found != kind:
+                break
+            kind = found
+            chars[characters] = count
+            characters += 1
+            count = _append_folded(code, unicode, run, count)
+        at += width
+    chars[characters] = count
+    return at, count, characters, kind == WIDE
+
+
+@kernel
+def cut_words(
+    text: Bytes,
+    start: int,
+    end: int,
+    prefixes: Bytes,
+    prefix_start: int,
+    prefix_length: int,
+    out: Bytes,
+    place: int,
+    starts: Int64s,
+    lengths: npt.NDArray[np.int32],
+    ascii_table: Bytes,
+    unicode: Unicode,
+    run: npt.NDArray[np.int32],
+    chars: Int64s,
+) -> tuple[int, int]:
+    """Writes the tokens of text[start:end] to `out` from `place`, each behind the field's prefix.
+
+    Returns (place behind them, how many); token t is out[starts[t] : starts[t] + lengths[t]].
+    The caller has made sure of the room. `run` and `chars` are scratch.
+    """
+    count = 0
+    at = start
+    while at < end:
+        folded = ascii_table[text[at]]
+        if folded == 0:
+            at += 1
+            continue
+        begin = at
+        first = place
+        place = put_bytes(prefixes, prefix_start, prefix_length, out, place)
+        while at < end:
+            folded = ascii_table[text[at]]
+            if folded == 0 or folded == NOT_ASCII:
+                break
+            out[place] = folded
+            place += 1
+            at += 1
+        if at == end or folded == 0:
+            starts[count] = first
+            lengths[count] = place - first
+            count += 1
+            continue
+        place = first
+        at, points, characters, wide = walk_run(text, begin, end, unicode, run, chars)
+        if points == 0:
+            continue
+        tokens = max(characters - 1, 1) if wide else 1
+        for token in range(tokens):
+            first = place
+            place = put_bytes(prefixes, prefix_start, prefix_length, out, place)
+            last = points
+            if wide:
+                last = chars[min(token + 2, characters)]
+            for point in range(chars[token] if wide else 0, last):
+                place = _put_code_point(run[point], out, place)
+            starts[count] = first
+            lengths[count] = place - first
+            count += 1
+    return place, count
