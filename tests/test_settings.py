@@ -84,7 +84,7 @@ def test_values_outside_the_file_are_toml_else_text():
 
 
 def test_a_value_cannot_smuggle_in_another_key():
-    assert load(None, ["message.id=1\nb=2"], {}).message.id == "1\nb=2"
+    assert load(None, ["state.folder=1\nb=2"], {}).state.folder == "1\nb=2"
 
 
 def test_a_section_set_at_once_joins_the_file(write):
@@ -250,9 +250,10 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
         (FIELD.format("a", "text"), 'kind of [[fields]] number 1 = "text"', 'must be "words" or'),
         (FIELD.format("a..b", "words"), 'path of [[fields]] number 1 = "a..b"', "single dots"),
         ('[message]\nid = ".id"', 'message.id = ".id"', "single dots"),
+        (FIELD.format('a\\"b', "words"), "path of [[fields]] number 1", "quotation mark"),
         (FIELD.format("a&b", "words"), 'name of [[fields]] number 1 = "a&b"', "another `name`"),
-        (FIELD.format("a\\u001fb", "words"), "name of [[fields]] number 1", "control characters"),
-        (FIELD.format("a\\u0085b", "words"), "name of [[fields]] number 1", "control characters"),
+        (NOTE + 'name = "a\\u001fb"', "name of [[fields]] number 1", "control characters"),
+        (NOTE + 'name = "a\\u0085b"', "name of [[fields]] number 1", "control characters"),
         (ROUTE + ROUTE, 'name of [[fields]] number 2', "number 1 has this name"),
         (NOTE + "bins = [1]", "bins of [[fields]] number 1", 'kind "words" does not take it, only quantity'),
         (KG + "bins = [2, 1]", "bins of [[fields]] number 1 = [2, 1]", "must ascend"),

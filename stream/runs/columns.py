@@ -9,6 +9,7 @@ from functools import cached_property
 from typing import Any
 
 from stream.decoding.times import epoch_ms
+from stream.settings.checks import is_path_key
 
 __all__ = ["Column", "columns_of"]
 
@@ -119,8 +120,8 @@ def _walk(
         keys = (*above, key)
         if keys not in columns:
             parent = columns.get(above)
-            whole = bool(key) and "." not in key and (parent is None or parent.addressable)
-            columns[keys] = Column(".".join(keys), messages, addressable=whole, parent=parent)
+            named = is_path_key(key) and (parent is None or parent.addressable)
+            columns[keys] = Column(".".join(keys), messages, addressable=named, parent=parent)
         column = columns[keys]
         if isinstance(value, dict):
             column.objects += 1

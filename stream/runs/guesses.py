@@ -65,8 +65,8 @@ def _id(columns: Sequence[Column]) -> Role:
             and column.distinct == column.messages
         )
         hinted = bool(ID_HINT.search(column.last))
-        many = column.messages >= FEW_MESSAGES and not column.instants and not column.epochs
-        if unique and (hinted or (many and not (column.types == {str} and column.mostly_texts_with_spaces))):
+        telling = column.types == {str} and column.messages >= FEW_MESSAGES
+        if unique and (hinted or (telling and not column.instants and not _is_prose(column))):
             found.append((column.last != "id", not hinted, column.path.count("."), column.path))
     found.sort(key=lambda candidate: candidate[:3])
     return _role(
@@ -149,7 +149,9 @@ def guess_field(column: Column, label: Column | None) -> FieldGuess | None:
 def _unfit(column: Column) -> str:
     """Why a path cannot be read as a field at all."""
     if not column.addressable:
-        return "a dotted path cannot name it: a key is empty or has a dot in it"
+        return (
+            "no dotted path leads there: a key is empty, or has a dot, quote, backslash or control character"
+        )
     above = column.parent
     while above is not None:
         if above.values:

@@ -18,6 +18,7 @@ __all__ = [
     "dotted_path",
     "edges",
     "field_name",
+    "is_path_key",
     "learner_problems",
     "logs_only",
     "number",
@@ -31,6 +32,7 @@ Problem = tuple[tuple[str | int, ...], str]
 
 REFUSED = "refused"
 CONFLICT = "conflict"
+_UNREADABLE = re.compile(r'[\x00-\x1f"\\]')
 _CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f]")
 
 
@@ -59,10 +61,18 @@ def logs_only(kind: Any) -> Any:
     return kind
 
 
+def is_path_key(key: str) -> bool:
+    """Whether a dotted path can go through this key of a JSON object: the decoder finds no odd ones."""
+    return bool(key) and "." not in key and not _UNREADABLE.search(key)
+
+
 def dotted_path(path: str) -> str:
-    """A path whose segments are all non-empty."""
-    if not all(path.split(".")):
-        raise _refused('must be keys joined by single dots, such as "parcel.weight", none of them empty')
+    """A path whose keys are all non-empty and can be looked for."""
+    if not all(map(is_path_key, path.split("."))):
+        raise _refused(
+            'must be keys joined by single dots, such as "parcel.weight"; none may be empty or have a quotation '
+            "mark, backslash or control character"
+        )
     return path
 
 
