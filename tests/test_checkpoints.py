@@ -1,4 +1,4 @@
-"""Checkpoints: the newest whole one is found, broken ones move aside, none is lost or passed over silently."""
+"""Checkpoints: the newest whole one is found, broken ones move aside, none is passed over silently."""
 
 import errno
 import os

@@ -72,7 +72,14 @@ def test_the_same_process_cannot_hold_a_folder_twice(tmp_path: Path) -> None:
 
 def test_the_lock_is_not_handed_to_a_program_that_the_holder_starts(tmp_path: Path) -> None:
     with StateFolder(tmp_path):
-        child = subprocess.Popen([sys.executable, "-c", "input()"], stdin=subprocess.PIPE, close_fds=False)
+        child = subprocess.Popen(
+            [sys.executable, "-c", "print(flush=True); input()"],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            close_fds=False,
+        )
+        assert child.stdout is not None
+        child.stdout.readline()
     try:
         StateFolder(tmp_path).close()
     finally:

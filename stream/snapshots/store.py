@@ -179,7 +179,7 @@ class Snapshots:
         with self._still():
             loose = [entry for entry in self.list() if not entry.pinned and not entry.in_use]
             whole = [entry for entry in loose if not entry.trouble]
-            if len(whole) <= self._keep:
+            if len(whole) < self._keep:
                 return ()
             removed = loose[loose.index(whole[self._keep - 1]) + 1 :]
             for entry in removed:
