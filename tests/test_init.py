@@ -400,7 +400,9 @@ def test_a_folder_is_no_sample(tmp_path):
 
 # ---- any messages at all -----------------------------------------------------------------------------------
 
-KEYS = st.sampled_from(["id", "at", "label", "a", "b", "a.b", "", "a&b", "é\n", "weight", "importance"])
+KEYS = st.sampled_from(
+    ["id", "at", "label", "a", "b", "a.b", "", "a&b", "é\n", "\x7f\x85", "\u2028 x", "weight", "importance"]
+)
 TEXTS = st.text(st.characters(exclude_categories=["Cs"]), max_size=12) | st.just("2031-01-01T00:00:00Z")
 NUMBERS = st.integers() | st.integers(0, 1) | st.floats(allow_nan=False, allow_infinity=False)
 VALUES = st.recursive(

@@ -59,14 +59,13 @@ def guess_roles(columns: Sequence[Column]) -> dict[str, Role]:
 def _id(columns: Sequence[Column]) -> Role:
     found = []
     for column in columns:
-        unique = (
-            (column.types == {str} or column.types == {int})
-            and not column.missing
-            and column.distinct == column.messages
-        )
+        if column.missing or column.distinct < column.messages or len(column.types) > 1:
+            continue
         hinted = bool(ID_HINT.search(column.last))
         telling = column.types == {str} and column.messages >= FEW_MESSAGES
-        if unique and (hinted or (telling and not column.instants and not _is_prose(column))):
+        if (hinted and column.types <= {str, int}) or (
+            telling and not column.instants and not _is_prose(column)
+        ):
             found.append((column.last != "id", not hinted, column.path.count("."), column.path))
     found.sort(key=lambda candidate: candidate[:3])
     return _role(
@@ -123,13 +122,11 @@ def _weight(columns: Sequence[Column]) -> Role:
 def _role(paths: list[str], why: str, absent: str) -> Role:
     if not paths:
         return Role(None, absent)
-    others = ", ".join(f'"{path}"' for path in paths[1:6])
-    also = (
-        f" Other candidates: {others}{', ...' if len(paths) > 6 else ''}; check which one it is."
-        if others
-        else ""
-    )
-    return Role(paths[0], f"Guess: {why}.{also}")
+    remark = f"Guess: {why}."
+    if len(paths) > 1:
+        others = [f'"{path}"' for path in paths[1:6]] + ["..."] * (len(paths) > 6)
+        remark += f" Other candidates: {', '.join(others)}; check which one it is."
+    return Role(paths[0], remark)
 
 
 def guess_field(column: Column, label: Column | None) -> FieldGuess | None:

@@ -226,4 +226,4 @@ def _remark(*paragraphs: str) -> str:
         for text in paragraphs
         for line in textwrap.wrap(text, WIDTH - 2, break_long_words=False, break_on_hyphens=False)
     ]
-    return "\n".join(f"# {line}" for line in lines)
+    return "\n".join(f"# {line}" for line in lines).replace("\x7f", "?")  # TOML allows no DEL in a remark

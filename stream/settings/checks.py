@@ -70,8 +70,8 @@ def dotted_path(path: str) -> str:
     """A path whose keys are all non-empty and can be looked for."""
     if not all(map(is_path_key, path.split("."))):
         raise _refused(
-            'must be keys joined by single dots, such as "parcel.weight"; none may be empty or have a quotation '
-            "mark, backslash or control character"
+            'must be keys joined by single dots, such as "parcel.weight"; none may be empty or have a '
+            "quotation mark, backslash or control character"
         )
     return path
 
