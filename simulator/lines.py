@@ -25,6 +25,7 @@ CAPITAL_SHARE = 480  # of 1,024 notes
 LINE_END = next(i for i, (text, _) in enumerate(JOINS) if text == "\\n")
 FULL_STOPS = tuple(i for i, (text, _) in enumerate(JOINS) if text in (".", "!", "...", "\\n"))
 HEAD = TAIL = 5
+PART = 8_192
 
 Ints = npt.NDArray[np.int64]
 Flags = npt.NDArray[np.bool_]
@@ -125,8 +126,10 @@ class Lines:
         tail_at = np.append(row_at[1:], len(ids)) - TAIL
         for column, piece in enumerate(self._tail(fields, outcome)):
             ids[tail_at + column] = piece
-        used = self._store[ids[: tail_at[count - 1] + TAIL]]
-        return b"".join(used.tolist())
+        used = int(tail_at[count - 1]) + TAIL
+        # Joined in parts that stay in the cache, which takes little more than half the time.
+        cuts = range(0, used, PART)
+        return b"".join([b"".join(self._store[ids[a : min(a + PART, used)]].tolist()) for a in cuts])
 
     def _add(self, texts: list[str]) -> int:
         """Adds pieces; the number of the first."""
