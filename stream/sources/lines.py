@@ -58,6 +58,7 @@ class LineReader:
         head_bytes = len(BYTE_ORDER_MARK) if name == STANDARD_INPUT else HEAD_BYTES  # a pipe may be slow
         while len(self._chunk) < head_bytes and not self._ended and self._fault is None:
             self._fill()
+        self._ends = self._line_feeds(0)
         self.head = self._chunk[:head_bytes]
         if self.head.startswith(BYTE_ORDER_MARK):
             self._at = len(BYTE_ORDER_MARK)
@@ -144,13 +145,15 @@ class LineReader:
     def _kept(
         self, data: npt.NDArray[np.uint8], starts: Int64s, ends: Int64s
     ) -> npt.NDArray[np.bool_] | None:
-        """Which lines are not blank; None for all."""
+        """Which lines are not blank; None for all. One over the limit counts as not blank: how much of it
+        lies in the chunk must not decide."""
         suspects = np.flatnonzero(data[starts] <= ord(" "))
         if not len(suspects):
             return None
         kept = ends > starts
         for row in suspects[kept[suspects]]:
-            kept[row] = bool(self._chunk[starts[row] : ends[row]].strip(JSON_BLANKS))
+            line = self._chunk[starts[row] : ends[row]]
+            kept[row] = len(line) > self._max or bool(line.strip(JSON_BLANKS))
         return kept
 
     def _long_line(self) -> Block:
