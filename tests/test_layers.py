@@ -10,7 +10,17 @@ import pytest
 
 ROOT = Path(__file__).parent.parent
 SOURCES = sorted([*ROOT.glob("stream/**/*.py"), *ROOT.glob("simulator/**/*.py")])
-STAGES = {"sources", "decoding", "labels", "features", "learners", "tables", "metrics", "snapshots", "reports"}
+STAGES = {
+    "sources",
+    "decoding",
+    "labels",
+    "features",
+    "learners",
+    "tables",
+    "metrics",
+    "snapshots",
+    "reports",
+}
 RAISED = {"runs": 3, "cli": 4}
 
 HOMES = {

@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-__all__ = ["AsJson", "Changes", "Config", "Name", "StateFolder"]
+__all__ = ["AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder"]
 
 Config = Annotated[
     Path | None,
@@ -30,3 +30,6 @@ Name = Annotated[
     typer.Option("--snapshot", metavar="NAME", help="Snapshot to read; the newest whole one by default."),
 ]
 AsJson = Annotated[bool, typer.Option("--json", help="One JSON document on standard output.")]
+AsJsonLines = Annotated[
+    bool, typer.Option("--json", help="JSON Lines on standard output, one document a message.")
+]

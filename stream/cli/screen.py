@@ -84,8 +84,8 @@ def heading(columns: Sequence[Column]) -> str:
 
 
 def line(columns: Sequence[Column], cells: Sequence[str]) -> str:
-    """One line of a table whose columns have widths."""
-    parts = [_pad(cell, column) for column, cell in zip(columns, cells, strict=True)]
+    """One line of a table whose columns have widths, safe for a terminal."""
+    parts = [_pad(visible(cell), column) for column, cell in zip(columns, cells, strict=True)]
     return GAP.join(parts).rstrip()
 
 

@@ -1,0 +1,161 @@
+"""The commands that write settings and learn: `init`, `replay`; what they found as tables or JSON."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from stream.cli.exits import INTERRUPTED
+from stream.cli.inputs import DEFAULT_CONFIG, settings_from
+from stream.cli.options import AsJson, Changes, Config, StateFolder
+from stream.cli.screen import Column, count, decimal, heading, line, progress_bar, share, show_json
+from stream.cli.stored import show_weights
+from stream.errors import CannotCreate, UsageError
+
+if TYPE_CHECKING:
+    from stream.metrics import WindowRow
+
+__all__ = ["WINDOW_COLUMNS", "add_to", "show_result", "window_cells", "write_new"]
+
+WINDOW_COLUMNS = (
+    Column("through", 14),
+    Column("log loss", 8),
+    Column("normalised entropy", 18),
+    Column("AUC", 6),
+    Column("calibration", 11),
+    Column("non-zeros", 11),
+    Column("live", 13),
+)
+
+
+def add_to(app: typer.Typer) -> None:
+    """Adds the commands of this file to `app`."""
+    app.command()(init)
+    app.command()(replay)
+
+
+def init(
+    sample: Annotated[
+        Path, typer.Option("--sample", metavar="LOG", help="JSON Lines log to look at (.gz and .zst too).")
+    ],
+    out: Annotated[
+        Path, typer.Option("--out", metavar="FILE", help="Settings file to write; never overwritten.")
+    ] = DEFAULT_CONFIG,
+    as_json: AsJson = False,
+) -> None:
+    """Write a commented settings file that fits a sample."""
+    from stream.runs.init import draft
+    from stream.settings import load
+
+    write_new(out, draft(sample, out.parent))
+    settings = load(out, environ={})
+    fields = [field.name for field in settings.fields]
+    if as_json:
+        show_json({"settings": str(out), "label": settings.message.label, "fields": fields})
+        return
+    print(f"{out}: {len(fields)} fields, outcome `{settings.message.label}`. Read its comments, then:")
+    print("  bedload replay" + ("" if out == DEFAULT_CONFIG else f" --config {out}"))
+
+
+def replay(
+    config: Config = None,
+    changes: Changes = None,
+    state: StateFolder = None,
+    resume: Annotated[
+        bool, typer.Option("--resume", help="Go on from the newest whole checkpoint, if there is one.")
+    ] = False,
+    fresh: Annotated[
+        bool, typer.Option("--fresh", help="Start anew in a used state folder; its snapshots stay.")
+    ] = False,
+    epochs: Annotated[
+        int,
+        typer.Option("--epochs", min=1, metavar="N", help="Passes over the log; metrics count the first."),
+    ] = 1,
+    as_json: AsJson = False,
+) -> None:
+    """Learn over a log once, in order, and leave a snapshot.
+
+    Each message is scored before it is learned, and the metrics use only those scores. Ctrl-C leaves a
+    snapshot of what was learned so far."""
+    if resume and fresh:
+        raise UsageError("--resume goes on and --fresh starts anew: give one of them")
+    from stream.runs.replay import replay as run_replay
+
+    settings = settings_from(config, changes, state)
+    if not as_json:
+        print(heading(WINDOW_COLUMNS))
+    with progress_bar("learning") as progress:
+        result = run_replay(
+            settings,
+            settings.resolve(settings.state.folder),
+            resume=resume,
+            fresh=fresh,
+            epochs=epochs,
+            on_window=_no_window if as_json else _show_window,
+            progress=progress,
+        )
+    if as_json:
+        show_json(result.to_json())
+    else:
+        show_result(result.to_json())
+    if result.interrupted:
+        raise typer.Exit(INTERRUPTED)
+
+
+def _no_window(row: WindowRow) -> None:
+    """Windows are inside the JSON document."""
+
+
+def _show_window(row: WindowRow) -> None:
+    print(line(WINDOW_COLUMNS, window_cells(row.to_json())), flush=True)
+
+
+def window_cells(row: dict[str, Any]) -> list[str]:
+    """Cells of WINDOW_COLUMNS for one window or a whole run."""
+    return [
+        count(row["through"]),
+        decimal(row["log_loss"]),
+        decimal(row["normalised_entropy"]),
+        decimal(row["auc"]),
+        decimal(row["calibration_ratio"], 3),
+        count(row["nnz"]),
+        count(row["live"]),
+    ]
+
+
+def show_result(result: dict[str, Any], most: int = 20) -> None:
+    """Prints the end of a run: the whole run as one more row, what it took, the strongest weights by name."""
+    from stream.snapshots import read_snapshot
+
+    whole = {**result, "through": result["messages"]}
+    print("-" * sum(column.width + 2 for column in WINDOW_COLUMNS))
+    print(line(WINDOW_COLUMNS, window_cells(whole)))
+    print()
+    if result["resumed_from"]:
+        print(f"resumed from message {count(result['resumed_from'])}")
+    print(
+        f"{count(result['messages'])} messages, {count(result['labelled'])} of them with an outcome, "
+        f"{count(result['rejected'])} rejected; {count(result['tokens'])} tokens"
+    )
+    print(
+        f"{decimal(result['seconds'], 1)} s, {count(round(result['messages_per_s'] or 0))} messages/s, "
+        f"{count(result['peak_rss_bytes'] // 1_000_000)} MB of memory at most"
+    )
+    if result["auc"] is not None:
+        print(f"AUC {decimal(result['auc'])}, its own error at most {result['auc_error']:.1e}")
+    print(f"base rate {share(result['base_rate'])}; snapshot {result['snapshot']}")
+    snapshot = read_snapshot(Path(result["snapshot"]))
+    if len(snapshot.weights):
+        print("\nstrongest weights (associations in this feed, not causes)")
+        show_weights(snapshot, most)
+
+
+def write_new(path: Path, text: str) -> None:
+    """Writes a file that must not be there yet. Raises CannotCreate where it is."""
+    try:
+        with open(path, "x", encoding="utf-8") as file:
+            file.write(text)
+    except FileExistsError:
+        raise CannotCreate(f"{path} is there already: take it away, or give another --out") from None
