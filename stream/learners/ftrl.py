@@ -141,6 +141,7 @@ def ftrl_learn(
 
 @kernel
 def ftrl_weights(
+    cells: npt.NDArray[np.uint64],
     floats: npt.NDArray[np.float64],
     begin: int,
     end: int,
@@ -148,13 +149,13 @@ def ftrl_weights(
     options: npt.NDArray[np.float64],
     out: npt.NDArray[np.float64],
 ) -> None:
-    """out[i] = weight of the row in slot begin + i at the strength in force now (0 in an empty slot)."""
+    """out[i] = weight of the row in slot begin + i at the strength in force now (0 in an empty slot, whatever its cells hold)."""
     strength = options[L1] + sums[STRENGTH]
     beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
     for slot in range(begin, end):
         row = row_of(slot)
         z = floats[row + FIRST]
         w = 0.0
-        if abs(z) > strength:
+        if cells[row] != np.uint64(0) and abs(z) > strength:
             w = _weight(z, floats[row + SECOND], strength, beta, per_alpha, lambda_2)
         out[slot - begin] = w

@@ -117,7 +117,7 @@ class Learner:
     def weights(self, cells: npt.NDArray[np.uint64], begin: int, end: int) -> npt.NDArray[np.float64]:
         """Weights now of the rows in slots begin to end - 1, float64[end - begin]; 0 in an empty slot."""
         out = np.empty(end - begin)
-        self._method.weights(cells.view(np.float64), begin, end, self._sums, self._options, out)
+        self._method.weights(cells, cells.view(np.float64), begin, end, self._sums, self._options, out)
         return out
 
     def state(self) -> dict[str, npt.NDArray[Any]]:

@@ -126,6 +126,7 @@ def truncated_gradient_learn(
 
 @kernel
 def truncated_gradient_weights(
+    cells: npt.NDArray[np.uint64],
     floats: npt.NDArray[np.float64],
     begin: int,
     end: int,
@@ -133,9 +134,10 @@ def truncated_gradient_weights(
     options: npt.NDArray[np.float64],
     out: npt.NDArray[np.float64],
 ) -> None:
-    """out[i] = weight of the row in slot begin + i, truncated up to now (0 in an empty slot)."""
+    """out[i] = weight of the row in slot begin + i, truncated up to now (0 in an empty slot, whatever its cells hold)."""
     for slot in range(begin, end):
         row = row_of(slot)
-        out[slot - begin] = truncate(
-            floats[row + FIRST], options[RATE] * (sums[STRENGTH] - floats[row + SECOND])
-        )
+        w = 0.0
+        if cells[row] != np.uint64(0):
+            w = truncate(floats[row + FIRST], options[RATE] * (sums[STRENGTH] - floats[row + SECOND]))
+        out[slot - begin] = w

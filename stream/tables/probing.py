@@ -235,3 +235,10 @@ def unmixed(cells: Cells, used: int, secret: Secret, addresses: Addresses, slots
             addresses[i] = unmix(key >> ONE, secret)
             slots[i] = slot
             i += 1
+
+
+@kernel
+def addresses_at(cells: Cells, secret: Secret, slots: npt.NDArray[np.int64], addresses: Addresses) -> None:
+    """addresses[i] = address of the row in slots[i]."""
+    for i in range(len(slots)):
+        addresses[i] = unmix(cells[row_of(slots[i])] >> ONE, secret)

@@ -69,14 +69,6 @@ class Table:
         """Memory of the admission filter; 1 when it is off."""
         return self._filter.nbytes
 
-    def find(self, batch: Batch) -> npt.NDArray[np.int64]:
-        """Slot of each entry of the batch, -1 without state. Changes nothing. The array is reused."""
-        slots = self._slots_for(batch)
-        probing.find(
-            self.cells, np.uint64(self._capacity), self._secret, batch.addresses, 0, len(batch.addresses), slots
-        )
-        return slots
-
     def admit(self, batch: Batch, first: int, last: int) -> tuple[npt.NDArray[np.int64], int]:
         """Slots for the entries of examples first to last - 1, new coordinates of labelled ones admitted.
 
@@ -110,6 +102,33 @@ class Table:
         probing.unmixed(self.cells, self.slots, self._secret, addresses, slots)
         order = np.argsort(addresses)
         return addresses[order], slots[order]
+
+    def addresses_at(self, slots: npt.NDArray[np.int64]) -> npt.NDArray[np.uint64]:
+        """Addresses of the rows in the given slots, uint64[k]; the slots must be in use."""
+        addresses = np.empty(len(slots), np.uint64)
+        probing.addresses_at(self.cells, self._secret, slots, addresses)
+        return addresses
+
+    def slots_of(self, addresses: npt.NDArray[np.uint64]) -> npt.NDArray[np.int64]:
+        """Slots of addresses, int64[k], -1 without state."""
+        slots = np.empty(len(addresses), np.int64)
+        probing.find(
+            self.cells, np.uint64(self._capacity), self._secret, addresses, 0, len(addresses), slots
+        )
+        return slots
+
+    def in_use(self, begin: int, end: int) -> npt.NDArray[np.bool_]:
+        """Which slots of begin to end - 1 hold a row."""
+        return self.cells[CELLS * begin : CELLS * end : CELLS] != 0
+
+    def touches(self, slots: npt.NDArray[np.int64]) -> npt.NDArray[np.uint64]:
+        """Touch words of the rows in the given slots."""
+        return self.cells[CELLS * slots + int(TOUCH)]
+
+    def mark_named(self, slots: npt.NDArray[np.int64], *, named: bool) -> None:
+        """Sets or clears NAMED in the rows in the given slots."""
+        places = CELLS * slots + int(TOUCH)
+        self.cells[places] = self.cells[places] | NAMED if named else self.cells[places] & ~NAMED
 
     def chunks(self, size: int = 1 << 16) -> Iterator[tuple[int, int]]:
         """Slot ranges that cover the table, for sweeps that must not copy it whole."""
