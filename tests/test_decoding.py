@@ -289,6 +289,15 @@ def test_lines_that_only_add_up_to_as_many_objects_are_not_mistaken() -> None:
     assert examples.columns["route"] == [3]
 
 
+@pytest.mark.parametrize(
+    ("first", "second"), [(b'{"x":[{}', b']}{"route":1}'), (b'{"x":[', b'{}]}{"route":1}')]
+)
+def test_an_object_over_two_lines_beside_two_in_one_is_not_mistaken(first: bytes, second: bytes) -> None:
+    examples, rejects = decode(first, second)
+    assert len(examples) == 0
+    assert [reject.reason for reject in rejects] == ["bad_json"] * 2
+
+
 def test_blanks_around_an_object_are_allowed() -> None:
     examples, rejects = decode(b' {"route":"a"}\t', b"{}")
     assert not rejects
