@@ -10,14 +10,25 @@ import typer
 from stream.cli.exits import INTERRUPTED
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
 from stream.cli.options import AsJson, Changes, Config, StateFolder
-from stream.cli.screen import Column, count, decimal, heading, line, progress_bar, share, show_json
+from stream.cli.screen import (
+    Column,
+    count,
+    decimal,
+    heading,
+    line,
+    note,
+    progress_bar,
+    share,
+    show_json,
+    show_table,
+)
 from stream.cli.stored import show_weights
 from stream.errors import CannotCreate, UsageError
 
 if TYPE_CHECKING:
     from stream.metrics import WindowRow
 
-__all__ = ["WINDOW_COLUMNS", "add_to", "show_result", "window_cells", "write_new"]
+__all__ = ["WINDOW_COLUMNS", "add_to", "show_summary", "show_window", "write_new"]
 
 WINDOW_COLUMNS = (
     Column("through", 14),
@@ -93,13 +104,16 @@ def replay(
             resume=resume,
             fresh=fresh,
             epochs=epochs,
-            on_window=_no_window if as_json else _show_window,
+            on_window=_no_window if as_json else show_window,
             progress=progress,
         )
+    for warning in result.warnings:
+        note(f"bedload: {warning}")
     if as_json:
         show_json(result.to_json())
     else:
-        show_result(result.to_json())
+        show_summary(result.to_json())
+        _show_strongest(result.snapshot)
     if result.interrupted:
         raise typer.Exit(INTERRUPTED)
 
@@ -108,12 +122,12 @@ def _no_window(row: WindowRow) -> None:
     """Windows are inside the JSON document."""
 
 
-def _show_window(row: WindowRow) -> None:
-    print(line(WINDOW_COLUMNS, window_cells(row.to_json())), flush=True)
+def show_window(row: WindowRow) -> None:
+    """Prints a row of WINDOW_COLUMNS at once."""
+    print(line(WINDOW_COLUMNS, _window_cells(row.to_json())), flush=True)
 
 
-def window_cells(row: dict[str, Any]) -> list[str]:
-    """Cells of WINDOW_COLUMNS for one window or a whole run."""
+def _window_cells(row: dict[str, Any]) -> list[str]:
     return [
         count(row["through"]),
         decimal(row["log_loss"]),
@@ -125,31 +139,63 @@ def window_cells(row: dict[str, Any]) -> list[str]:
     ]
 
 
-def show_result(result: dict[str, Any], most: int = 20) -> None:
-    """Prints the end of a run: the whole run as one more row, what it took, the strongest weights by name."""
-    from stream.snapshots import read_snapshot
-
-    whole = {**result, "through": result["messages"]}
-    print("-" * sum(column.width + 2 for column in WINDOW_COLUMNS))
-    print(line(WINDOW_COLUMNS, window_cells(whole)))
+def show_summary(result: dict[str, Any]) -> None:
+    """Prints the end of a run: its metrics as one more row, what it read and took, slices, its snapshot."""
+    print("the whole run")
+    print(line(WINDOW_COLUMNS, _window_cells({**result, "through": result["messages"]})))
     print()
-    if result["resumed_from"]:
+    if result["resumed_from"] is not None:
         print(f"resumed from message {count(result['resumed_from'])}")
     print(
         f"{count(result['messages'])} messages, {count(result['labelled'])} of them with an outcome, "
         f"{count(result['rejected'])} rejected; {count(result['tokens'])} tokens"
     )
+    for reason, rejected in result["rejects_by_reason"].items():
+        print(f"  rejected as {reason}: {count(rejected)}")
     print(
         f"{decimal(result['seconds'], 1)} s, {count(round(result['messages_per_s'] or 0))} messages/s, "
         f"{count(result['peak_rss_bytes'] // 1_000_000)} MB of memory at most"
     )
     if result["auc"] is not None:
-        print(f"AUC {decimal(result['auc'])}, its own error at most {result['auc_error']:.1e}")
+        print(f"AUC {decimal(result['auc'], 5)}, error of the estimate at most {result['auc_error']:.1e}")
     print(f"base rate {share(result['base_rate'])}; snapshot {result['snapshot']}")
-    snapshot = read_snapshot(Path(result["snapshot"]))
+    if result["slices"]:
+        print()
+        _show_slices(result["slices"])
+
+
+def _show_slices(slices: dict[str, dict[str, Any]]) -> None:
+    columns = [
+        Column("slice", right=False),
+        Column("messages"),
+        Column("base rate"),
+        Column("log loss"),
+        Column("normalised entropy"),
+        Column("AUC"),
+        Column("calibration"),
+    ]
+    rows = [
+        [
+            name,
+            count(found["messages"]),
+            share(found["base_rate"]),
+            decimal(found["log_loss"]),
+            decimal(found["normalised_entropy"]),
+            decimal(found["auc"]),
+            decimal(found["calibration_ratio"], 3),
+        ]
+        for name, found in slices.items()
+    ]
+    show_table(columns, rows)
+
+
+def _show_strongest(path: Path) -> None:
+    from stream.snapshots import read_snapshot
+
+    snapshot = read_snapshot(path)
     if len(snapshot.weights):
         print("\nstrongest weights (associations in this feed, not causes)")
-        show_weights(snapshot, most)
+        show_weights(snapshot, most=20)
 
 
 def write_new(path: Path, text: str) -> None:

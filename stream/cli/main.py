@@ -11,7 +11,7 @@ from typing import Annotated
 
 import typer
 
-from stream.cli import learning, scoring, simulating, stored
+from stream.cli import demo, learning, scoring, simulating, stored
 from stream.cli.exits import exit_code_of
 
 __all__ = ["app", "main", "run"]
@@ -47,7 +47,7 @@ def bedload(
     """
 
 
-for commands in (learning, scoring, stored, simulating):
+for commands in (demo, learning, scoring, stored, simulating):
     commands.add_to(app)
 
 

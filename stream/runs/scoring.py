@@ -28,7 +28,7 @@ BLOCK = 4_096
 """Messages read at once."""
 
 
-class Scored(msgspec.Struct, omit_defaults=True):
+class Scored(msgspec.Struct, omit_defaults=True, gc=False):
     """One line of `score --json`: a message's score, or why it has none."""
 
     id: Any
@@ -117,7 +117,8 @@ def score(scorer: Scorer) -> Iterator[list[Scored]]:
 def _in_order(found: ScoredBlock, lines: list[Scored]) -> list[Scored]:
     by_row = dict(zip(found.rows.tolist(), lines, strict=True))
     for reject in found.rejects:
-        place = f"{found.block.topic}, byte {found.block.offsets[reject.row]}"
+        topic = "standard input" if found.block.topic == "-" else found.block.topic
+        place = f"{topic}, byte {found.block.offsets[reject.row]}"
         by_row[reject.row] = Scored(None, None, None, reject.reason, f"{place}: {reject.detail}")
     return [by_row[row] for row in sorted(by_row)]
 
