@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import re
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -356,3 +358,21 @@ def test_a_text_that_is_no_time_is_rejected_where_times_are_asked_for(text: str)
 @pytest.mark.parametrize("text", [b"true", b"[]", b"1e16", b"-1e16"])
 def test_a_value_that_is_no_time_is_rejected_where_times_are_asked_for(text: bytes) -> None:
     assert reject_of(b'{"at":%s}' % text, times=True).reason == "bad_time"
+
+
+# documentation
+
+
+def test_the_documentation_names_every_reason_with_a_line_that_is_rejected_for_it() -> None:
+    page = (Path(__file__).parent.parent / "docs/message-format.md").read_text()
+    rows = dict(re.findall(r"^\| `(\w+)` \| (.*) \|$", page.split("\n## Rejects")[1], re.MULTILINE))
+    assert set(rows) == {*REASONS, "too_many_tokens"}
+    for reason, cell in rows.items():
+        for line in re.findall(r"`([{\[].*?)`(?=,| |$)", cell):
+            assert reject_of(line.encode(), times=True).reason == reason
+
+
+def test_the_example_of_the_documentation_is_a_good_message() -> None:
+    page = (Path(__file__).parent.parent / "docs/message-format.md").read_text()
+    example = page.split("```json\n")[1].split("\n```")[0]
+    assert decode(example.encode(), ids=True, times=True)[1] == []

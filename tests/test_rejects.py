@@ -1,4 +1,4 @@
-"""Rejects in; the file to repair them from, counts, and the stop past the allowed share, out of `RejectLog`."""
+"""Rejects in; the file to repair them from, counts, and the stop past the allowed share out of RejectLog."""
 
 from __future__ import annotations
 

@@ -7,6 +7,7 @@ import io
 import json
 import os
 import sys
+import threading
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -275,11 +276,16 @@ def test_standard_input_beside_files_is_refused(tmp_path: Path) -> None:
 
 def test_a_named_pipe_is_read(tmp_path: Path) -> None:
     os.mkfifo(tmp_path / "pipe")
-    if os.fork() == 0:
-        (tmp_path / "pipe").write_bytes(b"1\n2\n")
-        os._exit(0)
+    writer = threading.Thread(target=(tmp_path / "pipe").write_bytes, args=(b"1\n2\n",))
+    writer.start()
     assert values(log(tmp_path)) == [b"1", b"2"]
-    os.wait()
+    writer.join()
+
+
+def test_a_link_to_nothing_is_named(tmp_path: Path) -> None:
+    (tmp_path / "a").symlink_to("gone")
+    with pytest.raises(InputMissing, match="a: cannot be read"):
+        log(tmp_path)
 
 
 def test_the_head_of_a_compressed_log_is_read_for_a_sample(tmp_path: Path) -> None:

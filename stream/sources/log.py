@@ -17,7 +17,7 @@ from stream.errors import BadSettings
 from stream.message import Block, Position
 from stream.sources.files import STANDARD_INPUT, LogFile, matching_files
 from stream.sources.lines import LineReader, digest_of, empty_block
-from stream.sources.opening import open_stream
+from stream.sources.opening import open_stream, trouble
 
 __all__ = ["LogSource", "read_head"]
 
@@ -170,4 +170,7 @@ def read_head(path: str, messages: int, max_line_bytes: int = 1 << 20) -> list[b
 
 
 def _size_on_disk(file: LogFile) -> int:
-    return 0 if file.name == STANDARD_INPUT else os.stat(file.path).st_size
+    try:
+        return 0 if file.name == STANDARD_INPUT else os.stat(file.path).st_size
+    except OSError as error:
+        raise trouble(file.name, error) from None

@@ -17,7 +17,7 @@ from typing import BinaryIO, Protocol, cast
 from stream.errors import BadData, BedloadError, FileTrouble, InputMissing, NoPermission
 from stream.sources.files import STANDARD_INPUT
 
-__all__ = ["ByteStream", "CompressedStream", "PlainStream", "open_stream"]
+__all__ = ["ByteStream", "CompressedStream", "PlainStream", "open_stream", "trouble"]
 
 PIECE_BYTES = 4096
 
@@ -51,7 +51,7 @@ class PlainStream:
                 self._file.seek(-len(rest), os.SEEK_CUR)
             data = self._file.read(size + len(rest))
         except OSError as error:
-            raise _trouble(self._name, error) from None
+            raise trouble(self._name, error) from None
         self.bytes_on_disk += len(data) - len(rest)
         return data
 
@@ -81,7 +81,7 @@ class PipeStream:
         try:
             return rest + self._file.read1(size)
         except OSError as error:
-            raise _trouble(self._name, error) from None
+            raise trouble(self._name, error) from None
 
     def close(self) -> None:
         """Releases the pipe; standard input stays open."""
@@ -150,7 +150,7 @@ class CompressedStream:
         try:
             return self._file.read(PIECE_BYTES)
         except OSError as error:
-            raise _trouble(self._name, error) from None
+            raise trouble(self._name, error) from None
 
     def _decompress(self) -> bytes:
         """What the input at hand gives, up to the end of a frame."""
@@ -191,7 +191,7 @@ def open_stream(name: str, path: Path) -> ByteStream:
     try:
         file = path.open("rb")
     except OSError as error:
-        raise _trouble(name, error) from None
+        raise trouble(name, error) from None
     if path.suffix == ".gz":
         return CompressedStream(name, file, lambda: zlib.decompressobj(wbits=31), zlib.error, b"\0")
     if path.suffix == ".zst":
@@ -204,6 +204,7 @@ def open_stream(name: str, path: Path) -> ByteStream:
     return PlainStream(name, cast(BinaryIO, file.detach()))
 
 
-def _trouble(name: str, error: OSError) -> BedloadError:
+def trouble(name: str, error: OSError) -> BedloadError:
+    """The error of ours for an OSError while reading a file."""
     kind = {FileNotFoundError: InputMissing, PermissionError: NoPermission}.get(type(error), FileTrouble)
     return kind(f"{name}: cannot be read ({error.strerror or error}); check the file and its permissions")
