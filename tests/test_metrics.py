@@ -181,6 +181,19 @@ def test_only_yes_leaves_auc_and_entropy_undefined_but_calibration_known() -> No
     assert (summary.auc, summary.normalised_entropy, summary.calibration_ratio) == (None, None, 0.5)
 
 
+def test_a_message_of_weight_zero_is_counted_and_takes_no_room() -> None:
+    states = []
+    for weight in ([1.0, 2.0], [1.0, 0.0, 2.0, 0.0]):
+        progress = Progress(100, sliced=True)
+        m, named = len(weight), progress.slices.codes(["a"] * len(weight))
+        progress.observe(np.ones(m), np.ones(m, np.int8), np.array(weight), named)
+        states.append(progress.state())
+    assert states[1]["counts"].sum() > states[0]["counts"].sum()
+    for state in states:
+        del state["counts"]
+    assert same_bytes(*states)
+
+
 # ---- windows, slices, cuts, restoring -----------------------------------------------------------
 
 

@@ -39,7 +39,7 @@ DIGIT_MASK = np.uint64((1 << DIGIT_BITS) - 1)
 
 @kernel
 def ascending(values: Floats) -> npt.NDArray[np.int32]:
-    """Order that sorts finite `values` (no -0.0): radix sort, equal values stay in their order."""
+    """Order that sorts finite `values`: radix sort, values of equal bits stay in their order."""
     n = len(values)
     order, spare_order = np.arange(n).astype(np.int32), np.empty(n, np.int32)
     if np.all(values[1:] >= values[:-1]):
@@ -91,7 +91,7 @@ def joined(fresh: Floats, items: Floats) -> Floats:
     middles = np.empty(len(items))
     for i in range(len(items)):
         lo, hi = items[i, LO], items[i, HI]
-        middles[i] = lo if lo == hi else 0.5 * lo + 0.5 * hi + 0.0
+        middles[i] = lo if lo == hi else 0.5 * lo + 0.5 * hi
     order = ascending(middles)
     result = np.empty((len(fresh) + len(items), 4))
     count, point, at, old = 0, -1, 0, 0
@@ -217,7 +217,7 @@ def append(
 ) -> None:
     """One scored example into summary `scope` of points[S, B, 2], fill[S], items[S, C, 4], used[S]."""
     at = fill[scope]
-    points[scope, at, 0] = margin + 0.0  # -0.0 becomes 0.0
+    points[scope, at, 0] = margin
     points[scope, at, 1] = signed
     fill[scope] = at + 1
     if at + 1 == points.shape[1]:
