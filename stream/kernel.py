@@ -14,7 +14,7 @@ from llvmlite import ir
 from numba.core import config, types
 from numba.extending import intrinsic
 
-__all__ = ["kernel", "load_u64", "prefetch", "small", "store_u64"]
+__all__ = ["kernel", "load_u64", "prefetch", "small", "store_u64", "trailing_zeros"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -98,3 +98,13 @@ def prefetch(typing: Any, data: Any, index: Any) -> Any:
         return context.get_dummy_value()
 
     return types.void(data, types.intp), generate
+
+
+@intrinsic
+def trailing_zeros(typing: Any, word: Any) -> Any:
+    """How many zero bits a uint64 ends with; 64 for zero."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        return builder.cttz(args[0], ir.Constant(ir.IntType(1), 0))
+
+    return types.int64(types.uint64), generate

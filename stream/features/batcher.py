@@ -13,7 +13,6 @@ from stream.batch import Batch
 from stream.features import rows
 from stream.features.hashing import PADDING
 from stream.features.plan import make_plan
-from stream.features.words import ASCII
 from stream.message import Examples, Reject
 from stream.settings.models import Category, ListOf, Quantity, Settings, Words
 
@@ -89,7 +88,7 @@ class Batcher:
     def batch(self, examples: Examples) -> tuple[Batch, list[Reject]]:
         """Rows of the examples, in order; those over `message.max_tokens` are left out and rejected.
 
-        The arrays of the batch are fresh slices of larger ones and stay valid.
+        The arrays of the batch are views of larger ones: they hold until the next call.
         """
         size = len(examples)
         texts, numbers = self._columns(examples)
@@ -97,8 +96,6 @@ class Batcher:
         row_ptr = np.zeros(size + 1, np.int64)
         kept = np.empty(size, np.int64)
         progress = np.zeros(rows.PROGRESS, np.int64)
-        self._make_entries(len(self._addresses))
-        self._out = np.empty(len(self._out), np.uint8)
         while not self._fill(texts, numbers, row_ptr, kept, progress):
             self._grow(int(progress[rows.ENTRIES]), int(progress[rows.PLACE]))
         rows_made, entries = int(progress[rows.KEPT]), int(progress[rows.ENTRIES])
@@ -153,7 +150,6 @@ class Batcher:
             plan.edges,
             plan.bin_starts,
             plan.bin_ends,
-            ASCII,
             plan.unicode,
             plan.seed,
             plan.shift,

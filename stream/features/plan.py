@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from stream.features import rows, unicode_tables
 from stream.features.hashing import PADDING, hash_ranges
-from stream.features.words import ASCII, Unicode, cut_words
+from stream.features.words import Unicode, cut_words
 from stream.settings.models import Category, FieldSettings, ListOf, Quantity, Settings, Words
 
 __all__ = ["Plan", "edge_text", "make_plan"]
@@ -86,7 +86,7 @@ def _dropped_hashes(field: Words, unicode: Unicode, seed: np.uint64) -> list[int
     starts, lengths = np.zeros(room, np.int64), np.zeros(room, np.int32)
     run, chars = np.zeros(4 * room, np.int32), np.zeros(room, np.int64)
     _, count = cut_words(
-        data, 0, len(text), prefix, 0, length, out, 0, starts, lengths, ASCII, unicode, run, chars
+        data, 0, len(text), prefix, 0, length, out, 0, starts, lengths, unicode, run, chars
     )
     hashes = np.empty(count, np.uint64)
     hash_ranges(out, starts, lengths, count, seed, hashes)

@@ -184,17 +184,15 @@ def _merge(
             while e < entries and addresses[e] != address:
                 e += 1
         if e < entries:
-            values[e] += np.float32(1.0)
+            if value != PRESENCE:
+                values[e] += np.float32(1.0)
         else:
             addresses[entries] = address
             values[entries] = np.float32(1.0)
             text_starts[entries] = starts[t]
             text_lengths[entries] = lengths[t]
             entries += 1
-    if value == PRESENCE:
-        for e in range(field_begin, entries):
-            values[e] = np.float32(1.0)
-    elif value == LOG_COUNT:
+    if value == LOG_COUNT:
         for e in range(field_begin, entries):
             values[e] = np.float32(log1p(np.float64(values[e])))
     index_state[MASK] = mask
@@ -348,7 +346,6 @@ def fill_rows(
     edges: npt.NDArray[np.float64],
     bin_starts: Int64s,
     bin_ends: Int64s,
-    ascii_table: Bytes,
     unicode: Unicode,
     seed: np.uint64,
     shift: np.uint64,
@@ -455,7 +452,6 @@ def fill_rows(
                         place,
                         starts,
                         lengths,
-                        ascii_table,
                         unicode,
                         run,
                         chars,

@@ -149,6 +149,7 @@ def _pinned(settings: Settings) -> dict[str, Any]:
     return {
         "learner": settings.learner.model_dump(mode="json"),
         "state": {name: state[name] for name in bounds},
+        "metrics": settings.metrics.model_dump(mode="json"),
     }
 
 
