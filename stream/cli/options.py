@@ -11,7 +11,7 @@ __all__ = ["AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder"]
 
 Config = Annotated[
     Path | None,
-    typer.Option("--config", metavar="FILE", help="Settings file (TOML), as `bedload init` writes it."),
+    typer.Option("--config", metavar="FILE", help="Settings file (TOML); bedload.toml by default."),
 ]
 Changes = Annotated[
     list[str] | None,

@@ -11,7 +11,7 @@ import typer
 
 from stream.cli.inputs import settings_from
 from stream.cli.options import AsJsonLines, Config, Name, StateFolder
-from stream.cli.screen import Column, count, decimal, heading, line, note
+from stream.cli.screen import Column, count, decimal, heading, line, note, visible
 from stream.cli.stored import read_snapshot_of
 
 if TYPE_CHECKING:
@@ -22,7 +22,7 @@ __all__ = ["add_to", "show_explanation", "show_scores"]
 
 Logs = Annotated[
     list[str] | None,
-    typer.Argument(metavar="[LOG]...", help="JSON Lines files; standard input where none is given."),
+    typer.Argument(metavar="LOG", help="JSON Lines files; standard input where none is given."),
 ]
 
 SCORE_COLUMNS = (Column("id", 40, right=False), Column("probability", 11), Column("margin", 9))
@@ -109,7 +109,7 @@ def show_scores(lines: list[Scored]) -> None:
     """Prints rows of SCORE_COLUMNS; of a rejected message, why."""
     for scored in lines:
         if scored.rejected is not None:
-            print(f"rejected ({scored.rejected}): {scored.detail}")
+            print(visible(f"rejected ({scored.rejected}): {scored.detail}"))
             continue
         cells = [_id_text(scored.id), decimal(scored.probability), decimal(scored.margin, DIGITS, True)]
         print(line(SCORE_COLUMNS, cells))
@@ -159,7 +159,7 @@ def _signed(units: int) -> str:
 
 
 def _id_text(id_: object) -> str:
-    return "(no id)" if id_ is None else str(id_)
+    return "(no id)" if id_ is None else visible(str(id_))
 
 
 def _scorer(logs: list[str] | None, config: Path | None, state: Path | None, name: str | None) -> Scorer:
