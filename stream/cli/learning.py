@@ -152,6 +152,8 @@ def show_summary(result: dict[str, Any]) -> None:
     )
     for reason, rejected in result["rejects_by_reason"].items():
         print(f"  rejected as {reason}: {count(rejected)}")
+    if result["rejected"]:
+        print(f"  they are in {Path(result['snapshot']).parent.parent / 'rejects'}")
     print(
         f"{decimal(result['seconds'], 1)} s, {count(round(result['messages_per_s'] or 0))} messages/s, "
         f"{count(result['peak_rss_bytes'] // 1_000_000)} MB of memory at most"
