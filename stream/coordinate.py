@@ -21,7 +21,18 @@ import numpy.typing as npt
 
 from stream.kernel import small
 
-__all__ = ["CELLS", "FIRST", "NAMED", "SECOND", "TOUCH", "TOUCH_SHIFT", "example_of", "row_of", "tally_of", "touched"]
+__all__ = [
+    "CELLS",
+    "FIRST",
+    "NAMED",
+    "SECOND",
+    "TOUCH",
+    "TOUCH_SHIFT",
+    "example_of",
+    "row_of",
+    "tally_of",
+    "touched",
+]
 
 CELLS = 4
 FIRST, SECOND, TOUCH = np.uint64(1), np.uint64(2), np.uint64(3)
@@ -34,7 +45,7 @@ ONE = np.uint64(1)
 
 
 @small
-def row_of(slot: int) -> np.uint64:
+def row_of(slot: int | np.int64) -> np.uint64:
     """Index of cell 0 of the row in `slot` (>= 0)."""
     return np.uint64(slot) << np.uint64(2)
 

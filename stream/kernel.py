@@ -11,12 +11,16 @@ from typing import Any, TypeVar
 
 import numba
 from llvmlite import ir
-from numba.core import config, types
+from numba.core import config as numba_config
+from numba.core import types
 from numba.extending import intrinsic
 
 __all__ = ["kernel", "load_u64", "prefetch", "small", "store_u64", "trailing_zeros"]
 
 F = TypeVar("F", bound=Callable[..., Any])
+_intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
+    intrinsic  # called without its first argument
+)
 
 
 @cache
@@ -34,6 +38,9 @@ def _cache_folder() -> str:
     home = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
     base = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(home, "bedload")
     return os.path.join(base, f"kernels-{digest.hexdigest()[:16]}")
+
+
+config: Any = numba_config
 
 
 def _compile(function: F, **options: Any) -> F:
@@ -56,7 +63,7 @@ def small(function: F) -> F:
     return _compile(function, forceinline=True)
 
 
-@intrinsic
+@_intrinsic
 def load_u64(typing: Any, data: Any, index: Any) -> Any:
     """The 8 bytes of uint8[...] `data` from `index`, little-endian, at any alignment, unchecked."""
 
@@ -70,7 +77,7 @@ def load_u64(typing: Any, data: Any, index: Any) -> Any:
     return types.uint64(data, types.intp), generate
 
 
-@intrinsic
+@_intrinsic
 def store_u64(typing: Any, data: Any, index: Any, word: Any) -> Any:
     """Writes 8 bytes to uint8[...] `data` from `index`, little-endian, at any alignment, unchecked."""
 
@@ -83,7 +90,7 @@ def store_u64(typing: Any, data: Any, index: Any, word: Any) -> Any:
     return types.void(data, types.intp, types.uint64), generate
 
 
-@intrinsic
+@_intrinsic
 def prefetch(typing: Any, data: Any, index: Any) -> Any:
     """Asks for the cache line of element `index` of a flat array; changes nothing."""
 
@@ -100,7 +107,7 @@ def prefetch(typing: Any, data: Any, index: Any) -> Any:
     return types.void(data, types.intp), generate
 
 
-@intrinsic
+@_intrinsic
 def trailing_zeros(typing: Any, word: Any) -> Any:
     """How many zero bits a uint64 ends with; 64 for zero."""
 

@@ -12,6 +12,7 @@ import numpy.typing as npt
 from stream.batch import Batch
 from stream.features import rows
 from stream.features.hashing import PADDING
+from stream.features.merging import SMALLEST_MASK
 from stream.features.plan import make_plan
 from stream.message import Examples, Reject
 from stream.settings.models import Category, ListOf, Quantity, Settings, Words
@@ -78,7 +79,7 @@ class Batcher:
         self._settings = settings
         self._plan = make_plan(settings)
         self._cap = settings.message.max_tokens
-        index_size = 1 << (4 * self._cap + 4 * rows.SMALLEST_MASK).bit_length()
+        index_size = 1 << (4 * self._cap + 4 * SMALLEST_MASK).bit_length()
         self._index = np.zeros(2 * index_size, np.uint64)
         self._index_state = np.zeros(2, np.int64)
         self._make_scratch(1024)
@@ -92,7 +93,8 @@ class Batcher:
         """
         size = len(examples)
         texts, numbers = self._columns(examples)
-        self._make_scratch(texts.longest())
+        if texts.longest() > self._longest_text:
+            self._make_scratch(texts.longest())
         row_ptr = np.zeros(size + 1, np.int64)
         kept = np.empty(size, np.int64)
         progress = np.zeros(rows.PROGRESS, np.int64)
@@ -184,8 +186,7 @@ class Batcher:
 
     def _make_scratch(self, longest_text: int) -> None:
         """Room for the tokens of one field of one row, and for the longest run of characters."""
-        if hasattr(self, "_starts") and longest_text + 4 <= len(self._chars):
-            return
+        self._longest_text = longest_text
         room = max(2 * longest_text, self._cap) + 8
         self._starts = np.empty(room, np.int64)
         self._lengths = np.empty(room, np.int32)

@@ -91,6 +91,6 @@ def hash_ranges(
     seed: np.uint64,
     out: npt.NDArray[np.uint64],
 ) -> None:
-    """out[t] = murmur3 of range t, for t < count. Shapes: int64[>= count], int32[>= count], uint64[>= count]."""
+    """out[t] = murmur3 of range t, for t < count. Ranges past `count` are not read."""
     for t in range(count):
         out[t] = murmur3(data, starts[t], lengths[t], seed)

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
 
-from stream.features import rows, unicode_tables
+from stream.features import merging, rows, unicode_tables
 from stream.features.hashing import PADDING, hash_ranges
 from stream.features.words import Unicode, cut_words
 from stream.settings.models import Category, FieldSettings, ListOf, Quantity, Settings, Words
@@ -15,7 +16,7 @@ from stream.settings.models import Category, FieldSettings, ListOf, Quantity, Se
 __all__ = ["Plan", "edge_text", "make_plan"]
 
 SEPARATOR = b"\x1f"
-VALUES = {"presence": rows.PRESENCE, "count": rows.COUNT, "log_count": rows.LOG_COUNT}
+VALUES = {"presence": merging.PRESENCE, "count": merging.COUNT, "log_count": merging.LOG_COUNT}
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +57,7 @@ def edge_text(edge: float) -> str:
 
 def _bin_texts(edges: tuple[float, ...]) -> list[bytes]:
     texts = [edge_text(edge) for edge in edges]
-    inner = [f"{low}..{high}" for low, high in zip(texts, texts[1:], strict=False)]
+    inner = [f"{low}..{high}" for low, high in pairwise(texts)]
     return [text.encode() for text in [f"..{texts[0]}", *inner, f"{texts[-1]}.."]]
 
 
@@ -85,9 +86,7 @@ def _dropped_hashes(field: Words, unicode: Unicode, seed: np.uint64) -> list[int
     out = np.zeros(room * (length + 8) * 2 + PADDING, np.uint8)
     starts, lengths = np.zeros(room, np.int64), np.zeros(room, np.int32)
     run, chars = np.zeros(4 * room, np.int32), np.zeros(room, np.int64)
-    _, count = cut_words(
-        data, 0, len(text), prefix, 0, length, out, 0, starts, lengths, unicode, run, chars
-    )
+    _, count = cut_words(data, 0, len(text), prefix, 0, length, out, 0, starts, lengths, unicode, run, chars)
     hashes = np.empty(count, np.uint64)
     hash_ranges(out, starts, lengths, count, seed, hashes)
     return [int(h) for h in hashes]

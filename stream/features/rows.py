@@ -15,6 +15,7 @@ import numpy.typing as npt
 
 from stream.exact import log1p
 from stream.features.hashing import murmur3
+from stream.features.merging import MASK, PRESENCE, SMALLEST_MASK, STAMP, merge, to_unit_length, unite
 from stream.features.words import Unicode, cut_words, put_bytes
 from stream.kernel import kernel, small
 
@@ -30,18 +31,12 @@ Float32s = npt.NDArray[np.float32]
 KIND, VALUE, PAIRS, PREFIX, PREFIX_LENGTH, DROP, DROP_END, EDGES, EDGES_END, BINS = range(10)
 FIELD_COLUMNS = 10
 WORDS, TEXT, LIST, PLAIN, LOGARITHMIC, BINNED = 0, 1, 2, 3, 4, 5
-PRESENCE, COUNT, LOG_COUNT = 0, 1, 2
 # columns of `crosses`
 CROSS_PREFIX, CROSS_PREFIX_LENGTH, CROSS_SIZE, CROSS_FIELDS, CROSS_COLUMNS = 0, 1, 2, 3, 11
 # places in `progress`
 ROW, ENTRIES, PLACE, KEPT, PROGRESS = 0, 1, 2, 3, 4
-# places in `index_state`
-MASK, STAMP = 0, 1
-
-SMALLEST_MASK = 255
 SEPARATOR = 0x1F
 SPACE = 0x20
-LARGEST = np.finfo(np.float32).max
 SLACK = 64
 """Bytes of room beyond the text itself: words of eight are written and read whole."""
 
@@ -144,115 +139,6 @@ def _split(
 
 
 @kernel
-def _merge(
-    tokens: int,
-    starts: Int64s,
-    lengths: Int32s,
-    hashes: UInt64s,
-    shift: np.uint64,
-    value: int,
-    row_begin: int,
-    entries: int,
-    index: UInt64s,
-    index_state: Int64s,
-    addresses: UInt64s,
-    values: Float32s,
-    text_starts: Int64s,
-    text_lengths: Int32s,
-) -> tuple[int, bool]:
-    """Makes entries of the tokens of one field: equal addresses are counted, then valued.
-
-    `index` maps an address to the row's entry: pairs (address, stamp << 32 | entry - row_begin); a place
-    with an older stamp is free. An address that an earlier field of the row holds already becomes an entry of
-    its own here; True in the result asks for `_unite`. Returns (entries, collided).
-    """
-    field_begin = entries
-    collided = False
-    mask = index_state[MASK]
-    stamp = np.uint64(index_state[STAMP])
-    for t in range(tokens):
-        if 2 * (entries - row_begin) >= mask:
-            mask = 2 * mask + 1
-            stamp += np.uint64(1)
-            for e in range(row_begin, entries):
-                _enter(index, mask, stamp, addresses[e], e - row_begin)
-        address = hashes[t] >> shift
-        e = _enter(index, mask, stamp, address, entries - row_begin) + row_begin
-        if e < field_begin:
-            collided = True
-            e = field_begin
-            while e < entries and addresses[e] != address:
-                e += 1
-        if e < entries:
-            if value != PRESENCE:
-                values[e] += np.float32(1.0)
-        else:
-            addresses[entries] = address
-            values[entries] = np.float32(1.0)
-            text_starts[entries] = starts[t]
-            text_lengths[entries] = lengths[t]
-            entries += 1
-    if value == LOG_COUNT:
-        for e in range(field_begin, entries):
-            values[e] = np.float32(log1p(np.float64(values[e])))
-    index_state[MASK] = mask
-    index_state[STAMP] = np.int64(stamp)
-    return entries, collided
-
-
-@small
-def _enter(index: UInt64s, mask: int, stamp: np.uint64, address: np.uint64, entry: int) -> int:
-    """Entry that holds `address` already, else `entry`, which it now holds."""
-    place = np.int64(address) & mask
-    while True:
-        tag = index[2 * place + 1]
-        if tag >> np.uint64(32) != stamp:
-            index[2 * place] = address
-            index[2 * place + 1] = (stamp << np.uint64(32)) | np.uint64(entry)
-            return entry
-        if index[2 * place] == address:
-            return np.int64(tag & np.uint64(0xFFFFFFFF))
-        place = (place + 1) & mask
-
-
-@kernel
-def _unite(
-    row_begin: int,
-    entries: int,
-    addresses: UInt64s,
-    values: Float32s,
-    text_starts: Int64s,
-    text_lengths: Int32s,
-) -> int:
-    """Merges entries of one address from different fields into the first; values add. Returns the entries left."""
-    kept = row_begin
-    for e in range(row_begin, entries):
-        same = row_begin
-        while same < kept and addresses[same] != addresses[e]:
-            same += 1
-        if same < kept:
-            values[same] = min(max(values[same] + values[e], -LARGEST), LARGEST)
-        else:
-            addresses[kept] = addresses[e]
-            values[kept] = values[e]
-            text_starts[kept] = text_starts[e]
-            text_lengths[kept] = text_lengths[e]
-            kept += 1
-    return kept
-
-
-@small
-def _to_unit_length(values: Float32s, begin: int, end: int) -> None:
-    total = 0.0
-    for e in range(begin, end):
-        total += np.float64(values[e]) * np.float64(values[e])
-    if total > 0.0:
-        norm = math.sqrt(total)
-        for e in range(begin, end):
-            values[e] = np.float32(values[e] / norm)
-
-
-@kernel
 def _cross(
     cross: Int64s,
     fields: Int64s,
@@ -286,7 +172,9 @@ def _cross(
                 out[place] = SEPARATOR
                 place += 1
             e = chosen[i]
-            place = put_bytes(out, entry_starts[e] + prefix_length, entry_lengths[e] - prefix_length, out, place)
+            place = put_bytes(
+                out, entry_starts[e] + prefix_length, entry_lengths[e] - prefix_length, out, place
+            )
         lengths[count] = place - starts[count]
         count += 1
         i = size - 1
@@ -367,7 +255,7 @@ def fill_rows(
     index_state: Int64s,
     progress: Int64s,
 ) -> bool:
-    """Fills rows from progress[ROW] on; False when `out` or the entry arrays are too small (grow, call again).
+    """Fills rows from progress[ROW] on; False when `out` or the entry arrays are too small: grow, call again.
 
     `text_begins`, `text_ends` int64[F, m]: bytes of field f of message i in `text` (-1, -1: missing);
     `numbers` float64[F, m], NaN: missing. A message over `max_tokens` gets no row; `kept` int64[m] are those
@@ -399,7 +287,7 @@ def fill_rows(
                     combinations *= min(field_end[g] - field_begin[g], max_tokens + 1)
                     combinations = min(combinations, max_tokens + 1)
                 tokens = combinations
-                if 0 < tokens and occurrences + tokens <= max_tokens:
+                if tokens > 0 and occurrences + tokens <= max_tokens:
                     place, tokens = _cross(
                         cross,
                         fields,
@@ -460,7 +348,9 @@ def fill_rows(
                     if fields[f, DROP] < fields[f, DROP_END]:
                         tokens = _drop(fields, f, dropped, hashes, starts, lengths, tokens)
                     if fields[f, PAIRS]:
-                        place, tokens = _pair(out, place, prefix_length, starts, lengths, hashes, tokens, seed)
+                        place, tokens = _pair(
+                            out, place, prefix_length, starts, lengths, hashes, tokens, seed
+                        )
                 elif fields[f, KIND] == TEXT:
                     starts[0] = place
                     place = put_bytes(prefixes, prefix, prefix_length, out, place)
@@ -480,7 +370,7 @@ def fill_rows(
                 return False
             field_begin[f] = entries
             if tokens > 0:
-                entries, met = _merge(
+                entries, met = merge(
                     tokens,
                     starts,
                     lengths,
@@ -502,9 +392,9 @@ def fill_rows(
             field_end[f] = entries
         if occurrences <= max_tokens:
             if collided:
-                entries = _unite(row_begin, entries, addresses, values, text_starts, text_lengths)
+                entries = unite(row_begin, entries, addresses, values, text_starts, text_lengths)
             if unit_length:
-                _to_unit_length(values, row_begin, entries)
+                to_unit_length(values, row_begin, entries)
             kept[progress[KEPT]] = row
             progress[KEPT] += 1
             row_ptr[progress[KEPT]] = entries

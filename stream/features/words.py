@@ -64,7 +64,7 @@ def put_bytes(source: Bytes, start: int, length: int, out: Bytes, place: int) ->
 
 
 @small
-def _code_point(text: Bytes, at: int) -> tuple[int, int]:
+def _code_point(text: Bytes, at: int) -> tuple[np.int64, int]:
     """(code point, bytes it takes) at `at` of valid UTF-8."""
     byte = np.int64(text[at])
     if byte < 0x80:
@@ -101,7 +101,7 @@ def _put_code_point(code: int, out: Bytes, place: int) -> int:
 
 
 @small
-def _append_folded(code: int, unicode: Unicode, run: npt.NDArray[np.int32], count: int) -> int:
+def _append_folded(code: np.int64, unicode: Unicode, run: npt.NDArray[np.int32], count: int) -> int:
     """Appends NFC(casefold(code)) to run; returns the new count."""
     folded = unicode[2][np.int64(unicode[0][code >> 8]) * 256 + (code & 255)]
     if folded >= 0:
@@ -115,13 +115,13 @@ def _append_folded(code: int, unicode: Unicode, run: npt.NDArray[np.int32], coun
 
 
 @small
-def _composed(code: int, mark: int, unicode: Unicode) -> int:
+def _composed(code: int, mark: np.int64, unicode: Unicode) -> np.int64:
     """The code point that `code` and `mark` make together, or -1."""
     key = (np.uint64(code) << np.uint64(21)) | np.uint64(mark)
     at = np.searchsorted(unicode[4], key)
     if at < len(unicode[4]) and unicode[4][at] == key:
         return np.int64(unicode[5][at])
-    return -1
+    return np.int64(-1)
 
 
 @kernel
@@ -150,7 +150,7 @@ def walk_run(
                 count = _append_folded(together, unicode, run, count - 1)
             else:
                 count = _append_folded(code, unicode, run, count)
-        elif found == MARK or found == SEPARATOR:
+        elif found in (MARK, SEPARATOR):
             if count == 0:
                 at += width
             break

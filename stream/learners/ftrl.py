@@ -49,8 +49,9 @@ def _weight(z: float, n: float, strength: float, beta: float, per_alpha: float, 
 
 @kernel
 def ftrl_intercept(sums: npt.NDArray[np.float64], options: npt.NDArray[np.float64]) -> float:
-    """The unpenalised constant: -z / ((beta + sqrt n) / alpha)."""
-    return -sums[INTERCEPT_FIRST] / ((options[DAMPING] + math.sqrt(sums[INTERCEPT_SECOND])) / options[RATE])
+    """The unpenalised constant: -z alpha / (beta + sqrt n)."""
+    rate = options[RATE] / (options[DAMPING] + math.sqrt(sums[INTERCEPT_SECOND]))
+    return float(-sums[INTERCEPT_FIRST] * rate)
 
 
 @kernel
@@ -149,7 +150,7 @@ def ftrl_weights(
     options: npt.NDArray[np.float64],
     out: npt.NDArray[np.float64],
 ) -> None:
-    """out[i] = weight of the row in slot begin + i at the strength in force now (0 in an empty slot, whatever its cells hold)."""
+    """out[i] = weight in slot begin + i at the strength in force; 0 in an empty slot, whatever it holds."""
     strength = options[L1] + sums[STRENGTH]
     beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
     for slot in range(begin, end):

@@ -1,4 +1,4 @@
-"""Places in the small arrays that every learner kernel takes beside the table: `sums`, `counts`, `options`."""
+"""Places in the small arrays that learner kernels take beside the table: `sums`, `counts`, `options`."""
 
 from __future__ import annotations
 

@@ -31,7 +31,12 @@ from stream.learners.layout import (
     STRENGTH,
 )
 
-__all__ = ["truncate", "truncated_gradient_intercept", "truncated_gradient_learn", "truncated_gradient_weights"]
+__all__ = [
+    "truncate",
+    "truncated_gradient_intercept",
+    "truncated_gradient_learn",
+    "truncated_gradient_weights",
+]
 
 WEIGHT_LIMIT = 1e30
 """Largest weight that is stored: a snapshot's float32 must hold it."""
@@ -50,7 +55,7 @@ def truncate(w: float, a: float) -> float:
 @kernel
 def truncated_gradient_intercept(sums: npt.NDArray[np.float64], options: npt.NDArray[np.float64]) -> float:
     """The unpenalised constant."""
-    return sums[INTERCEPT_FIRST]
+    return float(sums[INTERCEPT_FIRST])
 
 
 @kernel
@@ -134,7 +139,7 @@ def truncated_gradient_weights(
     options: npt.NDArray[np.float64],
     out: npt.NDArray[np.float64],
 ) -> None:
-    """out[i] = weight of the row in slot begin + i, truncated up to now (0 in an empty slot, whatever its cells hold)."""
+    """out[i] = weight in slot begin + i, truncated up to now; 0 in an empty slot, whatever it holds."""
     for slot in range(begin, end):
         row = row_of(slot)
         w = 0.0

@@ -1,7 +1,7 @@
 """The loop of every run that learns: blocks of a source in, a model, metrics and rejects brought up to date.
 
-Order of events for a block: decode, judge rejects, batch, predict then update, sweep, metrics. Blocks are cut so
-that windows, sweeps and checkpoints fall between them.
+Order of events for a block: decode, batch, judge rejects, predict then update, sweep, metrics. Blocks are
+cut so that windows, sweeps and checkpoints fall between them.
 """
 
 from __future__ import annotations
@@ -14,7 +14,6 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from stream.batch import Batch
 from stream.decoding import Decoder
 from stream.errors import BadSettings
 from stream.features import Batcher
@@ -38,7 +37,9 @@ class LearningRun:
     `messages`: read over all epochs, rejected ones too. Metrics and rejects count the first epoch only.
     """
 
-    def __init__(self, settings: Settings, rejects_folder: Path, saved: Mapping[str, Any] | None = None) -> None:
+    def __init__(
+        self, settings: Settings, rejects_folder: Path, saved: Mapping[str, Any] | None = None
+    ) -> None:
         """`saved`: what `about()` gave; then `restore` must follow with the arrays."""
         self._settings = settings
         self._decoder = Decoder(settings)
@@ -116,7 +117,9 @@ class LearningRun:
         """What a snapshot says beside its weights."""
         window = self.progress.window_summary()
         metrics = (window if window.messages else self.progress.summary()).to_json()
-        calibration = {name: metrics[name] for name in ("calibration_ratio", "expected_calibration_error", "base_rate")}
+        calibration = {
+            name: metrics[name] for name in ("calibration_ratio", "expected_calibration_error", "base_rate")
+        }
         return About(self._settings.model_dump(mode="json"), metrics, calibration, version("bedload"))
 
     def _judge(self, block: Block, rejects: list[Reject]) -> None:
@@ -128,7 +131,9 @@ class LearningRun:
         values = examples.columns[self._slice_path]
         if over:
             gone = {reject.row for reject in over}
-            values = [value for value, row in zip(values, examples.rows.tolist(), strict=True) if row not in gone]
+            values = [
+                value for value, row in zip(values, examples.rows.tolist(), strict=True) if row not in gone
+            ]
         return self.progress.slices.codes(values)
 
     def _check_pinned(self, saved: Mapping[str, Any]) -> None:

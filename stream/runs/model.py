@@ -98,7 +98,9 @@ class Model:
             slots, stopped = self._table.admit(batch, first, len(batch))
             if stopped == first:
                 slots, stopped = self._admit_crowded(batch, first)
-            margins, named = self._learner.predict_then_update(self._table.cells, batch, slots, first, stopped)
+            margins, named = self._learner.predict_then_update(
+                self._table.cells, batch, slots, first, stopped
+            )
             self._names.record(batch, named)
             first = stopped
         if self.learned > before:
@@ -149,7 +151,11 @@ class Model:
         """Goes on from what `state` gave; meant for a fresh object."""
 
         def part(name: str) -> Arrays:
-            return {key.removeprefix(f"{name}."): array for key, array in arrays.items() if key.startswith(f"{name}.")}
+            return {
+                key.removeprefix(f"{name}."): array
+                for key, array in arrays.items()
+                if key.startswith(f"{name}.")
+            }
 
         self._table.load(part("table"))
         self._learner.restore(part("learner"))
@@ -163,7 +169,7 @@ class Model:
         return max(1, min(idle_after // 4, NAMES_SWEPT_EVERY))
 
     def _admit_crowded(self, batch: Batch, example: int) -> tuple[npt.NDArray[np.int64], int]:
-        """Slots for an example that would take the table over `max_live`: room is made first where it can be."""
+        """Slots for an example that would take the table over `max_live`; room is made first where it can."""
         max_live = self._settings.state.max_live
         assert max_live is not None
         if self.learned >= self._room_sought_from:

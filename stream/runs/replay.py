@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import resource
 import signal
+import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -201,7 +202,8 @@ def _learn(
     """Runs to the end of the last epoch, or until a signal came."""
     if run.epoch >= epochs:
         raise BadSettings(
-            f"the checkpoint is in epoch {run.epoch + 1}, beyond --epochs {epochs}: give at least {run.epoch + 1}"
+            f"the checkpoint is in epoch {run.epoch + 1}, beyond --epochs {epochs}: "
+            f"give at least {run.epoch + 1}"
         )
     while not stopping:
         source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
@@ -228,20 +230,23 @@ def _learn(
 def _stop_on_signal() -> Iterator[list[int]]:
     """A list that holds the signal once SIGINT or SIGTERM came; a second one acts as it did before."""
     came: list[int] = []
-    previous: dict[int, Any] = {}
+    signals = (signal.SIGINT, signal.SIGTERM)
+    before = {number: signal.getsignal(number) for number in signals}
+
+    def as_before() -> None:
+        for number, handler in before.items():
+            signal.signal(number, handler)
 
     def note(number: int, frame: FrameType | None) -> None:
         came.append(number)
-        for each, handler in previous.items():
-            signal.signal(each, handler)
+        as_before()
 
-    try:
-        for number in (signal.SIGINT, signal.SIGTERM):
-            previous[number] = signal.signal(number, note)
-    except ValueError:  # not the main thread: nobody to tell
-        pass
+    if threading.current_thread() is not threading.main_thread():  # nobody could tell it
+        yield came
+        return
+    for number in signals:
+        signal.signal(number, note)
     try:
         yield came
     finally:
-        for number, handler in previous.items():
-            signal.signal(number, handler)
+        as_before()

@@ -14,7 +14,7 @@ __all__ = ["NameLedger"]
 
 
 class NameLedger:
-    """Names (`field-name 0x1F token`, UTF-8) by address; the first one recorded stands until it is dropped."""
+    """Names (`field-name 0x1F token`, UTF-8) by address; the first recorded stands until it is dropped."""
 
     def __init__(self) -> None:
         self._names: dict[int, bytes] = {}
@@ -60,5 +60,6 @@ class NameLedger:
         blob = state["bytes"].tobytes()
         offsets = state["offsets"].tolist()
         self._names = {
-            address: blob[offsets[i] : offsets[i + 1]] for i, address in enumerate(state["addresses"].tolist())
+            address: blob[offsets[i] : offsets[i + 1]]
+            for i, address in enumerate(state["addresses"].tolist())
         }

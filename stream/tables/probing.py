@@ -38,7 +38,7 @@ def mix(address: np.uint64, secret: Secret) -> np.uint64:
     word = ((address ^ secret[0]) * secret[1]) & M63
     word ^= word >> S32
     word = (word * secret[2]) & M63
-    return word ^ (word >> S32)
+    return np.uint64(word ^ (word >> S32))
 
 
 @small
@@ -47,17 +47,17 @@ def unmix(word: np.uint64, secret: Secret) -> np.uint64:
     word ^= word >> S32
     word = (word * secret[4]) & M63
     word ^= word >> S32
-    return ((word * secret[3]) & M63) ^ secret[0]
+    return np.uint64(((word * secret[3]) & M63) ^ secret[0])
 
 
 @small
-def home(key: np.uint64, capacity: np.uint64) -> int:
+def home(key: np.uint64, capacity: np.uint64) -> np.int64:
     """First slot to look at: the top 32 bits of the key, scaled to the capacity (< 2**32)."""
     return np.int64(((key >> S32) * capacity) >> S32)
 
 
 @small
-def seek(cells: Cells, capacity: np.uint64, key: np.uint64) -> int:
+def seek(cells: Cells, capacity: np.uint64, key: np.uint64) -> np.int64:
     """The slot that holds `key`, or -1 - s where s is the empty slot at which it would go."""
     slot = home(key, capacity)
     while True:
@@ -93,7 +93,7 @@ def find(
 
 
 @small
-def seen(filter_: npt.NDArray[np.uint8], address: np.uint64) -> int:
+def seen(filter_: npt.NDArray[np.uint8], address: np.uint64) -> np.int64:
     """Counts one more sighting of `address`; returns how many there were, at least.
 
     A counting filter with two places and conservative update (only the lesser is raised), so that
@@ -179,7 +179,9 @@ def admit(
 
 
 @kernel
-def place(cells: Cells, capacity: np.uint64, secret: Secret, addresses: Addresses, state: npt.NDArray[np.uint64]) -> None:
+def place(
+    cells: Cells, capacity: np.uint64, secret: Secret, addresses: Addresses, state: npt.NDArray[np.uint64]
+) -> None:
     """Puts new coordinates with state uint64[k, 3] into the table; the room must be there."""
     for i in range(len(addresses)):
         key = (mix(addresses[i], secret) << ONE) | ONE
@@ -192,10 +194,10 @@ def place(cells: Cells, capacity: np.uint64, secret: Secret, addresses: Addresse
 
 @kernel
 def respread(cells: Cells, used: int, capacity: np.uint64) -> int:
-    """Puts every row of the first `used` slots where `capacity` (not less than before) wants it, in place; drops DEAD ones.
+    """Puts every row of the first `used` slots where `capacity` wants it, in place, and drops DEAD ones.
 
-    Works cluster by cluster from the end: a row's new home is never before its cluster, and all
-    behind the cluster has been dealt with. Returns the number of rows dropped.
+    `capacity` is not less than before. Works cluster by cluster from the end: a row's new home is never
+    before its cluster, and all behind the cluster has been dealt with. Returns the number of rows dropped.
     """
     dropped = 0
     cluster = np.empty((64, CELLS), np.uint64)
@@ -218,15 +220,17 @@ def respread(cells: Cells, used: int, capacity: np.uint64) -> int:
             if key == DEAD:
                 dropped += 1
                 continue
-            slot = -1 - seek(cells, capacity, key)
+            free = row_of(-1 - seek(cells, capacity, key))
             for cell in range(CELLS):
-                cells[row_of(slot) + np.uint64(cell)] = cluster[i, cell]
+                cells[free + np.uint64(cell)] = cluster[i, cell]
         end = begin
     return dropped
 
 
 @kernel
-def unmixed(cells: Cells, used: int, secret: Secret, addresses: Addresses, slots: npt.NDArray[np.int64]) -> None:
+def unmixed(
+    cells: Cells, used: int, secret: Secret, addresses: Addresses, slots: npt.NDArray[np.int64]
+) -> None:
     """addresses[i], slots[i] of the i-th row in use, in slot order. Shapes: uint64[live], int64[live]."""
     i = 0
     for slot in range(used):

@@ -18,7 +18,7 @@ __all__ = ["Table"]
 
 SPARE = 8192
 SMALL = 1 << 22
-"""Slots up to which speed comes before memory: filled to 3/4 and doubled. Beyond, filled to 23/25 and grown by 1/32."""
+"""Slots up to which speed comes before memory: 3/4 full, then doubled. Beyond: 23/25, grown by 1/32."""
 
 
 def _random_secret() -> npt.NDArray[np.uint64]:
@@ -112,14 +112,13 @@ class Table:
     def slots_of(self, addresses: npt.NDArray[np.uint64]) -> npt.NDArray[np.int64]:
         """Slots of addresses, int64[k], -1 without state."""
         slots = np.empty(len(addresses), np.int64)
-        probing.find(
-            self.cells, np.uint64(self._capacity), self._secret, addresses, 0, len(addresses), slots
-        )
+        probing.find(self.cells, np.uint64(self._capacity), self._secret, addresses, 0, len(addresses), slots)
         return slots
 
     def in_use(self, begin: int, end: int) -> npt.NDArray[np.bool_]:
         """Which slots of begin to end - 1 hold a row."""
-        return self.cells[CELLS * begin : CELLS * end : CELLS] != 0
+        keys = self.cells[CELLS * begin : CELLS * end : CELLS]
+        return np.asarray(keys != 0)
 
     def touches(self, slots: npt.NDArray[np.int64]) -> npt.NDArray[np.uint64]:
         """Touch words of the rows in the given slots."""
@@ -199,7 +198,7 @@ class Table:
         return 2 * self._capacity if self._capacity < SMALL else self._capacity + self._capacity // 32
 
     def _grow(self, needed: int) -> None:
-        """Makes room for `needed` more rows: the memory is stretched (never doubled), rows spread in place."""
+        """Makes room for `needed` more rows: memory is stretched, never doubled, and rows spread in place."""
         before = self.slots
         while _limit(self._capacity) - self.live < needed:
             self._capacity = self._next_capacity()
