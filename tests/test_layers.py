@@ -226,7 +226,13 @@ def test_public_names_are_what_all_says(path):
 
 def bound_names(tree):
     names = set()
-    for node in tree.body:
+    typing_only = [
+        n
+        for b in tree.body
+        if isinstance(b, ast.If) and ast.unparse(b.test) == "TYPE_CHECKING"
+        for n in b.body
+    ]
+    for node in tree.body + typing_only:
         if isinstance(node, ast.Assign | ast.AnnAssign):
             targets = node.targets if isinstance(node, ast.Assign) else [node.target]
             names |= {n.id for t in targets for n in ast.walk(t) if isinstance(n, ast.Name)}

@@ -239,6 +239,7 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
         ('[feed]\nkind = "topic"', 'feed.kind = "topic"', "this release reads logs only"),
         (TRUNCATED + "l1 = 1.0", "learner.l1 = 1.0", "l1_per_example as its gravity"),
         (TRUNCATED + "l2 = 1.0", "learner.l2 = 1.0", "sum of losses"),
+        (TRUNCATED + "horizon = 5", "learner.horizon = 5", "shuts no new token out"),
         (TRUNCATED + "damping = 2.0", "learner.damping = 2.0", "constant rate"),
         ("[learner]\nl1 = inf", "learner.l1 = Infinity", "from 0 to 10^9"),
         ("[learner]\nlearning_rate = nan", "learner.learning_rate = NaN", "above 0"),

@@ -21,7 +21,6 @@ from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch, small
 from stream.learners.layout import (
     AHEAD,
-    HORIZON,
     INTERCEPT_FIRST,
     LEARNED,
     LIMIT,
@@ -102,8 +101,7 @@ def truncated_gradient_learn(
         counts[LEARNED] += 1
         number = np.uint64(counts[LEARNED])
         gradient = (sigmoid(margin) - labels[example]) * weights[example]
-        if counts[LEARNED] <= options[HORIZON]:
-            sums[STRENGTH] += options[PER_EXAMPLE] * weights[example]
+        sums[STRENGTH] += options[PER_EXAMPLE] * weights[example]
         drawn = eta * (sums[STRENGTH] - strength)
         for e in range(begin, end):
             if slots[e] < 0:

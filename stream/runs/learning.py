@@ -1,7 +1,7 @@
 """The loop of every run that learns: blocks of a source in, a model, metrics and rejects brought up to date.
 
 Order of events for a block: decode, batch, judge rejects, predict then update, sweep, metrics. Blocks are
-cut so that windows, sweeps and checkpoints fall between them.
+cut so that windows and checkpoints fall between them.
 """
 
 from __future__ import annotations
@@ -18,7 +18,7 @@ from stream.decoding import Decoder
 from stream.errors import BadSettings
 from stream.features import Batcher
 from stream.fingerprint import differences, fingerprint_difference
-from stream.message import Block, Examples, Reject, Source
+from stream.message import Examples, Reject, Source
 from stream.metrics import Progress, WindowRow
 from stream.rejects import RejectLog
 from stream.runs.model import Model
@@ -62,14 +62,14 @@ class LearningRun:
         BadData when too many messages are rejected; nothing of that block has then been learned.
         """
         first_epoch = self.epoch == 0
-        most = min(limit, BLOCK, self.model.examples_left())
+        most = min(limit, BLOCK)
         block = source.read(min(most, self.progress.window_left) if first_epoch else most)
         if not len(block):
             return False
         examples, rejects = self._decoder.decode(block)
         batch, over = self._batcher.batch(examples)
         if first_epoch:
-            self._judge(block, rejects + over)
+            self.rejects.add(block, rejects + over, self.messages)
         margins = self.model.predict_then_update(batch)
         self.messages += len(block)
         self.tokens += len(batch.addresses)
@@ -121,9 +121,6 @@ class LearningRun:
             name: metrics[name] for name in ("calibration_ratio", "expected_calibration_error", "base_rate")
         }
         return About(self._settings.model_dump(mode="json"), metrics, calibration, version("bedload"))
-
-    def _judge(self, block: Block, rejects: list[Reject]) -> None:
-        self.rejects.add(block, rejects, self.messages)
 
     def _slice_codes(self, examples: Examples, over: list[Reject]) -> npt.NDArray[np.int64] | None:
         if self._slice_path is None:

@@ -26,10 +26,7 @@ Arrays = dict[str, npt.NDArray[Any]]
 
 
 class Model:
-    """A learner over its table. What it does depends on the examples and their numbers, never on batch cuts.
-
-    Feed it batches of at most `examples_left()` examples.
-    """
+    """A learner over its table. What it does depends on examples and their numbers, never on batch cuts."""
 
     def __init__(self, settings: Settings) -> None:
         self._settings = settings
@@ -82,29 +79,25 @@ class Model:
             "name_bytes": self._names.name_bytes,
         }
 
-    def examples_left(self) -> int:
-        """Examples until the next sweep: no batch may reach past it."""
-        return min(period - self.learned % period for period in self._periods)
-
     def predict_then_update(self, batch: Batch) -> npt.NDArray[np.float64]:
         """Scores each example of the batch, then learns it if it has a label, one after the other.
 
         Returns margins float64[m], each from the weights before its example; the array is reused.
         """
-        before = self.learned
         margins = np.empty(0)
         first = 0
         while first < len(batch):
-            slots, stopped = self._table.admit(batch, first, len(batch))
+            before = self.learned
+            slots, stopped = self._table.admit(batch, first, min(len(batch), first + self._until_sweep()))
             if stopped == first:
                 slots, stopped = self._admit_crowded(batch, first)
             margins, named = self._learner.predict_then_update(
                 self._table.cells, batch, slots, first, stopped
             )
             self._names.record(batch, named)
+            if self.learned > before:
+                self._sweep_if_due()
             first = stopped
-        if self.learned > before:
-            self._sweep_if_due()
         return margins[: len(batch)]
 
     def nnz(self) -> int:
@@ -163,6 +156,10 @@ class Model:
         self._room_sought_from, self._table.refused = (int(count) for count in arrays["model.counts"])
         slots = self._table.slots_of(self._names.addresses())
         self._table.mark_named(slots[slots >= 0], named=True)
+
+    def _until_sweep(self) -> int:
+        """Learned examples until the next sweep: what is admitted at once may not reach past it."""
+        return min(period - self.learned % period for period in self._periods)
 
     @staticmethod
     def _idle_period(idle_after: int) -> int:

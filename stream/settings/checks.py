@@ -125,6 +125,12 @@ def learner_problems(learner: Learner) -> list[Problem]:
             'Leave damping out, or take method = "ftrl"'
         )
         problems.append((("damping",), why))
+    if learner.horizon is not None:
+        why = (
+            "horizon ends the growth of ftrl's accumulated strength; truncated-gradient presses equally on "
+            "every example and shuts no new token out. Leave horizon out"
+        )
+        problems.append((("horizon",), why))
     return problems
 
 

@@ -236,7 +236,9 @@ class Learner(Section):
         default=0.0, description="Shrinkage without zeros, on the sum of losses (ftrl only)."
     )
     horizon: Whole | None = Field(
-        default=None, ge=1, description="Learned messages after which the accumulated strength stops growing."
+        default=None,
+        ge=1,
+        description="Learned messages after which the accumulated strength stops growing (ftrl only).",
     )
 
     @model_validator(mode="after")
