@@ -167,7 +167,7 @@ def test_every_error_is_shown_one_a_line_with_place_key_value_and_limits(write):
         "bedload.toml: space.seed = true: must be a whole number from 0 to 4,294,967,295",
         'bedload.toml: space.unit_length = "yes": must be true or false',
         'bedload.toml: learner.method = "newton": must be "ftrl" or "truncated-gradient"',
-        "bedload.toml: learner.learning_rate = -1: must be a number above 0, at most 1,000,000",
+        "bedload.toml: learner.learning_rate = -1: must be a number from 10^-9 to 1,000,000",
         "--set state.admit_after: state.admit_after = 0: must be a whole number from 1 to 200",
         'environment variable BEDLOAD_METRICS__WINDOW: metrics.window = "many": '
         "must be a whole number from 1 to 10^15",
@@ -242,7 +242,7 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
         (TRUNCATED + "horizon = 5", "learner.horizon = 5", "shuts no new token out"),
         (TRUNCATED + "damping = 2.0", "learner.damping = 2.0", "constant rate"),
         ("[learner]\nl1 = inf", "learner.l1 = Infinity", "from 0 to 10^9"),
-        ("[learner]\nlearning_rate = nan", "learner.learning_rate = NaN", "above 0"),
+        ("[learner]\nlearning_rate = nan", "learner.learning_rate = NaN", "from 10^-9"),
         ("[learner]\nhorizon = 0", "learner.horizon = 0", "from 1"),
         ("learner = 3", "learner = 3", "headed by [learner]"),
         ('[fields]\npath = "a"', "fields = ", "double brackets"),

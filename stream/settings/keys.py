@@ -126,8 +126,9 @@ def _range(noun: str, schema: Mapping[str, Any]) -> str:
 
 
 def _plain(limit: float) -> str:
-    if limit >= 1e9 and f"{limit:.0e}".startswith("1e") and limit == float(f"{limit:.0e}"):
-        return f"10^{f'{limit:.0e}'[3:].lstrip('0')}"
+    rounded = f"{limit:.0e}"
+    if not 1e-3 < limit < 1e9 and rounded.startswith("1e") and limit == float(rounded):
+        return f"10^{int(rounded[2:])}"
     return f"{int(limit):,}" if limit == int(limit) else f"{limit:g}"
 
 

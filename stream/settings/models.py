@@ -220,10 +220,13 @@ class Learner(Section):
         default="ftrl", description="How weights are learned."
     )
     learning_rate: Number = Field(
-        default=0.1, gt=0, le=1e6, description="Size of the steps; the constant step of truncated-gradient."
+        default=0.1,
+        ge=1e-9,
+        le=1e6,
+        description="Size of the steps; the constant step of truncated-gradient.",
     )
     damping: Number = Field(
-        default=1.0, gt=0, le=1e9, description="Holds back the first steps of a coordinate (ftrl only)."
+        default=1.0, ge=1e-9, le=1e9, description="Holds back the first steps of a coordinate (ftrl only)."
     )
     l1: Strength = Field(
         default=0.0, description="Pressure towards zero on the sum of losses: a start-up budget (ftrl only)."
