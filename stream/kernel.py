@@ -47,7 +47,7 @@ def _compile(function: F, **options: Any) -> F:
     before = config.CACHE_DIR
     config.CACHE_DIR = _cache_folder()
     try:
-        compiled: F = numba.njit(cache=True, nogil=True, **options)(function)
+        compiled: F = numba.njit(cache=True, nogil=True, error_model="numpy", **options)(function)
     finally:
         config.CACHE_DIR = before
     return compiled

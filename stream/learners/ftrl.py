@@ -42,9 +42,25 @@ __all__ = ["ftrl_intercept", "ftrl_learn", "ftrl_weights"]
 
 
 @small
-def _weight(z: float, n: float, strength: float, beta: float, per_alpha: float, lambda_2: float) -> float:
-    """-(z - sgn(z) lambda_1) / ((beta + sqrt n) / alpha + lambda_2) where |z| > lambda_1."""
-    return (math.copysign(strength, z) - z) / ((beta + math.sqrt(n)) * per_alpha + lambda_2)
+def _weight(z: float, root: float, strength: float, beta: float, per_alpha: float, lambda_2: float) -> float:
+    """-(z - sgn(z) lambda_1) / ((beta + sqrt n) / alpha + lambda_2) where |z| > lambda_1, else 0."""
+    beyond = max(abs(z) - strength, 0.0)
+    return math.copysign(beyond, -z) / ((beta + root) * per_alpha + lambda_2)
+
+
+@small
+def _sum(terms: npt.NDArray[np.float64], count: np.uint64) -> float:
+    """Sum of the first `count` terms in four lanes, by position in the row: four additions at a time."""
+    a, b, c, d = 0.0, 0.0, 0.0, 0.0
+    fours = count & ~np.uint64(3)
+    for i in range(np.uint64(0), fours, np.uint64(4)):
+        a += terms[i]
+        b += terms[i + np.uint64(1)]
+        c += terms[i + np.uint64(2)]
+        d += terms[i + np.uint64(3)]
+    for i in range(fours, count):
+        a += terms[i]
+    return (a + b) + (c + d)
 
 
 @kernel
@@ -68,37 +84,39 @@ def ftrl_learn(
     sums: npt.NDArray[np.float64],
     counts: npt.NDArray[np.int64],
     options: npt.NDArray[np.float64],
-    row_weights: npt.NDArray[np.float64],
+    scratch: npt.NDArray[np.float64],
     margins: npt.NDArray[np.float64],
     named: npt.NDArray[np.int64],
 ) -> int:
     """Predicts, then updates, examples first to last - 1, one after the other.
 
     `cells` uint64[4 * slots] and `floats` its float64 view; `slots` int64[nnz], -1 without state;
-    CSR arrays as in Batch; `sums`, `counts`, `options` as in `stream.learners.layout`; `row_weights`
-    float64[longest row] is scratch; `margins` float64[m] is filled, each before its update;
+    CSR arrays as in Batch; `sums`, `counts`, `options` as in `stream.learners.layout`; `scratch`
+    float64[SCRATCH, longest row]; `margins` float64[m] is filled, each before its update;
     `named` int64[nnz] receives the entries whose weight became non-zero and has no name in the
     ledger. Returns how many.
     """
     events = 0
     beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
+    zs, ns, roots, ws, terms = scratch[0], scratch[1], scratch[2], scratch[3], scratch[4]
     top = np.uint64(max(row_ptr[last] - 1, 0))
     for example in range(first, last):
         begin = np.uint64(row_ptr[example])
-        end = np.uint64(row_ptr[example + 1])
+        count = np.uint64(row_ptr[example + 1]) - begin
         strength = options[L1] + sums[STRENGTH]
         intercept = ftrl_intercept(sums, options)
-        margin = intercept
-        for e in range(begin, end):
-            prefetch(floats, row_of(max(slots[min(e + AHEAD, top)], 0)))
-            w = 0.0
-            if slots[e] >= 0:
-                row = row_of(slots[e])
-                z = floats[row + FIRST]
-                if abs(z) > strength:
-                    w = _weight(z, floats[row + SECOND], strength, beta, per_alpha, lambda_2)
-                    margin += w * values[e]
-            row_weights[e - begin] = w
+        for i in range(count):
+            prefetch(floats, row_of(max(slots[min(begin + i + AHEAD, top)], 0)))
+            if slots[begin + i] >= 0:
+                row = row_of(slots[begin + i])
+                zs[i], ns[i] = floats[row + FIRST], floats[row + SECOND]
+            else:
+                zs[i], ns[i] = 0.0, 0.0
+        for i in range(count):  # vector instructions: no branch
+            roots[i] = math.sqrt(ns[i])
+            ws[i] = _weight(zs[i], roots[i], strength, beta, per_alpha, lambda_2)
+            terms[i] = ws[i] * values[begin + i]
+        margin = intercept + _sum(terms, count)
         margins[example] = margin
         if labels[example] < 0:
             continue
@@ -111,26 +129,24 @@ def ftrl_learn(
         if counts[LEARNED] <= options[HORIZON]:
             sums[STRENGTH] += options[PER_EXAMPLE] * weights[example]
         strength = options[L1] + sums[STRENGTH]
-        for e in range(begin, end):
-            if slots[e] < 0:
+        for i in range(count):  # vector instructions again
+            g = gradient * values[begin + i]
+            grown = ns[i] + g * g
+            zs[i] = zs[i] + g - (math.sqrt(grown) - roots[i]) * per_alpha * ws[i]
+            ns[i] = grown
+        for i in range(count):
+            if slots[begin + i] < 0:
                 continue
-            row = row_of(slots[e])
-            g = gradient * values[e]
-            n = floats[row + SECOND]
-            grown = n + g * g
-            z = floats[row + FIRST] + g
-            w = row_weights[e - begin]
-            if w != 0.0:
-                z -= (math.sqrt(grown) - math.sqrt(n)) * per_alpha * w
-            if not abs(z) + grown < LIMIT:
+            if not abs(zs[i]) + ns[i] < LIMIT:
                 counts[REFUSED] += 1
                 continue
-            floats[row + FIRST] = z
-            floats[row + SECOND] = grown
+            row = row_of(slots[begin + i])
+            floats[row + FIRST] = zs[i]
+            floats[row + SECOND] = ns[i]
             word = touched(cells[row + TOUCH], number)
-            if abs(z) > strength and word & NAMED == np.uint64(0):
+            if abs(zs[i]) > strength and word & NAMED == np.uint64(0):
                 word |= NAMED
-                named[events] = e
+                named[events] = begin + i
                 events += 1
             cells[row + TOUCH] = word
         n = sums[INTERCEPT_SECOND]
@@ -155,8 +171,7 @@ def ftrl_weights(
     beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
     for slot in range(begin, end):
         row = row_of(slot)
-        z = floats[row + FIRST]
-        w = 0.0
-        if cells[row] != np.uint64(0) and abs(z) > strength:
-            w = _weight(z, floats[row + SECOND], strength, beta, per_alpha, lambda_2)
-        out[slot - begin] = w
+        out[slot - begin] = 0.0
+        if cells[row] != np.uint64(0):
+            root = math.sqrt(floats[row + SECOND])
+            out[slot - begin] = _weight(floats[row + FIRST], root, strength, beta, per_alpha, lambda_2)

@@ -18,3 +18,6 @@ LIMIT = 1e300
 
 AHEAD = np.uint64(64)
 """How many entries before its turn a row is prefetched (measured)."""
+
+SCRATCH = 5
+"""Numbers that a kernel keeps of each entry while it is at a row."""

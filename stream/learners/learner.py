@@ -11,7 +11,7 @@ import numpy.typing as npt
 
 from stream.batch import Batch
 from stream.learners import ftrl, truncated_gradient
-from stream.learners.layout import LEARNED, REFUSED, STRENGTH
+from stream.learners.layout import LEARNED, REFUSED, SCRATCH, STRENGTH
 from stream.settings.models import Learner as LearnerSettings
 
 __all__ = ["Learner"]
@@ -57,7 +57,7 @@ class Learner:
         self._sums = np.zeros(3)
         self._counts = np.zeros(2, np.int64)
         self._margins = np.empty(0)
-        self._row_weights = np.empty(0)
+        self._scratch = np.empty((SCRATCH, 0))
         self._named = np.empty(0, np.int64)
 
     @property
@@ -108,7 +108,7 @@ class Learner:
             self._sums,
             self._counts,
             self._options,
-            self._row_weights,
+            self._scratch,
             self._margins,
             self._named,
         )
@@ -133,7 +133,7 @@ class Learner:
         if len(self._margins) < len(batch):
             self._margins = np.empty(len(batch))
         longest = int(np.max(np.diff(batch.row_ptr), initial=0))
-        if len(self._row_weights) < longest:
-            self._row_weights = np.empty(longest)
+        if self._scratch.shape[1] < longest:
+            self._scratch = np.empty((SCRATCH, longest))
         if len(self._named) < len(batch.addresses):
             self._named = np.empty(len(batch.addresses), np.int64)

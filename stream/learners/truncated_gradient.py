@@ -71,13 +71,13 @@ def truncated_gradient_learn(
     sums: npt.NDArray[np.float64],
     counts: npt.NDArray[np.int64],
     options: npt.NDArray[np.float64],
-    row_weights: npt.NDArray[np.float64],
+    scratch: npt.NDArray[np.float64],
     margins: npt.NDArray[np.float64],
     named: npt.NDArray[np.int64],
 ) -> int:
     """Predicts, then updates, examples first to last - 1; arguments and result as of `ftrl_learn`."""
     events = 0
-    eta = options[RATE]
+    eta, row_weights = options[RATE], scratch[0]
     top = np.uint64(max(row_ptr[last] - 1, 0))
     for example in range(first, last):
         begin = np.uint64(row_ptr[example])
