@@ -122,7 +122,9 @@ def test_crosses_over_the_cap_are_rejected_before_they_are_made() -> None:
 @pytest.mark.parametrize("bits", [20, 40, 63])
 def test_addresses_meeting_across_fields_are_merged(bits: int) -> None:
     fields = tuple(Words(path=name) for name in ("a", "b"))
-    settings = Settings(fields=fields, space=Space(address_bits=bits), message=MessagePaths(max_tokens=20_000))
+    settings = Settings(
+        fields=fields, space=Space(address_bits=bits), message=MessagePaths(max_tokens=20_000)
+    )
     message = {name: " ".join(f"{name}{i}" for i in range(6000)) for name in ("a", "b")}
     (row,) = compiled([message], settings)
     assert row is not None and row == plain(message, settings)
@@ -135,3 +137,17 @@ def test_empty_block_gives_an_empty_batch() -> None:
     settings = Settings(fields=(Category(path="route"), Quantity(path="weight")))
     batch, rejects = Batcher(settings).batch(examples_of([], settings))
     assert len(batch) == 0 and rejects == [] and list(batch.row_ptr) == [0]
+
+
+def test_rows_are_right_past_two_billion_rows() -> None:
+    settings = Settings(fields=(Words(path="note", value="count"), Category(path="route")))
+    messages = [{"note": f"left at gate {i} gate", "route": "gate"} for i in range(8)]
+    batcher = Batcher(settings)
+    batcher._index_state[1] = (1 << 31) - 3
+    batch, _ = batcher.batch(examples_of(messages, settings))
+    assert batcher._index_state[1] == 5
+    rows = [
+        [(batch.text(e), int(batch.addresses[e]), batch.values[e]) for e in range(*batch.row_ptr[i : i + 2])]
+        for i in range(len(batch))
+    ]
+    assert rows == [plain(message, settings) for message in messages]

@@ -17,6 +17,7 @@ __all__ = [
     "PRESENCE",
     "SMALLEST_MASK",
     "STAMP",
+    "begin_row",
     "merge",
     "to_unit_length",
     "unite",
@@ -31,7 +32,18 @@ PRESENCE, COUNT, LOG_COUNT = 0, 1, 2
 # places in `index_state`
 MASK, STAMP = 0, 1
 SMALLEST_MASK = 255
+LAST_STAMP = 1 << 31
 LARGEST = np.finfo(np.float32).max
+
+
+@small
+def begin_row(index: UInt64s, index_state: Int64s) -> None:
+    """Makes the index empty for a row: a stamp of its own; after two billion rows places are cleared."""
+    if index_state[STAMP] >= LAST_STAMP:
+        index[:] = 0
+        index_state[STAMP] = 0
+    index_state[MASK] = SMALLEST_MASK
+    index_state[STAMP] += 1
 
 
 @kernel

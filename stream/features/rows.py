@@ -15,7 +15,7 @@ import numpy.typing as npt
 
 from stream.exact import log1p
 from stream.features.hashing import murmur3
-from stream.features.merging import MASK, PRESENCE, SMALLEST_MASK, STAMP, merge, to_unit_length, unite
+from stream.features.merging import PRESENCE, begin_row, merge, to_unit_length, unite
 from stream.features.words import Unicode, cut_words, put_bytes
 from stream.kernel import kernel, small
 
@@ -270,8 +270,7 @@ def fill_rows(
         place = progress[PLACE]
         if place + _text_room(fields, text_begins, text_ends, row) > len(out):
             return False
-        index_state[MASK] = SMALLEST_MASK
-        index_state[STAMP] += 1
+        begin_row(index, index_state)
         occurrences = 0
         collided = False
         for step in range(count_of_fields + len(crosses)):
