@@ -10,8 +10,8 @@ a shift and no stride.
 
 `named` tells that the token's name is in the ledger. The tally counts the learned messages that
 held the token in 28 bits: exponent e (5 bits) and count m (23 bits) stand for m * 2**e; from 2**23 on
-only every 2**e-th example number counts, which keeps the share right to a few parts in a million on
-any feed that does not repeat with a period of a power of two.
+only every 2**e-th example number counts, which keeps the share right to a few parts in ten thousand on
+any feed that does not repeat with an even period.
 """
 
 from __future__ import annotations

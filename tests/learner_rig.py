@@ -1,4 +1,4 @@
-"""A learner over rows in a plain array, address a in slot a: nothing of the table takes part. And its twin."""
+"""A learner over rows in a plain array, address a in slot a, so no table takes part; and its twin."""
 
 import math
 import random
