@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from stream.settings import Settings, load
     from stream.snapshots import Snapshot, Snapshots, read_snapshot, write_snapshot
     from stream.sources import LogSource
+    from stream.token_names import readable
     from stream.weights import Weights
 
 __all__ = [
@@ -38,6 +39,7 @@ __all__ = [
     "Weights",
     "load",
     "read_snapshot",
+    "readable",
     "replay",
     "score",
     "write_snapshot",
@@ -55,6 +57,7 @@ _HOMES = {
     "stream.settings": ("Settings", "load"),
     "stream.snapshots": ("Snapshot", "Snapshots", "read_snapshot", "write_snapshot"),
     "stream.sources": ("LogSource",),
+    "stream.token_names": ("readable",),
     "stream.weights": ("Weights",),
 }
 _HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
