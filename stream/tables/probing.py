@@ -34,20 +34,28 @@ ABSENT = -1
 
 @small
 def mix(address: np.uint64, secret: Secret) -> np.uint64:
-    """A bijection of 63 bits drawn by `secret`: xor word, two odd multipliers, their inverses."""
-    word = ((address ^ secret[0]) * secret[1]) & M63
+    """A bijection of 63 bits drawn by `secret`: xor word, three odd multipliers, their inverses.
+
+    Two multipliers do not do: they take addresses that differ in their top bits only to a progression,
+    which for some secrets lies in clumps.
+    """
+    word: np.uint64 = ((address ^ secret[0]) * secret[1]) & M63
     word ^= word >> S32
     word = (word * secret[2]) & M63
-    return np.uint64(word ^ (word >> S32))
+    word ^= word >> S32
+    word = (word * secret[3]) & M63
+    return word
 
 
 @small
 def unmix(word: np.uint64, secret: Secret) -> np.uint64:
     """The address that `mix` made `word` of."""
+    word = (word * secret[6]) & M63
     word ^= word >> S32
-    word = (word * secret[4]) & M63
+    word = (word * secret[5]) & M63
     word ^= word >> S32
-    return np.uint64(((word * secret[3]) & M63) ^ secret[0])
+    word = ((word * secret[4]) & M63) ^ secret[0]
+    return word
 
 
 @small

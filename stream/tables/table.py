@@ -22,10 +22,10 @@ SMALL = 1 << 22
 
 
 def _random_secret() -> npt.NDArray[np.uint64]:
-    """xor word, two odd multipliers, their inverses modulo 2**63. It never reaches the state."""
-    word, one, two = (int.from_bytes(os.urandom(8), "little") >> 1 for _ in range(3))
-    one, two = one | 1, two | 1
-    return np.array([word, one, two, pow(one, -1, 1 << 63), pow(two, -1, 1 << 63)], np.uint64)
+    """xor word, three odd multipliers, their inverses modulo 2**63. It never reaches the state."""
+    word, *odd = (int.from_bytes(os.urandom(8), "little") >> 1 for _ in range(4))
+    odd = [multiplier | 1 for multiplier in odd]
+    return np.array([word, *odd, *(pow(multiplier, -1, 1 << 63) for multiplier in odd)], np.uint64)
 
 
 def _limit(capacity: int) -> int:
