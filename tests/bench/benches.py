@@ -33,7 +33,7 @@ class Bench:
 
 BENCHES = {
     "learn": Bench("learn", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
-    "kernel": Bench("learn_kernel", {"messages": 300_000, "rounds": 7}, {"messages": 60_000, "rounds": 3}),
+    "kernel": Bench("learn_kernel", {"messages": 300_000, "rounds": 15}, {"messages": 60_000, "rounds": 3}),
     "width": Bench("width", {"messages": 400_000, "rounds": 5}, {"messages": 60_000, "rounds": 3}),
     "score": Bench("score", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
     "memory": Bench("memory", {"live": 20_000_000}, {"live": 20_000_000}),

@@ -5,9 +5,11 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import asdict, dataclass, field
-from typing import Any, NamedTuple
+from typing import Any, NamedTuple, TypeVar
 
 __all__ = ["Figure", "Seconds", "alternating", "best", "timed"]
+
+T = TypeVar("T")
 
 
 @dataclass(frozen=True)
@@ -53,9 +55,9 @@ def timed(work: Callable[..., object], *arguments: Any) -> Seconds:
     return Seconds(time.perf_counter() - wall, time.process_time() - cpu)
 
 
-def alternating(rounds: int, *works: Callable[[], Seconds]) -> list[list[Seconds]]:
+def alternating(rounds: int, *works: Callable[[], T]) -> list[list[T]]:
     """Times of each work over `rounds` rounds in turn, so that a slow spell meets all of them."""
-    times: list[list[Seconds]] = [[] for _ in works]
+    times: list[list[T]] = [[] for _ in works]
     for _ in range(rounds):
         for work, found in zip(works, times, strict=True):
             found.append(work())

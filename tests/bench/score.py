@@ -25,10 +25,10 @@ def score(messages: int, rounds: int, distinct: int = 1_000_000) -> list[Figure]
         _score_all(snapshot, log)
         times = alternating(rounds, lambda: _time_scoring(snapshot, log), lambda: time_learning(settings))
     ours, learning = map(best, times)
-    details = {"scoring, µs a message": ours.wall * 1e6 / messages, "non-zero": len(snapshot.weights)}
-    details["ratio by processor time"] = learning.cpu / ours.cpu
+    details = {"scoring, µs a message": ours.cpu * 1e6 / messages, "non-zero": len(snapshot.weights)}
+    details["ratio by the clock"] = learning.wall / ours.wall
     return [
-        Figure("messages/s against learning", learning.wall / ours.wall, "times", at_least=1, details=details)
+        Figure("messages/s against learning", learning.cpu / ours.cpu, "times", at_least=1, details=details)
     ]
 
 
