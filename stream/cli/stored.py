@@ -7,13 +7,14 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from stream.cli.comparing import comparison_json, show_comparison
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from, state_folder
 from stream.cli.options import AsJson, Config, Name, StateFolder
 from stream.cli.screen import Column, count, decimal, note, share, show_json, show_table, visible
 from stream.errors import BadData, InputMissing
 
 if TYPE_CHECKING:
-    from stream.snapshots import Change, Comparison, Snapshot, SnapshotEntry, Snapshots
+    from stream.snapshots import Snapshot, SnapshotEntry, Snapshots
 
 __all__ = ["add_to", "read_snapshot_of", "show_weights", "weight_rows"]
 
@@ -94,9 +95,9 @@ def compare(
     limit = most or len(first.weights) + len(second.weights)
     found = compare_weights(first.weights, second.weights, limit)
     if as_json:
-        show_json(_comparison_json(before.name, after.name, found))
+        show_json(comparison_json(before.name, after.name, found))
         return
-    _show_comparison(before.name, after.name, found)
+    show_comparison(before.name, after.name, found)
 
 
 @snapshots.command()
@@ -353,53 +354,3 @@ def _snapshot_json(snapshot: Snapshot, most: int) -> dict[str, Any]:
         "settings": snapshot.about.settings,
         "weights": weight_rows(snapshot, most),
     }
-
-
-KINDS = ("entered", "left", "flipped", "moved")
-
-
-def _comparison_json(old: str, new: str, found: Comparison) -> dict[str, Any]:
-    from dataclasses import asdict
-
-    document: dict[str, Any] = {"old": old, "new": new, **asdict(found)}
-    for kind in KINDS:
-        document[kind] = [
-            {**_named(change), "address": change.address, "old": change.old, "new": change.new}
-            for change in getattr(found, kind)
-        ]
-    return document
-
-
-def _named(change: Change) -> dict[str, str]:
-    from stream.token_names import field_and_token
-
-    field, token = field_and_token(change.name)
-    return {"field": field, "token": token}
-
-
-def _show_comparison(old: str, new: str, found: Comparison) -> None:
-    columns = [Column("", right=False), Column(old), Column(new)]
-    pairs = [
-        ("learned messages", [count(n) for n in found.learned]),
-        ("non-zero weights", [count(n) for n in found.nnz]),
-        ("sum of |weight|", [decimal(x, 2) for x in found.size]),
-        ("intercept", [decimal(x, 4, True) for x in found.intercept]),
-    ]
-    show_table(columns, [[title, *cells] for title, cells in pairs])
-    counts = {
-        "entered": found.entered_count,
-        "left": found.left_count,
-        "flipped": found.flipped_count,
-        "moved": None,
-    }
-    titles = {"entered": "entered", "left": "left", "flipped": "flipped sign", "moved": "moved most"}
-    columns = [Column("field", right=False), Column("token", right=False), Column("old"), Column("new")]
-    for kind in KINDS:
-        changes: tuple[Change, ...] = getattr(found, kind)
-        total = counts[kind]
-        print(f"\n{titles[kind]}" + ("" if total is None else f": {count(total)}"))
-        if changes:
-            show_table(
-                columns,
-                [[*_named(c).values(), decimal(c.old, 4, True), decimal(c.new, 4, True)] for c in changes],
-            )
