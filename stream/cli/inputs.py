@@ -3,11 +3,9 @@
 from __future__ import annotations
 
 import json
-import os
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from stream.cli.exits import TRACEBACK
 from stream.errors import UsageError
 
 if TYPE_CHECKING:
@@ -35,8 +33,7 @@ def settings_from(config: Path | None, changes: list[str] | None, state: Path | 
         )
     if state is not None:
         overrides.append(f"state.folder={json.dumps(str(state.absolute()))}")
-    environment = {name: value for name, value in os.environ.items() if name != TRACEBACK}
-    return load(config, overrides, environment)
+    return load(config, overrides)
 
 
 def state_folder(config: Path | None, state: Path | None) -> Path:

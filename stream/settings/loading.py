@@ -22,6 +22,8 @@ __all__ = ["ENVIRONMENT_PREFIX", "load"]
 
 ENVIRONMENT_PREFIX = "BEDLOAD_"
 LISTS = ("fields", "crosses")
+NOT_SETTINGS = frozenset(f"{ENVIRONMENT_PREFIX}{name}" for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER"))
+"""Switches of the command line and of the tests."""
 
 
 def load(
@@ -75,7 +77,7 @@ def _with_line(message: str, content: bytes) -> str:
 def _from_environment(environ: Mapping[str, str]) -> list[tuple[Origin, str]]:
     found = []
     for name in sorted(environ):
-        if name.startswith(ENVIRONMENT_PREFIX):
+        if name.startswith(ENVIRONMENT_PREFIX) and name not in NOT_SETTINGS:
             keys = tuple(name.removeprefix(ENVIRONMENT_PREFIX).lower().split("__"))
             found.append((Origin(f"environment variable {name}", keys, in_environment=True), environ[name]))
     return found
