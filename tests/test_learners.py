@@ -299,7 +299,7 @@ def test_slots_that_are_not_in_use_have_no_weight(method):
 
 
 @both
-@pytest.mark.parametrize("pressure", [1e-6, 1e-7])
+@pytest.mark.parametrize("pressure", [1e-4, 1e-6])
 def test_after_ten_billion_examples_weights_still_follow_the_twin(method, pressure):
     """Base rate 0.1 %, counters and sums as years leave them: large sums must not swallow small gradients."""
     many, tokens = 10_000_000_000, 20
@@ -327,9 +327,9 @@ def test_after_ten_billion_examples_weights_still_follow_the_twin(method, pressu
     stream = random_stream(10, 20_000, tokens, unlabelled=0, binary=True, seldom_yes=True)
     start = bench.weights()
     expected = [twin.predict_then_update(*example[:3]) for example in stream]
-    assert bench.learn(stream).tolist() == pytest.approx(expected, rel=0.01)
+    assert bench.learn(stream).tolist() == pytest.approx(expected, rel=1e-5)
     after = [twin.weight(a) for a in range(tokens)]
-    assert bench.weights()[:tokens] == pytest.approx(after, rel=0.01, abs=1e-9)
+    assert bench.weights()[:tokens] == pytest.approx(after, rel=1e-5, abs=1e-7)
     assert np.abs(start - bench.weights()).max() > 0.01, "the stream moved the weights"
     assert bench.learner.learned == many + 20_000
     assert example_of(bench.touches())[:tokens].min() > many
