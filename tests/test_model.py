@@ -295,6 +295,23 @@ def test_when_nothing_may_be_removed_new_coordinates_are_refused_and_counted():
     assert model.learned == 5
 
 
+def test_room_is_not_sought_again_at_once_nor_sooner_after_a_restart():
+    settings = settings_of(l1_per_example=0.0, max_live=192)  # sought again 192 / 64 = 3 examples later
+    model = Model(settings)
+    feed(model, [Example(dict.fromkeys(range(190), 1.0))])
+    feed(model, [Example(dict.fromkeys(range(190, 195), 1.0), 1, 0.0)])
+    assert (model.live, model.refused_coordinates) == (192, 3), "nothing to remove, two places left"
+    late = [Example({200 + i: 1.0}, 1, 0.0) for i in range(3)]
+    feed(model, late[:1])
+    assert model.refused_coordinates == 4, "190 and 191 have no weight, but room was sought just now"
+    other = restored(model, settings)
+    for one in (model, other):
+        feed(one, late[1:])
+        assert one.refused_coordinates == 5
+        assert one.state()["table.addresses"].tolist() == [*range(190), 202]
+    assert bytes_of(model) == bytes_of(other)
+
+
 def test_names_of_zero_weights_are_dropped_and_come_back_when_needed():
     with names_swept_every(40):
         model = Model(settings_of(l1_per_example=0.025))

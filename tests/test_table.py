@@ -326,6 +326,23 @@ def test_a_crowded_filter_counts_too_much_at_times_and_never_too_little(admissio
     assert early > 500 if admission_bytes == 1 << 10 else early < 0.02 * len(seen)
 
 
+def test_the_filter_raises_only_the_lesser_of_the_two_places_of_an_address():
+    """Its bytes are state: places and counts are those of this plain rule."""
+    size, chance = 1 << 10, random.Random(6)
+    plain = [0] * size
+    table = table_of(admit_after=1_000, admission_bytes=size)  # never admitted
+    for _ in range(4_000):
+        address = int(2 ** (chance.random() * 12)) * 0x9E3779B97F % 2**63
+        table.admit(one_each([address]), 0, 1)
+        word = address * 0x9E3779B97F4A7C15 % 2**64
+        word = (word ^ word >> 29) * 0xBF58476D1CE4E5B9 % 2**64
+        places = [(word >> 32) * size >> 32, (word % 2**32) * size >> 32]
+        count = min(255, 1 + min(plain[place] for place in places))
+        for place in places:
+            plain[place] = max(plain[place], count)
+    assert table.state()["admission"].tolist() == plain
+
+
 def test_counts_of_the_filter_stop_at_255_and_its_places_do_not_depend_on_the_secret():
     states = []
     for seed in (1, 2):
