@@ -1,0 +1,240 @@
+"""A folder in, a real single-node broker on free loopback ports out, that can be stopped, killed and paused.
+
+No broker outlives its test run: each is the leader of a process group that is killed when the `with` block
+ends and at interpreter exit, and the kernel kills it when the thread that started it dies.
+"""
+
+import atexit
+import os
+import random
+import shutil
+import signal
+import socket
+import subprocess
+import time
+import uuid
+from collections.abc import Callable, Mapping
+from contextlib import suppress
+from pathlib import Path
+from types import TracebackType
+from typing import Self
+
+from kafka import KafkaAdminClient, TopicPartition
+
+from tests.broker.jars import class_path, java
+
+__all__ = ["Broker"]
+
+START_S = 60
+STOP_S = 20
+TRIES = 3
+HEAP = ("-Xmx512m", "-XX:+UseSerialGC", "-XX:TieredStopAtLevel=1", "-Xshare:auto")
+
+PROPERTIES = """\
+process.roles=broker,controller
+node.id=1
+controller.quorum.voters=1@127.0.0.1:{controller}
+listeners=CLEAR://127.0.0.1:{clear},CONTROLLER://127.0.0.1:{controller}
+advertised.listeners=CLEAR://127.0.0.1:{clear}
+listener.security.protocol.map=CLEAR:PLAINTEXT,CONTROLLER:PLAINTEXT
+controller.listener.names=CONTROLLER
+inter.broker.listener.name=CLEAR
+log.dirs={data}
+offsets.topic.replication.factor=1
+offsets.topic.num.partitions=1
+transaction.state.log.replication.factor=1
+transaction.state.log.min.isr=1
+transaction.state.log.num.partitions=1
+share.coordinator.state.topic.replication.factor=1
+share.coordinator.state.topic.min.isr=1
+share.coordinator.state.topic.num.partitions=1
+group.initial.rebalance.delay.ms=0
+auto.create.topics.enable=false
+message.max.bytes=20971520
+"""
+
+
+class Broker:
+    """One broker in one folder, whose log survives `stop`, `kill` and `start_again`."""
+
+    def __init__(self, folder: Path) -> None:
+        """Use `Broker.start`; this makes no process."""
+        self.folder = folder
+        self.cluster_id = uuid.uuid4().hex[:22]
+        self.clear, self.controller = free_port(), free_port()
+        self._process: subprocess.Popen[bytes] | None = None
+
+    @classmethod
+    def start(cls, folder: Path) -> Self:
+        """A broker that answers, with its data, properties and log below `folder`. Raises Unavailable."""
+        for left in reversed(range(TRIES)):
+            broker = cls(folder)
+            try:
+                broker._format()
+                broker.start_again()
+            except PortTaken:
+                shutil.rmtree(folder)
+                if not left:
+                    raise
+            else:
+                return broker
+        raise AssertionError
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.kill()
+
+    @property
+    def servers(self) -> list[str]:
+        """`bootstrap_servers` without encryption; the same before and after a restart."""
+        return [f"127.0.0.1:{self.clear}"]
+
+    @property
+    def log(self) -> Path:
+        """What the broker wrote: warnings and errors."""
+        return self.folder / "broker.log"
+
+    @property
+    def pid(self) -> int:
+        assert self._process is not None, "the broker is not running"
+        return self._process.pid
+
+    def start_again(self) -> None:
+        """Starts it on the same ports and data, and returns when it answers."""
+        assert self._process is None, "the broker is running already"
+        with self.log.open("ab") as log:
+            self._process = subprocess.Popen(
+                [*dying_with_parent(), java(), *HEAP, "-Dorg.slf4j.simpleLogger.defaultLogLevel=warn"]
+                + ["-cp", class_path(), "kafka.Kafka", str(self._properties)],
+                stdin=subprocess.DEVNULL,
+                stdout=log,
+                stderr=log,
+                start_new_session=True,
+            )
+        atexit.register(self.kill)
+        try:
+            self._wait_until_it_answers()
+        except BaseException:
+            self.kill()
+            raise
+
+    def stop(self) -> None:
+        """In good order (SIGTERM), by force when that takes longer than 20 seconds."""
+        if self._process is None:
+            return
+        self.resume()
+        self._signal(signal.SIGTERM)
+        with suppress(subprocess.TimeoutExpired):
+            self._process.wait(STOP_S)
+        self.kill()
+
+    def kill(self) -> None:
+        """SIGKILL, paused or not; nothing happens when it is not running."""
+        if self._process is None:
+            return
+        self._signal(signal.SIGKILL)
+        self._process.wait()
+        self._process = None
+        atexit.unregister(self.kill)
+
+    def pause(self) -> None:
+        """SIGSTOP: connections stay open and nobody answers."""
+        self._signal(signal.SIGSTOP)
+
+    def resume(self) -> None:
+        """SIGCONT."""
+        self._signal(signal.SIGCONT)
+
+    def make_topic(
+        self, name: str, partitions: int = 1, configs: Mapping[str, str] | None = None
+    ) -> uuid.UUID:
+        """Returns its id when every partition has a leader."""
+        wanted = {"num_partitions": partitions, "replication_factor": 1, "configs": dict(configs or {})}
+        with self.admin() as admin:
+            admin.create_topics({name: wanted}, wait_for_metadata=True)
+        return self.topic_id(name)
+
+    def topic_id(self, name: str) -> uuid.UUID:
+        with self.admin() as admin:
+            return admin.describe_topics([name])[0]["topic_id"]
+
+    def delete_topic(self, name: str) -> None:
+        """Returns when the name is free again."""
+        with self.admin() as admin:
+            admin.delete_topics([name])
+            wait_for(lambda: name not in admin.list_topics(), f"topic {name} to go")
+
+    def delete_records(self, name: str, before: Mapping[int, int]) -> None:
+        """Moves the log start of each partition to an offset (-1: its end), as retention would."""
+        with self.admin() as admin:
+            admin.delete_records({TopicPartition(name, number): offset for number, offset in before.items()})
+
+    def admin(self) -> KafkaAdminClient:
+        """A new administration client, without encryption; to be closed."""
+        return KafkaAdminClient(bootstrap_servers=self.servers, bootstrap_timeout_ms=10_000)
+
+    @property
+    def _properties(self) -> Path:
+        return self.folder / "server.properties"
+
+    def _format(self) -> None:
+        self.folder.mkdir(parents=True, exist_ok=True)
+        text = PROPERTIES.format(clear=self.clear, controller=self.controller, data=self.folder / "data")
+        self._properties.write_text(text)
+        command = [java(), *HEAP, "-cp", class_path(), "kafka.tools.StorageTool", "format"]
+        command += ["--cluster-id", self.cluster_id, "--config", str(self._properties)]
+        subprocess.run(command, check=True, capture_output=True, timeout=START_S)
+
+    def _wait_until_it_answers(self) -> None:
+        """A bare connection first: a client that finds nobody leaves its thread and sockets behind."""
+        wait_for(self._listens, f"the broker to listen, see {self.log},")
+        with self.admin() as admin:
+            wait_for(lambda: admin.describe_cluster()["brokers"], "the broker to join its cluster")
+
+    def _listens(self) -> bool:
+        assert self._process is not None
+        if self._process.poll() is not None:
+            wrote = self.log.read_text(errors="replace")
+            if "Address already in use" in wrote:
+                raise PortTaken(wrote[-2000:])
+            raise AssertionError(f"the broker gave up with {self._process.returncode}: {wrote[-2000:]}")
+        with suppress(OSError), socket.create_connection(("127.0.0.1", self.clear), timeout=1):
+            return True
+        return False
+
+    def _signal(self, number: signal.Signals) -> None:
+        with suppress(ProcessLookupError):
+            os.killpg(self.pid, number)
+
+
+class PortTaken(Exception):
+    """Somebody took a port between the look and the start."""
+
+
+def free_port() -> int:
+    """Below the range from which the kernel takes ports of outgoing connections: while a broker is down, a client
+    that tries again and again could otherwise be given the broker's own port, and connect to itself."""
+    lowest = int(Path("/proc/sys/net/ipv4/ip_local_port_range").read_text().split()[0])
+    ours = random.Random(os.urandom(8))
+    while True:
+        port = ours.randrange(10_000, lowest)
+        with socket.socket() as trial, suppress(OSError):
+            trial.bind(("127.0.0.1", port))
+            return port
+
+
+def dying_with_parent() -> list[str]:
+    """A prefix that has the kernel kill the command with the thread that started it, where it can be had."""
+    setpriv = shutil.which("setpriv")
+    return [setpriv, "--pdeathsig", "KILL"] if setpriv else []
+
+
+def wait_for(holds: Callable[[], object], what: str, seconds: float = START_S) -> None:
+    deadline = time.monotonic() + seconds
+    while not holds():
+        assert time.monotonic() < deadline, f"waited {seconds} s for {what} in vain"
+        time.sleep(0.05)
