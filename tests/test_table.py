@@ -205,7 +205,7 @@ def test_the_state_knows_nothing_of_slots_capacity_or_secret():
     for i, table in enumerate(tables):
         slots = admit_all(table, one_each(chosen if i else chosen[::-1]))
         table.floats[4 * slots + int(FIRST)] = np.arange(2000) if i else np.arange(2000)[::-1]
-        table.mark_named(slots[::2], named=True)
+        table.cells[4 * slots[::2] + int(TOUCH)] |= NAMED
     with tight_from(256):
         loaded = table_of(capacity=256)
         loaded.load(tables[0].state())
@@ -417,13 +417,10 @@ def test_sightings_of_an_example_that_waits_for_room_count_once():
     assert sorted(table.state()["admission"].tolist())[-8:] == [2] * 8
 
 
-def test_names_are_marked_in_the_touch_word_alone():
+def test_clearing_a_name_touches_one_bit_alone():
     table = table_of()
     slots = admit_all(table, one_each([4, 5]))
-    table.cells[4 * slots + int(TOUCH)] = 9 << 29 | 3
-    table.mark_named(slots[:1], named=True)
-    table.mark_named(slots[:1], named=True)
-    assert table.touches(slots).tolist() == [9 << 29 | int(NAMED) | 3, 9 << 29 | 3]
-    table.mark_named(slots, named=False)
+    table.cells[4 * slots + int(TOUCH)] = [9 << 29 | int(NAMED) | 3, 9 << 29 | 3]
+    table.clear_named(slots)
     assert table.touches(slots).tolist() == [9 << 29 | 3] * 2
     assert not table.cells[4 * slots + int(SECOND)].any()

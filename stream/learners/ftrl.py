@@ -67,7 +67,7 @@ def _sum(terms: npt.NDArray[np.float64], count: np.uint64) -> float:
 def ftrl_intercept(sums: npt.NDArray[np.float64], options: npt.NDArray[np.float64]) -> float:
     """The unpenalised constant: -z alpha / (beta + sqrt n)."""
     rate = options[RATE] / (options[DAMPING] + math.sqrt(sums[INTERCEPT_SECOND]))
-    return float(-sums[INTERCEPT_FIRST] * rate)
+    return float(0.0 - sums[INTERCEPT_FIRST] * rate)  # 0.0 at the start, not -0.0
 
 
 @kernel

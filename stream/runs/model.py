@@ -154,8 +154,6 @@ class Model:
         self._learner.restore(part("learner"))
         self._names.restore(part("names"))
         self._room_sought_from, self._table.refused = (int(count) for count in arrays["model.counts"])
-        slots = self._table.slots_of(self._names.addresses())
-        self._table.mark_named(slots[slots >= 0], named=True)
 
     def _until_sweep(self) -> int:
         """Learned examples until the next sweep: what is admitted at once may not reach past it."""
@@ -208,4 +206,4 @@ class Model:
         gone = (slots < 0) | np.isin(slots, zero)
         self._names.drop(addresses[gone].tolist())
         gone_slots = slots[gone]
-        self._table.mark_named(gone_slots[gone_slots >= 0], named=False)
+        self._table.clear_named(gone_slots[gone_slots >= 0])

@@ -124,10 +124,9 @@ class Table:
         """Touch words of the rows in the given slots."""
         return self.cells[CELLS * slots + int(TOUCH)]
 
-    def mark_named(self, slots: npt.NDArray[np.int64], *, named: bool) -> None:
-        """Sets or clears NAMED in the rows in the given slots."""
-        places = CELLS * slots + int(TOUCH)
-        self.cells[places] = self.cells[places] | NAMED if named else self.cells[places] & ~NAMED
+    def clear_named(self, slots: npt.NDArray[np.int64]) -> None:
+        """Clears NAMED in the rows in the given slots, so that the next touch tells the name again."""
+        self.cells[CELLS * slots + int(TOUCH)] &= ~NAMED
 
     def chunks(self, size: int = 1 << 16) -> Iterator[tuple[int, int]]:
         """Slot ranges that cover the table, for sweeps that must not copy it whole."""
