@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Protocol
 
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Block", "Examples", "Message", "Reject", "Source"]
+__all__ = ["Block", "Examples", "LiveSource", "Message", "Reject", "Source"]
 
 Int64s = npt.NDArray[np.int64]
 Position = dict[str, Any]
@@ -93,6 +94,47 @@ class Source(Protocol):
 
     def close(self) -> None:
         """Releases files."""
+        ...
+
+
+class LiveSource(Source, Protocol):
+    """A source that goes on for ever and can read its messages again by partition and offset.
+
+    What comes when is decided by whoever feeds it, so `read` may return an empty block that is not the end.
+    Offsets are *next* offsets throughout. A position says what was read and where each partition that was
+    read or placed goes on; nothing in it depends on when or how often reading stopped.
+    """
+
+    def start(self) -> None:
+        """Goes to where a first start begins; raises BadSettings where the settings do not say."""
+        ...
+
+    def next_offsets(self) -> Mapping[int, int]:
+        """The next offset of each partition that was read or placed; a view, not a copy."""
+        ...
+
+    def place(self, partition: int, offset: int) -> None:
+        """The next `read` of `partition` begins at `offset`, as after reading up to it."""
+        ...
+
+    def read_range(self, partition: int, first: int, last: int, limit: int) -> Block:
+        """Up to `limit` (>= 1) messages of `partition` with first <= offset < last; empty where none is left.
+
+        The partition goes on behind them, at `last` once all were given. Raises BadSettings where a part of
+        the range is not there any more.
+        """
+        ...
+
+    def gaps(self) -> list[tuple[int, int, int]]:
+        """Ranges (partition, from, to) that the last `seek` passed over because they are gone for good."""
+        ...
+
+    def at_end(self) -> bool:
+        """Whether all that was there when the source was opened has been read."""
+        ...
+
+    def commit(self, position: Position) -> None:
+        """Tells whoever watches the lag that a checkpoint with `position` is durable; nothing relies on it."""
         ...
 
 
