@@ -134,7 +134,7 @@ class LiveSource(Source, Protocol):
         ...
 
     def commit(self, position: Position) -> None:
-        """Tells whoever watches the lag that a checkpoint with `position` is durable; nothing relies on it."""
+        """Tells whoever watches the lag that `position` is in a durable checkpoint; nothing relies on it."""
         ...
 
 
