@@ -1,8 +1,35 @@
-"""Settings that every test shares: one hypothesis profile, and a compiled-kernel cache that workers share."""
+"""What every test shares: one hypothesis profile, and a real broker for those that ask for it."""
 
+import uuid
+
+import pytest
 from hypothesis import HealthCheck, settings
 
 settings.register_profile(
     "bedload", deadline=None, derandomize=True, suppress_health_check=[HealthCheck.too_slow]
 )
 settings.load_profile("bedload")
+
+
+@pytest.fixture(scope="session")
+def broker(tmp_path_factory):
+    """A running broker that all tests of this process share: make topics of your own, and never stop it."""
+    from tests.broker import start_or_skip
+
+    with start_or_skip(tmp_path_factory.mktemp("broker")) as running:
+        yield running
+
+
+@pytest.fixture
+def own_broker(tmp_path):
+    """A running broker of the test's own, to be stopped, killed and paused. Takes some seconds to start."""
+    from tests.broker import start_or_skip
+
+    with start_or_skip(tmp_path / "broker") as running:
+        yield running
+
+
+@pytest.fixture
+def topic():
+    """A name that no other test has; the topic is not made."""
+    return f"feed-{uuid.uuid4().hex[:12]}"

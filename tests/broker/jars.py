@@ -1,4 +1,4 @@
-"""The pom beside this file in, a folder with the broker's jars out: fetched by Maven once, then shared by all runs."""
+"""The pom beside this file in, a folder with the broker's jars out: fetched by Maven once, then shared."""
 
 import fcntl
 import os
@@ -6,7 +6,7 @@ import shutil
 import subprocess
 from pathlib import Path
 
-__all__ = ["Unavailable", "class_path", "java"]
+__all__ = ["Unavailable", "class_path", "java", "program"]
 
 POM = Path(__file__).with_name("pom.xml")
 FETCH_S = 600
@@ -46,12 +46,13 @@ def fetch(folder: Path) -> None:
     done = subprocess.run(command, capture_output=True, text=True, timeout=FETCH_S)
     if done.returncode:
         raise Unavailable(
-            f"Maven could not fetch the broker's jars ({' '.join(command)}): {done.stdout[-2000:]}"
+            f"Maven could not fetch the broker's jars: {' '.join(command)}: {done.stdout[-2000:]}"
         )
     shutil.copyfile(POM, folder / POM.name)
 
 
 def program(name: str, package: str) -> str:
+    """Its path. Raises Unavailable with the package that has it."""
     path = shutil.which(name)
     if path is None:
         raise Unavailable(f"no {name} on this machine; Debian has it in {package}")

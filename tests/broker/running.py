@@ -13,7 +13,7 @@ import socket
 import subprocess
 import time
 import uuid
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
@@ -21,37 +21,20 @@ from typing import Self
 
 from kafka import KafkaAdminClient, TopicPartition
 
+from tests.broker.credentials import Credentials
 from tests.broker.jars import class_path, java
+from tests.broker.properties import LISTENERS, MECHANISMS, server_properties
 
 __all__ = ["Broker"]
 
 START_S = 60
 STOP_S = 20
 TRIES = 3
-HEAP = ("-Xmx512m", "-XX:+UseSerialGC", "-XX:TieredStopAtLevel=1", "-Xshare:auto")
+JVM = ("-Xmx512m", "-XX:+UseSerialGC", "-XX:TieredStopAtLevel=1")
 
-PROPERTIES = """\
-process.roles=broker,controller
-node.id=1
-controller.quorum.voters=1@127.0.0.1:{controller}
-listeners=CLEAR://127.0.0.1:{clear},CONTROLLER://127.0.0.1:{controller}
-advertised.listeners=CLEAR://127.0.0.1:{clear}
-listener.security.protocol.map=CLEAR:PLAINTEXT,CONTROLLER:PLAINTEXT
-controller.listener.names=CONTROLLER
-inter.broker.listener.name=CLEAR
-log.dirs={data}
-offsets.topic.replication.factor=1
-offsets.topic.num.partitions=1
-transaction.state.log.replication.factor=1
-transaction.state.log.min.isr=1
-transaction.state.log.num.partitions=1
-share.coordinator.state.topic.replication.factor=1
-share.coordinator.state.topic.min.isr=1
-share.coordinator.state.topic.num.partitions=1
-group.initial.rebalance.delay.ms=0
-auto.create.topics.enable=false
-message.max.bytes=20971520
-"""
+
+class PortTaken(Exception):
+    """Somebody took a port between the look and the start."""
 
 
 class Broker:
@@ -61,24 +44,23 @@ class Broker:
         """Use `Broker.start`; this makes no process."""
         self.folder = folder
         self.cluster_id = uuid.uuid4().hex[:22]
-        self.clear, self.controller = free_port(), free_port()
+        self.ports = free_ports([*LISTENERS, "controller"])
+        self.credentials = Credentials.make(folder / "credentials")
         self._process: subprocess.Popen[bytes] | None = None
 
     @classmethod
     def start(cls, folder: Path) -> Self:
         """A broker that answers, with its data, properties and log below `folder`. Raises Unavailable."""
-        for left in reversed(range(TRIES)):
-            broker = cls(folder)
+        broker = cls(folder)
+        for _ in range(TRIES):
+            broker._format()
             try:
-                broker._format()
                 broker.start_again()
             except PortTaken:
-                shutil.rmtree(folder)
-                if not left:
-                    raise
+                broker.ports = free_ports([*LISTENERS, "controller"])
             else:
                 return broker
-        raise AssertionError
+        raise AssertionError(f"somebody took the broker's ports {TRIES} times")
 
     def __enter__(self) -> Self:
         return self
@@ -91,7 +73,11 @@ class Broker:
     @property
     def servers(self) -> list[str]:
         """`bootstrap_servers` without encryption; the same before and after a restart."""
-        return [f"127.0.0.1:{self.clear}"]
+        return self.servers_of("clear")
+
+    def servers_of(self, listener: str) -> list[str]:
+        """The same for another door: `tls`, `mutual` (wants the client's certificate), `sasl`, `sasl_tls`."""
+        return [f"127.0.0.1:{self.ports[listener]}"]
 
     @property
     def log(self) -> Path:
@@ -106,14 +92,11 @@ class Broker:
     def start_again(self) -> None:
         """Starts it on the same ports and data, and returns when it answers."""
         assert self._process is None, "the broker is running already"
+        command = [*dying_with_parent(), java(), *JVM, "-Dorg.slf4j.simpleLogger.defaultLogLevel=warn"]
+        command += ["-cp", class_path(), "kafka.Kafka", str(self._properties)]
         with self.log.open("ab") as log:
             self._process = subprocess.Popen(
-                [*dying_with_parent(), java(), *HEAP, "-Dorg.slf4j.simpleLogger.defaultLogLevel=warn"]
-                + ["-cp", class_path(), "kafka.Kafka", str(self._properties)],
-                stdin=subprocess.DEVNULL,
-                stdout=log,
-                stderr=log,
-                start_new_session=True,
+                command, stdin=subprocess.DEVNULL, stdout=log, stderr=log, start_new_session=True
             )
         atexit.register(self.kill)
         try:
@@ -182,11 +165,13 @@ class Broker:
         return self.folder / "server.properties"
 
     def _format(self) -> None:
-        self.folder.mkdir(parents=True, exist_ok=True)
-        text = PROPERTIES.format(clear=self.clear, controller=self.controller, data=self.folder / "data")
-        self._properties.write_text(text)
-        command = [java(), *HEAP, "-cp", class_path(), "kafka.tools.StorageTool", "format"]
+        shutil.rmtree(self.folder / "data", ignore_errors=True)
+        self._properties.write_text(server_properties(self.folder / "data", self.ports, self.credentials))
+        command = [java(), *JVM, "-cp", class_path(), "kafka.tools.StorageTool", "format"]
         command += ["--cluster-id", self.cluster_id, "--config", str(self._properties)]
+        user = f"[name={self.credentials.username},password={self.credentials.password}]"
+        for mechanism in MECHANISMS[1:]:
+            command += ["--add-scram", f"{mechanism}={user}"]
         subprocess.run(command, check=True, capture_output=True, timeout=START_S)
 
     def _wait_until_it_answers(self) -> None:
@@ -202,7 +187,7 @@ class Broker:
             if "Address already in use" in wrote:
                 raise PortTaken(wrote[-2000:])
             raise AssertionError(f"the broker gave up with {self._process.returncode}: {wrote[-2000:]}")
-        with suppress(OSError), socket.create_connection(("127.0.0.1", self.clear), timeout=1):
+        with suppress(OSError), socket.create_connection(("127.0.0.1", self.ports["clear"]), timeout=1):
             return True
         return False
 
@@ -211,20 +196,19 @@ class Broker:
             os.killpg(self.pid, number)
 
 
-class PortTaken(Exception):
-    """Somebody took a port between the look and the start."""
-
-
-def free_port() -> int:
-    """Below the range from which the kernel takes ports of outgoing connections: while a broker is down, a client
-    that tries again and again could otherwise be given the broker's own port, and connect to itself."""
+def free_ports(names: Sequence[str]) -> dict[str, int]:
+    """From below those that the kernel gives to outgoing connections: while a broker is down, a client that
+    tries again and again could otherwise be given the broker's own port, and connect to itself."""
     lowest = int(Path("/proc/sys/net/ipv4/ip_local_port_range").read_text().split()[0])
-    ours = random.Random(os.urandom(8))
-    while True:
-        port = ours.randrange(10_000, lowest)
-        with socket.socket() as trial, suppress(OSError):
-            trial.bind(("127.0.0.1", port))
-            return port
+    candidates = random.SystemRandom().sample(range(10_000, lowest), 100)
+    return dict(zip(names, filter(is_free, candidates), strict=False))
+
+
+def is_free(port: int) -> bool:
+    with socket.socket() as trial, suppress(OSError):
+        trial.bind(("127.0.0.1", port))
+        return True
+    return False
 
 
 def dying_with_parent() -> list[str]:
