@@ -8,7 +8,6 @@ from itertools import count
 import numpy as np
 import numpy.typing as npt
 
-from stream.batch import Batch
 from stream.learners import Learner
 from stream.settings.models import Learner as LearnerSettings
 from stream.settings.models import State
@@ -38,15 +37,14 @@ def entry(learned_before: int, tokens: int, block: int = BLOCK) -> list[Figure]:
     for name, (limit, before) in cases.items():
         settings = LearnerSettings(l1_per_example=L1_PER_EXAMPLE, horizon=limit)
         state = _state_after(before, settings, block)
-        delays = np.sort([_delay(settings, state, before, seed, block) for seed in range(tokens)])
-        spread = {
-            "least": delays[0],
-            "most": delays[-1],
-            "in messages that held it, median": np.median(delays) * SHARE,
+        delays = np.array([_delay(settings, state, before, seed, block) for seed in range(tokens)])
+        messages, holding = np.median(delays, axis=0)
+        details = {
+            "of these held the token": float(holding),
+            "least": float(delays[:, 0].min()),
+            "most": float(delays[:, 0].max()),
         }
-        figures.append(
-            Figure(f"messages before a weight, {name}", float(np.median(delays)), "", details=spread)
-        )
+        figures.append(Figure(f"messages before a weight, {name}", float(messages), "", details=details))
     return figures
 
 
@@ -63,8 +61,8 @@ def _state_after(messages: int, settings: LearnerSettings, block: int) -> dict[s
 
 def _delay(
     settings: LearnerSettings, state: dict[str, npt.NDArray[np.generic]], before: int, seed: int, block: int
-) -> int:
-    """Messages from the first that may hold the token to the one that gives it a weight, both counted."""
+) -> tuple[int, int]:
+    """Messages up to the one that gives the token a weight, and how many of them hold it."""
     learner, table = Learner(settings), Table(State())
     learner.restore(state)
     batch = block_of(np.array([SHARE]), seed=seed + 1, size=block)
@@ -72,13 +70,12 @@ def _delay(
     slots = table.slots_of(batch.addresses)
     odds = math.exp(LIFT) * BASE_RATE / (1.0 - BASE_RATE)
     probabilities = np.where(np.diff(batch.row_ptr) > 0, odds / (1.0 + odds), BASE_RATE)
-    for first in count(0, block):
+    for blocks in count():
+        first = blocks * block
         draw_labels(probabilities, (seed + 1) * 10**12 + before + first + 1, batch.labels)
         _, named = learner.predict_then_update(table.cells, batch, slots, 0, block)
         if len(named):
-            return first + _message_of(batch, int(named[0])) + 1
+            token = int(named[0])  # the token is the only one, so entries count its messages
+            message = int(np.searchsorted(batch.row_ptr, token, side="right")) - 1
+            return first + message + 1, blocks * len(slots) + token + 1
     raise AssertionError("count() does not end")
-
-
-def _message_of(batch: Batch, token: int) -> int:
-    return int(np.searchsorted(batch.row_ptr, token, side="right")) - 1

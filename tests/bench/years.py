@@ -153,5 +153,5 @@ def _figures(
     what = f"{examples:,} examples: "
     return [
         Figure(what + "weights off by, most", float(apart.max()) * 100, "%", at_most=1, details=details),
-        Figure(what + "counts off by, most", max(counts.values()), "%", at_most=0.01, details=counts),
+        Figure(what + "counts off by, most", max(counts.values()), "%", at_most=0.1, details=counts),
     ]
