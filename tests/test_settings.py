@@ -271,6 +271,8 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
         (NOTE + '[metrics]\nslice_by = "note"', 'metrics.slice_by = "note"', "category fields: none"),
         (SPACE_20 + "[state]\nmax_live = 2_000_000", "state.max_live = 2000000", "1,048,576 addr"),
         ('[state]\nfolder = ""', 'state.folder = ""', "a text"),
+        ('[rejects]\naction = "halt"\ntopic = "bad"', 'rejects.topic = "bad"', "keeps no message"),
+        ('[scores]\ntopic = "to whom?"', 'scores.topic = "to whom?"', "letters, digits"),
     ],
 )  # fmt: skip
 def test_what_cannot_work_is_refused_with_reason(write, text, key, why):

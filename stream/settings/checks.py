@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 from pydantic_core import PydanticCustomError
 
 if TYPE_CHECKING:
-    from stream.settings.models import Learner, Quantity, Settings
+    from stream.settings.models import Learner, Quantity, Rejects, Settings
 
 __all__ = [
     "CONFLICT",
@@ -24,7 +24,9 @@ __all__ = [
     "number",
     "quantity_problems",
     "refuse",
+    "rejects_problems",
     "settings_problems",
+    "topic_name",
 ]
 
 Problem = tuple[tuple[str | int, ...], str]
@@ -74,6 +76,13 @@ def dotted_path(path: str) -> str:
             "quotation mark, backslash or control character"
         )
     return path
+
+
+def topic_name(name: str) -> str:
+    """A name that a broker takes: at most 249 of the letters, digits and signs that it allows."""
+    if not re.fullmatch(r"[A-Za-z0-9._-]{1,249}", name) or name in (".", ".."):
+        raise _refused("must be 1 to 249 letters, digits, dots, hyphens and underscores, as brokers want it")
+    return name
 
 
 def field_name(name: str) -> str:
@@ -132,6 +141,14 @@ def learner_problems(learner: Learner) -> list[Problem]:
         )
         problems.append((("horizon",), why))
     return problems
+
+
+def rejects_problems(rejects: Rejects) -> list[Problem]:
+    """A topic for rejects is used where they are kept."""
+    if rejects.topic is not None and rejects.action != "keep":
+        why = f'action = "{rejects.action}" keeps no message; leave topic out, or take action = "keep"'
+        return [(("topic",), why)]
+    return []
 
 
 def settings_problems(settings: Settings) -> list[Problem]:

@@ -33,10 +33,13 @@ __all__ = [
     "MessagePaths",
     "Metrics",
     "Quantity",
+    "Rejects",
+    "Scores",
     "Settings",
     "Space",
     "State",
     "Words",
+    "Worker",
 ]
 
 UNICODE_VERSION = "14.0.0"
@@ -48,6 +51,12 @@ MOST = 10**15
 TokenValue = Literal["presence", "count", "log_count"]
 Whole = Annotated[int, BeforeValidator(checks.number), Field(le=MOST)]
 Number = Annotated[float, BeforeValidator(checks.number), Field(allow_inf_nan=False)]
+Seconds = Number
+Topic = Annotated[
+    str,
+    AfterValidator(checks.topic_name),
+    Field(json_schema_extra={"allowed": "the name of a topic"}),
+]
 Strength = Annotated[Number, Field(ge=0, le=1e9)]
 DottedPath = Annotated[
     str, AfterValidator(checks.dotted_path), Field(json_schema_extra={"allowed": "a dotted path"})
@@ -259,7 +268,21 @@ class State(Section):
         description="Folder of checkpoints, snapshots, rejects; relative to this file.",
     )
     checkpoint_every: Whole = Field(default=1_000_000, ge=1, description="Messages between checkpoints.")
-    keep_checkpoints: Whole = Field(default=3, ge=1, description="Checkpoints kept; older ones are removed.")
+    keep_checkpoints: Whole = Field(
+        default=5, ge=1, description="Newest checkpoints kept; older ones are removed."
+    )
+    keep_hourly: Whole = Field(
+        default=24,
+        ge=0,
+        le=100_000,
+        description="Hours of which the worker keeps the last checkpoint and snapshot beside the newest.",
+    )
+    keep_daily: Whole = Field(
+        default=7,
+        ge=0,
+        le=100_000,
+        description="Days of which the worker keeps the last checkpoint and snapshot beside the newest.",
+    )
     keep_snapshots: Whole = Field(default=10, ge=1, description="Snapshots kept; older ones are removed.")
     admit_after: Whole = Field(
         default=1, ge=1, le=200, description="Sightings before a coordinate gets state; 1: at once."
@@ -296,6 +319,58 @@ class Metrics(Section):
     )
 
 
+class Worker(Section):
+    """How `bedload work` lives: what it does after so many seconds, and how it is watched."""
+
+    checkpoint_every_s: Seconds = Field(
+        default=60.0, ge=0.01, le=1e6, description="Seconds between checkpoints, where messages came."
+    )
+    snapshot_every_s: Seconds = Field(
+        default=300.0, ge=0.01, le=1e6, description="Seconds between snapshots, where messages came."
+    )
+    log_every_s: Seconds = Field(default=10.0, ge=0.01, le=1e6, description="Seconds between log lines.")
+    log_format: Literal["text", "json"] = Field(
+        default="text", description="Lines of the log: text for people, or a JSON object each."
+    )
+    metrics_address: str = Field(
+        default="127.0.0.1",
+        min_length=1,
+        description="Address that the HTTP port listens at: this machine only, unless told otherwise.",
+    )
+    metrics_port: Whole | None = Field(
+        default=None, ge=1, le=65_535, description="HTTP port of metrics and health; none: no HTTP."
+    )
+    stale_after_s: Seconds = Field(
+        default=120.0, ge=0.01, le=1e6, description="Seconds without word from the feed: not ready then."
+    )
+    unavailable_after_s: Seconds | None = Field(
+        default=None, ge=1, le=1e7, description="Seconds without word from the feed: exit 69 then."
+    )
+
+
+class Rejects(Section):
+    """What becomes of rejected messages; how many may be rejected is said in [message]."""
+
+    action: Literal["keep", "skip", "halt"] = Field(
+        default="keep",
+        description="Keep a rejected message (in files, or in `topic`), only count it, or stop at the first.",
+    )
+    topic: Topic | None = Field(
+        default=None, description="Topic that rejected messages go to instead of files in the state folder."
+    )
+
+    @model_validator(mode="after")
+    def _topic_is_used(self) -> Rejects:
+        checks.refuse(checks.rejects_problems(self))
+        return self
+
+
+class Scores(Section):
+    """Scores out: one for each message, from before its update."""
+
+    topic: Topic | None = Field(default=None, description="Topic that the worker writes scores to.")
+
+
 class Settings(Section):
     """Everything a run needs, checked."""
 
@@ -307,6 +382,9 @@ class Settings(Section):
     learner: Learner = Learner()
     state: State = State()
     metrics: Metrics = Metrics()
+    worker: Worker = Worker()
+    rejects: Rejects = Rejects()
+    scores: Scores = Scores()
     _folder: Path = PrivateAttr(default=Path())
 
     @model_validator(mode="after")
