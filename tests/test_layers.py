@@ -39,7 +39,7 @@ HOMES = {
     "zstandard": ("stream/sources/opening.py", "simulator/log_file.py"),
     "safetensors": "stream/features/unicode_",
     "typing_extensions": "stream/",
-    "crc32c": "stream/manifest.py",
+    "crc32c": ("stream/manifest.py", "stream/journal.py"),
     "pyarrow": "stream/snapshots/export.py",
     "pydantic": "stream/settings/",
     "pydantic_core": "stream/settings/",
