@@ -6,6 +6,7 @@ import re
 import subprocess
 import sys
 import tomllib
+from datetime import datetime
 from pathlib import Path
 
 import pytest
@@ -155,6 +156,26 @@ def test_broken_toml_is_told_with_its_line(tmp_path, content, line):
     assert text.startswith("s.toml: ") and line in text
 
 
+# ---- topics ------------------------------------------------------------------------------------------------
+
+
+def test_one_file_serves_a_topic_and_its_recorded_logs(write):
+    path = write(TOPIC + 'servers = "h:1"\ntopic = "t"\npaths = "t/*.jsonl"\nstart = "latest"\n')
+    assert load(path, environ={}).feed.kind == "topic"
+    assert load(path, ["feed.kind=log"], {}).feed.paths == ("t/*.jsonl",)
+
+
+@pytest.mark.parametrize("start", ["earliest", "latest", "2031-03-03T06:00:00Z", "2031-03-03 06:00:00+01:00"])
+def test_a_start_may_be_given_on_the_command_line(start):
+    told = load(None, [f"feed.start={start}"], {}).feed.start
+    assert told == start or datetime.fromisoformat(told) == datetime.fromisoformat(start)
+
+
+def test_servers_may_be_ipv6_addresses(write):
+    path = write(TOPIC + 'servers = ["[::1]:9092", "10.0.0.7:65535", "a-b.example:1"]\ntopic = "t"\n')
+    assert len(load(path, environ={}).feed.servers) == 3
+
+
 # ---- refusals ----------------------------------------------------------------------------------------------
 
 
@@ -230,13 +251,37 @@ KG = FIELD.format("kg", "quantity")
 CROSSES = "[[crosses]]\n"
 CROSS_1 = "paths of [[crosses]] number 1"
 SPACE_20 = "[space]\naddress_bits = 20\n"
+TOPIC = '[feed]\nkind = "topic"\n'
+TWO_PLACES = 'password_file = "a"\npassword_variable = "A"'
+SASL = '[feed]\nsasl = "PLAIN"\n'
 TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
 
 
 @pytest.mark.parametrize(
     ("text", "key", "why"),
     [
-        ('[feed]\nkind = "topic"', 'feed.kind = "topic"', "this release reads logs only"),
+        (TOPIC + 'topic = "a"', "feed.servers", "at least one host:port"),
+        (TOPIC + 'servers = "h:1"', "feed.topic", "name the topic"),
+        ('[feed]\nkind = "queue"', 'feed.kind = "queue"', '"log" or "topic"'),
+        ('[feed]\nservers = "h"', 'feed.servers (item 1) = "h"', "must be host:port"),
+        ('[feed]\nservers = "h:0"', 'feed.servers (item 1) = "h:0"', "must be host:port"),
+        ('[feed]\nservers = "::1:9092"', 'feed.servers (item 1) = "::1:9092"', "must be host:port"),
+        ('[feed]\nservers = "u@h:1"', 'feed.servers (item 1) = "u@h:1"', "must be host:port"),
+        ('[feed]\ntopic = "a b"', 'feed.topic = "a b"', "letters, digits"),
+        ("[feed]\npartitions = [1, 1]", "feed.partitions = [1, 1]", "twice"),
+        ("[feed]\npartitions = [-1]", "feed.partitions (item 1) = -1", "whole numbers"),
+        ('[feed]\nstart = "now"', 'feed.start = "now"', "RFC 3339"),
+        ('[feed]\nstart = "2031-03-03T06:00:00"', "feed.start", "offset from UTC"),
+        ("[feed]\nstart = 2031-03-03", "feed.start", "offset from UTC"),
+        ("[feed]\nstart = 7", "feed.start = 7", "RFC 3339"),
+        ('[feed]\nca_file = "a"', 'feed.ca_file = "a"', "tls = true"),
+        ('[feed]\ntls = true\nkey_file = "a"', "feed.cert_file", "go together"),
+        ('[feed]\nusername = "a"', 'feed.username = "a"', "with sasl only"),
+        ('[feed]\npassword_variable = "A"', "feed.password_variable", "with sasl only"),
+        ('[feed]\nsasl = "GSSAPI"', 'feed.sasl = "GSSAPI"', '"PLAIN" or'),
+        (SASL + 'password_file = "a"', "feed.username", "needs a user"),
+        (SASL + 'username = "a"', "feed.password_file", "place of the password"),
+        (SASL + 'username = "a"\n' + TWO_PLACES, "feed.password_file", "one of them"),
         (TRUNCATED + "l1 = 1.0", "learner.l1 = 1.0", "l1_per_example as its gravity"),
         (TRUNCATED + "l2 = 1.0", "learner.l2 = 1.0", "sum of losses"),
         (TRUNCATED + "horizon = 5", "learner.horizon = 5", "shuts no new token out"),
@@ -323,9 +368,7 @@ def test_any_value_anywhere_loads_or_is_refused_in_words(key, value):
     try:
         load(None, (), environ)
     except BadSettings as error:
-        assert re.search(
-            r"(must|unknown key|does not take|is missing|set it whole|edges|logs only)", str(error)
-        )
+        assert re.search(r"(must|unknown key|does not take|is missing|set it whole|edges)", str(error))
 
 
 def _inline(value):
@@ -380,6 +423,17 @@ def test_the_documented_limits_and_default_are_the_real_ones(key):
         assert (type(real), real) == (type(expected), expected)
 
 
+CERTIFICATE = {"tls": True, "cert_file": "c", "key_file": "k"}
+PASSWORD_FILE = {"sasl": "PLAIN", "username": "u", "password_file": "p"}
+COMPANIONS = {
+    "feed.kind": {"servers": "h:1", "topic": "t"},
+    **dict.fromkeys(("feed.ca_file", "feed.cert_file", "feed.key_file"), CERTIFICATE),
+    **dict.fromkeys(("feed.sasl", "feed.username", "feed.password_file"), PASSWORD_FILE),
+    "feed.password_variable": {"sasl": "PLAIN", "username": "u"},
+}
+"""What a key does not go without."""
+
+
 @pytest.mark.parametrize("key", KEYS.values(), ids=KEYS)
 def test_the_documented_example_loads_and_is_not_the_default(key):
     example = tomllib.loads(f"x = {documented()[key.dotted][-1].strip('`')}")["x"]
@@ -391,7 +445,7 @@ def test_the_documented_example_loads_and_is_not_the_default(key):
     elif key.section == "crosses":
         data["crosses"] = [{key.name: example}]
     else:
-        data[key.section] = {key.name: example}
+        data[key.section] = {**COMPANIONS.get(key.dotted, {}), key.name: example}
     Settings.model_validate(data)
     assert example != key.default or key.dotted in ("feed.kind", "learner.method")
 

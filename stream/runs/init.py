@@ -39,7 +39,13 @@ ACTIVE = {
     "state.folder",
     "state.checkpoint_every",
 }
-EXAMPLES = {"learner.horizon": 10_000_000, "state.idle_after": 10_000_000, "state.max_live": 20_000_000}
+EXAMPLES = {
+    "feed.start": "earliest",
+    "feed.sasl": "SCRAM-SHA-512",
+    "learner.horizon": 10_000_000,
+    "state.idle_after": 10_000_000,
+    "state.max_live": 20_000_000,
+}
 """Shown, commented out, for keys without a default."""
 
 

@@ -4,28 +4,31 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable
+from datetime import datetime
 from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 from pydantic_core import PydanticCustomError
 
 if TYPE_CHECKING:
-    from stream.settings.models import Learner, Quantity, Rejects, Settings
+    from stream.settings.models import Feed, Learner, Quantity, Rejects, Settings
 
 __all__ = [
     "CONFLICT",
     "Problem",
     "dotted_path",
     "edges",
+    "feed_problems",
     "field_name",
     "is_path_key",
     "learner_problems",
-    "logs_only",
     "number",
     "quantity_problems",
     "refuse",
     "rejects_problems",
+    "server",
     "settings_problems",
+    "start",
     "topic_name",
 ]
 
@@ -56,11 +59,29 @@ def number(value: Any) -> Any:
     return value
 
 
-def logs_only(kind: Any) -> Any:
-    """Refuses feeds that this release cannot read."""
-    if kind == "topic":
-        raise _refused('this release reads logs only; use "log" and give feed.paths')
-    return kind
+def server(text: str) -> str:
+    """host:port, with an IPv6 address in brackets."""
+    host, _, port = text.rpartition(":")
+    plain = host and not re.search(r"[\s/@,]", host) and (":" not in host or re.fullmatch(r"\[.+\]", host))
+    if not plain or not (port.isascii() and port.isdigit()) or not 0 < int(port) < 1 << 16:
+        raise _refused('must be host:port, such as "broker-1.depot.example:9092"')
+    return text
+
+
+def start(value: Any) -> Any:
+    """A place to begin: a word, or a time with its offset from UTC; TOML may give it as a time already."""
+    if value is None or value in ("earliest", "latest"):
+        return value
+    try:
+        time = value if isinstance(value, datetime) else datetime.fromisoformat(value)
+        if time.tzinfo is not None and time.timestamp() >= 0:
+            return value.isoformat() if isinstance(value, datetime) else value
+    except (TypeError, ValueError, OverflowError):
+        pass
+    raise _refused(
+        'must be "earliest" or "latest" or an RFC 3339 time with its offset from UTC, such as '
+        '"2031-03-03T06:00:00Z", not before 1970'
+    )
 
 
 def is_path_key(key: str) -> bool:
@@ -100,6 +121,43 @@ def edges(bins: tuple[float, ...]) -> tuple[float, ...]:
         if not left < right:
             raise _refused(f"edges must ascend, each above the one before; {right!r} follows {left!r}")
     return tuple(edge + 0.0 for edge in bins)
+
+
+def feed_problems(feed: Feed) -> list[Problem]:
+    """What a topic needs, and keys that say nothing without another one.
+
+    Keys of the kind of feed that is not chosen may stand: one file serves a worker on a topic and, with
+    `--set feed.kind=log`, a replay of recorded logs.
+    """
+    problems: list[Problem] = []
+    if feed.kind == "topic":
+        if not feed.servers:
+            problems.append((("servers",), "is missing: a topic needs at least one host:port"))
+        if feed.topic is None:
+            problems.append((("topic",), "is missing: name the topic to read"))
+    if len(set(feed.partitions)) < len(feed.partitions):
+        problems.append((("partitions",), "names a partition twice"))
+    for name in ("ca_file", "cert_file", "key_file"):
+        if getattr(feed, name) is not None and not feed.tls:
+            problems.append(((name,), "is used with tls = true only; set that, or leave this out"))
+    if (feed.cert_file is None) != (feed.key_file is None):
+        missing = "cert_file" if feed.cert_file is None else "key_file"
+        problems.append(((missing,), "is missing: cert_file and key_file go together"))
+    return problems + _sasl_problems(feed)
+
+
+def _sasl_problems(feed: Feed) -> list[Problem]:
+    places = [name for name in ("password_file", "password_variable") if getattr(feed, name) is not None]
+    if feed.sasl is None:
+        alone = [name for name in ("username", *places) if getattr(feed, name) is not None]
+        return [((name,), "is used with sasl only; set that, or leave this out") for name in alone]
+    problems: list[Problem] = []
+    if feed.username is None:
+        problems.append((("username",), "is missing: sasl needs a user"))
+    if len(places) != 1:
+        why = "sasl needs the place of the password: give password_file or password_variable, one of them"
+        problems.append((("password_file",), why))
+    return problems
 
 
 def quantity_problems(field: Quantity) -> list[Problem]:

@@ -57,6 +57,9 @@ Topic = Annotated[
     AfterValidator(checks.topic_name),
     Field(json_schema_extra={"allowed": "the name of a topic"}),
 ]
+Partition = Annotated[int, BeforeValidator(checks.number), Field(ge=0, le=(1 << 31) - 1)]
+Server = Annotated[str, AfterValidator(checks.server)]
+File = Annotated[str, Field(min_length=1)]
 Strength = Annotated[Number, Field(ge=0, le=1e9)]
 DottedPath = Annotated[
     str, AfterValidator(checks.dotted_path), Field(json_schema_extra={"allowed": "a dotted path"})
@@ -72,25 +75,77 @@ class Section(BaseModel):
 class Feed(Section):
     """Where messages come from."""
 
-    kind: Literal["log"] = Field(default="log", description="What the feed is; this release reads logs.")
+    kind: Literal["log", "topic"] = Field(
+        default="log", description="What the feed is: log files, or a topic of a Kafka cluster."
+    )
     paths: tuple[str, ...] = Field(
         default=(),
         description='JSON Lines files, plain, .gz or .zst: glob patterns relative to this file; "-" is '
         "standard input. One text counts as a list of one.",
     )
     max_line_bytes: Whole = Field(
-        default=1_048_576, ge=64, le=1 << 30, description="A longer line is rejected (bytes)."
+        default=1_048_576,
+        ge=64,
+        le=1 << 30,
+        description="A longer line, or value of a record, is rejected (bytes).",
+    )
+    servers: tuple[Server, ...] = Field(
+        default=(),
+        json_schema_extra={"allowed": "a list of host:port"},
+        description="Brokers of the cluster to ask first. One text counts as a list of one.",
+    )
+    topic: Topic | None = Field(default=None, description="The topic to read; it is never made.")
+    partitions: tuple[Partition, ...] = Field(
+        default=(),
+        json_schema_extra={"allowed": "a list of whole numbers"},
+        description="Partitions to read; none named: all, also those that are added later.",
+    )
+    group: str | None = Field(
+        default=None,
+        min_length=1,
+        description="Group to which offsets are committed for displays of the lag; never read from.",
+    )
+    start: str | None = Field(
+        default=None,
+        json_schema_extra={"allowed": '"earliest" or "latest" or an RFC 3339 time'},
+        description="Where a first start without a checkpoint begins to read.",
+    )
+    tls: StrictBool = Field(default=False, description="Speak TLS to the brokers, and check who they are.")
+    ca_file: File | None = Field(
+        default=None,
+        description="PEM file of the authorities that may sign for a broker; those of the system.",
+    )
+    cert_file: File | None = Field(
+        default=None, description="PEM file of the certificate that is shown to the brokers."
+    )
+    key_file: File | None = Field(default=None, description="PEM file of its key, not encrypted.")
+    sasl: Literal["PLAIN", "SCRAM-SHA-256", "SCRAM-SHA-512"] | None = Field(
+        default=None, description="How the user proves who it is."
+    )
+    username: str | None = Field(default=None, min_length=1, description="The user, with sasl.")
+    password_file: File | None = Field(
+        default=None, description="File whose first line is the password, with sasl."
+    )
+    password_variable: str | None = Field(
+        default=None,
+        min_length=1,
+        description="Environment variable that holds the password, with sasl.",
     )
 
-    @field_validator("kind", mode="before")
+    @field_validator("paths", "servers", mode="before")
     @classmethod
-    def _logs_only(cls, kind: Any) -> Any:
-        return checks.logs_only(kind)
+    def _one_is_a_list(cls, texts: Any) -> Any:
+        return (texts,) if isinstance(texts, str) else texts
 
-    @field_validator("paths", mode="before")
+    @field_validator("start", mode="before")
     @classmethod
-    def _one_is_a_list(cls, paths: Any) -> Any:
-        return (paths,) if isinstance(paths, str) else paths
+    def _start_is_a_place(cls, start: Any) -> Any:
+        return checks.start(start)
+
+    @model_validator(mode="after")
+    def _keys_fit(self) -> Feed:
+        checks.refuse(checks.feed_problems(self))
+        return self
 
 
 class MessagePaths(Section):
