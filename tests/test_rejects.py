@@ -131,7 +131,7 @@ def test_a_file_that_the_user_took_away_is_begun_anew_with_the_count_going_on(tm
     add_numbered(resumed, 5, 8)
     resumed.close()
     assert [record["number"] for record in records(tmp_path)] == [6, 7, 8]
-    again = RejectLog(tmp_path, PATIENT, {"by_reason": {"bad_json": 6}})
+    again = RejectLog(tmp_path, PATIENT, {"by_reason": {"bad_json": 6}, "in_window": 0})
     again.close()
     assert [record["number"] for record in records(tmp_path)] == [6]
 
@@ -162,7 +162,7 @@ def test_a_run_stops_when_too_large_a_share_is_rejected_and_says_where_to_look(t
     for part in (
         "11 of 1,050 messages were rejected (1.05%)",
         "max_reject_share = 0.01",
-        "day1.jsonl byte 5,245",
+        "day1.jsonl, partition 0, offset 5,245",
         "bad_json (11)",
         str(tmp_path / "b" / "rejects.jsonl"),
     ):
@@ -233,6 +233,85 @@ def test_a_failed_write_stops_the_run_and_is_never_taken_for_done_later(
     with pytest.raises(error):
         log.sync()
     log.close()
-    again = RejectLog(tmp_path, PATIENT, {"by_reason": {"wrong_type": 1}})
+    again = RejectLog(tmp_path, PATIENT, {"by_reason": {"wrong_type": 1}, "in_window": 0})
     again.close()
     assert [record["number"] for record in records(tmp_path)] == [1]
+
+
+# windows, and what is done with rejects
+
+
+def windowed(rejected: list[int], cuts: list[int], folder: Path, window: int = 100) -> str | None:
+    """What the run says as it stops, at 10 % a window of 100 messages after 10,000 good ones."""
+    limits = MessagePaths(max_reject_share=0.1, rejects_allowed_before=0)
+    log = RejectLog(folder, limits, window=window)
+    before = 0
+    try:
+        log.add(block_of([b"12"] * 10_000), [], 0)
+        for length in cuts:
+            rows = [number - before - 1 for number in rejected if before < number <= before + length]
+            block = block_of([b"12"] * length, first=before * 3)
+            log.add(block, [Reject(row, "bad_json", "") for row in rows], 10_000 + before)
+            log = RejectLog(folder, limits, log.state(), window=window)  # as a resumed run does
+            before += length
+    except BadData as error:
+        return str(error)
+    finally:
+        log.close()
+    return None
+
+
+def test_a_feed_that_goes_bad_after_many_good_messages_stops_the_run_within_a_window(tmp_path: Path) -> None:
+    assert windowed(list(range(1, 11)), [300], tmp_path) is None
+    said = windowed(list(range(1, 12)), [300], tmp_path)
+    assert said is not None
+    assert said.startswith("11 of the 11 messages after message 10,000 were rejected, too many for a window")
+    assert windowed([*range(91, 101), *range(101, 111)], [300], tmp_path) is None
+
+
+def test_short_windows_are_as_long_as_the_messages_that_are_always_allowed(tmp_path: Path) -> None:
+    limits = MessagePaths(max_reject_share=0.1, rejects_allowed_before=1000)
+    log = RejectLog(tmp_path, limits, window=10)
+    rejects = [Reject(row, "bad_json", "") for row in range(101)]
+    with pytest.raises(BadData, match="too many for a window of 1,000"):
+        log.add(block_of([b"12"] * 101), rejects, 5_000)
+    assert log.count == 101
+    log.close()
+
+
+@settings(max_examples=60, deadline=None)
+@given(rejected=st.sets(st.integers(1, 300), max_size=40), cuts=st.lists(st.integers(1, 90), min_size=1))
+def test_where_a_window_stops_a_run_does_not_depend_on_its_blocks_and_restarts(
+    tmp_path_factory: pytest.TempPathFactory, rejected: set[int], cuts: list[int]
+) -> None:
+    folder = tmp_path_factory.mktemp("rejects")
+    total = sum(cuts)
+    expected = None
+    for number in sorted(rejected):
+        since = (number - 1) // 100 * 100
+        if number <= total and sum(since < other <= number for other in rejected) > 10:
+            expected = f"11 of the {number - since} messages after message {10_000 + since:,}"
+            break
+    for several in (cuts, [total]):
+        said = windowed(sorted(rejected), several, folder)
+        assert (said and said.split(" were")[0]) == expected
+
+
+def test_skipped_rejects_are_counted_and_judged_but_kept_nowhere(tmp_path: Path) -> None:
+    limits = MessagePaths(max_reject_share=0.5, rejects_allowed_before=0)
+    log = RejectLog(tmp_path, limits, action="skip")
+    log.add(block_of([b"ok", b"x"]), [Reject(1, "bad_json", "")], 0)
+    log.sync()
+    with pytest.raises(BadData, match=r"2 of 3 messages.*most often bad_json \(2\)\. repair"):
+        log.add(block_of([b"x"]), [Reject(0, "bad_json", "")], 2)
+    log.close()
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_halting_stops_at_the_first_reject_and_names_it(tmp_path: Path) -> None:
+    log = RejectLog(tmp_path, PATIENT, action="halt")
+    log.add(block_of([b"ok"]), [], 0)
+    with pytest.raises(BadData, match=r"day1\.jsonl, partition 0, offset 3: rejected as bad_json \(byte 9\)"):
+        log.add(block_of([b"ok", b"x"]), [Reject(1, "bad_json", "byte 9")], 1)
+    log.close()
+    assert list(tmp_path.iterdir()) == []
