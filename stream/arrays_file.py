@@ -12,7 +12,8 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass
 from io import FileIO
 from math import prod
 from pathlib import Path
@@ -25,10 +26,23 @@ from stream.durable import Content, Sink, write_folder
 from stream.errors import BadData
 from stream.manifest import PIECE, FileSum, open_plain, read_manifest, verify_file
 
-__all__ = ["ARRAYS", "Arrays", "array_content", "read_array_folder", "write_array_folder"]
+__all__ = ["ARRAYS", "Arrays", "Rows", "array_content", "read_array_folder", "write_array_folder"]
 
 ARRAYS = "arrays.safetensors"
 Arrays = Mapping[str, npt.NDArray[Any]]
+
+
+@dataclass(frozen=True, slots=True)
+class Rows:
+    """Columns of `length` numbers each that are made while the file is written, some rows at a time.
+
+    `pieces` gives consecutive rows of all columns of `dtypes`, by name.
+    """
+
+    length: int
+    dtypes: Mapping[str, np.dtype[Any]]
+    pieces: Iterator[Arrays]
+
 
 # In the order in which the library sorts arrays (widest last here, first in the file).
 _TYPES = {
@@ -55,9 +69,10 @@ def write_array_folder(
     arrays: Arrays,
     manifest: Mapping[str, Any],
     make_way: Callable[[], object] | None = None,
+    rows: Rows | None = None,
 ) -> Path:
     """`write_folder` of one file, arrays.safetensors. No copy of a contiguous array is made."""
-    return write_folder(parent, name, {ARRAYS: array_content(arrays)}, manifest, make_way)
+    return write_folder(parent, name, {ARRAYS: array_content(arrays, rows)}, manifest, make_way)
 
 
 def read_array_folder(folder: Path) -> tuple[dict[str, Any], dict[str, npt.NDArray[Any]]]:
@@ -71,29 +86,47 @@ def read_array_folder(folder: Path) -> tuple[dict[str, Any], dict[str, npt.NDArr
     return manifest, _read_arrays(folder / ARRAYS, manifest["files"][ARRAYS])
 
 
-def array_content(arrays: Arrays) -> Content:
+def array_content(arrays: Arrays, rows: Rows | None = None) -> Content:
     """Content of a safetensors file: widest type first, then by name. TypeError for another dtype."""
+    shapes = {name: (array.dtype, array.shape) for name, array in arrays.items()}
+    if rows is not None:
+        shapes |= {name: (dtype, (rows.length,)) for name, dtype in rows.dtypes.items()}
     coded = []
-    for name, array in arrays.items():
-        code = _CODES.get(array.dtype.newbyteorder("<"))
+    for name, (dtype, shape) in shapes.items():
+        code = _CODES.get(dtype.newbyteorder("<"))
         if code is None:
-            raise TypeError(f"array {name!r}: dtype {array.dtype} has no place in a safetensors file")
-        coded.append((-_RANK[code], name, code, array))
-    coded.sort(key=lambda item: item[:2])
-    header, start = {}, 0
-    for _, name, code, array in coded:
-        end = start + array.nbytes
-        header[name] = {"dtype": code, "shape": list(array.shape), "data_offsets": [start, end]}
-        start = end
+            raise TypeError(f"array {name!r}: dtype {dtype} has no place in a safetensors file")
+        coded.append((-_RANK[code], name, code, shape))
+    header, starts, start = {}, {}, 0
+    for _, name, code, shape in sorted(coded):
+        end = start + _TYPES[code].itemsize * prod(shape)
+        header[name] = {"dtype": code, "shape": list(shape), "data_offsets": [start, end]}
+        starts[name], start = start, end
     text = json.dumps(header, separators=(",", ":"), ensure_ascii=False).encode()
     text += b" " * (-len(text) % 8)
 
     def write(sink: Sink) -> None:
         sink.write(len(text).to_bytes(8, "little") + text)
-        for _, _, code, array in coded:
-            sink.write(np.ascontiguousarray(array, dtype=_TYPES[code]).data)
+        if rows is None:
+            for name in starts:
+                sink.write(_plain(arrays[name]))
+            return
+        first = 8 + len(text)
+        for name, array in arrays.items():
+            sink.place(first + starts[name], _plain(array))
+        done = 0
+        for piece in rows.pieces:
+            for name, array in piece.items():
+                sink.place(first + starts[name] + done * array.itemsize, _plain(array))
+            done += len(array)
+        sink.sum_placed()
 
     return write
+
+
+def _plain(array: npt.NDArray[Any]) -> memoryview:
+    """Its bytes as the file holds them."""
+    return np.ascontiguousarray(array, dtype=array.dtype.newbyteorder("<")).data
 
 
 def _read_arrays(path: Path, expected: Mapping[str, Any]) -> dict[str, npt.NDArray[Any]]:

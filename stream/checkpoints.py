@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy.typing as npt
 
-from stream.arrays_file import Arrays, read_array_folder, write_array_folder
+from stream.arrays_file import Arrays, Rows, read_array_folder, write_array_folder
 from stream.durable import make_folder, move_folder, os_errors, remove_folder
 from stream.errors import BadData, BadSettings, InputMissing
 from stream.manifest import verify_folder
@@ -53,10 +53,13 @@ class Checkpoints:
         self.folder = folder
         self._keep = keep
 
-    def write(self, messages: int, arrays: Arrays, about: Mapping[str, Any]) -> Path:
+    def write(
+        self, messages: int, arrays: Arrays, about: Mapping[str, Any], rows: Rows | None = None
+    ) -> Path:
         """Writes the state after `messages` messages, then removes those beyond the newest `keep`.
 
-        `about`: JSON types only, without clock, host or pid. Arrays are not copied. Raises
+        `about`: JSON types only, without clock, host or pid. Arrays are not copied; `rows`: further ones
+        that are made meanwhile. Raises
         CannotCreate, NoPermission or FileTrouble; what was there is then still there.
         """
         make_folder(self.folder)
@@ -66,7 +69,7 @@ class Checkpoints:
             "messages": messages,
             "about": dict(about),
         }
-        path = write_array_folder(self.folder, f"{messages:015d}", arrays, manifest)
+        path = write_array_folder(self.folder, f"{messages:015d}", arrays, manifest, rows=rows)
         for old in self._paths()[self._keep :]:
             if old != path:
                 remove_folder(old)

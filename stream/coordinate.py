@@ -12,6 +12,9 @@ a shift and no stride.
 held the token in 28 bits: exponent e (5 bits) and count m (23 bits) stand for m * 2**e; from 2**23 on
 only every 2**e-th example number counts, which keeps the share right to a few parts in ten thousand on
 any feed that does not repeat with an even period.
+
+While a checkpoint is written in the background, a learner leaves each row as it was in an undo log before
+it changes it for the first time: a flat uint64[4 * (1 + room)] whose row 0 is (limit, rows in use, -, -).
 """
 
 from __future__ import annotations
@@ -24,11 +27,14 @@ from stream.kernel import small
 __all__ = [
     "CELLS",
     "FIRST",
+    "LEAST",
     "NAMED",
+    "NO_UNDO",
     "SECOND",
     "TOUCH",
     "TOUCH_SHIFT",
     "example_of",
+    "leave",
     "row_of",
     "tally_of",
     "touched",
@@ -38,14 +44,18 @@ CELLS = 4
 FIRST, SECOND, TOUCH = np.uint64(1), np.uint64(2), np.uint64(3)
 TOUCH_SHIFT = np.uint64(29)
 NAMED = np.uint64(1 << 28)
+LEAST = np.uint64(1 << 29)
+"""Touch word of example 1, the least of a row that is not all zeros."""
 TALLY = np.uint64((1 << 28) - 1)
 EXPONENT_SHIFT = np.uint64(23)
 FULL = np.uint64(1 << 23)
 ONE = np.uint64(1)
+NO_UNDO = np.zeros(CELLS, np.uint64)
+"""An undo log that asks for nothing."""
 
 
 @small
-def row_of(slot: int | np.int64) -> np.uint64:
+def row_of(slot: int | np.int64 | np.uint64) -> np.uint64:
     """Index of cell 0 of the row in `slot` (>= 0)."""
     return np.uint64(slot) << np.uint64(2)
 
@@ -60,6 +70,17 @@ def touched(word: np.uint64, example: np.uint64) -> np.uint64:
         if tally & (FULL - ONE) == np.uint64(0):  # m ran over into the exponent: e grew by one, m is 2**22
             tally |= FULL >> ONE
     return (example << TOUCH_SHIFT) | (word & NAMED) | tally
+
+
+@small
+def leave(
+    undo: npt.NDArray[np.uint64], used: np.uint64, cells: npt.NDArray[np.uint64], row: np.uint64
+) -> np.uint64:
+    """Copies the row that begins at cell `row` to the end of an undo log; returns how many rows are there."""
+    used += ONE
+    for cell in range(np.uint64(CELLS)):
+        undo[row_of(used) + cell] = cells[row + cell]
+    return used
 
 
 def example_of(words: npt.NDArray[np.uint64]) -> npt.NDArray[np.uint64]:

@@ -49,6 +49,21 @@ class Sink:
         self._descriptor = descriptor
         self.sum = FileSum()
 
+    def place(self, at: int, data: Buffer) -> None:
+        """Writes all of `data` (contiguous) from byte `at` on; `sum_placed` must follow."""
+        view = memoryview(data)
+        if view.nbytes:
+            view = view.cast("B")
+            while view:
+                written = os.pwrite(self._descriptor, view, at)
+                at, view = at + written, view[written:]
+
+    def sum_placed(self) -> None:
+        """Reads what was placed behind all that was written, and sums it."""
+        buffer = memoryview(bytearray(PIECE))
+        while got := os.preadv(self._descriptor, [buffer], self.sum.size):
+            self.sum.update(buffer[:got])
+
     def write(self, data: Buffer) -> None:
         """Writes all of `data` (contiguous), piece by piece, without a copy."""
         view = memoryview(data)
@@ -123,7 +138,7 @@ def write_folder(
 
 
 def _write_new(path: Path, content: Content) -> FileSum:
-    descriptor = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o600)
+    descriptor = os.open(path, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o600)
     try:
         sink = Sink(descriptor)
         if callable(content):

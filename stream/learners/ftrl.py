@@ -19,7 +19,7 @@ import math
 import numpy as np
 import numpy.typing as npt
 
-from stream.coordinate import FIRST, NAMED, SECOND, TOUCH, row_of, touched
+from stream.coordinate import FIRST, LEAST, NAMED, SECOND, TOUCH, leave, row_of, touched
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch, small
 from stream.learners.layout import (
@@ -87,6 +87,7 @@ def ftrl_learn(
     scratch: npt.NDArray[np.float64],
     margins: npt.NDArray[np.float64],
     named: npt.NDArray[np.int64],
+    undo: npt.NDArray[np.uint64],
 ) -> int:
     """Predicts, then updates, examples first to last - 1, one after the other.
 
@@ -94,9 +95,10 @@ def ftrl_learn(
     CSR arrays as in Batch; `sums`, `counts`, `options` as in `stream.learners.layout`; `scratch`
     float64[SCRATCH, longest row]; `margins` float64[m] is filled, each before its update;
     `named` int64[nnz] receives the entries whose weight became non-zero and has no name in the
-    ledger. Returns how many.
+    ledger. Returns how many. Rows that `undo` (see `stream.coordinate`) asks for are left there first.
     """
     events = 0
+    limit, used = undo[0], undo[1]
     beta, per_alpha, lambda_2 = options[DAMPING], 1.0 / options[RATE], options[L2]
     zs, ns, roots, ws, terms = scratch[0], scratch[1], scratch[2], scratch[3], scratch[4]
     top = np.uint64(max(row_ptr[last] - 1, 0))
@@ -141,9 +143,12 @@ def ftrl_learn(
                 counts[REFUSED] += 1
                 continue
             row = row_of(slots[begin + i])
+            word = cells[row + TOUCH]
+            if word - LEAST < limit:
+                used = leave(undo, used, cells, row)
             floats[row + FIRST] = zs[i]
             floats[row + SECOND] = ns[i]
-            word = touched(cells[row + TOUCH], number)
+            word = touched(word, number)
             if abs(zs[i]) > strength and word & NAMED == np.uint64(0):
                 word |= NAMED
                 named[events] = begin + i
@@ -153,6 +158,7 @@ def ftrl_learn(
         grown = n + gradient * gradient
         sums[INTERCEPT_FIRST] += gradient - (math.sqrt(grown) - math.sqrt(n)) * per_alpha * intercept
         sums[INTERCEPT_SECOND] = grown
+    undo[1] = used
     return events
 
 

@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
+from stream.coordinate import NO_UNDO
 from stream.learners import ftrl, truncated_gradient
 from stream.learners.layout import LEARNED, REFUSED, SCRATCH, STRENGTH
 from stream.settings.models import Learner as LearnerSettings
@@ -87,12 +88,13 @@ class Learner:
         slots: npt.NDArray[np.int64],
         first: int,
         last: int,
+        undo: npt.NDArray[np.uint64] = NO_UNDO,
     ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.int64]]:
         """Scores examples first to last - 1 of the batch in order, each before it is learned from.
 
         Returns (margins float64[m], of which first to last - 1 are new; entries int64[k] whose weight
         became non-zero and has no name yet). Both arrays are reused by the next call. Unlabelled
-        examples are scored and change nothing.
+        examples are scored and change nothing. `undo`: an undo log with room for a row for each entry.
         """
         self._make_room(batch)
         events = self._method.learn(
@@ -111,6 +113,7 @@ class Learner:
             self._scratch,
             self._margins,
             self._named,
+            undo,
         )
         return self._margins, self._named[:events]
 

@@ -16,7 +16,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from stream.coordinate import FIRST, NAMED, SECOND, TOUCH, row_of, touched
+from stream.coordinate import FIRST, LEAST, NAMED, SECOND, TOUCH, leave, row_of, touched
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch, small
 from stream.learners.layout import (
@@ -74,9 +74,11 @@ def truncated_gradient_learn(
     scratch: npt.NDArray[np.float64],
     margins: npt.NDArray[np.float64],
     named: npt.NDArray[np.int64],
+    undo: npt.NDArray[np.uint64],
 ) -> int:
     """Predicts, then updates, examples first to last - 1; arguments and result as of `ftrl_learn`."""
     events = 0
+    limit, used = undo[0], undo[1]
     eta, row_weights = options[RATE], scratch[0]
     top = np.uint64(max(row_ptr[last] - 1, 0))
     for example in range(first, last):
@@ -111,9 +113,12 @@ def truncated_gradient_learn(
             if not abs(w) < WEIGHT_LIMIT:
                 counts[REFUSED] += 1
                 continue
+            word = cells[row + TOUCH]
+            if word - LEAST < limit:
+                used = leave(undo, used, cells, row)
             floats[row + FIRST] = w
             floats[row + SECOND] = strength
-            word = touched(cells[row + TOUCH], number)
+            word = touched(word, number)
             if abs(w) > drawn and word & NAMED == np.uint64(0):
                 word |= NAMED
                 named[events] = e
@@ -124,6 +129,7 @@ def truncated_gradient_learn(
             sums[INTERCEPT_FIRST] = moved
         else:
             counts[REFUSED] += 1
+    undo[1] = used
     return events
 
 

@@ -6,7 +6,8 @@ cut so that windows and checkpoints fall between them.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from dataclasses import replace
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -14,13 +15,14 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from stream.background import View
 from stream.decoding import Decoder
 from stream.errors import BadSettings
 from stream.features import Batcher
 from stream.fingerprint import differences, fingerprint_difference
-from stream.message import Examples, Reject, Source
+from stream.message import Block, Examples, Reject, Source
 from stream.metrics import Progress, WindowRow
-from stream.rejects import RejectLog
+from stream.rejects import RejectLog, RejectSink
 from stream.runs.model import Model
 from stream.settings import Settings
 from stream.snapshots import About
@@ -30,6 +32,8 @@ __all__ = ["LearningRun"]
 BLOCK = 1024
 """Messages in a block at most: enough to spread the cost of a call, few enough to stay in the cache."""
 
+OnScored = Callable[[Block, npt.NDArray[np.int64], npt.NDArray[np.float64]], None]
+
 
 class LearningRun:
     """Everything that a checkpoint holds, and the step that moves it on by one block.
@@ -38,10 +42,21 @@ class LearningRun:
     """
 
     def __init__(
-        self, settings: Settings, rejects_folder: Path, saved: Mapping[str, Any] | None = None
+        self,
+        settings: Settings,
+        rejects_folder: Path,
+        saved: Mapping[str, Any] | None = None,
+        *,
+        reject_sink: RejectSink | None = None,
+        on_scored: OnScored | None = None,
     ) -> None:
-        """`saved`: what `about()` gave; then `restore` must follow with the arrays."""
+        """`saved`: what `about()` gave; then `restore` must follow with the arrays.
+
+        `reject_sink`: where rejects are kept instead of files in `rejects_folder`; `on_scored` is given each
+        block with the rows that have a margin (int64[m]) and those margins, from before their update.
+        """
         self._settings = settings
+        self._on_scored = on_scored
         self._decoder = Decoder(settings)
         self._batcher = Batcher(settings)
         self._slice_path = _slice_path(settings)
@@ -53,7 +68,14 @@ class LearningRun:
             self._check_pinned(saved)
             self.messages, self.tokens, self.epoch = saved["messages"], saved["tokens"], saved["epoch"]
             self.position = saved["position"]
-        self.rejects = RejectLog(rejects_folder, settings.message, saved["rejects"] if saved else None)
+        self.rejects = RejectLog(
+            rejects_folder,
+            settings.message,
+            saved["rejects"] if saved else None,
+            action=settings.rejects.action,
+            window=settings.metrics.window,
+            sink=reject_sink,
+        )
 
     def step(self, source: Source, limit: int) -> WindowRow | bool:
         """Reads and learns one block of at most `limit` messages.
@@ -71,6 +93,8 @@ class LearningRun:
         if first_epoch:
             self.rejects.add(block, rejects + over, self.messages)
         margins = self.model.predict_then_update(batch)
+        if self._on_scored is not None:
+            self._on_scored(block, _without(examples.rows, over), margins)
         self.messages += len(block)
         self.tokens += len(batch.addresses)
         self.position = source.position()
@@ -90,8 +114,13 @@ class LearningRun:
 
     def state(self) -> dict[str, npt.NDArray[Any]]:
         """Arrays of a checkpoint, by name."""
-        metrics = {f"metrics.{name}": array for name, array in self.progress.state().items()}
-        return {**self.model.state(), **metrics}
+        return {**self.model.state(), **self._metrics_state()}
+
+    def begin_saving(self) -> View:
+        """`state` as it is now, for another thread to write meanwhile: see `Model.begin_saving`."""
+        metrics = self._metrics_state()
+        view = self.model.begin_saving()
+        return replace(view, rest=lambda: {**view.rest(), **metrics})
 
     def restore(self, arrays: Mapping[str, npt.NDArray[Any]]) -> None:
         """Goes on from what `state` gave."""
@@ -121,6 +150,9 @@ class LearningRun:
             name: metrics[name] for name in ("calibration_ratio", "expected_calibration_error", "base_rate")
         }
         return About(self._settings.model_dump(mode="json"), metrics, calibration, version("bedload"))
+
+    def _metrics_state(self) -> dict[str, npt.NDArray[Any]]:
+        return {f"metrics.{name}": array for name, array in self.progress.state().items()}
 
     def _slice_codes(self, examples: Examples, over: list[Reject]) -> npt.NDArray[np.int64] | None:
         if self._slice_path is None:
@@ -153,6 +185,10 @@ def _pinned(settings: Settings) -> dict[str, Any]:
         "state": {name: state[name] for name in bounds},
         "metrics": settings.metrics.model_dump(mode="json"),
     }
+
+
+def _without(rows: npt.NDArray[np.int64], over: list[Reject]) -> npt.NDArray[np.int64]:
+    return rows[~np.isin(rows, [reject.row for reject in over])] if over else rows
 
 
 def _slice_path(settings: Settings) -> str | None:

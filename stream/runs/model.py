@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
 
+from stream.arrays_file import Rows
+from stream.background import View
 from stream.batch import Batch
 from stream.coordinate import example_of, tally_of
 from stream.learners import Learner
@@ -23,6 +25,11 @@ KEPT_WHEN_CROWDED = 7 / 8
 """Share of `max_live` that is left, where possible, when room must be made."""
 
 Arrays = dict[str, npt.NDArray[Any]]
+T = TypeVar("T")
+
+
+def _part(name: str, values: Mapping[str, T]) -> dict[str, T]:
+    return {f"{name}.{key}": value for key, value in values.items()}
 
 
 class Model:
@@ -91,9 +98,10 @@ class Model:
             slots, stopped = self._table.admit(batch, first, min(len(batch), first + self._until_sweep()))
             if stopped == first:
                 slots, stopped = self._admit_crowded(batch, first)
-            margins, named = self._learner.predict_then_update(
-                self._table.cells, batch, slots, first, stopped
-            )
+            with self._table.undo(int(batch.row_ptr[stopped] - batch.row_ptr[first])) as undo:
+                margins, named = self._learner.predict_then_update(
+                    self._table.cells, batch, slots, first, stopped, undo
+                )
             self._names.record(batch, named)
             if self.learned > before:
                 self._sweep_if_due()
@@ -131,14 +139,27 @@ class Model:
 
     def state(self) -> Arrays:
         """Everything needed to go on, by name; equal for equal streams."""
-        parts: dict[str, Mapping[str, npt.NDArray[Any]]] = {
-            "table": self._table.state(),
-            "learner": self._learner.state(),
-            "names": self._names.state(),
-        }
-        arrays = {f"{part}.{name}": array for part, found in parts.items() for name, array in found.items()}
-        arrays["model.counts"] = np.array([self._room_sought_from, self._table.refused], np.int64)
-        return arrays
+        return _part("table", self._table.state()) | self._small_state() | _part("names", self._names.state())
+
+    def begin_saving(self) -> View:
+        """The state as it is now, for another thread to write while this one goes on learning.
+
+        Its `close` must be called before the next one. Learning waits for a copy of eight bytes a coordinate,
+        the admission filter and a table of pointers to the names.
+        """
+        small = _part("table", self._table.admission()) | self._small_state()
+        names = self._names.copy()
+        saving = self._table.begin_saving(self.learned)
+        rows = Rows(
+            saving.length,
+            _part("table", saving.dtypes),
+            (_part("table", piece) for piece in saving.pieces()),
+        )
+        return View(rows, lambda: small | _part("names", names.state()), saving.close)
+
+    def _small_state(self) -> Arrays:
+        counts = np.array([self._room_sought_from, self._table.refused], np.int64)
+        return {**_part("learner", self._learner.state()), "model.counts": counts}
 
     def restore(self, arrays: Mapping[str, npt.NDArray[Any]]) -> None:
         """Goes on from what `state` gave; meant for a fresh object."""

@@ -36,6 +36,12 @@ class NameLedger:
         for entry in entries.tolist():
             self._names.setdefault(int(batch.addresses[entry]), batch.text(entry))
 
+    def copy(self) -> NameLedger:
+        """The ledger as it is now, for another thread; the names themselves are shared."""
+        other = NameLedger()
+        other._names = self._names.copy()
+        return other
+
     def addresses(self) -> npt.NDArray[np.uint64]:
         """All addresses with a name, ascending."""
         found = np.fromiter(self._names, np.uint64, len(self._names))

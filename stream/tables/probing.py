@@ -12,7 +12,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from stream.coordinate import CELLS, row_of
+from stream.coordinate import CELLS, FIRST, LEAST, SECOND, TOUCH, row_of
 from stream.kernel import kernel, prefetch, small
 
 __all__ = ["DEAD", "admit", "find", "mix", "place", "respread", "unmix"]
@@ -254,3 +254,50 @@ def addresses_at(cells: Cells, secret: Secret, slots: npt.NDArray[np.int64], add
     """addresses[i] = address of the row in slots[i]."""
     for i in range(len(slots)):
         addresses[i] = unmix(cells[row_of(slots[i])] >> ONE, secret)
+
+
+@kernel
+def keys_in_use(cells: Cells, used: int, keys: npt.NDArray[np.uint64]) -> None:
+    """keys[i] = key of the i-th row in use, in slot order; `keys` is uint64[live + 1]: the last is lost."""
+    i = np.uint64(0)
+    for slot in range(used):  # no branch: this is all that learning waits for when a checkpoint begins
+        key = cells[row_of(slot)]
+        keys[i] = key
+        i += np.uint64(key != EMPTY)
+
+
+@kernel
+def unmix_keys(keys: npt.NDArray[np.uint64], secret: Secret) -> None:
+    """Keys become their addresses, in place."""
+    for i in range(len(keys)):
+        keys[i] = unmix(keys[i] >> ONE, secret)
+
+
+@kernel
+def gather(
+    cells: Cells,
+    capacity: np.uint64,
+    secret: Secret,
+    addresses: Addresses,
+    limit: np.uint64,
+    state: npt.NDArray[np.uint64],
+) -> None:
+    """state[:, i] = cells 1 to 3 of the row of addresses[i], uint64[3, k], as they were before `limit`.
+
+    A row that is missing, or was touched at `limit` or later, or never, comes out as zeros. While a learner
+    is at work on the same rows, what is read of one that it changes may be torn.
+    """
+    last = len(addresses) - 1
+    for i in range(len(addresses)):
+        prefetch_home(cells, capacity, addresses[min(i + AHEAD, last)], secret)
+        slot = seek(cells, capacity, (mix(addresses[i], secret) << ONE) | ONE)
+        for cell in range(3):
+            state[cell, i] = EMPTY
+        if slot < 0:
+            continue
+        row = row_of(slot)
+        word = cells[row + TOUCH]
+        if word - LEAST < limit:
+            state[0, i] = cells[row + FIRST]
+            state[1, i] = cells[row + SECOND]
+            state[2, i] = word

@@ -3,16 +3,19 @@
 from __future__ import annotations
 
 import os
+import threading
 from collections.abc import Iterator
+from contextlib import AbstractContextManager, nullcontext
 
 import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
-from stream.coordinate import CELLS, FIRST, NAMED, SECOND, TOUCH
+from stream.coordinate import CELLS, FIRST, NAMED, NO_UNDO, SECOND, TOUCH
 from stream.errors import CannotCreate
 from stream.settings.models import State
 from stream.tables import probing
+from stream.tables.saving import Saving
 
 __all__ = ["Table"]
 
@@ -32,6 +35,10 @@ def _limit(capacity: int) -> int:
     return capacity * 3 // 4 if capacity <= SMALL else capacity * 23 // 25
 
 
+def _next_capacity(capacity: int) -> int:
+    return 2 * capacity if capacity < SMALL else capacity + capacity // 32
+
+
 class Table:
     """Open addressing over 64-bit addresses; only live coordinates take memory.
 
@@ -48,6 +55,8 @@ class Table:
         self.cells = np.zeros(CELLS * (capacity + SPARE), np.uint64)
         self.live = 0
         self.refused = 0
+        self._saving: Saving | None = None
+        self._rows_move = threading.Lock()  # held while they do, and while the writer of a checkpoint looks
 
     @property
     def floats(self) -> npt.NDArray[np.float64]:
@@ -87,7 +96,11 @@ class Table:
 
     def forget(self, doomed: npt.NDArray[np.int64]) -> None:
         """Takes the rows at the given slots out."""
-        if len(doomed):
+        if not len(doomed):
+            return
+        if self._saving is not None:
+            self._saving.keep(self.cells.reshape(-1, CELLS)[doomed])
+        with self._rows_move:
             self.cells[CELLS * doomed] = probing.DEAD
             self.live -= probing.respread(self.cells, self.slots, np.uint64(self._capacity))
 
@@ -137,28 +150,54 @@ class Table:
         """Everything needed to go on, sorted by address; free of slots, capacity and secret."""
         addresses, slots = self.occupied()
         slots *= CELLS
-        arrays: dict[str, npt.NDArray[np.generic]] = {
+        return {
             "addresses": addresses,
             "first": self.floats[slots + int(FIRST)],
             "second": self.floats[slots + int(SECOND)],
             "touch": self.cells[slots + int(TOUCH)] & ~NAMED,
+            **self.admission(),
         }
-        if self._settings.admit_after > 1:
-            arrays["admission"] = self._filter.copy()
-        return arrays
+
+    def begin_saving(self, learned: int) -> Saving:
+        """The rows after `learned` examples, which is now, for another thread to read while learning goes on.
+
+        Until its `close`, whoever changes rows must take the undo log from `undo`.
+        """
+        assert self._saving is None, "one checkpoint at a time"
+        keys = np.empty(self.live + 1, np.uint64)
+        probing.keys_in_use(self.cells, self.slots, keys)
+        self._saving = Saving(keys[:-1], self._secret, learned, self._gather, self._end_saving)
+        return self._saving
+
+    def undo(self, room: int) -> AbstractContextManager[npt.NDArray[np.uint64]]:
+        """The undo log for a learner that is about to change `room` rows at most."""
+        return nullcontext(NO_UNDO) if self._saving is None else self._saving.undo(room)
+
+    def admission(self) -> dict[str, npt.NDArray[np.generic]]:
+        """The part of the state that is not rows."""
+        return {"admission": self._filter.copy()} if self._settings.admit_after > 1 else {}
 
     def load(self, arrays: dict[str, npt.NDArray[np.generic]]) -> None:
         """Replaces the contents by what `state` gave."""
         addresses = arrays["addresses"].astype(np.uint64, copy=False)
         self.live = 0
         while _limit(self._capacity) < len(addresses):
-            self._capacity = self._next_capacity()
+            self._capacity = _next_capacity(self._capacity)
         self.cells = np.zeros(CELLS * (self._capacity + SPARE), np.uint64)
         state = np.stack([arrays[name].view(np.uint64) for name in ("first", "second", "touch")], axis=1)
         probing.place(self.cells, np.uint64(self._capacity), self._secret, addresses, state)
         self.live = len(addresses)
         if self._settings.admit_after > 1:
             self._filter[:] = arrays["admission"]
+
+    def _gather(self, addresses: npt.NDArray[np.uint64], limit: np.uint64) -> npt.NDArray[np.uint64]:
+        state = np.empty((3, len(addresses)), np.uint64)
+        with self._rows_move:
+            probing.gather(self.cells, np.uint64(self._capacity), self._secret, addresses, limit, state)
+        return state
+
+    def _end_saving(self) -> None:
+        self._saving = None
 
     def _slots_for(self, batch: Batch) -> npt.NDArray[np.int64]:
         if len(self._slots) < len(batch.addresses):
@@ -193,19 +232,18 @@ class Table:
         self.refused += int(counts[1])
         return slots, stopped
 
-    def _next_capacity(self) -> int:
-        return 2 * self._capacity if self._capacity < SMALL else self._capacity + self._capacity // 32
-
     def _grow(self, needed: int) -> None:
         """Makes room for `needed` more rows: memory is stretched, never doubled, and rows spread in place."""
-        before = self.slots
-        while _limit(self._capacity) - self.live < needed:
-            self._capacity = self._next_capacity()
-        if self._capacity >= 1 << 32:
+        capacity = self._capacity
+        while _limit(capacity) - self.live < needed:
+            capacity = _next_capacity(capacity)
+        if capacity >= 1 << 32:
             raise CannotCreate(
                 f"the table holds {self.live:,} coordinates and cannot grow beyond 2**32 slots; "
                 "set state.max_live or state.idle_after, or a stronger learner.l1_per_example"
             )
-        if self._capacity + SPARE > before:
-            self.cells.resize(CELLS * (self._capacity + SPARE), refcheck=False)
-            probing.respread(self.cells, before, np.uint64(self._capacity))
+        if capacity > self._capacity:
+            with self._rows_move:
+                before, self._capacity = self.slots, capacity
+                self.cells.resize(CELLS * (capacity + SPARE), refcheck=False)
+                probing.respread(self.cells, before, np.uint64(capacity))
