@@ -23,6 +23,8 @@ from stream.settings import Settings
 from stream.snapshots import read_snapshot
 from stream.sources import LogSource
 
+pytestmark = pytest.mark.slow
+
 CHECKS = Path(__file__).parent.parent / "docs" / "checks.md"
 MESSAGES = 100_000
 RATE = 0.2

@@ -18,6 +18,8 @@ from stream.runs.replay import replay
 from stream.settings import Settings
 from stream.snapshots import read_snapshot
 
+pytestmark = pytest.mark.slow
+
 CHECKS = Path(__file__).parent.parent / "docs" / "checks.md"
 FLIGHTS = 327_346
 FIRST = FLIGHTS * 7 // 10  # 229,142; the 98,204 flights after them are the last 30 %
