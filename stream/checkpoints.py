@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Collection, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -14,6 +14,7 @@ from stream.arrays_file import Arrays, Rows, read_array_folder, write_array_fold
 from stream.durable import make_folder, move_folder, os_errors, remove_folder
 from stream.errors import BadData, BadSettings, InputMissing
 from stream.manifest import verify_folder
+from stream.retention import Retention
 
 __all__ = ["Checkpoint", "CheckpointEntry", "Checkpoints"]
 
@@ -44,19 +45,23 @@ class CheckpointEntry:
 
 
 class Checkpoints:
-    """The checkpoints of one state folder, of which the newest `keep` (>= 1) stay.
+    """The checkpoints of one state folder, of which `keep` stay: the newest (>= 1), and some by time.
 
-    Only for who holds the state folder. Equal content gives equal bytes under an equal name.
+    Those whose names `pinned` gives stay too. Only for who holds the state folder. Equal content gives equal
+    bytes under an equal name.
     """
 
-    def __init__(self, folder: Path, keep: int) -> None:
+    def __init__(
+        self, folder: Path, keep: int | Retention, pinned: Callable[[], Collection[str]] = tuple
+    ) -> None:
         self.folder = folder
-        self._keep = keep
+        self._keep = keep if isinstance(keep, Retention) else Retention(keep)
+        self._pinned = pinned
 
     def write(
         self, messages: int, arrays: Arrays, about: Mapping[str, Any], rows: Rows | None = None
     ) -> Path:
-        """Writes the state after `messages` messages, then removes those beyond the newest `keep`.
+        """Writes the state after `messages` messages, then removes those that do not stay.
 
         `about`: JSON types only, without clock, host or pid. Arrays are not copied; `rows`: further ones
         that are made meanwhile. Raises
@@ -70,8 +75,11 @@ class Checkpoints:
             "about": dict(about),
         }
         path = write_array_folder(self.folder, f"{messages:015d}", arrays, manifest, rows=rows)
-        for old in self._paths()[self._keep :]:
-            if old != path:
+        paths = self._paths()
+        staying = self._keep.staying(paths)
+        pinned = self._pinned()
+        for old in paths:
+            if old != path and old not in staying and old.name not in pinned:
                 remove_folder(old)
         return path
 

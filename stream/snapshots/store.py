@@ -19,6 +19,7 @@ from typing import Any
 from stream.durable import make_folder, move_folder, os_errors, remove_folder, write_file
 from stream.errors import BadData, InputMissing
 from stream.manifest import read_manifest
+from stream.retention import Retention
 from stream.snapshots.layout import About, Snapshot, check_format, read_snapshot, write_snapshot
 from stream.weights import Weights
 
@@ -45,15 +46,16 @@ class SnapshotEntry:
 
 
 class Snapshots:
-    """The snapshots in `folder`; `keep` (>= 1) of those neither pinned nor in use stay when pruned.
+    """The snapshots in `folder`; of those neither pinned nor in use `keep` stay when pruned: the newest
+    (>= 1), and some by time.
 
     Readers need no lock: what has a name is whole and never changes. Writing and pruning are for who
     holds the state folder; pinning and choosing may happen beside it.
     """
 
-    def __init__(self, folder: Path, keep: int) -> None:
+    def __init__(self, folder: Path, keep: int | Retention) -> None:
         self.folder = folder
-        self._keep = keep
+        self._keep = keep if isinstance(keep, Retention) else Retention(keep)
         self._pins = folder / "pinned"
         self._in_use = folder / "in-use"
 
@@ -172,16 +174,19 @@ class Snapshots:
         return name
 
     def prune(self) -> tuple[str, ...]:
-        """Removes what is older than the newest `keep`, but never a pinned one or the one in use.
+        """Removes what is older than the newest to keep and does not stay by time, but never a pinned one or
+        the one in use.
 
         Those that cannot be read do not count as kept. Returns the names removed.
         """
         with self._still():
             loose = [entry for entry in self.list() if not entry.pinned and not entry.in_use]
             whole = [entry for entry in loose if not entry.trouble]
-            if len(whole) < self._keep:
+            if len(whole) < self._keep.newest:
                 return ()
-            removed = loose[loose.index(whole[self._keep - 1]) + 1 :]
+            staying = self._keep.staying([entry.path for entry in whole])
+            older = loose[loose.index(whole[self._keep.newest - 1]) + 1 :]
+            removed = [entry for entry in older if entry.path not in staying]
             for entry in removed:
                 remove_folder(entry.path)
         return tuple(entry.name for entry in removed)
