@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any, Protocol
 
@@ -34,7 +34,8 @@ class Block:
 
     `starts`, `ends`: int64[m], byte range of each value in `buffer` (line ends excluded);
     `offsets`: int64[m], where each message begins in its file. `buffer` holds the m values in
-    order, one per line, so that buffer[starts[0]:ends[-1]] is JSON Lines.
+    order, one per line, so that buffer[starts[0]:ends[-1]] is JSON Lines. `originals`: gives the message
+    of a row as it came, where the buffer cannot: with key and time, and the value's own line ends.
     """
 
     topic: str
@@ -43,6 +44,7 @@ class Block:
     starts: Int64s
     ends: Int64s
     offsets: Int64s
+    originals: Callable[[int], Message] | None = None
 
     def __len__(self) -> int:
         return len(self.starts)
@@ -52,7 +54,9 @@ class Block:
         return self.buffer[self.starts[row] : self.ends[row]]
 
     def message(self, row: int) -> Message:
-        """Message `row` on its own."""
+        """Message `row` on its own, as it came."""
+        if self.originals is not None:
+            return self.originals(row)
         return Message(self.topic, self.partition, int(self.offsets[row]), None, None, self.value(row))
 
 
