@@ -1,6 +1,5 @@
 """A replay, however it was stopped, cut or resumed, ends with the bytes of one that was let run."""
 
-import gzip
 import json
 import os
 import random
@@ -12,101 +11,38 @@ from itertools import pairwise
 from pathlib import Path
 
 import pytest
-import zstandard
 
-from simulator import CourierFeed, write_log
-from stream.arrays_file import ARRAYS, read_array_folder
+from stream.arrays_file import ARRAYS
 from stream.checkpoints import Checkpoints
 from stream.cli import learning as commands
 from stream.cli.main import main
-from stream.errors import BadData, BadSettings
-from stream.manifest import MANIFEST
+from stream.errors import BadSettings
 from stream.runs import learning
 from stream.runs.replay import replay
-from stream.settings import Settings
 from stream.snapshots import Snapshots
 from tests.replay_child import Children
-
-MESSAGES = 20_000
-EVERY = 2_000
-LONG = os.environ.get("LONG_TESTS") == "1"
-"""50 kills instead of 12."""
-
-BAD = (
-    b'{"note": "left wi',
-    b"[1, 2]",
-    b'{"note": 7, "redelivered": true}',
-    b'{"note": "x\xff", "redelivered": true}',
-    b'{"weight_kg": NaN, "redelivered": true}',
-    b'{"note": "gate code", "redelivered": "yes"}',
-    b'{"note": "' + b" ".join(b"w%d" % i for i in range(80)) + b'", "redelivered": true}',
-    b'{"note": "' + b"long " * 2_000 + b'", "redelivered": false}',
+from tests.replays import (
+    BAD,
+    BOUNDED,
+    EVERY,
+    LONG,
+    MESSAGES,
+    VARIANTS,
+    config_for,
+    courier_lines,
+    last_checkpoint,
+    model_of,
+    newest,
+    rejects,
+    settings_for,
+    tree,
+    write,
 )
-UNLABELLED = b'{"note": "parcel not known yet, unheardof", "route": "R99"}'
-
-BASIC = {
-    "feed": {"max_line_bytes": 4_096},
-    "message": {
-        "id": "id",
-        "label": "redelivered",
-        "max_tokens": 64,
-        "max_reject_share": 1.0,
-    },
-    "fields": [
-        {"path": "note", "kind": "words"},
-        {"path": "route", "kind": "category"},
-        {"path": "stop", "kind": "category"},
-        {"path": "hour", "kind": "category"},
-        {"path": "sender", "kind": "category"},
-        {"path": "weight_kg", "kind": "quantity", "bins": [1, 5, 10]},
-    ],
-    "crosses": [{"paths": ["route", "hour"]}],
-    "learner": {"learning_rate": 0.2, "l1_per_example": 5e-4},
-    "metrics": {"window": 1_500},
-    "state": {"checkpoint_every": EVERY},
-}
-BOUNDED = {
-    "learner": {"learning_rate": 0.2, "l1_per_example": 5e-5, "l1": 0.1, "l2": 0.5, "horizon": 9_000},
-    "metrics": {"window": 1_500, "slice_by": "stop"},
-    "state": {
-        "checkpoint_every": EVERY,
-        "admit_after": 2,
-        "admission_bytes": 1 << 12,
-        "admission_halved_every": 2_500,
-        "idle_after": 3_000,
-        "max_live": 1_000,
-    },
-}
-GRAVITY = {"learner": {"method": "truncated-gradient", "learning_rate": 0.05, "l1_per_example": 5e-4}}
-VARIANTS = {"plain": ({}, 1), "bounded": (BOUNDED, 1), "gravity": (GRAVITY, 1), "two epochs": (BOUNDED, 2)}
-
-
-def settings_for(paths, variant=None, **sections):
-    data = {**BASIC, **(variant or {})}
-    for section, changes in sections.items():
-        data[section] = {**data.get(section, {}), **changes}
-    data["feed"] = {**data["feed"], "paths": [str(path) for path in paths]}
-    return Settings.model_validate(data)
 
 
 @pytest.fixture(scope="module")
 def lines(tmp_path_factory):
-    """A courier feed with lines among it that are bad, unlabelled or empty."""
-    path = tmp_path_factory.mktemp("feed") / "log.jsonl"
-    write_log(CourierFeed(seed=11, messages=MESSAGES), path)
-    found = path.read_bytes().splitlines()
-    draw = random.Random(5)
-    for _ in range(60):
-        found.insert(draw.randrange(len(found)), draw.choice(BAD))
-        found.insert(draw.randrange(len(found)), UNLABELLED)
-    return found
-
-
-def write(path, lines):
-    data = b"".join(line + b"\n" for line in lines)
-    packed = {".gz": gzip.compress, ".zst": zstandard.compress}.get(path.suffix, bytes)
-    path.write_bytes(packed(data))
-    return path
+    return courier_lines(tmp_path_factory.mktemp("feed") / "log.jsonl")
 
 
 @pytest.fixture(scope="module")
@@ -148,31 +84,6 @@ def children():
     started = Children()
     yield started
     started.close()
-
-
-def tree(folder):
-    """Every file of a state folder but the lock, by name."""
-    return {
-        str(path.relative_to(folder)): path.read_bytes()
-        for path in sorted(folder.rglob("*"))
-        if path.is_file() and path.name != "LOCK"
-    }
-
-
-def newest(folder):
-    return max((folder / "checkpoints").glob("[0-9]*"))
-
-
-def last_checkpoint(folder):
-    """Name and bytes of the newest checkpoint."""
-    path = newest(folder)
-    return path.name, (path / MANIFEST).read_bytes(), (path / ARRAYS).read_bytes()
-
-
-def model_of(folder):
-    """The arrays that predictions are made from, as bytes; not the metrics, which count rejects too."""
-    _, arrays = read_array_folder(newest(folder))
-    return {name: array.tobytes() for name, array in arrays.items() if not name.startswith("metrics.")}
 
 
 # Killed
@@ -255,26 +166,6 @@ def test_the_command_killed_twice_resumes_to_the_same_bytes(log, tmp_path):
     assert tree(state) == tree(tmp_path / "whole")
 
 
-def config_for(settings, folder):
-    """A settings file in `folder` with its state beside it."""
-    config = folder / "bedload.toml"
-    config.write_text(toml(settings.model_dump(mode="json", exclude_none=True)))
-    return str(config)
-
-
-def toml(settings):
-    """Sections as inline tables: JSON but for the sign between key and value."""
-
-    def text(value):
-        if isinstance(value, dict):
-            return "{" + ", ".join(f"{key} = {text(inner)}" for key, inner in value.items()) + "}"
-        if isinstance(value, list):
-            return "[" + ", ".join(map(text, value)) + "]"
-        return json.dumps(value)
-
-    return "".join(f"{section} = {text(value)}\n" for section, value in settings.items())
-
-
 def command(*arguments):
     code = "from stream.cli.main import run; run()"
     return subprocess.Popen([sys.executable, "-c", code, *arguments], stdout=subprocess.PIPE)
@@ -354,10 +245,6 @@ def test_too_many_rejects_end_with_65_and_a_whole_checkpoint(lines, tmp_path, ca
     replay(settings.placed_in(tmp_path), tmp_path / "whole")
     assert last_checkpoint(state) == last_checkpoint(tmp_path / "whole")
     assert rejects(state) == rejects(tmp_path / "whole")
-
-
-def rejects(folder):
-    return (folder / "rejects" / "rejects.jsonl").read_bytes()
 
 
 def test_a_newest_checkpoint_that_broke_is_set_aside_and_the_one_before_goes_on(whole, tmp_path):
@@ -558,75 +445,3 @@ def test_a_finished_pass_can_be_followed_by_more(short, tmp_path):
     assert last_checkpoint(tmp_path / "steps") == last_checkpoint(tmp_path / "whole")
     with pytest.raises(BadSettings, match="epoch 3"):
         replay(settings, tmp_path / "steps", resume=True, epochs=2)
-
-
-# Whatever comes
-
-
-def mutated(lines, draw):
-    """A log of up to 120 lines: some cut, joined, doubled, dropped or with other bytes in them."""
-    log = [bytearray(draw.choice(lines)) for _ in range(draw.randrange(120))]
-    for line in log:
-        for _ in range(draw.choice((0, 0, 0, 1, 1, 2, 9))):
-            place = draw.randrange(len(line) + 1)
-            match draw.randrange(7):
-                case 0:
-                    line[place:] = b""
-                case 1:
-                    line[place:place] = draw.choice(SPICE)
-                case 2:
-                    line[place:place] = draw.randbytes(draw.choice((1, 2, 30)))
-                case 3:
-                    line[place : place + draw.randrange(20)] = b""
-                case 4:
-                    line[place:place] = line[: draw.randrange(60)]
-                case 5 if line:
-                    line[min(place, len(line) - 1)] ^= 1 << draw.randrange(8)
-                case _:
-                    line[:] = draw.choice(SPICE)
-    return b"\n".join(bytes(line) for line in log) + draw.choice((b"", b"\n", b"\r\n", b"\n\n  \n"))
-
-
-BYTE_ORDER_MARK = b"\xef\xbb\xbf"
-SPICE = (
-    b"", b"{}", b"null", b"\r", b"\n", BYTE_ORDER_MARK, b"\x00", b"\xff\xfe", b'"', b"}{", b"[[[[",
-    b"\\ud800", b'"note": "\\u001f"', b'"hour": 1e999', b'"weight_kg": -1e308,', b'"redelivered": 2,',
-    b"\xf0\x9f\x93\xa6" * 30, b"\xe6\xbc\xa2" * 70, b"{" * 200, b"9" * 5_000, b'"note": null,',
-    b'"redelivered": null,',
-)  # fmt: skip
-
-
-@pytest.mark.parametrize("seed", range(1_000 if LONG else 60))
-def test_any_log_is_learned_or_refused_and_the_counts_add_up(seed, lines, tmp_path):
-    draw = random.Random(seed)
-    content = mutated(lines, draw)
-    log = tmp_path / "log.jsonl"
-    log.write_bytes(content)
-    share = draw.choice((1.0, 1.0, 0.3))
-    settings = settings_for(
-        [log],
-        draw.choice((None, BOUNDED, GRAVITY)),
-        message={"max_reject_share": share, "rejects_allowed_before": 20},
-    )
-    try:
-        found = replay(settings, tmp_path / "state")
-    except BadData:
-        assert share < 1
-        return
-    written = rejects(tmp_path / "state") if found.summary.rejected else b""
-    records = [json.loads(line) for line in written.splitlines()]
-    summary = found.summary
-    text = content.removeprefix(BYTE_ORDER_MARK)
-    raw = text.split(b"\n")
-    assert summary.messages == sum(1 for line in raw if line.strip(b" \t\r"))
-    assert summary.rejected == len(records) == sum(found.rejects_by_reason.values())
-    assert summary.labelled <= summary.messages - summary.rejected
-    assert found.learned + found.refused_updates >= summary.labelled
-    gone = {record["offset"] - len(content) + len(text) for record in records}
-    starts = [0, *(at + 1 for at, byte in enumerate(text) if byte == ord("\n"))]
-    kept = [line for start, line in zip(starts, raw, strict=True) if start not in gone]
-    log.write_bytes(b"\n" + b"\n".join(kept))
-    without = replay(settings, tmp_path / "without")
-    assert without.summary.rejected == 0
-    assert without.summary.labelled == summary.labelled
-    assert model_of(tmp_path / "without") == model_of(tmp_path / "state")
