@@ -13,6 +13,7 @@ import socket
 import subprocess
 import time
 import uuid
+import weakref
 from collections.abc import Callable, Mapping, Sequence
 from contextlib import suppress
 from pathlib import Path
@@ -27,14 +28,10 @@ from tests.broker.properties import LISTENERS, MECHANISMS, server_properties
 
 __all__ = ["Broker"]
 
+FIRST_PORT, PORTS = 10_000, 10
 START_S = 60
 STOP_S = 20
-TRIES = 3
 JVM = ("-Xmx512m", "-XX:+UseSerialGC", "-XX:TieredStopAtLevel=1")
-
-
-class PortTaken(Exception):
-    """Somebody took a port between the look and the start."""
 
 
 class Broker:
@@ -44,7 +41,8 @@ class Broker:
         """Use `Broker.start`; this makes no process."""
         self.folder = folder
         self.cluster_id = uuid.uuid4().hex[:22]
-        self.ports = free_ports([*LISTENERS, "controller"])
+        self.ports, claim = claim_ports([*LISTENERS, "controller"])
+        weakref.finalize(self, claim.close)
         self.credentials = Credentials.make(folder / "credentials")
         self._process: subprocess.Popen[bytes] | None = None
 
@@ -52,15 +50,9 @@ class Broker:
     def start(cls, folder: Path) -> Self:
         """A broker that answers, with its data, properties and log below `folder`. Raises Unavailable."""
         broker = cls(folder)
-        for _ in range(TRIES):
-            broker._format()
-            try:
-                broker.start_again()
-            except PortTaken:
-                broker.ports = free_ports([*LISTENERS, "controller"])
-            else:
-                return broker
-        raise AssertionError(f"somebody took the broker's ports {TRIES} times")
+        broker._format()
+        broker.start_again()
+        return broker
 
     def __enter__(self) -> Self:
         return self
@@ -100,7 +92,7 @@ class Broker:
             )
         atexit.register(self.kill)
         try:
-            self._wait_until_it_answers()
+            wait_for(self._answers, f"the broker of {self._properties} to answer")
         except BaseException:
             self.kill()
             raise
@@ -165,7 +157,6 @@ class Broker:
         return self.folder / "server.properties"
 
     def _format(self) -> None:
-        shutil.rmtree(self.folder / "data", ignore_errors=True)
         self._properties.write_text(server_properties(self.folder / "data", self.ports, self.credentials))
         command = [java(), *JVM, "-cp", class_path(), "kafka.tools.StorageTool", "format"]
         command += ["--cluster-id", self.cluster_id, "--config", str(self._properties)]
@@ -174,21 +165,16 @@ class Broker:
             command += ["--add-scram", f"{mechanism}={user}"]
         subprocess.run(command, check=True, capture_output=True, timeout=START_S)
 
-    def _wait_until_it_answers(self) -> None:
+    def _answers(self) -> bool:
         """A bare connection first: a client that finds nobody leaves its thread and sockets behind."""
-        wait_for(self._listens, f"the broker to listen, see {self.log},")
-        with self.admin() as admin:
-            wait_for(lambda: admin.describe_cluster()["brokers"], "the broker to join its cluster")
-
-    def _listens(self) -> bool:
         assert self._process is not None
         if self._process.poll() is not None:
             wrote = self.log.read_text(errors="replace")
-            if "Address already in use" in wrote:
-                raise PortTaken(wrote[-2000:])
             raise AssertionError(f"the broker gave up with {self._process.returncode}: {wrote[-2000:]}")
         with suppress(OSError), socket.create_connection(("127.0.0.1", self.ports["clear"]), timeout=1):
-            return True
+            with self.admin() as admin:
+                cluster = admin.describe_cluster()
+            return cluster["cluster_id"] == self.cluster_id and bool(cluster["brokers"])
         return False
 
     def _signal(self, number: signal.Signals) -> None:
@@ -196,12 +182,22 @@ class Broker:
             os.killpg(self.pid, number)
 
 
-def free_ports(names: Sequence[str]) -> dict[str, int]:
-    """From below those that the kernel gives to outgoing connections: while a broker is down, a client that
-    tries again and again could otherwise be given the broker's own port, and connect to itself."""
+def claim_ports(names: Sequence[str]) -> tuple[dict[str, int], socket.socket]:
+    """Ports that no other broker of any test run on this machine is given until the socket is closed.
+
+    They lie below those that the kernel gives to outgoing connections: while a broker is down, a client that
+    tries again and again could otherwise be given the broker's own port, and connect to itself.
+    """
     lowest = int(Path("/proc/sys/net/ipv4/ip_local_port_range").read_text().split()[0])
-    candidates = random.SystemRandom().sample(range(10_000, lowest), 100)
-    return dict(zip(names, filter(is_free, candidates), strict=False))
+    while True:
+        first = random.SystemRandom().randrange(FIRST_PORT, lowest - PORTS, PORTS)
+        ports = dict(zip(names, range(first, first + PORTS), strict=False))
+        claim = socket.socket(socket.AF_UNIX)
+        with suppress(OSError):
+            claim.bind(f"\0bedload-broker-{first}")
+            if all(map(is_free, ports.values())):
+                return ports, claim
+        claim.close()
 
 
 def is_free(port: int) -> bool:
