@@ -14,7 +14,7 @@ from stream.batch import Batch
 from stream.coordinate import example_of, tally_of
 from stream.learners import Learner
 from stream.settings import Settings
-from stream.tables import NameLedger, Table
+from stream.tables import NameLedger, Table, names_state
 from stream.weights import Weights
 
 __all__ = ["Model"]
@@ -139,23 +139,27 @@ class Model:
 
     def state(self) -> Arrays:
         """Everything needed to go on, by name; equal for equal streams."""
-        return _part("table", self._table.state()) | self._small_state() | _part("names", self._names.state())
+        return (
+            _part("table", self._table.state())
+            | self._small_state()
+            | _part("names", names_state(self._names.copied()))
+        )
 
     def begin_saving(self) -> View:
         """The state as it is now, for another thread to write while this one goes on learning.
 
         Its `close` must be called before the next one. Learning waits for a copy of eight bytes a coordinate,
-        the admission filter and a table of pointers to the names.
+        the admission filter and the names.
         """
         small = _part("table", self._table.admission()) | self._small_state()
-        names = self._names.copy()
+        names = self._names.copied()
         saving = self._table.begin_saving(self.learned)
         rows = Rows(
             saving.length,
             _part("table", saving.dtypes),
             (_part("table", piece) for piece in saving.pieces()),
         )
-        return View(rows, lambda: small | _part("names", names.state()), saving.close)
+        return View(rows, lambda: small | _part("names", names_state(names)), saving.close)
 
     def _small_state(self) -> Arrays:
         counts = np.array([self._room_sought_from, self._table.refused], np.int64)
@@ -225,6 +229,6 @@ class Model:
         slots = self._table.slots_of(addresses)
         zero = self._zero_weight_slots()
         gone = (slots < 0) | np.isin(slots, zero)
-        self._names.drop(addresses[gone].tolist())
+        self._names.drop(addresses[gone])
         gone_slots = slots[gone]
         self._table.clear_named(gone_slots[gone_slots >= 0])

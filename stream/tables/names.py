@@ -1,71 +1,106 @@
-"""The ledger of token names: texts of entries whose weight became non-zero in, names by address out."""
+"""The ledger of token names: texts of entries whose weight became non-zero in, names by address out.
+
+The names lie end to end in one block of bytes, so that a checkpoint copies them at once and sorts them in
+compiled code, while learning goes on.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from array import array
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
+from stream.kernel import kernel
 
-__all__ = ["NameLedger"]
+__all__ = ["NameLedger", "names_state"]
+
+Arrays = dict[str, npt.NDArray[Any]]
 
 
 class NameLedger:
     """Names (`field-name 0x1F token`, UTF-8) by address; the first recorded stands until it is dropped."""
 
     def __init__(self) -> None:
-        self._names: dict[int, bytes] = {}
+        self._places: dict[int, int] = {}
+        self._addresses = array("Q")
+        self._offsets = array("q", [0])
+        self._bytes = bytearray()
 
     def __len__(self) -> int:
-        return len(self._names)
+        return len(self._places)
 
     def __getitem__(self, address: int) -> bytes:
         """The name, b"" where none is known."""
-        return self._names.get(address, b"")
+        place = self._places.get(address)
+        return b"" if place is None else bytes(self._bytes[self._offsets[place] : self._offsets[place + 1]])
 
     @property
     def name_bytes(self) -> int:
         """Bytes of the names themselves."""
-        return sum(map(len, self._names.values()))
+        return len(self._bytes)
 
     def record(self, batch: Batch, entries: npt.NDArray[np.int64]) -> None:
         """Takes down the texts of the given entries of a batch."""
-        for entry in entries.tolist():
-            self._names.setdefault(int(batch.addresses[entry]), batch.text(entry))
-
-    def copy(self) -> NameLedger:
-        """The ledger as it is now, for another thread; the names themselves are shared."""
-        other = NameLedger()
-        other._names = self._names.copy()
-        return other
+        for entry, address in zip(entries.tolist(), batch.addresses[entries].tolist(), strict=True):
+            if address not in self._places:
+                self._places[address] = len(self._places)
+                self._addresses.append(address)
+                self._bytes += batch.text(entry)
+                self._offsets.append(len(self._bytes))
 
     def addresses(self) -> npt.NDArray[np.uint64]:
         """All addresses with a name, ascending."""
-        found = np.fromiter(self._names, np.uint64, len(self._names))
-        found.sort()
-        return found
+        return np.sort(np.array(self._addresses, np.uint64))
 
-    def drop(self, addresses: Iterable[int]) -> None:
+    def drop(self, addresses: npt.NDArray[np.uint64]) -> None:
         """Forgets the names of the given addresses."""
-        for address in addresses:
-            del self._names[address]
+        copied = self.copied()
+        kept = np.flatnonzero(~np.isin(copied["addresses"], addresses))
+        self.restore(_chosen(copied, kept))
 
-    def state(self) -> dict[str, npt.NDArray[Any]]:
-        """Addresses ascending, where each name begins (one more than there are), the names end to end."""
-        addresses = self.addresses()
-        names = [self._names[address] for address in addresses.tolist()]
-        offsets = np.zeros(len(names) + 1, np.int64)
-        np.cumsum([len(name) for name in names], out=offsets[1:])
-        return {"addresses": addresses, "offsets": offsets, "bytes": np.frombuffer(b"".join(names), np.uint8)}
+    def copied(self) -> Arrays:
+        """What `names_state` makes the state of, on any thread."""
+        return {
+            "addresses": np.array(self._addresses, np.uint64),
+            "offsets": np.array(self._offsets, np.int64),
+            "bytes": np.frombuffer(bytes(self._bytes), np.uint8),
+        }
 
     def restore(self, state: Mapping[str, npt.NDArray[Any]]) -> None:
-        """Replaces the ledger by what `state` gave."""
-        blob = state["bytes"].tobytes()
-        offsets = state["offsets"].tolist()
-        self._names = {
-            address: blob[offsets[i] : offsets[i + 1]]
-            for i, address in enumerate(state["addresses"].tolist())
-        }
+        """Replaces the ledger by what `names_state` gave."""
+        self._places = {address: place for place, address in enumerate(state["addresses"].tolist())}
+        self._addresses = array("Q", state["addresses"].tobytes())
+        self._offsets = array("q", state["offsets"].tobytes())
+        self._bytes = bytearray(state["bytes"])
+
+
+def names_state(copied: Arrays) -> Arrays:
+    """Addresses ascending, where each name begins (one more than there are), the names end to end."""
+    return _chosen(copied, np.argsort(copied["addresses"]))
+
+
+def _chosen(names: Arrays, order: npt.NDArray[np.int64]) -> Arrays:
+    """The names at the given places, in that order."""
+    starts = names["offsets"][order]
+    offsets = np.zeros(len(order) + 1, np.int64)
+    np.cumsum(names["offsets"][order + 1] - starts, out=offsets[1:])
+    chosen = np.empty(offsets[-1], np.uint8)
+    _copy_names(names["bytes"], starts, offsets, chosen)
+    return {"addresses": names["addresses"][order], "offsets": offsets, "bytes": chosen}
+
+
+@kernel
+def _copy_names(
+    names: npt.NDArray[np.uint8],
+    starts: npt.NDArray[np.int64],
+    offsets: npt.NDArray[np.int64],
+    chosen: npt.NDArray[np.uint8],
+) -> None:
+    """chosen[offsets[i] : offsets[i + 1]] = as many of `names` from starts[i] on."""
+    for i in range(len(starts)):
+        for at in range(offsets[i], offsets[i + 1]):
+            chosen[at] = names[starts[i] + at - offsets[i]]

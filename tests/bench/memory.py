@@ -12,7 +12,7 @@ from stream.settings.models import State
 from stream.tables import Table
 from tests.bench.figures import Figure
 
-__all__ = ["memory"]
+__all__ = ["ODD", "WIDTH", "memory", "resident"]
 
 ROW, ROWS = 64, 1024
 ODD = 0x9E3779B97F4A7C15  # times this, modulo 2^40: as many distinct addresses as there are numbers
@@ -25,11 +25,11 @@ def memory(live: int) -> list[Figure]:
     Meant for a process of its own. Names and the admission filter are not in it: the table has neither.
     """
     _fill(Table(State()), 1 << 16)  # kernels compiled, allocator warm
-    before = _resident("VmRSS")
+    before = resident("VmRSS")
     Path("/proc/self/clear_refs").write_text("5")  # the peak starts again from here
     table = Table(State())
     _fill(table, live)
-    grown = _resident("VmHWM") - before
+    grown = resident("VmHWM") - before
     details = {"table alone": table.table_bytes / live, "live": float(table.live)}
     return [Figure("bytes a live coordinate, at most", grown / live, "bytes", at_most=36, details=details)]
 
@@ -49,7 +49,7 @@ def _fill(table: Table, live: int) -> None:
             _, first = table.admit(batch, first, rows)
 
 
-def _resident(name: str) -> int:
+def resident(name: str) -> int:
     """Bytes, from the kernel's own account."""
     found = re.search(rf"{name}:\s+(\d+) kB", Path("/proc/self/status").read_text())
     assert found is not None
