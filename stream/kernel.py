@@ -25,7 +25,7 @@ _intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
 
 @cache
 def _cache_folder() -> str:
-    """A folder named by the digest of every source file that may hold a kernel.
+    """A folder named by the digest of this file and of every other that holds kernels.
 
     numba looks only at the file of the outer function when it decides whether a cached kernel is
     stale, so that a change in an inlined helper of another file would go unnoticed.
@@ -33,8 +33,9 @@ def _cache_folder() -> str:
     package = Path(__file__).parent
     digest = hashlib.sha256()
     for path in sorted(package.rglob("*.py")):
-        if path.parent.name not in ("cli", "runs", "settings"):
-            digest.update(path.read_bytes())
+        source = path.read_bytes()
+        if b"stream.kernel import" in source or path.name == "kernel.py":
+            digest.update(source)
     home = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
     base = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(home, "bedload")
     return os.path.join(base, f"kernels-{digest.hexdigest()[:16]}")
