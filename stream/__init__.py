@@ -15,7 +15,8 @@ if TYPE_CHECKING:
     from stream.features import Batcher
     from stream.metrics import Progress
     from stream.runs.model import Model
-    from stream.runs.replay import ReplayResult, replay
+    from stream.runs.replay import replay
+    from stream.runs.result import RunResult
     from stream.runs.scoring import Scorer, score
     from stream.settings import Settings, load
     from stream.snapshots import Snapshot, Snapshots, read_snapshot, write_snapshot
@@ -31,7 +32,7 @@ __all__ = [
     "LogSource",
     "Model",
     "Progress",
-    "ReplayResult",
+    "RunResult",
     "Scorer",
     "Settings",
     "Snapshot",
@@ -52,7 +53,8 @@ _HOMES = {
     "stream.features": ("Batcher",),
     "stream.metrics": ("Progress",),
     "stream.runs.model": ("Model",),
-    "stream.runs.replay": ("ReplayResult", "replay"),
+    "stream.runs.replay": ("replay",),
+    "stream.runs.result": ("RunResult",),
     "stream.runs.scoring": ("Scorer", "score"),
     "stream.settings": ("Settings", "load"),
     "stream.snapshots": ("Snapshot", "Snapshots", "read_snapshot", "write_snapshot"),

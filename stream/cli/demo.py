@@ -19,7 +19,7 @@ from stream.errors import CannotCreate
 
 if TYPE_CHECKING:
     from stream.metrics import WindowRow
-    from stream.runs.replay import ReplayResult
+    from stream.runs.result import RunResult
     from stream.settings import Settings
     from stream.snapshots import Snapshot
 
@@ -125,7 +125,7 @@ def _draft(folder: Path, tell: Callable[[str], object]) -> Settings:
     return settings
 
 
-def _learn(settings: Settings, folder: Path, as_json: bool, tell: Callable[[str], object]) -> ReplayResult:
+def _learn(settings: Settings, folder: Path, as_json: bool, tell: Callable[[str], object]) -> RunResult:
     from stream.runs.replay import replay
 
     _step(f"replay --config {folder / CONFIG} --fresh --set {CHANGES[0]}", tell)

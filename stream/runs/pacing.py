@@ -1,0 +1,131 @@
+"""A run in, checkpoints and snapshots out when they are due: who knows what the last one does not hold."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any
+
+from stream.background import BackgroundCheckpoints
+from stream.checkpoints import Checkpoints
+from stream.runs.learning import LearningRun
+from stream.settings import Settings
+from stream.snapshots import About, Snapshots
+from stream.weights import Weights
+
+__all__ = ["LivePacer", "Pacer"]
+
+
+class Pacer:
+    """Writes a checkpoint whenever the messages reach a multiple of `checkpoint_every`, and at the end.
+
+    `written`: checkpoints so far. Raises what writing raises; the older checkpoints are then still there.
+    """
+
+    def __init__(self, run: LearningRun, settings: Settings, checkpoints: Checkpoints) -> None:
+        self._run = run
+        self._every = settings.state.checkpoint_every
+        self._checkpoints = checkpoints
+        self._saved_at = run.messages if run.position is not None else -1
+        self.written = 0
+
+    def left(self) -> int:
+        """Messages until the next checkpoint is due: a block may not reach past it."""
+        return self._every - self._run.messages % self._every
+
+    def keep_up(self) -> None:
+        """Writes what is due; to be called after each block."""
+        if self._run.messages % self._every == 0:
+            self.checkpoint()
+
+    def checkpoint(self) -> None:
+        """Rejects first, then the checkpoint that counts them; nothing when it would say the same again."""
+        run = self._run
+        if run.messages == self._saved_at:
+            return
+        run.rejects.sync()
+        self._checkpoints.write(run.messages, run.state(), run.about())
+        self._saved_at = run.messages
+        self.written += 1
+
+
+class LivePacer(Pacer):
+    """As Pacer, and by the clock too: checkpoints in the background, snapshots once those are durable.
+
+    The clock decides when, never what. A snapshot is always one of a durable checkpoint, so that who goes on
+    from there never finds a snapshot ahead of itself. `before` makes durable what a checkpoint relies on;
+    `after` is given the position of each one that is durable. `snapshot`: the newest one written.
+    """
+
+    def __init__(
+        self,
+        run: LearningRun,
+        settings: Settings,
+        checkpoints: Checkpoints,
+        snapshots: Snapshots,
+        before: Callable[[], None],
+        after: Callable[[Mapping[str, Any]], None],
+        clock: Callable[[], float] = time.monotonic,
+    ) -> None:
+        super().__init__(run, settings, checkpoints)
+        self._worker = settings.worker
+        self._snapshots = snapshots
+        self._background = BackgroundCheckpoints(checkpoints)
+        self._before, self._after, self._clock = before, after, clock
+        self._checkpoint_at = clock() + self._worker.checkpoint_every_s
+        self._snapshot_at = clock() + self._worker.snapshot_every_s
+        self._position: Mapping[str, Any] | None = None
+        self._weights: tuple[int, Weights, About] | None = None  # of the checkpoint under way
+        self._snapshot_of = -1
+        self.snapshot: Path | None = None
+        self.snapshot_nnz = 0
+
+    def keep_up(self) -> None:
+        """Begins what is due and takes note of what became durable; after each block, and now and then."""
+        self._note(self._background.done())
+        now = self._clock()
+        new = self._run.messages != self._saved_at
+        if new and self._run.messages % self._every == 0:
+            self._note(self._background.wait())
+            self._begin(now >= self._snapshot_at)
+        elif not self._background.busy and now >= min(self._checkpoint_at, self._snapshot_at):
+            self._begin(now >= self._snapshot_at)
+
+    def checkpoint(self) -> None:
+        """Returns once a checkpoint and a snapshot of the present state are durable."""
+        self._note(self._background.wait())
+        self._begin(snapshot=True)
+        self._note(self._background.wait())
+
+    def _begin(self, snapshot: bool) -> None:
+        run = self._run
+        self._checkpoint_at = self._clock() + self._worker.checkpoint_every_s
+        if snapshot:
+            self._snapshot_at = self._clock() + self._worker.snapshot_every_s
+        if snapshot and self._snapshot_of != run.messages:
+            self._weights = (run.messages, run.model.weights(), run.about_snapshot())
+        if run.messages == self._saved_at:
+            self._publish()
+            return
+        self._before()
+        about = run.about()
+        self._background.begin(run.messages, run.begin_saving(), about)
+        self._saved_at, self._position = run.messages, about["position"]
+
+    def _note(self, durable: Path | None) -> None:
+        """What is to be done once a checkpoint is durable."""
+        if durable is None:
+            return
+        self.written += 1
+        if self._position is not None:
+            self._after(self._position)
+        self._publish()
+
+    def _publish(self) -> None:
+        if self._weights is None:
+            return
+        self._snapshot_of, weights, about = self._weights
+        self._weights = None
+        self.snapshot = self._snapshots.write(self._snapshot_of, weights, about)
+        self.snapshot_nnz = len(weights)
