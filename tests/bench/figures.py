@@ -27,8 +27,8 @@ class Figure:
     def met(self) -> bool | None:
         """None without a target."""
         if self.at_least is not None:
-            return self.value >= self.at_least
-        return None if self.at_most is None else self.value <= self.at_most
+            return bool(self.value >= self.at_least)
+        return None if self.at_most is None else bool(self.value <= self.at_most)
 
     @property
     def target(self) -> str:
