@@ -25,16 +25,18 @@ _intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
 
 @cache
 def _cache_folder() -> str:
-    """A folder named by the digest of this file and of every other that holds kernels.
+    """A folder named by the digest of this file, of every other with kernels, and of their neighbours.
 
     numba looks only at the file of the outer function when it decides whether a cached kernel is
     stale, so that a change in an inlined helper of another file would go unnoticed.
     """
     package = Path(__file__).parent
-    digest = hashlib.sha256()
-    for path in sorted(package.rglob("*.py")):
-        source = path.read_bytes()
-        if b"stream.kernel import" in source or path.name == "kernel.py":
+    sources = {path: path.read_bytes() for path in sorted(package.rglob("*.py"))}
+    compiled = {path for path, source in sources.items() if b"stream.kernel import" in source}
+    folders = {path.parent for path in compiled} - {package}
+    digest = hashlib.sha256(Path(__file__).read_bytes())
+    for path, source in sources.items():
+        if path in compiled or path.parent in folders:
             digest.update(source)
     home = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
     base = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(home, "bedload")

@@ -45,11 +45,16 @@ class NameLedger:
 
     def record(self, batch: Batch, entries: npt.NDArray[np.int64]) -> None:
         """Takes down the texts of the given entries of a batch."""
-        for entry, address in zip(entries.tolist(), batch.addresses[entries].tolist(), strict=True):
+        texts = memoryview(batch.texts)
+        starts = batch.text_starts[entries]
+        ends = starts + batch.text_lengths[entries]
+        for address, start, end in zip(
+            batch.addresses[entries].tolist(), starts.tolist(), ends.tolist(), strict=True
+        ):
             if address not in self._places:
                 self._places[address] = len(self._places)
                 self._addresses.append(address)
-                self._bytes += batch.text(entry)
+                self._bytes += texts[start:end]
                 self._offsets.append(len(self._bytes))
 
     def addresses(self) -> npt.NDArray[np.uint64]:

@@ -146,14 +146,17 @@ def admit(
     no sighting.
     """
     stop = row_ptr[last] - 1
+    keys = slots.view(np.uint64)  # until each becomes a slot
+    for e in range(row_ptr[first], row_ptr[last]):
+        keys[e] = (mix(addresses[e], secret) << ONE) | ONE
     for example in range(first, last):
         begin = row_ptr[example]
         end = row_ptr[example + 1]
         labelled = labels[example] >= 0
         new = 0
         for e in range(begin, end):
-            prefetch_home(cells, capacity, addresses[min(e + AHEAD, stop)], secret)
-            slot = seek(cells, capacity, (mix(addresses[e], secret) << ONE) | ONE)
+            prefetch(cells, row_of(home(keys[min(e + AHEAD, stop)], capacity)))
+            slot = seek(cells, capacity, keys[e])
             slots[e] = slot
             if slot < 0:
                 new += 1

@@ -15,13 +15,15 @@ from stream.coordinate import CELLS, FIRST, NAMED, NO_UNDO, SECOND, TOUCH
 from stream.errors import CannotCreate
 from stream.settings.models import State
 from stream.tables import probing
+from stream.tables.memory import reserve
 from stream.tables.saving import Saving
 
 __all__ = ["Table"]
 
 SPARE = 8192
+MOST_SLOTS = 1 << 32
 SMALL = 1 << 22
-"""Slots up to which speed comes before memory: 3/4 full, then doubled. Beyond: 23/25, grown by 1/32."""
+"""Slots up to which speed comes before memory: half full, then doubled. Beyond: 23/25, grown by 1/32."""
 
 
 def _random_secret() -> npt.NDArray[np.uint64]:
@@ -32,7 +34,7 @@ def _random_secret() -> npt.NDArray[np.uint64]:
 
 
 def _limit(capacity: int) -> int:
-    return capacity * 3 // 4 if capacity <= SMALL else capacity * 23 // 25
+    return capacity // 2 if capacity <= SMALL else capacity * 23 // 25
 
 
 def _next_capacity(capacity: int) -> int:
@@ -52,7 +54,8 @@ class Table:
         self._capacity = capacity
         self._filter = np.zeros(settings.admission_bytes if settings.admit_after > 1 else 1, np.uint8)
         self._slots = np.empty(0, np.int64)
-        self.cells = np.zeros(CELLS * (capacity + SPARE), np.uint64)
+        self._memory = reserve(CELLS * MOST_SLOTS)
+        self.cells = self._memory[: CELLS * (capacity + SPARE)]
         self.live = 0
         self.refused = 0
         self._saving: Saving | None = None
@@ -183,7 +186,8 @@ class Table:
         self.live = 0
         while _limit(self._capacity) < len(addresses):
             self._capacity = _next_capacity(self._capacity)
-        self.cells = np.zeros(CELLS * (self._capacity + SPARE), np.uint64)
+        self._memory = reserve(CELLS * MOST_SLOTS)
+        self.cells = self._memory[: CELLS * (self._capacity + SPARE)]
         state = np.stack([arrays[name].view(np.uint64) for name in ("first", "second", "touch")], axis=1)
         probing.place(self.cells, np.uint64(self._capacity), self._secret, addresses, state)
         self.live = len(addresses)
@@ -237,13 +241,13 @@ class Table:
         capacity = self._capacity
         while _limit(capacity) - self.live < needed:
             capacity = _next_capacity(capacity)
-        if capacity >= 1 << 32:
+        if CELLS * (capacity + SPARE) > len(self._memory):
             raise CannotCreate(
-                f"the table holds {self.live:,} coordinates and cannot grow beyond 2**32 slots; "
+                f"the table holds {self.live:,} coordinates and cannot grow beyond {self.slots:,} slots; "
                 "set state.max_live or state.idle_after, or a stronger learner.l1_per_example"
             )
         if capacity > self._capacity:
             with self._rows_move:
                 before, self._capacity = self.slots, capacity
-                self.cells.resize(CELLS * (capacity + SPARE), refcheck=False)
+                self.cells = self._memory[: CELLS * (capacity + SPARE)]
                 probing.respread(self.cells, before, np.uint64(capacity))
