@@ -66,7 +66,9 @@ def init(
     if as_json:
         show_json({"settings": str(out), "label": settings.message.label, "fields": fields})
         return
-    print(f"{out}: {len(fields)} fields, outcome `{settings.message.label}`. Read its comments, then:")
+    label = settings.message.label
+    outcome = "no outcome found" if label is None else f"outcome `{label}`"
+    print(f"{out}: {len(fields)} fields, {outcome}. Read its comments, then:")
     print("  bedload replay" + ("" if out == DEFAULT_CONFIG else f" --config {out}"))
 
 
@@ -115,6 +117,8 @@ def replay(
         show_summary(result.to_json())
         _show_strongest(result.snapshot)
     if result.interrupted:
+        cure = "" if "-" in settings.feed.paths else "; `bedload replay --resume` goes on from there"
+        note(f"bedload: stopped before the end{cure}")
         raise typer.Exit(INTERRUPTED)
 
 

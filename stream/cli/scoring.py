@@ -102,7 +102,9 @@ def explain(
         shown += 1
     _tell_rejects(scorer)
     if wanted and not shown:
-        raise InputMissing(f"no message has the id {', '.join(sorted(wanted))}")
+        ids = ", ".join(sorted(wanted))
+        cure = "" if scorer.settings.message.id else "; message.id is not set, so messages have none"
+        raise InputMissing(f"no message has the id {ids}{cure}")
 
 
 def show_scores(lines: list[Scored]) -> None:

@@ -25,7 +25,7 @@ def add_to(app: typer.Typer) -> None:
 def simulate(
     out: Annotated[
         Path | None,
-        typer.Option("--out", metavar="FILE", help="Log to write; .gz and .zst are compressed."),
+        typer.Option("--out", metavar="FILE", help="Log to write, replaced if there; .gz, .zst: compressed."),
     ] = None,
     messages: Annotated[int, typer.Option("--messages", metavar="N", help="How many messages.")] = 100_000,
     seed: Annotated[int, typer.Option("--seed", metavar="N", help="Same seed, same bytes.")] = 0,
@@ -47,7 +47,7 @@ def simulate(
 ) -> None:
     """Make an invented courier feed, with known truth."""
     if (out is None) != as_json:
-        raise UsageError("give --out FILE for a log in a file, or --json for messages on standard output")
+        raise UsageError("give one of --out FILE (a log in a file) and --json (messages on standard output)")
     from simulator import write_log
 
     feed = feed_of(messages, seed, changes or [])
