@@ -178,7 +178,7 @@ def _make_if_missing(path: Path, known: Mark) -> None:
         return
     if known.records:
         raise BadData(
-            f"{path} is {'empty' if size else 'missing'}, but the checkpoint was made after {known.records:,} "
+            f"{path} is missing or empty, but the checkpoint was made after {known.records:,} "
             "records of it, and without them nobody can tell in which order was learned. Put the file "
             "back from a copy, or begin again with another state folder"
         )

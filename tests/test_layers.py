@@ -34,6 +34,7 @@ HOMES = {
     "msgspec": (
         "stream/decoding/",
         "stream/rejects.py",
+        "stream/runs/outbox.py",
         "stream/runs/sample.py",
         "stream/runs/scoring.py",
     ),

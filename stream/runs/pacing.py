@@ -3,18 +3,21 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
 from stream.background import BackgroundCheckpoints
 from stream.checkpoints import Checkpoints
+from stream.errors import Unavailable
 from stream.runs.learning import LearningRun
 from stream.settings import Settings
 from stream.snapshots import About, Snapshots
 from stream.weights import Weights
 
 __all__ = ["LivePacer", "Pacer"]
+
+RETRY_S = 1.0
 
 
 class Pacer:
@@ -54,8 +57,9 @@ class LivePacer(Pacer):
     """As Pacer, and by the clock too: checkpoints in the background, snapshots once those are durable.
 
     The clock decides when, never what. A snapshot is always one of a durable checkpoint, so that who goes on
-    from there never finds a snapshot ahead of itself. `before` makes durable what a checkpoint relies on;
-    `after` is given the position of each one that is durable. `snapshot`: the newest one written.
+    from there never finds a snapshot ahead of itself. `before` makes durable what a checkpoint relies on, or
+    says that this cannot be done yet; `after` is given the position of each one that is durable.
+    `snapshot`: the newest one written.
     """
 
     def __init__(
@@ -64,8 +68,8 @@ class LivePacer(Pacer):
         settings: Settings,
         checkpoints: Checkpoints,
         snapshots: Snapshots,
-        before: Callable[[], None],
-        after: Callable[[Mapping[str, Any]], None],
+        before: Callable[[], bool],
+        after: Callable[[dict[str, Any]], None],
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
         super().__init__(run, settings, checkpoints)
@@ -75,7 +79,7 @@ class LivePacer(Pacer):
         self._before, self._after, self._clock = before, after, clock
         self._checkpoint_at = clock() + self._worker.checkpoint_every_s
         self._snapshot_at = clock() + self._worker.snapshot_every_s
-        self._position: Mapping[str, Any] | None = None
+        self._position: dict[str, Any] | None = None
         self._weights: tuple[int, Weights, About] | None = None  # of the checkpoint under way
         self._snapshot_of = -1
         self.snapshot: Path | None = None
@@ -95,23 +99,33 @@ class LivePacer(Pacer):
     def checkpoint(self) -> None:
         """Returns once a checkpoint and a snapshot of the present state are durable."""
         self._note(self._background.wait())
-        self._begin(snapshot=True)
+        if not self._begin(snapshot=True):
+            raise Unavailable(
+                "the last checkpoint could not be written, as not all records sent out were acknowledged; "
+                "the one before it is whole, and what came since will be learned again in the same order"
+            )
         self._note(self._background.wait())
 
-    def _begin(self, snapshot: bool) -> None:
-        run = self._run
-        self._checkpoint_at = self._clock() + self._worker.checkpoint_every_s
+    def _begin(self, snapshot: bool) -> bool:
+        """Begins a checkpoint of what is new, and a snapshot with it; False where that must wait."""
+        run, now = self._run, self._clock()
+        new = run.messages != self._saved_at
+        if new and not self._before():
+            self._checkpoint_at = now + min(RETRY_S, self._worker.checkpoint_every_s)
+            self._snapshot_at = max(self._snapshot_at, self._checkpoint_at)
+            return False
+        self._checkpoint_at = now + self._worker.checkpoint_every_s
         if snapshot:
-            self._snapshot_at = self._clock() + self._worker.snapshot_every_s
-        if snapshot and self._snapshot_of != run.messages:
-            self._weights = (run.messages, run.model.weights(), run.about_snapshot())
-        if run.messages == self._saved_at:
+            self._snapshot_at = now + self._worker.snapshot_every_s
+            if self._snapshot_of != run.messages:
+                self._weights = (run.messages, run.model.weights(), run.about_snapshot())
+        if not new:
             self._publish()
-            return
-        self._before()
+            return True
         about = run.about()
         self._background.begin(run.messages, run.begin_saving(), about)
         self._saved_at, self._position = run.messages, about["position"]
+        return True
 
     def _note(self, durable: Path | None) -> None:
         """What is to be done once a checkpoint is durable."""

@@ -38,13 +38,19 @@ class LineReader:
     `max_line_bytes` only its first max_line_bytes + 1 bytes are given, so that it can be told and
     is never held whole when it is larger than a chunk. A byte order mark at the start is skipped.
 
+    A `live` one is of a file that may grow: its unfinished last line waits, until `finish`.
+
     `offset`: where the message after the last one given begins, in decompressed bytes.
     `head`: the first bytes of the file, up to HEAD_BYTES (3 of standard input).
     """
 
-    def __init__(self, name: str, stream: ByteStream, max_line_bytes: int) -> None:
+    def __init__(
+        self, name: str, stream: ByteStream, max_line_bytes: int, *, partition: int = 0, live: bool = False
+    ) -> None:
         self.name = name
+        self.live = live
         self.offset = 0
+        self._partition = partition
         self._stream = stream
         self._max = max_line_bytes
         self._base = 0  # offset of the chunk in the file
@@ -63,11 +69,14 @@ class LineReader:
         if self.head.startswith(BYTE_ORDER_MARK):
             self._at = len(BYTE_ORDER_MARK)
 
-    def read(self, limit: int) -> Block:
-        """Up to `limit` lines; an empty block at the end of the file. Raises what the stream raises."""
-        while True:
+    def read(self, limit: int, before: int | None = None) -> Block:
+        """Up to `limit` lines that begin before an offset; an empty block at the end of what is there.
+
+        Raises what the stream raises.
+        """
+        while before is None or self._base + self._at < before:
             if self._next < len(self._ends):
-                block = self._cut(limit)
+                block = self._cut(limit, before)
                 if len(block):
                     return block
             elif len(self._chunk) - self._at > self._max + 1:
@@ -76,10 +85,18 @@ class LineReader:
                 raise self._fault
             elif not self._ended:
                 self._fill()
+            elif self.live:
+                self._ended = False
+                break
             elif self._at < len(self._chunk):
                 self._ends, self._next = np.array([len(self._chunk)]), 0
             else:
-                return empty_block(self.name)
+                break
+        return empty_block(self.name)
+
+    def finish(self) -> None:
+        """The file will not grow any more: its last line is one, though it has no end."""
+        self.live = False
 
     def skip_to(self, offset: int) -> bool:
         """Goes to a byte offset at or past the head; False where the file is shorter than that."""
@@ -124,12 +141,15 @@ class LineReader:
         self._ends, self._next = self._line_feeds(len(rest)), 0
         self._ended = len(chunk) == len(rest)
 
-    def _cut(self, limit: int) -> Block:
+    def _cut(self, limit: int, before: int | None) -> Block:
         """The next `limit` lines of the chunk, without the blank ones."""
         feeds = self._ends[self._next : self._next + limit]
         starts = np.empty_like(feeds)
         starts[0] = self._at
         starts[1:] = feeds[:-1] + 1
+        if before is not None:
+            starts = starts[: np.searchsorted(starts, before - self._base)]
+            feeds = feeds[: len(starts)]
         self._next += len(feeds)
         self._at = min(int(feeds[-1]) + 1, len(self._chunk))
         data = np.frombuffer(self._chunk, np.uint8)
@@ -140,7 +160,7 @@ class LineReader:
         if len(feeds):
             self.offset = self._base + min(int(feeds[-1]) + 1, len(self._chunk))
         np.minimum(ends, starts + (self._max + 1), out=ends)
-        return Block(self.name, 0, self._chunk, starts, ends, starts + self._base)
+        return Block(self.name, self._partition, self._chunk, starts, ends, starts + self._base)
 
     def _kept(
         self, data: npt.NDArray[np.uint8], starts: Int64s, ends: Int64s
@@ -157,7 +177,10 @@ class LineReader:
         return kept
 
     def _long_line(self) -> Block:
-        """The beginning of a line that is over the limit and goes on past the chunk; skips the rest."""
+        """The beginning of a line that is over the limit and goes on past the chunk; skips the rest.
+
+        Nothing while the line has no end in a file that may grow.
+        """
         value = self._chunk[self._at : self._at + self._max + 1]
         start = self._base + self._at
         feed = -1
@@ -165,11 +188,16 @@ class LineReader:
             self._base += len(self._chunk)
             self._chunk = self._stream.read(CHUNK_BYTES)
             feed = self._chunk.find(b"\n")
+        if feed < 0 and self.live:
+            self.skip_to(start)
+            return empty_block(self.name)
         self._ended = not self._chunk
         self._at = feed + 1
         self._ends, self._next = self._line_feeds(self._at), 0
         self.offset = self._base + self._at
-        return Block(self.name, 0, value, np.array([0]), np.array([len(value)]), np.array([start]))
+        return Block(
+            self.name, self._partition, value, np.array([0]), np.array([len(value)]), np.array([start])
+        )
 
     def _line_feeds(self, start: int) -> Int64s:
         """Positions of the line feeds in the chunk from `start` on, ascending.

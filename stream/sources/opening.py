@@ -55,6 +55,10 @@ class PlainStream:
         self.bytes_on_disk += len(data) - len(rest)
         return data
 
+    def fileno(self) -> int:
+        """The descriptor of the open file, whatever its name is by now."""
+        return self._file.fileno()
+
     def skip_to(self, offset: int) -> bool:
         """Goes to byte `offset`; False where the file is shorter than that."""
         if self._file.seek(0, os.SEEK_END) < offset:
