@@ -200,11 +200,14 @@ class Model:
                 return slots, stopped
         return self._table.admit_crowded(batch, example)
 
-    def _zero_weight_slots(self) -> npt.NDArray[np.int64]:
+    def _zero_weight_slots(self, idle_after: int = 0) -> npt.NDArray[np.int64]:
+        """Of rows that were last touched `idle_after` examples ago, or earlier."""
         found = [np.empty(0, np.int64)]
         for begin, end in self._table.chunks():
             zero = self._learner.weights(self._table.cells, begin, end) == 0.0
-            found.append(begin + np.flatnonzero(zero & self._table.in_use(begin, end)))
+            slots = begin + np.flatnonzero(zero & self._table.in_use(begin, end))
+            age = self.learned - example_of(self._table.touches(slots)).astype(np.int64)
+            found.append(slots[age >= idle_after])
         return np.concatenate(found)
 
     def _remove_oldest(self, count: int) -> None:
@@ -218,17 +221,19 @@ class Model:
         if state.admit_after > 1 and self.learned % state.admission_halved_every == 0:
             self._table.age_filter()
         if state.idle_after is not None and self.learned % self._idle_period(state.idle_after) == 0:
-            slots = self._zero_weight_slots()
-            age = self.learned - example_of(self._table.touches(slots)).astype(np.int64)
-            self._table.forget(slots[age >= state.idle_after])
+            self._table.forget(self._zero_weight_slots(state.idle_after))
         if self.learned % NAMES_SWEPT_EVERY == 0:
             self._drop_names_of_zeros()
 
     def _drop_names_of_zeros(self) -> None:
         addresses = self._names.addresses()
         slots = self._table.slots_of(addresses)
-        zero = self._zero_weight_slots()
-        gone = (slots < 0) | np.isin(slots, zero)
-        self._names.drop(addresses[gone])
-        gone_slots = slots[gone]
-        self._table.clear_named(gone_slots[gone_slots >= 0])
+        order = np.argsort(slots)
+        zero = slots < 0
+        for begin, end in self._table.chunks():
+            first, last = np.searchsorted(slots, (begin, end), sorter=order)
+            weights = self._learner.weights(self._table.cells, begin, end)
+            here = order[first:last]
+            zero[here] = weights[slots[here] - begin] == 0.0
+        self._names.drop(addresses[zero])
+        self._table.clear_named(slots[zero & (slots >= 0)])

@@ -25,6 +25,7 @@ __all__ = ["Saving"]
 PIECE = 1 << 16
 """Rows read at once, at least: learning waits for so many if it must move rows meanwhile."""
 MOST_PIECES = 256
+SORTED_AT_ONCE = 1 << 18
 
 Uint64s = npt.NDArray[np.uint64]
 
@@ -103,13 +104,15 @@ class Saving:
         """Takes the log so far and shares its rows out to the pieces from `piece` on."""
         with self._between_blocks:
             kept, self._kept = self._kept, []
-        if not kept:
-            return
-        rows = np.concatenate(kept)
-        addresses = np.ascontiguousarray(rows[:, 0])
-        probing.unmix_keys(addresses, self._secret)
-        rows[:, 0] = addresses
-        order = np.argsort(addresses)
-        for part, indices in enumerate(np.split(order, np.searchsorted(addresses[order], firsts))):
-            if part >= piece and len(indices):
-                undone[part].append(rows[indices])
+        while kept:  # some at a time: all copied at once could be half of the table
+            some = [kept.pop()]
+            while kept and sum(map(len, some)) < SORTED_AT_ONCE:
+                some.append(kept.pop())
+            rows = np.concatenate(some)
+            addresses = np.ascontiguousarray(rows[:, 0])
+            probing.unmix_keys(addresses, self._secret)
+            rows[:, 0] = addresses
+            order = np.argsort(addresses)
+            for part, indices in enumerate(np.split(order, np.searchsorted(addresses[order], firsts))):
+                if part >= piece and len(indices):
+                    undone[part].append(rows[indices])
