@@ -97,8 +97,7 @@ def replay(
     from stream.runs.replay import replay as run_replay
 
     settings = settings_from(config, changes, state)
-    if not as_json:
-        print(heading(WINDOW_COLUMNS))
+    table = None if as_json else _Table()
     with progress_bar("learning") as progress:
         result = run_replay(
             settings,
@@ -106,14 +105,15 @@ def replay(
             resume=resume,
             fresh=fresh,
             epochs=epochs,
-            on_window=_no_window if as_json else show_window,
+            on_window=_no_window if table is None else table.add,
             progress=progress,
         )
     for warning in result.warnings:
         note(f"bedload: {warning}")
-    if as_json:
+    if table is None:
         show_json(result.to_json())
     else:
+        table.begin()
         show_summary(result.to_json())
         _show_strongest(result.snapshot)
     if result.interrupted:
@@ -124,6 +124,24 @@ def replay(
 
 def _no_window(row: WindowRow) -> None:
     """Windows are inside the JSON document."""
+
+
+class _Table:
+    """Windows as they come, below a heading that waits for the first: an error before it stands alone."""
+
+    def __init__(self) -> None:
+        self._begun = False
+
+    def begin(self) -> None:
+        """Prints the heading, once."""
+        if not self._begun:
+            print(heading(WINDOW_COLUMNS))
+        self._begun = True
+
+    def add(self, row: WindowRow) -> None:
+        """Prints a row."""
+        self.begin()
+        show_window(row)
 
 
 def show_window(row: WindowRow) -> None:

@@ -24,6 +24,7 @@ from stream.message import Block, Examples, Reject, Source
 from stream.metrics import Progress, WindowRow
 from stream.rejects import RejectLog, RejectSink
 from stream.runs.model import Model
+from stream.runs.presence import Presence
 from stream.settings import Settings
 from stream.snapshots import About
 
@@ -60,6 +61,7 @@ class LearningRun:
         self._decoder = Decoder(settings)
         self._batcher = Batcher(settings)
         self._slice_path = _slice_path(settings)
+        self.presence = Presence(settings)
         self.model = Model(settings)
         self.progress = Progress(settings.metrics.window, self._slice_path is not None)
         self.messages = self.tokens = self.epoch = 0
@@ -89,6 +91,7 @@ class LearningRun:
         if not len(block):
             return False
         examples, rejects = self._decoder.decode(block)
+        self.presence.observe(examples)
         batch, over = self._batcher.batch(examples)
         if first_epoch:
             self.rejects.add(block, rejects + over, self.messages)

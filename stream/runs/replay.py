@@ -12,6 +12,7 @@ from stream.metrics import WindowRow
 from stream.runs.learning import LearningRun
 from stream.runs.loop import OnWindow, begin, learn, refuse_used
 from stream.runs.pacing import Pacer
+from stream.runs.presence import refuse_unlearnable
 from stream.runs.result import RunResult, result_of
 from stream.runs.stopping import stop_on_signal
 from stream.settings import Settings
@@ -42,6 +43,7 @@ def replay(
     SIGINT and SIGTERM end the run after the block at hand, with a checkpoint and a snapshot; a second
     one ends it at once. Raises what the stages raise; the last checkpoint is then whole.
     """
+    refuse_unlearnable(settings)
     began = time.monotonic()
     with StateFolder(folder) as state, stop_on_signal() as stopping:
         checkpoints = Checkpoints(state.checkpoints, settings.state.keep_checkpoints)

@@ -98,5 +98,5 @@ def result_of(
         snapshot=snapshot,
         memory=model.memory(),
         interrupted=interrupted,
-        warnings=warnings,
+        warnings=[*warnings, *run.presence.warnings(resumed=bool(resumed_from))],
     )

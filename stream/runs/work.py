@@ -16,6 +16,7 @@ from stream.runs.feeds import OnGap, live_source, publisher_of
 from stream.runs.loop import OnWindow, begin, learn
 from stream.runs.outbox import Outbox, Publisher
 from stream.runs.pacing import LivePacer
+from stream.runs.presence import refuse_unlearnable
 from stream.runs.result import RunResult, result_of
 from stream.runs.stopping import stop_on_signal
 from stream.settings import Settings
@@ -64,6 +65,7 @@ def work(
     A signal ends it after the block at hand, with a checkpoint and a snapshot. Raises TryLater where another
     process holds the folder, and what the stages raise; the last checkpoint is then whole.
     """
+    refuse_unlearnable(settings)
     began = time.monotonic()
     with StateFolder(folder) as state, stop_on_signal() as stopping:
         place = JournalledSource(
@@ -141,6 +143,8 @@ class _Worker:
             return until_end and self._source.at_end()
 
         learn(self.run, self._source, self.pacer, self._stopping, on_window, over)
+        while self._outbox is not None and not self._stopping and not self._outbox.try_sync():
+            time.sleep(IDLE_S)
 
     def result(self, seconds: float) -> RunResult:
         """What it found, after the last checkpoint."""
