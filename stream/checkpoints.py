@@ -13,7 +13,7 @@ import numpy.typing as npt
 from stream.arrays_file import Arrays, Rows, read_array_folder, write_array_folder
 from stream.durable import make_folder, move_folder, os_errors, remove_folder
 from stream.errors import BadData, BadSettings, InputMissing
-from stream.manifest import verify_folder
+from stream.manifest import read_manifest, verify_folder
 from stream.retention import Retention
 
 __all__ = ["Checkpoint", "CheckpointEntry", "Checkpoints"]
@@ -105,6 +105,17 @@ class Checkpoints:
                 f"{self.folder}: no whole checkpoint is left, and learning does not start from nothing "
                 f"unasked ({found}). Put back a copy, or start again with --fresh"
             )
+        return None
+
+    def newest_manifest(self) -> tuple[Path, dict[str, Any]] | None:
+        """Path and manifest of the newest checkpoint whose manifest is whole; for who only reads."""
+        for path in self._paths():
+            try:
+                manifest = read_manifest(path)
+            except (BadData, InputMissing):  # broken, or removed this moment
+                continue
+            _check_format(path, manifest)
+            return path, manifest
         return None
 
     def list(self) -> tuple[CheckpointEntry, ...]:

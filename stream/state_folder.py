@@ -1,4 +1,4 @@
-"""A path in, the state folder held under it out: LOCK, checkpoints/, snapshots/, rejects/."""
+"""A path in, the state folder held under it out: LOCK, checkpoints/, snapshots/, rejects/, journal."""
 
 from __future__ import annotations
 
@@ -11,6 +11,7 @@ from types import TracebackType
 
 from stream.durable import make_folder, os_errors, remove_folder, remove_leftovers
 from stream.errors import TryLater
+from stream.journal import FILE_NAME
 
 __all__ = ["StateFolder"]
 
@@ -28,6 +29,7 @@ class StateFolder:
         self.checkpoints = path / "checkpoints"
         self.snapshots = path / "snapshots"
         self.rejects = path / "rejects"
+        self.journal = path / FILE_NAME
         make_folder(path)
         self._lock = _take_lock(path / "LOCK")
         try:
@@ -40,15 +42,18 @@ class StateFolder:
             raise
 
     def used(self) -> bool:
-        """Whether there is a checkpoint, whole or broken or set aside."""
+        """Whether there is a checkpoint, whole or broken or set aside, or a journal."""
         with os_errors("read", self.checkpoints):
-            return any(re.match(r"\d", path.name) for path in self.checkpoints.rglob("*") if path.is_dir())
+            names = (path.name for path in self.checkpoints.rglob("*") if path.is_dir())
+            return self.journal.exists() or any(re.match(r"\d", name) for name in names)
 
     def clear(self) -> None:
-        """Removes all checkpoints and rejects; snapshots stay."""
+        """Removes all checkpoints, rejects and the journal; snapshots stay."""
         for folder in (self.checkpoints, self.rejects):
             remove_folder(folder)
             make_folder(folder)
+        with os_errors("remove", self.journal):
+            self.journal.unlink(missing_ok=True)
 
     def close(self) -> None:
         """Lets the folder go."""

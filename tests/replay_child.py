@@ -21,9 +21,11 @@ ROOT = Path(__file__).parent.parent
 class Children:
     """Starts replays, one after the other; `pid` is that of the latest."""
 
+    module = "tests.replay_child"
+
     def __init__(self):
         self._server = subprocess.Popen(
-            [sys.executable, "-m", "tests.replay_child"],
+            [sys.executable, "-m", self.module],
             cwd=ROOT,
             env={**os.environ, "OPENBLAS_NUM_THREADS": "1"},
             stdin=subprocess.PIPE,
@@ -52,8 +54,12 @@ class Children:
         self._server.stdout.close()
 
 
-def serve():
-    warm_up()
+def run_replay(settings, folder, **options):
+    replay(Settings.model_validate(settings), Path(folder), **options)
+
+
+def serve(run):
+    """Forks a child for each request; what is in memory by now, it has."""
     child = 0
     for request in sys.stdin:
         if request == "wait\n":
@@ -63,7 +69,7 @@ def serve():
         child = os.fork()
         if child == 0:
             try:
-                replay(Settings.model_validate(settings), Path(folder), **options)
+                run(settings, folder, **options)
             except BaseException:
                 traceback.print_exc()
                 os._exit(1)
@@ -88,4 +94,5 @@ def warm_up():
 
 
 if __name__ == "__main__":
-    serve()
+    warm_up()
+    serve(run_replay)

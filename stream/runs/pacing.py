@@ -23,19 +23,24 @@ RETRY_S = 1.0
 class Pacer:
     """Writes a checkpoint whenever the messages reach a multiple of `checkpoint_every`, and at the end.
 
-    `written`: checkpoints so far. Raises what writing raises; the older checkpoints are then still there.
+    `most`: messages that the run ends at, if any; `written`: checkpoints so far. Raises what writing raises;
+    the older checkpoints are then still there.
     """
 
-    def __init__(self, run: LearningRun, settings: Settings, checkpoints: Checkpoints) -> None:
+    def __init__(
+        self, run: LearningRun, settings: Settings, checkpoints: Checkpoints, most: int | None = None
+    ) -> None:
         self._run = run
+        self._most = most
         self._every = settings.state.checkpoint_every
         self._checkpoints = checkpoints
         self._saved_at = run.messages if run.position is not None else -1
         self.written = 0
 
     def left(self) -> int:
-        """Messages until the next checkpoint is due: a block may not reach past it."""
-        return self._every - self._run.messages % self._every
+        """Messages until the next checkpoint is due, or the end: a block may not reach past it."""
+        left = self._every - self._run.messages % self._every
+        return left if self._most is None else min(left, self._most - self._run.messages)
 
     def keep_up(self) -> None:
         """Writes what is due; to be called after each block."""
@@ -73,6 +78,7 @@ class LivePacer(Pacer):
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
         super().__init__(run, settings, checkpoints)
+        self._saved_at = run.messages  # before the first message there is nothing to save
         self._worker = settings.worker
         self._snapshots = snapshots
         self._background = BackgroundCheckpoints(checkpoints)

@@ -198,6 +198,7 @@ class JournalledSource:
         unsaid = found.keys() - self._next.keys() - order.named
         self._append(*(Span(Kind.START, p, found[p], found[p]) for p in sorted(unsaid)))
         self._next = found
+        self.sync()
 
     def _note(self, block: Block) -> None:
         partition = block.partition
