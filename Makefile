@@ -1,4 +1,5 @@
-# Every target makes .venv by itself, from the versions in constraints.txt; after that nothing asks the network.
+# Every target makes .venv by itself, from the versions in constraints.txt; after that nothing asks the network, but
+# for the first tests that want a broker: they fetch its jars, where Java and Maven are installed.
 
 SHELL := /bin/bash
 PYTHON ?= python3

@@ -14,7 +14,7 @@ from pathlib import Path
 import pytest
 from kafka import KafkaConsumer, KafkaProducer, TopicPartition
 
-from tests.broker import Unavailable, start_or_skip
+from tests.broker import Broker, Unavailable, start_or_skip
 from tests.broker.jars import class_path
 from tests.broker.properties import LISTENERS, MECHANISMS
 from tests.broker.running import claim_ports
@@ -233,6 +233,16 @@ def test_without_java_tests_are_skipped_aloud_and_fail_where_a_broker_is_require
     monkeypatch.setenv("BEDLOAD_REQUIRE_BROKER", "1")
     with pytest.raises(pytest.fail.Exception, match=r"BEDLOAD_REQUIRE_BROKER=1.*no java"):
         start_or_skip(tmp_path / "broker")
+
+
+def test_a_java_that_is_too_old_is_named(broker, tmp_path, monkeypatch):
+    """`broker` stands here for: openssl and the jars are there."""
+    said = "Exception in thread main java.lang.UnsupportedClassVersionError: kafka/tools/StorageTool"
+    (tmp_path / "java").write_text(f"#!/bin/sh\necho {said} >&2; exit 1\n")
+    (tmp_path / "java").chmod(0o755)
+    monkeypatch.setenv("PATH", f"{tmp_path}:{os.environ['PATH']}")
+    with pytest.raises(Unavailable, match=rf"{tmp_path}/java is too old: the broker needs Java 17"):
+        Broker.start(tmp_path / "broker")
 
 
 def test_jars_that_maven_cannot_fetch_are_no_broker_and_leave_no_half_cache(tmp_path, monkeypatch):

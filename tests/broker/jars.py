@@ -6,10 +6,11 @@ import shutil
 import subprocess
 from pathlib import Path
 
-__all__ = ["Unavailable", "class_path", "java", "program"]
+__all__ = ["JAVA_PACKAGE", "Unavailable", "class_path", "java", "program"]
 
 POM = Path(__file__).with_name("pom.xml")
 FETCH_S = 600
+JAVA_PACKAGE = "openjdk-17-jre-headless"
 
 
 class Unavailable(Exception):
@@ -18,7 +19,7 @@ class Unavailable(Exception):
 
 def java() -> str:
     """The path of the Java that runs the broker."""
-    return program("java", "openjdk-17-jre-headless")
+    return program("java", JAVA_PACKAGE)
 
 
 def class_path() -> str:

@@ -23,13 +23,13 @@ from typing import Self
 from kafka import KafkaAdminClient, TopicPartition
 
 from tests.broker.credentials import Credentials
-from tests.broker.jars import class_path, java
+from tests.broker.jars import JAVA_PACKAGE, Unavailable, class_path, java
 from tests.broker.properties import LISTENERS, MECHANISMS, server_properties
 
 __all__ = ["Broker"]
 
 FIRST_PORT, PORTS = 10_000, 10
-START_S = 60
+START_S = 120
 STOP_S = 20
 JVM = ("-Xmx512m", "-XX:+UseSerialGC", "-XX:TieredStopAtLevel=1")
 
@@ -135,7 +135,8 @@ class Broker:
 
     def topic_id(self, name: str) -> uuid.UUID:
         with self.admin() as admin:
-            return admin.describe_topics([name])[0]["topic_id"]
+            (topic,) = admin.describe_topics([name])
+        return uuid.UUID(str(topic["topic_id"]))
 
     def delete_topic(self, name: str) -> None:
         """Returns when the name is free again."""
@@ -163,7 +164,12 @@ class Broker:
         user = f"[name={self.credentials.username},password={self.credentials.password}]"
         for mechanism in MECHANISMS[1:]:
             command += ["--add-scram", f"{mechanism}={user}"]
-        subprocess.run(command, check=True, capture_output=True, timeout=START_S)
+        done = subprocess.run(command, capture_output=True, text=True, timeout=START_S)
+        if "UnsupportedClassVersionError" in done.stderr:
+            raise Unavailable(
+                f"{java()} is too old: the broker needs Java 17; Debian has it in {JAVA_PACKAGE}"
+            )
+        assert done.returncode == 0, f"the broker's folder could not be formatted: {done.stdout}{done.stderr}"
 
     def _answers(self) -> bool:
         """A bare connection first: a client that finds nobody leaves its thread and sockets behind."""
