@@ -87,3 +87,15 @@ def test_going_on_warns_of_nothing_that_was_there_before(here, capsys):
         log.write('{"id": "h300", "note": "gate"}\n')
     _, document, _ = replay_json(capsys, "--resume")
     assert (document["messages"], document["warnings"]) == (301, [])
+
+
+# A first settings file
+
+
+def test_init_says_at_once_what_of_the_sample_is_doubtful(here, capsys):
+    with (here / "log.jsonl").open("a") as log:
+        log.write('{"note": "gate", "redelivered": "maybe"}\n' + "nonsense\n" * 9)
+    assert main(["init", "--sample", "log.jsonl", "--out", "new.toml"]) == 0
+    malformed, label = capsys.readouterr().err.splitlines()
+    assert "9 of the sample's 310 lines are malformed" in malformed
+    assert '"redelivered" is true / false or 1 / 0 but for 1 of 301 values' in label

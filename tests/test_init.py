@@ -229,6 +229,32 @@ def test_without_a_label_the_file_says_what_follows_and_still_loads(drafted):
     assert "never learned" in remark and '"kept"' in remark
 
 
+@pytest.mark.parametrize("bad", ["maybe", 3, 0.5, ["x"], {"a": 1}])
+def test_an_outcome_with_a_few_bad_values_is_still_found_and_they_are_told(tmp_path, bad):
+    draw = random.Random(3)
+    messages = [
+        {"weekend": n % 7 < 2, "escalated": draw.choice([0, 1, None]), "a": n % 3} for n in range(1_000)
+    ]
+    for n in (100, 500, 900):
+        messages[n]["escalated"] = bad
+    (tmp_path / "log.jsonl").write_bytes(as_lines(messages))
+    doubts = []
+    text = draft(tmp_path / "log.jsonl", tmp_path, doubts.append)
+    remark = remark_before(text, 'label = "escalated"')
+    assert '"escalated" is true / false or 1 / 0 but for 3 of' in remark
+    assert '"weekend"' in remark
+    assert doubts == [doubts[0]] and "would be rejected" in doubts[0]
+
+
+def test_a_nearly_clean_flag_without_a_telling_name_is_told_and_not_taken(drafted):
+    messages = [{"tries": 2 if n == 5 else n % 2, "paid": n % 3 > 0} for n in range(300)]
+    text, settings = drafted(messages)
+    assert settings.message.label == "paid"
+    assert '"tries" is true / false or 1 / 0 but for 1 of 300 values; it was not taken' in remark_before(
+        text, 'label = "paid"'
+    )
+
+
 def test_a_property_called_weight_is_not_taken_for_an_example_weight(drafted):
     messages = [{"weight": n / 7, "importance": 1 + n % 2, "a": n % 3, "y": n % 2 > 0} for n in range(80)]
     text, settings = drafted(messages)
@@ -362,6 +388,9 @@ def test_lines_that_are_no_message_are_told(tmp_path):
     )
     head = draft(path, tmp_path).split("\n\n")[0].replace("\n# ", " ")
     assert "3 lines of the sample would be rejected; the first is message 31 (not a JSON object)" in head
+    assert "3 of the sample's 33 lines are malformed, more than message.max_reject_share = 0.01" in head
+    path.write_bytes(as_lines(courier(400)) + b"[1]\n")
+    assert "max_reject_share" not in draft(path, tmp_path).split("\n\n")[0]
 
 
 def test_the_feed_is_found_from_wherever_the_file_is_put(tmp_path):

@@ -9,7 +9,7 @@ import typer
 
 from stream.cli.exits import INTERRUPTED
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
-from stream.cli.options import AsJson, Changes, Config, StateFolder
+from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
 from stream.cli.screen import (
     Column,
     count,
@@ -21,14 +21,17 @@ from stream.cli.screen import (
     share,
     show_json,
     show_table,
+    visible,
 )
 from stream.cli.stored import show_weights
-from stream.errors import CannotCreate, UsageError
+from stream.errors import BadData, CannotCreate, UsageError
 
 if TYPE_CHECKING:
     from stream.metrics import WindowRow
+    from stream.runs.retracing import Retraced
+    from stream.settings import Settings
 
-__all__ = ["WINDOW_COLUMNS", "add_to", "show_summary", "show_window", "write_new"]
+__all__ = ["WINDOW_COLUMNS", "WindowTable", "add_to", "show_summary", "show_window", "write_new"]
 
 WINDOW_COLUMNS = (
     Column("through", 14),
@@ -60,8 +63,11 @@ def init(
     from stream.runs.init import draft
     from stream.settings import load
 
-    write_new(out, draft(sample, out.parent))
+    doubts: list[str] = []
+    write_new(out, draft(sample, out.parent, doubts.append))
     settings = load(out, environ={})
+    for doubt in doubts:
+        note(f"bedload: {visible(doubt)}")
     fields = [field.name for field in settings.fields]
     if as_json:
         show_json({"settings": str(out), "label": settings.message.label, "fields": fields})
@@ -82,10 +88,19 @@ def replay(
     fresh: Annotated[
         bool, typer.Option("--fresh", help="Start anew in a used state folder; its snapshots stay.")
     ] = False,
+    accept_settings: AcceptSettings = False,
     epochs: Annotated[
         int,
         typer.Option("--epochs", min=1, metavar="N", help="Passes over the log; metrics count the first."),
     ] = 1,
+    journal: Annotated[
+        Path | None,
+        typer.Option(
+            "--journal",
+            metavar="FOLDER",
+            help="State folder of a worker: learn again what it learned, in its order, and compare.",
+        ),
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """Learn over a log once, in order, and leave a snapshot.
@@ -94,16 +109,22 @@ def replay(
     snapshot of what was learned so far."""
     if resume and fresh:
         raise UsageError("--resume goes on and --fresh starts anew: give one of them")
+    if accept_settings and not resume:
+        raise UsageError("--accept-settings is about the settings of a state that is gone on from: give --resume")
     from stream.runs.replay import replay as run_replay
 
     settings = settings_from(config, changes, state)
-    table = None if as_json else _Table()
+    if journal is not None:
+        _retrace(settings, journal, resume, fresh, epochs, as_json)
+        return
+    table = None if as_json else WindowTable()
     with progress_bar("learning") as progress:
         result = run_replay(
             settings,
             settings.resolve(settings.state.folder),
             resume=resume,
             fresh=fresh,
+            accept_settings=accept_settings,
             epochs=epochs,
             on_window=_no_window if table is None else table.add,
             progress=progress,
@@ -122,11 +143,45 @@ def replay(
         raise typer.Exit(INTERRUPTED)
 
 
+def _retrace(settings: Settings, worker: Path, resume: bool, fresh: bool, epochs: int, as_json: bool) -> None:
+    if epochs != 1:
+        raise UsageError("--journal learns what a worker learned, once: leave --epochs out")
+    from stream.runs.retracing import retrace
+
+    table = WindowTable()
+    folder = settings.resolve(settings.state.folder)
+    on_window = _no_window if as_json else table.add
+    found = retrace(settings, folder, worker, resume=resume, fresh=fresh, on_window=on_window)
+    for warning in found.run.warnings:
+        note(f"bedload: {warning}")
+    if as_json:
+        show_json(found.to_json())
+    else:
+        table.begin()
+        show_summary(found.run.to_json())
+    if found.run.interrupted:
+        note("bedload: stopped before the end; --resume goes on from there")
+        raise typer.Exit(INTERRUPTED)
+    if found.differences:
+        raise BadData(
+            f"what was learned here is not what {found.worker_checkpoint} holds; they differ in "
+            f"{', '.join(found.differences)}. The feed, the settings or the release are not what they were"
+        )
+    if not as_json:
+        print(_compared(found))
+
+
+def _compared(found: Retraced) -> str:
+    if found.worker_checkpoint is None:
+        return "the worker has no checkpoint yet to compare with"
+    return f"the same bytes as {found.worker_checkpoint}"
+
+
 def _no_window(row: WindowRow) -> None:
     """Windows are inside the JSON document."""
 
 
-class _Table:
+class WindowTable:
     """Windows as they come, below a heading that waits for the first: an error before it stands alone."""
 
     def __init__(self) -> None:
@@ -174,8 +229,9 @@ def show_summary(result: dict[str, Any]) -> None:
     )
     for reason, rejected in result["rejects_by_reason"].items():
         print(f"  rejected as {reason}: {count(rejected)}")
-    if result["rejected"]:
-        print(f"  they are in {Path(result['snapshot']).parent.parent / 'rejects'}")
+    kept = Path(result["snapshot"]).parent.parent / "rejects"
+    if result["rejected"] and any(kept.iterdir()):
+        print(f"  they are in {kept}")
     print(
         f"{decimal(result['seconds'], 1)} s, {count(round(result['messages_per_s'] or 0))} messages/s, "
         f"{count(result['peak_rss_bytes'] // 1_000_000)} MB of memory at most"

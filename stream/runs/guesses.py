@@ -10,6 +10,7 @@ from typing import Any
 
 from stream.decoding.uses import MAX_QUANTITY, MAX_WEIGHT
 from stream.runs.columns import Column
+from stream.settings import MessagePaths
 
 __all__ = ["FieldGuess", "Role", "guess_field", "guess_roles"]
 
@@ -21,16 +22,24 @@ CODE_HINT = re.compile(r"(^|_)(id|code|no|nr|number|zip|postcode|type|kind|class
 
 FEW_NUMBERS = 50
 """Whole numbers with no more different values than this are taken for codes, not amounts."""
+NEARLY = 0.05
+"""A path with 0 and 1 and no larger share of other values is told as a possible outcome."""
+BAD_LABELS = MessagePaths().max_reject_share
+"""Up to this share it can be the outcome: messages with other values are rejected, and the run goes on."""
 FEW_MESSAGES = 20
 """Below this many messages, different values in each are no sign of an id."""
 
 
 @dataclass(frozen=True, slots=True)
 class Role:
-    """A path for message.id, time, label or weight (None: none found), and a remark for the reader."""
+    """A path for message.id, time, label or weight (None: none found), and a remark for the reader.
+
+    `doubt`: what of the remark needs a look before anything is learned.
+    """
 
     path: str | None
     remark: str
+    doubt: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,7 +56,7 @@ class FieldGuess:
 def guess_roles(columns: Sequence[Column]) -> dict[str, Role]:
     """Which paths look like id, time, label and weight."""
     usable = [column for column in columns if column.values and not _unfit(column)]
-    roles = {"label": _label(usable)}
+    roles = {"label": _label(usable, [column for column in columns if column.values and column.addressable])}
     roles["time"] = _time(usable)
     roles["id"] = _id(
         [column for column in usable if column.path not in (roles["label"].path, roles["time"].path)]
@@ -86,16 +95,44 @@ def _time(columns: Sequence[Column]) -> Role:
     )
 
 
-def _label(columns: Sequence[Column]) -> Role:
+def _label(columns: Sequence[Column], all_columns: Sequence[Column]) -> Role:
     found = []
     for place, column in enumerate(columns):
         if column.types <= {bool, int} and set(column.counts) <= {0, 1}:
             hinted = bool(LABEL_HINT.search(column.last))
             both = column.distinct == 2
             if both or hinted:
-                evidence = 2 * bool(column.missing) + 2 * hinted + (column.types == {bool})
-                found.append((not both, -evidence, not hinted, -place, column.path))
+                found.append((not both, -_evidence(column, column.types), 0, not hinted, -place, column.path))
+    nearly = {}
+    for place, column in enumerate(all_columns):
+        types, odd = _nearly_yes_no(column)
+        if odd:
+            nearly[column.path] = f"but for {odd:,} of {len(column.values):,} values"
+            if odd <= BAD_LABELS * column.messages and LABEL_HINT.search(column.last):
+                found.append((False, -_evidence(column, types), 1, False, -place, column.path))
     found.sort()
+    role = _label_role(columns, [path for *_, path in found])
+    doubts = [
+        f'"{path}" is true / false or 1 / 0 {but}'
+        + (", which would be rejected." if path == role.path else "; it was not taken.")
+        for path, but in list(nearly.items())[:5]
+    ]
+    return Role(role.path, " ".join([role.remark, *doubts]), " ".join(doubts))
+
+
+def _evidence(column: Column, types: frozenset[type]) -> int:
+    return 2 * bool(column.missing) + 2 * bool(LABEL_HINT.search(column.last)) + (types == {bool})
+
+
+def _nearly_yes_no(column: Column) -> tuple[frozenset[type], int]:
+    """Types of the values that an outcome may have, and how many others a path has that is nearly one."""
+    fit = [value for value in column.values if isinstance(value, bool | int) and value in (0, 1)]
+    odd = len(column.values) - len(fit) + column.objects
+    nearly = 0 < odd <= NEARLY * len(column.values) and len(set(fit)) == 2
+    return frozenset(map(type, fit)), odd if nearly else 0
+
+
+def _label_role(columns: Sequence[Column], found: list[str]) -> Role:
     absent = "No path holds true / false or 1 / 0: messages would be scored, never learned."
     worded = [
         f'"{column.path}"'
@@ -104,7 +141,7 @@ def _label(columns: Sequence[Column]) -> Role:
     ]
     if not found and worded:
         absent += f" Two texts stand in {', '.join(worded[:5])}; a label must be true, false, 1 or 0."
-    return _role([path for *_, path in found], "true / false or 1 / 0", absent)
+    return _role(found, "true / false or 1 / 0", absent)
 
 
 def _weight(columns: Sequence[Column]) -> Role:

@@ -6,13 +6,14 @@ import glob
 import json
 import re
 import textwrap
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import Any
 
 from stream.runs.columns import Column, columns_of
 from stream.runs.guesses import FieldGuess, guess_field, guess_roles
 from stream.runs.sample import Sample, read_sample
+from stream.settings import MessagePaths
 from stream.settings.keys import FIELD_KINDS, Key, known_keys
 from stream.sources.files import STANDARD_INPUT
 
@@ -28,6 +29,9 @@ SECTIONS = {
     "learner": "How weights are learned.",
     "state": "What is kept on disk, and what bounds the memory.",
     "metrics": "Metrics of predictions made before each update.",
+    "worker": "How `bedload work` lives: what it does after so many seconds, and how it is watched.",
+    "rejects": "What becomes of rejected messages.",
+    "scores": "Scores out, of `bedload work`: one for each message, from before its update.",
 }
 ACTIVE = {
     "feed.kind",
@@ -45,20 +49,24 @@ EXAMPLES = {
     "learner.horizon": 10_000_000,
     "state.idle_after": 10_000_000,
     "state.max_live": 20_000_000,
+    "worker.metrics_port": 9_100,
+    "worker.unavailable_after_s": 600,
 }
 """Shown, commented out, for keys without a default."""
 
 
-def draft(sample: Path, folder: Path | None = None) -> str:
+def draft(sample: Path, folder: Path | None = None, doubt: Callable[[str], None] = lambda text: None) -> str:
     """The text of a settings file that fits the messages of `sample`, ready to run.
 
     `folder`: where the file will be put (the working folder by default); the feed's path is written relative
-    to it. Raises InputMissing, NoPermission or FileTrouble when the sample cannot be read, BadData when it
-    holds no message.
+    to it. `doubt` is told what a person should look at before learning. Raises InputMissing, NoPermission
+    or FileTrouble when the sample cannot be read, BadData when it holds no message.
     """
     read = read_sample(sample)
     columns, maps = columns_of(read.messages)
     roles = guess_roles(columns)
+    for text in filter(None, [_too_many_bad(read), *(role.doubt for role in roles.values())]):
+        doubt(text)
     taken = {role.path for role in roles.values()}
     label = next((column for column in columns if column.path == roles["label"].path), None)
     guesses = [
@@ -76,6 +84,9 @@ def draft(sample: Path, folder: Path | None = None) -> str:
         _section("learner"),
         _section("state"),
         _section("metrics", {"metrics.slice_by": (None, _slice_remark(guesses, columns))}),
+        _section("worker"),
+        _section("rejects"),
+        _section("scores"),
     ]
     return "\n\n".join(parts) + "\n"
 
@@ -99,7 +110,20 @@ def _head(sample: Path, read: Sample) -> str:
         lines.append(
             f"{read.bad_lines:,} lines of the sample would be rejected; the first is {read.first_bad}."
         )
+        lines += filter(None, [_too_many_bad(read)])
     return _remark(*lines)
+
+
+def _too_many_bad(read: Sample) -> str:
+    """What to say where a run over such lines would stop, or nothing."""
+    allowed = MessagePaths().max_reject_share
+    lines = read.bad_lines + len(read.messages)
+    if read.bad_lines <= allowed * lines:
+        return ""
+    return (
+        f"{read.bad_lines:,} of the sample's {lines:,} lines are malformed, more than "
+        f"message.max_reject_share = {allowed:g} allows: a run would stop. Mend the log, or raise that share."
+    )
 
 
 def _section(name: str, guessed: dict[str, tuple[Any, str]] | None = None) -> str:
