@@ -33,7 +33,7 @@ HOMES = {
     "kafka": "stream/topics/client.py",
     "msgspec": (
         "stream/decoding/",
-        "stream/rejects.py",
+        "stream/reject_file.py",
         "stream/runs/outbox.py",
         "stream/runs/sample.py",
         "stream/runs/scoring.py",

@@ -49,6 +49,7 @@ def test_a_rejected_line_is_kept_so_that_it_can_be_repaired(tmp_path: Path) -> N
         {
             "number": 1,
             "file": "day1.jsonl",
+            "partition": 0,
             "offset": 103,
             "reason": "bad_json",
             "detail": "not JSON: byte 9",
@@ -57,6 +58,7 @@ def test_a_rejected_line_is_kept_so_that_it_can_be_repaired(tmp_path: Path) -> N
         {
             "number": 2,
             "file": "day1.jsonl",
+            "partition": 0,
             "offset": 114,
             "reason": "bad_utf8",
             "detail": "the line is not UTF-8",
@@ -65,6 +67,7 @@ def test_a_rejected_line_is_kept_so_that_it_can_be_repaired(tmp_path: Path) -> N
         {
             "number": 3,
             "file": "day1.jsonl",
+            "partition": 0,
             "offset": 116,
             "reason": "line_too_long",
             "detail": "the line is over the limit",

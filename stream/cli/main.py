@@ -11,7 +11,7 @@ from typing import Annotated
 
 import typer
 
-from stream.cli import demo, learning, scoring, simulating, stored
+from stream.cli import demo, learning, rejecting, scoring, simulating, stored, working
 from stream.cli.exits import exit_code_of
 
 __all__ = ["app", "main", "run"]
@@ -41,13 +41,13 @@ def bedload(
 ) -> None:
     """Learn a sparse model of a yes/no outcome from a feed of messages, in memory that stays bounded.
 
-    Exit codes: 0 fine, 64 usage, 65 bad data, 66 input missing, 70 bug, 73 cannot create,
-    74 input/output error, 75 state folder in use, 77 no permission, 78 bad settings or state that
+    Exit codes: 0 fine, 64 usage, 65 bad data, 66 input missing, 69 service unavailable, 70 bug, 73 cannot
+    create, 74 input/output error, 75 state folder in use, 77 no permission, 78 bad settings or state that
     does not match them.
     """
 
 
-for commands in (demo, learning, scoring, stored, simulating):
+for commands in (demo, learning, working, scoring, stored, rejecting, simulating):
     commands.add_to(app)
 
 
