@@ -15,7 +15,7 @@ from numba.core import config as numba_config
 from numba.core import types
 from numba.extending import intrinsic
 
-__all__ = ["kernel", "load_u64", "prefetch", "small", "store_u64", "trailing_zeros"]
+__all__ = ["compiled_before", "kernel", "load_u64", "prefetch", "small", "store_u64", "trailing_zeros"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 _intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
@@ -54,6 +54,14 @@ def _compile(function: F, **options: Any) -> F:
     finally:
         config.CACHE_DIR = before
     return compiled
+
+
+def compiled_before(module: str) -> bool:
+    """Whether a kernel of the file `module`.py was compiled and kept on disk, perhaps by another process.
+
+    numba makes its folders when kernels are declared, so that only files in them tell.
+    """
+    return any(Path(_cache_folder()).glob(f"*/{module}.*.nbi"))
 
 
 def kernel(function: F) -> F:

@@ -1,6 +1,10 @@
 """What a newcomer gets wrong is said at once: settings that learn nothing, paths that no message has."""
 
 import json
+import os
+import subprocess
+import sys
+from pathlib import Path
 
 import pytest
 
@@ -34,7 +38,8 @@ fields = [{path = "note", kind = "words"}, {path = "stop", kind = "category"}]
 def replay_json(capsys, *arguments):
     code = main(["replay", "--json", *arguments])
     out, err = capsys.readouterr()
-    return code, json.loads(out) if out else None, err
+    said = [line for line in err.splitlines(keepends=True) if "compiling, the first time" not in line]
+    return code, json.loads(out) if out else None, "".join(said)
 
 
 # Settings that learn nothing
@@ -99,3 +104,24 @@ def test_init_says_at_once_what_of_the_sample_is_doubtful(here, capsys):
     malformed, label = capsys.readouterr().err.splitlines()
     assert "9 of the sample's 310 lines are malformed" in malformed
     assert '"redelivered" is true / false or 1 / 0 but for 1 of 301 values' in label
+
+
+# The first run
+
+
+def test_the_first_run_says_that_it_compiles_and_the_second_does_not(here):
+    (here / "doubling.py").write_text(
+        "from stream.kernel import kernel\n@kernel\ndef twice(x): return 2 * x\n"
+    )
+    code = (
+        "import doubling; from stream.cli.compiling import note_compiling; "
+        "note_compiling('doubling'); doubling.twice(1)"
+    )
+    paths = ":".join([str(here), *filter(None, sys.path), str(Path(__file__).parents[1])])
+    call = [sys.executable, "-c", code]
+    environment = {**os.environ, "NUMBA_CACHE_DIR": str(here / "cache"), "PYTHONPATH": paths}
+    said = [
+        subprocess.run(call, env=environment, capture_output=True, text=True, check=True).stderr
+        for _ in range(2)
+    ]
+    assert said == ["bedload: compiling, the first time only (about a minute)\n", ""]

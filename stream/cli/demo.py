@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from stream.cli.compiling import note_compiling
 from stream.cli.learning import WINDOW_COLUMNS, show_summary, show_window
 from stream.cli.options import AsJson
 from stream.cli.scoring import SCORE_COLUMNS, show_explanation, show_scores
@@ -57,6 +58,7 @@ def demo(
     from stream.snapshots import read_snapshot
 
     tell: Callable[[str], object] = (lambda text: None) if as_json else print
+    note_compiling("ftrl")
     _simulate(folder, messages, tell)
     settings = _draft(folder, tell)
     result = _learn(settings, folder, as_json, tell)

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from stream.cli.compiling import note_compiling
 from stream.cli.exits import INTERRUPTED
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
 from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
@@ -101,14 +102,6 @@ def replay(
             help="State folder of a worker: learn again what it learned, in its order, and compare.",
         ),
     ] = None,
-    journal: Annotated[
-        Path | None,
-        typer.Option(
-            "--journal",
-            metavar="FOLDER",
-            help="State folder of a worker: learn again what it learned, in its order, and compare.",
-        ),
-    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """Learn over a log once, in order, and leave a snapshot.
@@ -122,6 +115,7 @@ def replay(
     from stream.runs.replay import replay as run_replay
 
     settings = settings_from(config, changes, state)
+    note_compiling(settings.learner.method.replace("-", "_"))
     if journal is not None:
         _retrace(settings, journal, resume, fresh, epochs, as_json)
         return
@@ -149,40 +143,6 @@ def replay(
         cure = "" if "-" in settings.feed.paths else "; `bedload replay --resume` goes on from there"
         note(f"bedload: stopped before the end{cure}")
         raise typer.Exit(INTERRUPTED)
-
-
-def _retrace(settings: Settings, worker: Path, resume: bool, fresh: bool, epochs: int, as_json: bool) -> None:
-    if epochs != 1:
-        raise UsageError("--journal learns what a worker learned, once: leave --epochs out")
-    from stream.runs.retracing import retrace
-
-    table = WindowTable()
-    folder = settings.resolve(settings.state.folder)
-    on_window = _no_window if as_json else table.add
-    found = retrace(settings, folder, worker, resume=resume, fresh=fresh, on_window=on_window)
-    for warning in found.run.warnings:
-        note(f"bedload: {warning}")
-    if as_json:
-        show_json(found.to_json())
-    else:
-        table.begin()
-        show_summary(found.run.to_json())
-    if found.run.interrupted:
-        note("bedload: stopped before the end; --resume goes on from there")
-        raise typer.Exit(INTERRUPTED)
-    if found.differences:
-        raise BadData(
-            f"what was learned here is not what {found.worker_checkpoint} holds; they differ in "
-            f"{', '.join(found.differences)}. The feed, the settings or the release are not what they were"
-        )
-    if not as_json:
-        print(_compared(found))
-
-
-def _compared(found: Retraced) -> str:
-    if found.worker_checkpoint is None:
-        return "the worker has no checkpoint yet to compare with"
-    return f"the same bytes as {found.worker_checkpoint}"
 
 
 def _retrace(settings: Settings, worker: Path, resume: bool, fresh: bool, epochs: int, as_json: bool) -> None:

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.options import AsJsonLines, Config, Name, StateFolder
 from stream.cli.screen import Column, count, decimal, heading, line, note, visible
@@ -168,7 +169,9 @@ def _scorer(logs: list[str] | None, config: Path | None, state: Path | None, nam
     from stream.runs.scoring import Scorer
 
     settings = None if config is None else settings_from(config, None)
-    return Scorer(read_snapshot_of(config, state, name), logs or ["-"], settings)
+    scorer = Scorer(read_snapshot_of(config, state, name), logs or ["-"], settings)
+    note_compiling("rows")
+    return scorer
 
 
 def _tell_rejects(scorer: Scorer) -> None:
