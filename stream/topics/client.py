@@ -6,7 +6,8 @@ Checked against kafka-python 3.0.12, whose ways the rest of the house need not k
 - A client that fails to start leaves its thread and sockets behind: kept at hand and closed.
 - Parsing records one by one in Python costs more than everything else together: whole batches are taken and
   unpacked by a kernel (`_WholeBatch`); CRC, transactions and offsets stay the library's business.
-- Its debugging lines show requests and configuration, with passwords and records: they are dropped.
+- Its debugging lines show requests and configuration, with passwords and records: they are off.
+- A refusal of user or password mostly looks like a lost connection: see `translated`.
 """
 
 from __future__ import annotations
@@ -34,13 +35,6 @@ BATCHES_IN_POLL = 64
 BOOTSTRAP_MS = 3_000
 CALL_MS = 2_000
 METADATA_MS = 10_000
-SHOW_REQUESTS = (
-    "kafka.net.connection",
-    "kafka.protocol.parser",
-    "kafka.admin.client",
-    "kafka.producer.kafka",
-    "kafka.cluster",
-)
 
 
 class Away(Exception):
@@ -81,13 +75,14 @@ class _Troubles(logging.Handler):
         self.last = ""
 
     def emit(self, record: logging.LogRecord) -> None:
-        self.last = record.getMessage()
+        text = record.getMessage()
+        if " not ready" not in text and not text.startswith("Bootstrap failed"):  # say nothing of the cause
+            self.last = text
 
 
 TROUBLES = _Troubles()
 logging.getLogger("kafka").addHandler(TROUBLES)
-for _name in SHOW_REQUESTS:
-    logging.getLogger(_name).addFilter(lambda record: record.levelno >= logging.INFO)
+logging.getLogger("kafka").setLevel(logging.INFO)
 
 
 @contextmanager
@@ -99,8 +94,9 @@ def translated(feed: Feed) -> Iterator[None]:
         raise OutOfRange({tp.partition: offset for tp, offset in error.args[0].items()}) from None
     except errors.LogTruncationError as error:
         raise BadSettings(
-            f"topic {feed.topic}: the log was cut back behind what was read already ({error}): records that "
-            "were learned are gone and others stand in their place. Begin again with a fresh state folder"
+            f"topic {feed.topic}: the log was cut back behind what was read already, or the topic was "
+            f"deleted and made again ({error}): records that were learned are gone and others stand in their "
+            "place. Begin again with a fresh state folder"
         ) from None
     except (errors.CorruptRecordError, errors.InvalidRecordError) as error:
         raise BadData(
@@ -119,7 +115,10 @@ def translated(feed: Feed) -> Iterator[None]:
     except (errors.UnsupportedSaslMechanismError, errors.KafkaConfigurationError) as error:
         raise BadSettings(f"{', '.join(feed.servers)}: {error}; check [feed]") from None
     except (errors.KafkaError, OSError) as error:
-        raise Away(f"{type(error).__name__}: {error}; {TROUBLES.last}") from None
+        cause = TROUBLES.last
+        if feed.sasl and "socket disconnected" in cause:  # the answer is lost when a closed socket follows it
+            cause += " (a user or password that the broker refuses looks like this too)"
+        raise Away(f"{type(error).__name__}: {error}; {cause}") from None
 
 
 class Client:

@@ -68,6 +68,7 @@ class Reader:
         self._skip_gaps = skip_gaps
         self._closing = False
         self._missing_since: float | None = None
+        self._commit_after_s = 0.0
         self._assigned: set[int] = set()
         self._thread = threading.Thread(target=self._run, name="topic reader", daemon=True)
 
@@ -196,13 +197,19 @@ class Reader:
         self._commit(client)
 
     def _commit(self, client: Client) -> None:
+        """Commits what is to be; where that fails it is tried again later, for nothing relies on it."""
+        offsets = self.commit
+        if not offsets or self._feed.group is None or time.monotonic() < self._commit_after_s:
+            return
+        try:
+            client.commit(self._feed.group, offsets)
+        except Exception as error:
+            self._commit_after_s = time.monotonic() + LOOK_S
+            log.warning("offsets could not be committed to group %s yet: %s", self._feed.group, error)
+            return
         with self.lock:
-            offsets, self.commit = self.commit, None
-        if offsets and self._feed.group is not None:
-            try:
-                client.commit(self._feed.group, offsets)
-            except Exception as error:  # nothing relies on it
-                log.warning("offsets could not be committed to group %s: %s", self._feed.group, error)
+            if self.commit is offsets:
+                self.commit = None
 
     def _prepare(self, client: Client) -> bool:
         """Tells the client what to fetch next; False where nothing is to be fetched for now."""
