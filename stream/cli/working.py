@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.learning import WindowTable, show_summary
 from stream.cli.options import AsJson, Changes, Config, StateFolder
@@ -49,6 +50,7 @@ def work(
     from stream.runs.work import work as run_work
 
     settings = settings_from(config, changes, state)
+    note_compiling(settings.learner.method.replace("-", "_"))
     table = WindowTable()
     result = run_work(
         settings,
