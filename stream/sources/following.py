@@ -21,7 +21,7 @@ from stream.message import Block, Position
 from stream.sources.files import STANDARD_INPUT, LogFile, matching_files
 from stream.sources.growing import CURE, GrowingFile
 from stream.sources.lines import empty_block
-from stream.sources.recognising import Recognition, has_more
+from stream.sources.recognising import Recognition, has_more, is_blank
 
 __all__ = ["FollowSource"]
 
@@ -234,7 +234,7 @@ class FollowSource:
             if mark is not None:
                 if mark["size"] is not None and has_more(found.path, mark["size"]):
                     raise _grown(found.path, mark["size"])
-            elif self._file is not None and found.name < self._file.name:
+            elif self._file is not None and found.name < self._file.name and not is_blank(found.path):
                 raise BadSettings(
                     f"{found.name} is new and sorts before {self._file.name}, which is being read, so it "
                     f"would be passed over. Give it a name that sorts after every file read so far. {CURE}"

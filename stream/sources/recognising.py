@@ -16,7 +16,7 @@ from stream.sources.files import LogFile, matching_files
 from stream.sources.lines import HEAD_BYTES, digest_of
 from stream.sources.opening import open_stream
 
-__all__ = ["Recognition", "has_more"]
+__all__ = ["Recognition", "has_more", "is_blank"]
 
 Mark = Mapping[str, Any]
 
@@ -34,6 +34,12 @@ def has_more(path: Path, offset: int) -> bool:
             return bool(file.read(HEAD_BYTES).strip())
     except OSError:
         return False
+
+
+def is_blank(path: Path) -> bool:
+    """Whether a file holds nothing but a few blanks."""
+    head = _head(path)
+    return len(head) < HEAD_BYTES and not head.strip()
 
 
 class Recognition:
