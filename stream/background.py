@@ -52,7 +52,12 @@ class BackgroundCheckpoints:
         self._thread = threading.Thread(
             target=self._write, args=(messages, view, about), name="checkpoint", daemon=True
         )
-        self._thread.start()
+        try:
+            self._thread.start()
+        except BaseException:
+            self._thread = None
+            view.close()
+            raise
 
     def done(self) -> Path | None:
         """The checkpoint that became durable since the last call, if any; raises what its writing raised."""
@@ -67,6 +72,12 @@ class BackgroundCheckpoints:
         if self._trouble is not None:
             raise self._trouble
         return self._path
+
+    def close(self) -> None:
+        """Waits until nothing is under way: the folder may then be let go. What went wrong is not raised."""
+        if self._thread is not None:
+            self._thread.join()
+            self._thread = None
 
     def _write(self, messages: int, view: View, about: Mapping[str, Any]) -> None:
         try:

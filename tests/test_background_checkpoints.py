@@ -81,7 +81,7 @@ real_gather = Table._gather
     step=st.integers(0, 40),
     period=st.sampled_from([7, 64]),
 )
-@options(max_examples=12)
+@options(max_examples=8)
 def test_what_is_written_is_the_moment_of_the_beginning(method, bounds, seed, begin, step, period):
     settings, stream = settings_of(method, **bounds), random_stream(seed, 400)
     with names_swept_every(period), pytest.MonkeyPatch.context() as patch:
@@ -308,6 +308,32 @@ def test_learning_does_not_wait_for_a_disk_that_hangs(tmp_path, monkeypatch):
         background.begin(300, model.begin_saving(), {})
     hangs.set()
     assert background.wait() == tmp_path / "000000000000200"
+
+
+def test_closing_waits_for_the_writer_and_says_nothing_more(tmp_path, monkeypatch):
+    model, _, checkpoints, background = begun(tmp_path)
+    slowly(monkeypatch)
+    background.begin(200, model.begin_saving(), {})
+    background.close()
+    assert checkpoints.newest().messages == 200
+    view = model.begin_saving()
+    background.begin(201, View(view.rows, lambda: 1 // 0, view.close), {})
+    background.close()
+    assert not background.busy and background.done() is None
+
+
+def test_where_no_thread_can_be_started_nothing_is_under_way(tmp_path, monkeypatch):
+    model, _, checkpoints, background = begun(tmp_path)
+
+    def refuse(thread):
+        raise RuntimeError("can't start new thread")
+
+    with monkeypatch.context() as patch:
+        patch.setattr(threading.Thread, "start", refuse)
+        with pytest.raises(RuntimeError, match="new thread"):
+            background.begin(200, model.begin_saving(), {})
+    assert not background.busy
+    assert_next_is_right(model, background, checkpoints)
 
 
 @given(length=st.integers(0, 40), cuts=st.sets(st.integers(0, 40), max_size=4))
