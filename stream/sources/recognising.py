@@ -83,7 +83,7 @@ class Recognition:
         return [
             path.name
             for path in self._moved_aside(own)
-            if _written_ns(path) > since_ns and self.known(path, marks) is None
+            if _written_ns(path) > since_ns and not is_blank(path) and self.known(path, marks) is None
         ]
 
     @staticmethod
