@@ -45,7 +45,7 @@ class NameLedger:
 
     def record(self, batch: Batch, entries: npt.NDArray[np.int64]) -> None:
         """Takes down the texts of the given entries of a batch."""
-        texts = memoryview(batch.texts)
+        texts = batch.texts.data
         starts = batch.text_starts[entries]
         ends = starts + batch.text_lengths[entries]
         for address, start, end in zip(
