@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-__all__ = ["AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder"]
+__all__ = ["AcceptSettings", "AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder"]
 
 Config = Annotated[
     Path | None,
@@ -32,4 +32,11 @@ Name = Annotated[
 AsJson = Annotated[bool, typer.Option("--json", help="One JSON document on standard output.")]
 AsJsonLines = Annotated[
     bool, typer.Option("--json", help="JSON Lines on standard output, one document a message.")
+]
+AcceptSettings = Annotated[
+    bool,
+    typer.Option(
+        "--accept-settings",
+        help="Go on with other settings than before: [learner], bounds of [state], more fields or crosses.",
+    ),
 ]

@@ -9,7 +9,7 @@ import typer
 from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.learning import WindowTable, show_summary
-from stream.cli.options import AsJson, Changes, Config, StateFolder
+from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
 from stream.cli.screen import note, show_json
 from stream.errors import UsageError
 
@@ -39,6 +39,7 @@ def work(
             help="Where messages were removed before they were read: refuse to start, or skip them.",
         ),
     ] = "refuse",
+    accept_settings: AcceptSettings = False,
     as_json: AsJson = False,
 ) -> None:
     """Learn from a topic, or a log that grows, for as long as it lasts.
@@ -57,6 +58,7 @@ def work(
         settings.resolve(settings.state.folder),
         until_end=until_end,
         on_gap="skip" if on_gap == "skip" else "refuse",
+        accept_settings=accept_settings,
         on_window=_no_window if as_json else table.add,
         warn=lambda text: note(f"bedload: {text}"),
     )

@@ -1,5 +1,6 @@
 """How weights are updated: one interface over FTRL-Proximal and truncated gradient."""
 
 from stream.learners.learner import Learner
+from stream.learners.rebuilding import Rows, rebuild
 
-__all__ = ["Learner"]
+__all__ = ["Learner", "Rows", "rebuild"]

@@ -28,7 +28,7 @@ from stream.runs.presence import Presence
 from stream.settings import Settings
 from stream.snapshots import About
 
-__all__ = ["LearningRun"]
+__all__ = ["LearningRun", "pinned"]
 
 BLOCK = 1024
 """Messages in a block at most: enough to spread the cost of a call, few enough to stay in the cache."""
@@ -39,7 +39,8 @@ OnScored = Callable[[Block, npt.NDArray[np.int64], npt.NDArray[np.float64]], Non
 class LearningRun:
     """Everything that a checkpoint holds, and the step that moves it on by one block.
 
-    `messages`: read over all epochs, rejected ones too. Metrics and rejects count the first epoch only.
+    `accepted`: after how many messages settings changed, and those before. `messages`: read over all epochs,
+    rejected ones too. Metrics and rejects count the first epoch only.
     """
 
     def __init__(
@@ -66,10 +67,12 @@ class LearningRun:
         self.progress = Progress(settings.metrics.window, self._slice_path is not None)
         self.messages = self.tokens = self.epoch = 0
         self.position: Mapping[str, Any] | None = None
+        self.accepted: list[dict[str, Any]] = []
         if saved is not None:
             self._check_pinned(saved)
             self.messages, self.tokens, self.epoch = saved["messages"], saved["tokens"], saved["epoch"]
             self.position = saved["position"]
+            self.accepted = saved.get("accepted", [])
         self.rejects = RejectLog(
             rejects_folder,
             settings.message,
@@ -137,11 +140,12 @@ class LearningRun:
         return {
             "program": version("bedload"),
             "fingerprint": self._settings.fingerprint(),
-            "pinned": _pinned(self._settings),
+            "pinned": pinned(self._settings),
             "messages": self.messages,
             "tokens": self.tokens,
             "epoch": self.epoch,
             "position": self.position,
+            "accepted": self.accepted,
             "rejects": self.rejects.state(),
         }
 
@@ -170,16 +174,16 @@ class LearningRun:
 
     def _check_pinned(self, saved: Mapping[str, Any]) -> None:
         lines = fingerprint_difference(self._settings.fingerprint(), saved["fingerprint"])
-        lines += differences(_pinned(self._settings), saved["pinned"])
+        lines += differences(pinned(self._settings), saved["pinned"])
         if lines:
             raise BadSettings(
                 "the checkpoint was made with other settings (here: now; there: in the checkpoint):\n  "
                 + "\n  ".join(lines)
-                + "\nset them back to go on, or start again with --fresh"
+                + "\nset them back to go on, take them with --accept-settings, or start again with --fresh"
             )
 
 
-def _pinned(settings: Settings) -> dict[str, Any]:
+def pinned(settings: Settings) -> dict[str, Any]:
     """Settings that the state is made of, beside the fingerprint."""
     state = settings.state.model_dump(mode="json")
     bounds = ("admit_after", "admission_bytes", "admission_halved_every", "idle_after", "max_live")

@@ -9,6 +9,7 @@ from stream.checkpoints import Checkpoints
 from stream.errors import BadSettings, CannotCreate
 from stream.message import Source
 from stream.metrics import WindowRow
+from stream.runs.accepting import accept_settings
 from stream.runs.learning import LearningRun
 from stream.runs.pacing import Pacer
 from stream.settings import Settings
@@ -34,12 +35,19 @@ def refuse_used(state: StateFolder, snapshots: Snapshots, *, resume: bool, fresh
 
 
 def begin(
-    settings: Settings, state: StateFolder, checkpoints: Checkpoints, *, journalled: bool, **options: Any
+    settings: Settings,
+    state: StateFolder,
+    checkpoints: Checkpoints,
+    *,
+    journalled: bool,
+    accept: bool = False,
+    **options: Any,
 ) -> tuple[LearningRun, list[str], int | None]:
     """A run, gone on with from the newest checkpoint where there is one; warnings; messages it had then.
 
     `journalled`: whether the run keeps or follows an order journal; BadSettings where the checkpoint is of
-    the other kind. `options`: for LearningRun.
+    the other kind. `accept`: whether the settings may differ from the checkpoint's; it is then written anew
+    as one of these. `options`: for LearningRun.
     """
     saved = checkpoints.newest()
     if saved is None:
@@ -51,9 +59,12 @@ def begin(
             f"{saved.path} was left by `bedload {by}`, and only that goes on from it: who else reads the "
             "feed keeps the place in another way. Give another state.folder"
         )
-    run = LearningRun(settings, state.rejects, saved.about, **options)
-    run.restore(saved.arrays)
-    return run, list(saved.moved_aside), run.messages
+    found, changes = accept_settings(settings, saved) if accept else (saved, [])
+    run = LearningRun(settings, state.rejects, found.about, **options)
+    run.restore(found.arrays)
+    if changes:
+        checkpoints.write(run.messages, run.state(), run.about())
+    return run, [*saved.moved_aside, *changes], run.messages
 
 
 def learn(

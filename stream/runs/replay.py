@@ -31,6 +31,7 @@ def replay(
     *,
     resume: bool = False,
     fresh: bool = False,
+    accept_settings: bool = False,
     epochs: int = 1,
     on_window: OnWindow = lambda row: None,
     progress: OnProgress = lambda fraction, messages: None,
@@ -38,7 +39,8 @@ def replay(
     """Learns over the log of `settings.feed`, keeping state in `folder`.
 
     `resume`: go on from the newest whole checkpoint, if there is one; `fresh`: start anew; without either
-    a used state folder is refused. `epochs`: passes over the log (>= 1). `on_window` is given each
+    a used state folder is refused. `accept_settings`: go on with settings other than the checkpoint's
+    (docs/settings.md says which can change). `epochs`: passes over the log (>= 1). `on_window` is given each
     window's row, `progress` the share of the log read (None where unknown) and the messages so far.
     SIGINT and SIGTERM end the run after the block at hand, with a checkpoint and a snapshot; a second
     one ends it at once. Raises what the stages raise; the last checkpoint is then whole.
@@ -49,7 +51,9 @@ def replay(
         checkpoints = Checkpoints(state.checkpoints, settings.state.keep_checkpoints)
         snapshots = Snapshots(state.snapshots, settings.state.keep_snapshots)
         refuse_used(state, snapshots, resume=resume, fresh=fresh)
-        run, warnings, resumed_from = begin(settings, state, checkpoints, journalled=False)
+        run, warnings, resumed_from = begin(
+            settings, state, checkpoints, journalled=False, accept=accept_settings
+        )
         pacer = Pacer(run, settings, checkpoints)
         windows: list[WindowRow] = []
 

@@ -13,6 +13,7 @@ from stream.errors import BadSettings
 from stream.journal import FILE_NAME
 from stream.message import LiveSource
 from stream.runs.feeds import live_source
+from stream.runs.learning import LearningRun
 from stream.runs.loop import OnWindow, begin, learn, refuse_used
 from stream.runs.pacing import Pacer
 from stream.runs.result import RunResult, result_of
@@ -72,6 +73,7 @@ def retrace(
         snapshots = Snapshots(state.snapshots, settings.state.keep_snapshots)
         refuse_used(state, snapshots, resume=resume, fresh=fresh)
         run, warnings, resumed_from = begin(settings, state, checkpoints, journalled=True)
+        _refuse_changed(run, found)
         pacer = Pacer(run, settings, checkpoints, most)
         place = FollowedSource(
             source or live_source(settings, known=_source_position(found)), worker / FILE_NAME
@@ -109,6 +111,19 @@ def retrace(
         own = checkpoints.newest_manifest()
         assert own is not None
         return Retraced(result, found[0], _differences(own[1], found[1]))
+
+
+def _refuse_changed(run: LearningRun, found: tuple[Path, Mapping[str, Any]] | None) -> None:
+    """What was learned under settings that changed on the way cannot be learned again under the last ones."""
+    accepted = [] if found is None else found[1]["about"].get("accepted", [])
+    if accepted != run.accepted:
+        since = accepted[-1]["messages"] if accepted else 0
+        raise BadSettings(
+            f"the worker's settings changed last after {since:,} messages (--accept-settings), and what it "
+            "learned before cannot be learned again under the present ones. Copy its checkpoint "
+            f"{since:015d} or a later one, and its rejects/, into the folder that --state names, and go on "
+            "from there with --resume"
+        )
 
 
 def _source_position(found: tuple[Path, Mapping[str, Any]] | None) -> dict[str, Any] | None:

@@ -50,6 +50,7 @@ def work(
     *,
     until_end: bool = False,
     on_gap: OnGap = "refuse",
+    accept_settings: bool = False,
     on_window: OnWindow = lambda row: None,
     warn: Callable[[str], None] = lambda text: None,
     source: LiveSource | None = None,
@@ -59,8 +60,9 @@ def work(
 
     Goes on from the newest whole checkpoint and the journal behind it, where there are some. `until_end`:
     stops at the end of what was there at the start. `on_gap`: what to do where messages were removed before
-    they were read. `on_window` is given each window's row, `warn` a line on what a person should know.
-    `source`, `connect`: in place of the feed's own and its cluster's.
+    they were read. `accept_settings`: go on with settings other than the checkpoint's (docs/settings.md
+    says which can change). `on_window` is given each window's row, `warn` a line on what a person should
+    know. `source`, `connect`: in place of the feed's own and its cluster's.
 
     A signal ends it after the block at hand, with a checkpoint and a snapshot. Raises TryLater where another
     process holds the folder, and what the stages raise; the last checkpoint is then whole.
@@ -71,7 +73,7 @@ def work(
         place = JournalledSource(
             source or live_source(settings, on_gap=on_gap, stopping=lambda: bool(stopping)), folder
         )
-        worker = _Worker(settings, state, place, stopping, connect)
+        worker = _Worker(settings, state, place, stopping, connect, accept_settings)
         try:
             for warning in (*_entry_delay(settings), *worker.warnings):
                 warn(warning)
@@ -93,6 +95,7 @@ class _Worker:
         source: JournalledSource,
         stopping: list[int],
         connect: Callable[[], Publisher] | None,
+        accept: bool,
     ) -> None:
         self._settings, self._source, self._stopping = settings, source, stopping
         keep = settings.state
@@ -115,6 +118,7 @@ class _Worker:
             state,
             checkpoints,
             journalled=True,
+            accept=accept,
             reject_sink=self._outbox if rejects_out else None,
             on_scored=self._outbox.scored if self._outbox is not None and scores_out else None,
         )
