@@ -294,6 +294,32 @@ def test_a_renamed_log_is_read_to_its_end_and_the_new_one_follows(tmp_path, star
     following.source.close()
 
 
+def test_the_end_of_what_was_there_is_not_taken_for_reached_in_a_longer_file_of_the_same_name(tmp_path):
+    log = tmp_path / "app.log"
+    log.write_bytes(b"1\n2\n3\n4\n")
+    following = Following(tmp_path, "app.log")
+    following.look()
+    log.rename(tmp_path / "app.log.1")
+    log.write_bytes(b"5\n")
+    resumed = following.again(tmp_path, "app.log")
+    assert not resumed.source.at_end()
+    assert resumed.wait() == [b"5"]
+    assert resumed.source.at_end()
+    add(log, b"6\n")
+    resumed.source.close()
+
+
+def test_the_end_is_reached_though_the_log_grows_for_ever(tmp_path, start):
+    log = tmp_path / "app.log"
+    log.write_bytes(b"1\n2\n")
+    following = start()
+    following.source.read(1)
+    assert not following.source.at_end()
+    add(log, b"3\n4\n")
+    following.source.read(1)
+    assert following.source.at_end()
+
+
 def test_a_log_that_was_rotated_twice_while_nobody_read_is_refused(tmp_path, start):
     log = tmp_path / "app.log"
     log.write_bytes(b"1\n")

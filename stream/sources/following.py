@@ -61,7 +61,7 @@ class FollowSource:
         self._known: list[Mapping[str, Any]] = list(known["files"]) if known else []
         self._clock, self._now = clock, now
         self._files = Recognition(paths, folder)
-        self._there = (files[-1].name, files[-1].path.stat().st_size)  # the end, when it was opened
+        self._end = files[-1].path.stat()  # of the last file, when it was opened
         self._left: list[dict[str, Any]] = []  # marks of files read and left
         self._file: GrowingFile | None = None
         self._watched: GrowingFile | None = None  # the one left last: nothing may be added to it
@@ -138,7 +138,13 @@ class FollowSource:
 
     def at_end(self) -> bool:
         """Whether all that was there when the log was opened has been read."""
-        return self._dry or (self._file is not None and (self._file.name, self._file.offset) >= self._there)
+        own = None if self._file is None else self._file.status()
+        return self._dry or (
+            self._file is not None
+            and own is not None
+            and (own.st_dev, own.st_ino) == (self._end.st_dev, self._end.st_ino)
+            and self._file.offset >= self._end.st_size
+        )
 
     def fraction_read(self) -> float | None:
         """None: a log that grows has no end."""
