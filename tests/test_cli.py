@@ -94,7 +94,7 @@ def page_of(command):
         (["simulate", "--out", "x.jsonl", "--set", "base_rate=2"], 78, "base_rate is 2"),
         (["simulate", "--out", "x.jsonl", "--set", "base_rat=0.2"], 78, "there are seed, messages"),
         (["simulate", "--out", "x.jsonl", "--set", "seed=x"], 78, "must be a whole number"),
-        (["simulate", "--out", "absent/x.jsonl"], 66, "absent/x.jsonl"),
+        (["simulate", "--out", "absent/x.jsonl"], 73, "absent/x.jsonl: there is no folder absent"),
     ],
 )
 def test_a_mistake_ends_with_its_code_and_one_line(arguments, code, said, tmp_path, monkeypatch, capsys):

@@ -2,6 +2,7 @@
 
 import json
 import os
+import re
 import subprocess
 import sys
 from pathlib import Path
@@ -125,3 +126,148 @@ def test_the_first_run_says_that_it_compiles_and_the_second_does_not(here):
         for _ in range(2)
     ]
     assert said == ["bedload: compiling, the first time only (about a minute)\n", ""]
+
+
+def test_errors_before_the_first_message_stand_alone(here, capsys):
+    assert main(["replay", "--set", "feed.paths=absent.jsonl"]) == 66
+    assert capsys.readouterr().out == ""
+
+
+# Going on with nothing new
+
+
+def test_going_on_with_nothing_new_says_so_and_leaves_every_snapshot_as_it_is(here, capsys):
+    assert main(["replay"]) == 0
+    before = sorted(path.name for path in (here / "state/snapshots").iterdir())
+    capsys.readouterr()
+    assert main(["replay", "--resume", "--set", "state.checkpoint_every=50"]) == 0
+    out = capsys.readouterr().out
+    assert out.startswith("nothing new since message 300; snapshot ")
+    assert out.count("\n") == 1
+    assert sorted(path.name for path in (here / "state/snapshots").iterdir()) == before
+
+
+def test_the_summary_calls_an_exact_auc_exact(here, capsys):
+    assert main(["replay"]) == 0
+    assert re.search(r"^AUC [0-9.]+, (exact|within [0-9.e-]+)$", capsys.readouterr().out, re.MULTILINE)
+
+
+# Outputs
+
+
+@pytest.fixture
+def learned(here, capsys):
+    assert main(["replay"]) == 0
+    capsys.readouterr()
+    return here
+
+
+def test_an_export_has_the_format_of_its_ending(learned, capsys):
+    for ending, start in (("csv", b"address,"), ("json", b"["), ("parquet", b"PAR1"), ("txt", b"address,")):
+        assert main(["snapshots", "export", "--out", f"e.{ending}"]) == 0
+        assert (learned / f"e.{ending}").read_bytes().startswith(start)
+    assert main(["snapshots", "export", "--out", "f.parquet", "--format", "csv"]) == 64
+    assert not (learned / "f.parquet").exists()
+    assert main(["snapshots", "export", "--out", "f.txt", "--format", "json"]) == 0
+    assert "differ" in capsys.readouterr().err
+
+
+def test_simulate_never_replaces_a_log(here, capsys):
+    before = (here / "log.jsonl").read_bytes()
+    assert main(["simulate", "--out", "log.jsonl", "--messages", "10"]) == 73
+    assert "give another --out" in capsys.readouterr().err
+    assert (here / "log.jsonl").read_bytes() == before
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        ["simulate", "--out", "{}/x", "--messages", "10"],
+        ["init", "--sample", "log.jsonl", "--out", "{}/x"],
+        ["snapshots", "export", "--out", "{}/x"],
+    ],
+    ids=lambda arguments: arguments[0],
+)
+def test_where_nothing_can_be_written_the_cure_is_told(arguments, learned, capsys, monkeypatch):
+    assert main([text.format("absent") for text in arguments]) == 73
+    assert capsys.readouterr().err.startswith(
+        "bedload: absent/x: there is no folder absent: make it, or give"
+    )
+    (learned / "fixed").mkdir()
+    allowed = os.access
+    monkeypatch.setattr(os, "access", lambda path, mode: str(path) != "fixed" and allowed(path, mode))
+    assert main([text.format("fixed") for text in arguments]) == 77
+    assert "may not be written by this user: give another --out" in capsys.readouterr().err
+
+
+# Scores
+
+
+def test_a_log_that_is_not_there_is_named_without_talk_of_settings(learned, capsys):
+    for command in ("score", "explain"):
+        assert main([command, "absent.jsonl"]) == 66
+        err = capsys.readouterr().err
+        assert "absent.jsonl: no such log" in err
+        assert "feed.paths" not in err
+
+
+def test_a_log_whose_name_looks_like_a_pattern_is_scored(learned, capsys):
+    (learned / "a[1].jsonl").write_text(json.dumps(message(1)) + "\n")
+    assert main(["score", "a[1].jsonl", "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["id"] == "h1"
+
+
+def test_a_rejected_message_says_why_once(learned, capsys):
+    (learned / "bad.jsonl").write_text('{"note": 7}\n')
+    for command in ("score", "explain"):
+        assert main([command, "bad.jsonl"]) == 65
+        (line,) = capsys.readouterr().err.splitlines()
+        assert "1 of 1 message was rejected (bad.jsonl, byte 0: note is a whole number" in line
+
+
+def test_other_settings_than_the_snapshots_are_told_one_a_line(learned, capsys):
+    (learned / "other.toml").write_text(SETTINGS.replace('"stop"', '"place"') + "space.seed = 9\n")
+    assert main(["score", "log.jsonl", "--config", "other.toml", "--state", "state"]) == 78
+    lines = capsys.readouterr().err.splitlines()
+    assert len(lines) >= 4
+    assert max(map(len, lines)) < 250
+    assert "leave --config out" in lines[-1]
+
+
+def test_an_explanation_has_room_for_a_long_field_name_and_no_empty_heading(learned, capsys):
+    long = "vehicle.telemetry.last_depot_code"
+    settings = SETTINGS.replace('path = "stop"', f'path = "stop", name = "{long}"')
+    (learned / "long.toml").write_text(settings)
+    assert main(["replay", "--config", "long.toml", "--state", "long"]) == 0
+    capsys.readouterr()
+    assert main(["explain", "log.jsonl", "--state", "long", "--id", "h0"]) == 0
+    out = capsys.readouterr().out
+    assert f"  {long} " in out
+    assert max(map(len, out.splitlines())) <= 100
+    headed = re.findall(r"^towards .*\n(.)", out, re.MULTILINE)
+    assert headed and set(headed) == {" "}
+
+
+# Troubles and unknown keys
+
+
+def test_damage_is_told_whole_below_the_list(learned, capsys):
+    (path,) = (learned / "state/checkpoints").glob("*/*.safetensors")
+    path.write_bytes(path.read_bytes()[:-1])
+    assert main(["checkpoints", "list"]) == 0
+    _, row, trouble = capsys.readouterr().out.splitlines()
+    assert row.endswith("damaged")
+    assert str(path.name) in trouble and "…" not in trouble
+
+
+@pytest.mark.parametrize("key", ["learner.banana", "banana.l1x", "banana", "state.colour"])
+def test_a_key_like_no_other_gets_no_foolish_suggestion(key, here, capsys):
+    assert main(["replay", "--set", f"{key}=1"]) == 78
+    err = capsys.readouterr().err
+    assert "unknown key; there are " in err
+    assert "nearest" not in err
+
+
+def test_a_suggestion_ends_with_one_mark(capsys):
+    assert main(["reply"]) == 64
+    assert "?;" not in capsys.readouterr().err

@@ -62,7 +62,8 @@ def _show_traceback() -> None:
 def _usage(error: typer.TyperException) -> str:
     context = getattr(error, "ctx", None)
     command = context.command_path if context else "bedload"
-    return f"{error.format_message().rstrip('.')}; `{command} --help` says what there is"
+    said = error.format_message().rstrip(".")
+    return f"{said}{'' if said.endswith('?') else ';'} `{command} --help` says what there is"
 
 
 def _system(error: OSError) -> int:

@@ -11,6 +11,7 @@ from stream.cli.compiling import note_compiling
 from stream.cli.exits import INTERRUPTED
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
 from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
+from stream.cli.outputs import check_output
 from stream.cli.screen import (
     Column,
     count,
@@ -135,6 +136,8 @@ def replay(
         note(f"bedload: {warning}")
     if table is None:
         show_json(result.to_json())
+    elif result.resumed_from and not result.messages_read:
+        print(f"nothing new since message {count(result.resumed_from)}; snapshot {result.snapshot}")
     else:
         table.begin()
         show_summary(result.to_json())
@@ -239,7 +242,8 @@ def show_summary(result: dict[str, Any]) -> None:
         f"{count(result['peak_rss_bytes'] // 1_000_000)} MB of memory at most"
     )
     if result["auc"] is not None:
-        print(f"AUC {decimal(result['auc'], 5)}, error of the estimate at most {result['auc_error']:.1e}")
+        error = result["auc_error"]
+        print(f"AUC {decimal(result['auc'], 5)}, {f'within {error:.1e}' if error else 'exact'}")
     print(f"base rate {share(result['base_rate'])}")
     print(f"snapshot {result['snapshot']}")
     if result["slices"]:
@@ -282,7 +286,8 @@ def _show_strongest(path: Path) -> None:
 
 
 def write_new(path: Path, text: str) -> None:
-    """Writes a file that must not be there yet. Raises CannotCreate where it is."""
+    """Writes a file that must not be there yet. Raises what `check_output` does."""
+    check_output(path, new=True)
     try:
         with open(path, "x", encoding="utf-8") as file:
             file.write(text)

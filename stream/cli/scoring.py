@@ -2,18 +2,21 @@
 
 from __future__ import annotations
 
+import glob
 import json
+import os
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
 from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.options import AsJsonLines, Config, Name, StateFolder
-from stream.cli.screen import Column, count, decimal, heading, line, note, visible
+from stream.cli.screen import Column, cells, count, decimal, heading, line, note, visible
 from stream.cli.stored import read_snapshot_of
+from stream.errors import InputMissing
 
 if TYPE_CHECKING:
     from stream.runs.explaining import Explanation
@@ -28,9 +31,9 @@ Logs = Annotated[
 
 SCORE_COLUMNS = (Column("id", 40, right=False), Column("probability", 11), Column("margin", 9))
 DIGITS = 4
-EXPLAIN_COLUMNS = (
-    Column("", 17, right=False),
-    Column("token", 32, right=False),
+TEXTS = 49
+"""Cells that field and token have together beside the numbers."""
+NUMBERS = (
     Column("value", 8),
     Column("weight", 8),
     Column("effect", 9),
@@ -87,7 +90,6 @@ def explain(
     Effects are associations in the feed that was learned, not causes; a person decides what follows.
     Tokens may be personal data.
     """
-    from stream.errors import InputMissing
     from stream.runs.explaining import explain as run_explain
 
     scorer = _scorer(logs, config, state, name)
@@ -95,7 +97,7 @@ def explain(
     shown = 0
     for explanation in run_explain(scorer, wanted):
         if as_json:
-            sys.stdout.write(json.dumps(explanation.to_json(), ensure_ascii=False, allow_nan=False) + "\n")
+            sys.stdout.write(_compact(explanation.to_json()) + "\n")
         else:
             if shown:
                 print()
@@ -114,8 +116,8 @@ def show_scores(lines: list[Scored]) -> None:
         if scored.rejected is not None:
             print(visible(f"rejected ({scored.rejected}): {scored.detail}"))
             continue
-        cells = [_id_text(scored.id), decimal(scored.probability), decimal(scored.margin, DIGITS, True)]
-        print(line(SCORE_COLUMNS, cells))
+        numbers = (decimal(scored.probability), decimal(scored.margin, DIGITS, True))
+        print(line(SCORE_COLUMNS, [_id_text(scored.id), *numbers]))
 
 
 def show_explanation(explanation: Explanation) -> None:
@@ -124,21 +126,23 @@ def show_explanation(explanation: Explanation) -> None:
     Its effects are rounded, and its margins are sums of what is printed, so that each row adds up by
     hand; the row `rounding` brings them to the margin, which is rounded only once.
     """
+    columns = _columns(explanation)
     print(f"message {_id_text(explanation.id)}")
-    print(heading(EXPLAIN_COLUMNS))
+    print(heading(columns))
     units = _units(explanation.intercept)
-    _row("intercept", "", "", "", None, units)
+    _row(columns, "intercept", "", "", "", None, units)
     for title, effects in (
         ("towards yes", explanation.towards_yes),
         ("towards no", explanation.towards_no),
     ):
-        print(title)
+        if effects:
+            print(title)
         for effect in effects:
             units += _units(effect.effect)
             numbers = (decimal(effect.value, DIGITS), decimal(effect.weight, DIGITS, True))
-            _row(f"  {effect.field}", effect.token, *numbers, _units(effect.effect), units)
-    _row("rounding", "", "", "", _units(explanation.margin) - units, _units(explanation.margin))
-    _row("margin", "", "", "", None, _units(explanation.margin))
+            _row(columns, f"  {effect.field}", effect.token, *numbers, _units(effect.effect), units)
+    _row(columns, "rounding", "", "", "", _units(explanation.margin) - units, _units(explanation.margin))
+    _row(columns, "margin", "", "", "", None, _units(explanation.margin))
     print(f"probability {decimal(explanation.probability)}")
     print(
         f"{count(explanation.zero_or_unseen)} of {count(explanation.tokens)} tokens have weight zero "
@@ -146,9 +150,31 @@ def show_explanation(explanation: Explanation) -> None:
     )
 
 
-def _row(field: str, token: str, value: str, weight: str, effect: int | None, margin: int) -> None:
-    cells = [field, token, value, weight, "" if effect is None else _signed(effect), _signed(margin)]
-    print(line(EXPLAIN_COLUMNS, cells))
+def _columns(explanation: Explanation) -> tuple[Column, ...]:
+    """Field and token as wide as usual; a long field name takes room that the tokens leave."""
+    effects = [*explanation.towards_yes, *explanation.towards_no]
+    longest_field = max((cells(visible(effect.field)) + 2 for effect in effects), default=0)
+    longest_token = max((cells(visible(effect.token)) for effect in effects), default=0)
+    field = max(17, min(longest_field, TEXTS - min(longest_token, TEXTS // 2)))
+    return (Column("", field, right=False), Column("token", TEXTS - field, right=False), *NUMBERS)
+
+
+def _row(
+    columns: tuple[Column, ...],
+    field: str,
+    token: str,
+    value: str,
+    weight: str,
+    effect: int | None,
+    margin: int,
+) -> None:
+    texts = [field, token, value, weight, "" if effect is None else _signed(effect), _signed(margin)]
+    print(line(columns, texts))
+
+
+def _compact(document: dict[str, Any]) -> str:
+    """As `score --json` writes its lines."""
+    return json.dumps(document, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
 
 
 def _units(number: float) -> int:
@@ -169,13 +195,23 @@ def _scorer(logs: list[str] | None, config: Path | None, state: Path | None, nam
     from stream.runs.scoring import Scorer
 
     settings = None if config is None else settings_from(config, None)
-    scorer = Scorer(read_snapshot_of(config, state, name), logs or ["-"], settings)
+    paths = [_pattern(text) for text in logs or ["-"]]
+    scorer = Scorer(read_snapshot_of(config, state, name), paths, settings)
     note_compiling("rows")
     return scorer
 
 
+def _pattern(text: str) -> str:
+    """A file's name as a pattern that finds it alone; others as they are. InputMissing without any file."""
+    if text == "-" or glob.glob(text):
+        return text
+    if os.path.exists(text):
+        return glob.escape(text)
+    raise InputMissing(f"{text}: no such log: correct the name, or leave it out to read standard input")
+
+
 def _tell_rejects(scorer: Scorer) -> None:
     sys.stdout.flush()
-    if scorer.rejected:
-        note(f"bedload: {count(scorer.rejected)} of {count(scorer.messages)} messages were rejected")
     scorer.check_rejects()
+    if scorer.rejected:
+        note(f"bedload: {visible(scorer.rejects_told())}")

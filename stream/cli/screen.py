@@ -13,6 +13,7 @@ from unicodedata import combining, east_asian_width
 
 __all__ = [
     "Column",
+    "cells",
     "count",
     "decimal",
     "heading",
@@ -71,10 +72,10 @@ def note(text: str) -> None:
 
 def show_table(columns: Sequence[Column], rows: Iterable[Sequence[str]]) -> None:
     """Prints a whole table; the widest text column gives way where 100 columns do not suffice."""
-    cells = [[visible(cell) for cell in row] for row in rows]
-    fitted = _fit(columns, cells)
+    texts = [[visible(cell) for cell in row] for row in rows]
+    fitted = _fit(columns, texts)
     print(heading(fitted))
-    for row in cells:
+    for row in texts:
         print(line(fitted, row))
 
 
@@ -83,9 +84,9 @@ def heading(columns: Sequence[Column]) -> str:
     return line(columns, [column.title for column in columns])
 
 
-def line(columns: Sequence[Column], cells: Sequence[str]) -> str:
+def line(columns: Sequence[Column], texts: Sequence[str]) -> str:
     """One line of a table whose columns have widths, safe for a terminal."""
-    parts = [_pad(visible(cell), column) for column, cell in zip(columns, cells, strict=True)]
+    parts = [_pad(visible(cell), column) for cell, column in zip(texts, columns, strict=True)]
     return GAP.join(parts).rstrip()
 
 
@@ -96,7 +97,7 @@ def progress_bar(title: str) -> Iterator[Progress]:
         yield lambda fraction, messages: None
         return
     from rich.console import Console
-    from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
+    from rich.progress import BarColumn, TextColumn, TimeElapsedColumn, TimeRemainingColumn
     from rich.progress import Progress as Bar
 
     bar = Bar(
@@ -104,7 +105,10 @@ def progress_bar(title: str) -> Iterator[Progress]:
         BarColumn(),
         TextColumn("{task.fields[messages]:,} messages"),
         TextColumn("{task.fields[rate]:,.0f}/s"),
+        TimeElapsedColumn(),
+        TextColumn("elapsed"),
         TimeRemainingColumn(),
+        TextColumn("left"),
         console=Console(stderr=True),
         auto_refresh=False,
         transient=True,
@@ -131,7 +135,7 @@ def progress_bar(title: str) -> Iterator[Progress]:
 
 def _fit(columns: Sequence[Column], rows: Sequence[Sequence[str]]) -> list[Column]:
     widths = [
-        column.width or max([_cells(column.title), *(_cells(row[i]) for row in rows)])
+        column.width or max([cells(column.title), *(cells(row[i]) for row in rows)])
         for i, column in enumerate(columns)
     ]
     excess = sum(widths) + len(GAP) * (len(widths) - 1) - WIDTH
@@ -146,22 +150,22 @@ def _fit(columns: Sequence[Column], rows: Sequence[Sequence[str]]) -> list[Colum
 
 
 def _pad(cell: str, column: Column) -> str:
-    if not column.right and _cells(cell) > column.width:
+    if not column.right and cells(cell) > column.width:
         cell = _cut(cell, column.width)
-    space = " " * (column.width - _cells(cell))
+    space = " " * (column.width - cells(cell))
     return space + cell if column.right else cell + space
 
 
 def _cut(text: str, width: int) -> str:
     kept = ""
     for character in text:
-        if _cells(kept) + _cells(character) > width - 1:
+        if cells(kept) + cells(character) > width - 1:
             break
         kept += character
     return kept + "…"
 
 
-def _cells(text: str) -> int:
+def cells(text: str) -> int:
     """How many terminal cells `text` takes: wide East Asian characters two, combining marks none."""
     if text.isascii():
         return len(text)

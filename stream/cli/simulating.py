@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from stream.cli.options import AsJsonLines
+from stream.cli.outputs import check_output
 from stream.cli.screen import count, progress_bar, share
 from stream.errors import BadSettings, UsageError
 
@@ -25,7 +26,7 @@ def add_to(app: typer.Typer) -> None:
 def simulate(
     out: Annotated[
         Path | None,
-        typer.Option("--out", metavar="FILE", help="Log to write, replaced if there; .gz, .zst: compressed."),
+        typer.Option("--out", metavar="FILE", help="Log to write, never overwritten; .gz, .zst: compressed."),
     ] = None,
     messages: Annotated[int, typer.Option("--messages", metavar="N", help="How many messages.")] = 100_000,
     seed: Annotated[int, typer.Option("--seed", metavar="N", help="Same seed, same bytes.")] = 0,
@@ -51,6 +52,9 @@ def simulate(
     from simulator import write_log
 
     feed = feed_of(messages, seed, changes or [])
+    for path, option in ((out, "--out"), (truth, "--truth"), (probabilities, "--probabilities")):
+        if path is not None and str(path) != "-":
+            check_output(path, option, new=True)
     with progress_bar("simulating") as progress:
         drawn = write_log(
             feed,

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -10,8 +11,9 @@ import typer
 from stream.cli.comparing import comparison_json, show_comparison
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from, state_folder
 from stream.cli.options import AsJson, Config, Name, StateFolder
+from stream.cli.outputs import check_output
 from stream.cli.screen import Column, count, decimal, note, share, show_json, show_table, visible
-from stream.errors import BadData, InputMissing
+from stream.errors import BadData, InputMissing, UsageError
 
 if TYPE_CHECKING:
     from stream.snapshots import Snapshot, SnapshotEntry, Snapshots
@@ -51,6 +53,7 @@ def list_snapshots(config: Config = None, state: StateFolder = None, as_json: As
         Column("", right=False),
     ]
     show_table(columns, [_entry_cells(entry) for entry in entries])
+    _show_troubles(entry.trouble for entry in entries)
 
 
 @snapshots.command()
@@ -116,7 +119,12 @@ def check(config: Config = None, state: StateFolder = None, as_json: AsJson = Fa
 @snapshots.command()
 def export(
     out: Annotated[Path, typer.Option("--out", metavar="FILE", help="File to write; replaced if there.")],
-    format: Annotated[str, typer.Option("--format", metavar="FORMAT", help="csv, parquet or json.")] = "csv",
+    format: Annotated[
+        str | None,
+        typer.Option(
+            "--format", metavar="FORMAT", help="csv, parquet or json; by the ending of the file, else csv."
+        ),
+    ] = None,
     config: Config = None,
     state: StateFolder = None,
     name: Name = None,
@@ -127,6 +135,8 @@ def export(
     Sorted by address."""
     from stream.snapshots import export as export_weights
 
+    format = _format_of(out, format)
+    check_output(out)
     snapshot = read_snapshot_of(config, state, name)
     export_weights(snapshot.weights, out, format)
     if as_json:
@@ -134,6 +144,15 @@ def export(
         show_json({**document, "nnz": len(snapshot.weights)})
     else:
         print(f"{out}: {count(len(snapshot.weights))} weights of {snapshot.path.name} as {format}")
+
+
+def _format_of(out: Path, format: str | None) -> str:
+    """The format that was asked for, or that the file's ending means. Raises UsageError where they differ."""
+    ending = out.suffix.lower().removeprefix(".")
+    known = ending in ("csv", "parquet", "json")
+    if format is not None and known and format != ending:
+        raise UsageError(f"--format {format} and the ending of {out} differ: leave --format out, or rename")
+    return format or (ending if known else "csv")
 
 
 @snapshots.command()
@@ -209,8 +228,10 @@ def list_checkpoints(config: Config = None, state: StateFolder = None, as_json: 
         return
     columns = [Column("checkpoint", right=False), Column("messages"), Column("kB"), Column("", right=False)]
     show_table(
-        columns, [[e.name, count(e.messages), _kilobytes(e.size_bytes), e.trouble or ""] for e in entries]
+        columns,
+        [[e.name, count(e.messages), _kilobytes(e.size_bytes), _damaged(e.trouble)] for e in entries],
     )
+    _show_troubles(e.trouble for e in entries)
 
 
 @checkpoints.command()
@@ -326,7 +347,7 @@ def _entry_json(entry: SnapshotEntry) -> dict[str, Any]:
 
 
 def _entry_cells(entry: SnapshotEntry) -> list[str]:
-    marks = [entry.trouble or "", "in use" if entry.in_use else "", "pinned" if entry.pinned else ""]
+    marks = [_damaged(entry.trouble), "in use" if entry.in_use else "", "pinned" if entry.pinned else ""]
     return [
         entry.name,
         count(entry.manifest.get("learned")),
@@ -335,6 +356,16 @@ def _entry_cells(entry: SnapshotEntry) -> list[str]:
         _kilobytes(entry.size_bytes),
         ", ".join(mark for mark in marks if mark),
     ]
+
+
+def _damaged(trouble: str | None) -> str:
+    return "damaged" if trouble else ""
+
+
+def _show_troubles(troubles: Iterable[str | None]) -> None:
+    """Prints what is wrong below the table, whole however long it is."""
+    for trouble in filter(None, troubles):
+        print(visible(trouble))
 
 
 def _kilobytes(size: int) -> str:

@@ -69,6 +69,7 @@ class Scorer:
         self.intercept = float(snapshot.weights.intercept)
         self.messages = 0
         self.rejected = 0
+        self.first_reject = ""
         self._paths = paths
 
     def blocks(self) -> Iterator[ScoredBlock]:
@@ -87,9 +88,18 @@ class Scorer:
         allowed = self.settings.message.max_reject_share
         if self.rejected > allowed * self.messages:
             raise BadData(
-                f"{self.rejected:,} of {self.messages:,} messages were rejected and have no score, more than "
-                f"message.max_reject_share = {allowed:g} allows; their lines in `score --json` say why"
+                f"{self.rejects_told()}, more than message.max_reject_share = {allowed:g} allows. Rejected "
+                "messages have no score; their lines in `score --json` say why"
             )
+
+    def rejects_told(self) -> str:
+        """How many messages were rejected so far, and why the first was; nothing where none was."""
+        if not self.rejected:
+            return ""
+        were = "was" if self.rejected == 1 else "were"
+        messages = "message" if self.messages == 1 else "messages"
+        why = self.first_reject if self.rejected == 1 else f"the first: {self.first_reject}"
+        return f"{self.rejected:,} of {self.messages:,} {messages} {were} rejected ({why})"
 
     def _scored(self, block: Block, decoder: Decoder, batcher: Batcher) -> ScoredBlock:
         examples, rejects = decoder.decode(block)
@@ -102,6 +112,9 @@ class Scorer:
         margins, probabilities = self.lookup.score(batch)
         self.messages += len(block)
         self.rejected += len(rejects) + len(too_long)
+        if not self.first_reject and (rejects or too_long):
+            first = min([*rejects, *too_long], key=lambda reject: reject.row)
+            self.first_reject = _detail(block, first)
         return ScoredBlock(block, [*rejects, *too_long], rows, ids, batch, margins, probabilities)
 
 
@@ -117,10 +130,13 @@ def score(scorer: Scorer) -> Iterator[list[Scored]]:
 def _in_order(found: ScoredBlock, lines: list[Scored]) -> list[Scored]:
     by_row = dict(zip(found.rows.tolist(), lines, strict=True))
     for reject in found.rejects:
-        topic = "standard input" if found.block.topic == "-" else found.block.topic
-        place = f"{topic}, byte {found.block.offsets[reject.row]}"
-        by_row[reject.row] = Scored(None, None, None, reject.reason, f"{place}: {reject.detail}")
+        by_row[reject.row] = Scored(None, None, None, reject.reason, _detail(found.block, reject))
     return [by_row[row] for row in sorted(by_row)]
+
+
+def _detail(block: Block, reject: Reject) -> str:
+    topic = "standard input" if block.topic == "-" else block.topic
+    return f"{topic}, byte {block.offsets[reject.row]}: {reject.detail}"
 
 
 def json_lines(lines: list[Scored]) -> bytes:
@@ -142,5 +158,7 @@ def _must_match(settings: Settings, snapshot: Snapshot) -> None:
     if lines:
         raise BadSettings(
             f"{snapshot.path}: learned in another feature space than these settings describe "
-            f"(settings here, snapshot there): {'; '.join(lines)}"
+            "(here: settings; there: snapshot):\n  "
+            + "\n  ".join(lines)
+            + "\nset them back, or leave --config out: a snapshot has the settings that it was learned with"
         )

@@ -23,6 +23,10 @@ FIELD_KINDS: Mapping[str, type[BaseModel]] = {
 }
 
 
+ALIKE = 0.6
+"""Last parts of keys that are less alike than this (difflib's ratio) are not one misspelt for the other."""
+
+
 @dataclass(frozen=True, slots=True)
 class Key:
     """One key: its section, the field kinds that take it (none outside `fields`), default and limits.
@@ -59,14 +63,16 @@ def known_keys() -> tuple[Key, ...]:
     return tuple(found)
 
 
-def nearest(name: str, known: Iterable[str]) -> str:
-    """The one of `known` that `name` most likely meant: the same last part first, then likeness."""
+def nearest(name: str, known: Iterable[str]) -> str | None:
+    """The one of `known` that `name` most likely meant: the same last part first, then likeness; or none."""
     last = name.rpartition(".")[2]
 
     def likeness(candidate: str) -> tuple[bool, float]:
         return candidate.rpartition(".")[2] == last, SequenceMatcher(None, name, candidate).ratio()
 
-    return max(known, key=likeness)
+    best = max(known, key=likeness)
+    alike = SequenceMatcher(None, last, best.rpartition(".")[2]).ratio()
+    return best if alike >= ALIKE else None
 
 
 def _field_keys() -> Iterable[Key]:

@@ -92,9 +92,19 @@ def _unknown(loc: Loc, data: Any, in_environment: bool) -> str:
     elif loc[0] == "crosses":
         known = [key.dotted for key in keys if key.section == "crosses"]
     close = nearest(".".join(part for part in loc if isinstance(part, str)), known)
+    if close is None:
+        return f"unknown key; there {_known_there(loc, known)}"
     if in_environment:
         close = f"BEDLOAD_{close.upper().replace('.', '__')}"
     return f"unknown key; the nearest known one is {close}"
+
+
+def _known_there(loc: Loc, known: Sequence[str]) -> str:
+    """What stands where an unknown key was put, in words: "are ..."."""
+    here = [name.partition(".")[2] for name in known if name.startswith(f"{loc[0]}.")] if len(loc) > 1 else []
+    if here:
+        return f"are {', '.join(here)}"
+    return f"are the sections {', '.join(dict.fromkeys(key.section for key in known_keys()))}"
 
 
 def _without_kind(loc: Loc) -> Loc:

@@ -16,6 +16,8 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from stream.durable import make_folder, move_folder, os_errors, remove_folder, write_file
 from stream.errors import BadData, InputMissing
 from stream.manifest import read_manifest
@@ -45,6 +47,24 @@ class SnapshotEntry:
     trouble: str | None
 
 
+def _same(path: Path, weights: Weights, about: About) -> bool:
+    """Whether the snapshot at `path` is whole and tells of the same weights, by the same program."""
+    try:
+        found = read_snapshot(path)
+    except (BadData, InputMissing):
+        return False
+    there = found.weights
+    return (
+        replace(found.about, settings={}) == replace(about, settings={})
+        and (there.learned, there.intercept, there.names, there.fingerprint)
+        == (weights.learned, weights.intercept, weights.names, weights.fingerprint)
+        and all(
+            np.array_equal(getattr(there, name), getattr(weights, name))
+            for name in ("addresses", "values", "messages")
+        )
+    )
+
+
 class Snapshots:
     """The snapshots in `folder`; of those neither pinned nor in use `keep` stay when pruned: the newest
     (>= 1), and some by time.
@@ -62,12 +82,14 @@ class Snapshots:
     def write(self, messages: int, weights: Weights, about: About) -> Path:
         """Writes the weights after `messages` messages, then prunes.
 
-        Unless it is there already to the byte, snapshots at this number or beyond are of a history that
-        was left, and become `earlier-K-NUMBER`. Raises CannotCreate, NoPermission, FileTrouble.
+        One that is there already with the same weights and metrics stays, whatever settings it names: nothing
+        was learned since. Else snapshots at this number or beyond are of a history that was left, and become
+        `earlier-K-NUMBER`. Raises CannotCreate, NoPermission, FileTrouble.
         """
         make_folder(self.folder)
         path = self.folder / f"{messages:015d}"
-        write_snapshot(path, messages, weights, about, lambda: self.retire_after(messages - 1))
+        if not _same(path, weights, about):
+            write_snapshot(path, messages, weights, about, lambda: self.retire_after(messages - 1))
         self.prune()
         return path
 
