@@ -20,6 +20,7 @@ STAGES = {
     "metrics",
     "snapshots",
     "reports",
+    "operating",
     "topics",
 }
 RAISED = {"runs": 3, "cli": 4}
@@ -42,6 +43,7 @@ HOMES = {
     "safetensors": "stream/features/unicode_",
     "typing_extensions": "stream/",
     "crc32c": ("stream/manifest.py", "stream/journal.py"),
+    "prometheus_client": "stream/operating/exposition.py",
     "pyarrow": "stream/snapshots/export.py",
     "pydantic": "stream/settings/",
     "pydantic_core": "stream/settings/",

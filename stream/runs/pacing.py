@@ -91,6 +91,11 @@ class LivePacer(Pacer):
         self.snapshot: Path | None = None
         self.snapshot_nnz = 0
 
+    @property
+    def under_way(self) -> bool:
+        """Whether a checkpoint is being written that nobody took note of yet."""
+        return self._background.busy
+
     def keep_up(self) -> None:
         """Begins what is due and takes note of what became durable; after each block, and now and then."""
         self._note(self._background.done())

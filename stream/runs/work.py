@@ -11,14 +11,15 @@ from typing import Any
 
 from stream.checkpoints import Checkpoints
 from stream.message import LiveSource
+from stream.metrics import WindowRow
 from stream.retention import Retention
 from stream.runs.feeds import OnGap, live_source, publisher_of
 from stream.runs.loop import OnWindow, begin, learn
 from stream.runs.outbox import Outbox, Publisher
-from stream.runs.pacing import LivePacer
 from stream.runs.presence import refuse_unlearnable
 from stream.runs.result import RunResult, result_of
 from stream.runs.stopping import stop_on_signal
+from stream.runs.watching import Watch, WatchedPacer
 from stream.settings import Settings
 from stream.snapshots import Snapshots
 from stream.sources import JournalledSource
@@ -69,15 +70,20 @@ def work(
     """
     refuse_unlearnable(settings)
     began = time.monotonic()
-    with StateFolder(folder) as state, stop_on_signal() as stopping:
-        place = JournalledSource(
-            source or live_source(settings, on_gap=on_gap, stopping=lambda: bool(stopping)), folder
-        )
-        worker = _Worker(settings, state, place, stopping, connect, accept_settings)
+    with StateFolder(folder) as state, stop_on_signal() as stopping, Watch(settings, stopping) as watch:
+        feed = source or live_source(settings, on_gap=on_gap, stopping=lambda: bool(stopping))
+        place = JournalledSource(feed, folder)
+        worker = _Worker(settings, state, place, stopping, connect, watch, accept_settings)
+
+        def tell(text: str) -> None:
+            watch.warn(text)
+            warn(text)
+
         try:
             for warning in (*_entry_delay(settings), *worker.warnings):
-                warn(warning)
-            worker.open(warn)
+                tell(warning)
+            watch.opening(worker.run, feed)
+            worker.open(tell)
             worker.live(until_end, on_window)
             worker.pacer.checkpoint()
             return WorkResult(worker.result(time.monotonic() - began), place.passed_over)
@@ -95,9 +101,11 @@ class _Worker:
         source: JournalledSource,
         stopping: list[int],
         connect: Callable[[], Publisher] | None,
+        watch: Watch,
         accept: bool,
     ) -> None:
         self._settings, self._source, self._stopping = settings, source, stopping
+        self._watch = watch
         keep = settings.state
         snapshots = Snapshots(
             state.snapshots, Retention(keep.keep_snapshots, keep.keep_hourly, keep.keep_daily)
@@ -122,7 +130,9 @@ class _Worker:
             reject_sink=self._outbox if rejects_out else None,
             on_scored=self._outbox.scored if self._outbox is not None and scores_out else None,
         )
-        self.pacer = LivePacer(self.run, settings, checkpoints, snapshots, self._ready, source.commit)
+        self.pacer = WatchedPacer(
+            watch, self.run, settings, checkpoints, snapshots, self._ready, source.commit
+        )
         self._first_snapshot = next((entry.name for entry in snapshots.list()), None)
 
     def open(self, warn: Callable[[str], None]) -> None:
@@ -140,15 +150,25 @@ class _Worker:
     def live(self, until_end: bool, on_window: OnWindow) -> None:
         """Learns until a signal comes, or the end where one is wanted."""
 
+        watch = self._watch
+
+        def seen(row: WindowRow) -> None:
+            watch.window(row)
+            on_window(row)
+
         def over(read: bool) -> bool:
+            watch.turned(self.run, read, self._source.following)
             if not read:
                 time.sleep(IDLE_S)
             self._send()
             return until_end and self._source.at_end()
 
-        learn(self.run, self._source, self.pacer, self._stopping, on_window, over)
-        while self._outbox is not None and not self._stopping and not self._outbox.try_sync():
-            time.sleep(IDLE_S)
+        watch.opened()
+        learn(self.run, self._source, self.pacer, self._stopping, seen, over)
+        with watch.waiting():
+            while self._outbox is not None and not self._stopping and not self._outbox.try_sync():
+                time.sleep(IDLE_S)
+        watch.ending()
 
     def result(self, seconds: float) -> RunResult:
         """What it found, after the last checkpoint."""
@@ -178,9 +198,12 @@ class _Worker:
         if self._outbox is None:
             return
         self._outbox.keep_up()
-        while self._outbox.full and not self._stopping:
-            time.sleep(IDLE_S)
-            self._outbox.keep_up()
+        if not self._outbox.full:
+            return
+        with self._watch.waiting():
+            while self._outbox.full and not self._stopping:
+                time.sleep(IDLE_S)
+                self._outbox.keep_up()
 
     def _ready(self) -> bool:
         """Makes durable what a checkpoint relies on: order, rejects, scores. False: perhaps later."""

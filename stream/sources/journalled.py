@@ -120,6 +120,11 @@ class JournalledSource:
         self.passed_over = 0
         self.cut_bytes = 0
 
+    @property
+    def following(self) -> bool:
+        """Whether what the journal holds behind the position still comes, before anything new."""
+        return self._order is not None
+
     def start(self) -> None:
         """Begins where the settings say, or follows the journal of a run that left no checkpoint."""
         self._source.start()
