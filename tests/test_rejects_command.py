@@ -1,0 +1,174 @@
+"""Command lines of `rejects`, `work` and `replay --journal` in; exit codes, tables and JSON out."""
+
+import json
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+from stream.cli.main import main
+from stream.state_folder import StateFolder
+from tests.replays import config_for, courier_lines, last_checkpoint, settings_for
+
+ROOT = Path(__file__).parent.parent
+
+
+@pytest.fixture(scope="module")
+def lines(tmp_path_factory):
+    return courier_lines(tmp_path_factory.mktemp("feed") / "log.jsonl")[:3_000]
+
+
+@pytest.fixture(scope="module")
+def worked(lines, tmp_path_factory):
+    """A settings file beside a state folder that a worker left at the end of the log."""
+    folder = tmp_path_factory.mktemp("worked")
+    (folder / "log.jsonl").write_bytes(b"".join(line + b"\n" for line in lines))
+    config = config_for(settings_for([folder / "log.jsonl"]), folder)
+    assert main(["work", "--config", config, "--until-end"]) == 0
+    return config
+
+
+def output(capsys, *arguments, code=0):
+    """What the command prints on standard output."""
+    capsys.readouterr()
+    assert main([str(argument) for argument in arguments]) == code
+    return capsys.readouterr().out
+
+
+def document(capsys, *arguments):
+    return json.loads(output(capsys, *arguments, "--json"))
+
+
+# ---- rejects ---------------------------------------------------------------------------------------------
+
+
+def test_rejects_are_counted_by_reason_most_first(worked, capsys):
+    found = document(capsys, "rejects", "counts", "--config", worked)
+    assert found["rejects"] == sum(found["by_reason"].values()) > 5
+    assert list(found["by_reason"].values()) == sorted(found["by_reason"].values(), reverse=True)
+    table = output(capsys, "rejects", "counts", "--config", worked)
+    for reason, number in found["by_reason"].items():
+        assert any(row.split() == [reason, str(number)] for row in table.splitlines())
+
+
+def test_the_latest_rejects_are_listed_without_what_they_say(worked, capsys):
+    everything = document(capsys, "rejects", "list", "--config", worked, "--most", 0)
+    assert len(everything["rejects"]) == everything["of"] > 5
+    some = document(capsys, "rejects", "list", "--config", worked, "--most", 2)
+    assert some["rejects"] == everything["rejects"][-2:]
+    reason = everything["rejects"][0]["reason"]
+    only = document(capsys, "rejects", "list", "--config", worked, "--reason", reason)
+    assert {kept["reason"] for kept in only["rejects"]} == {reason}
+    table = output(capsys, "rejects", "list", "--config", worked, "--most", 2)
+    assert "the latest 2 of" in table
+    assert all(len(row) <= 100 for row in table.splitlines())
+    assert "line" not in everything["rejects"][0]
+
+
+def test_one_reject_is_shown_whole_and_safe_to_print(worked, capsys, lines):
+    listed = document(capsys, "rejects", "list", "--config", worked, "--most", 0)["rejects"]
+    shown = [document(capsys, "rejects", "show", kept["number"], "--config", worked) for kept in listed]
+    assert [kept["number"] for kept in shown] == [kept["number"] for kept in listed]
+    texts = [kept["line"] for kept in shown if "line" in kept]
+    assert len(texts) > 3
+    assert all(text.encode() in lines or kept["cut"] for text, kept in zip(texts, shown, strict=False))
+    for kept in listed:
+        printed = output(capsys, "rejects", "show", kept["number"], "--config", worked)
+        assert kept["reason"] in printed
+        assert printed.replace("\n", "").isprintable()
+
+
+def test_a_reject_that_is_not_kept_and_a_state_that_is_not_there_are_named(worked, tmp_path, capsys):
+    assert main(["rejects", "show", "99999", "--config", worked]) == 66
+    assert "no reject number 99999" in capsys.readouterr().err
+    assert main(["rejects", "list", "--state", str(tmp_path / "none")]) == 66
+    assert "there is no state folder" in capsys.readouterr().err
+    (tmp_path / "empty").mkdir()
+    assert main(["rejects", "counts", "--state", str(tmp_path / "empty"), "--json"]) == 0
+    assert json.loads(capsys.readouterr().out) == {"rejects": 0, "by_reason": {}}
+
+
+def test_a_record_that_is_just_being_written_is_passed_over(worked, tmp_path, capsys):
+    state = Path(worked).parent / "state"
+    content = (state / "rejects/rejects.jsonl").read_bytes()
+    (tmp_path / "state/rejects").mkdir(parents=True)
+    (tmp_path / "state/rejects/rejects.jsonl").write_bytes(content[:-20])
+    found = document(capsys, "rejects", "counts", "--state", tmp_path / "state")
+    assert found["rejects"] == content.count(b"\n") - 1
+
+
+# ---- work and replay --journal -----------------------------------------------------------------------------
+
+
+def test_work_ends_with_one_document_and_goes_on_where_it_was(worked, capsys):
+    found = document(capsys, "work", "--config", worked, "--until-end")
+    assert found["resumed_from"] == found["messages"] == 3_000
+    assert found["interrupted"] is False
+    table = output(capsys, "work", "--config", worked, "--until-end")
+    assert "3,000 messages" in table
+
+
+def test_a_journal_is_followed_and_compared(worked, tmp_path, capsys):
+    worker = Path(worked).parent / "state"
+    arguments = ["replay", "--config", worked, "--state", tmp_path / "again", "--journal", worker]
+    assert f"the same bytes as {worker}" in output(capsys, *arguments)
+    assert last_checkpoint(tmp_path / "again") == last_checkpoint(worker)
+    found = document(capsys, *arguments, "--fresh")
+    assert found["differences"] == []
+    assert main([str(a) for a in arguments]) == 73
+    assert main([*map(str, arguments), "--epochs", "2", "--fresh"]) == 64
+
+
+def test_what_does_not_agree_exits_65(worked, tmp_path, capsys, lines):
+    worker = Path(worked).parent / "state"
+    changed = [b'{"redelivered": true, "note": "x"}' if at == 100 else line for at, line in enumerate(lines)]
+    size = len(lines[100])
+    changed[100] = changed[100][:-1].ljust(size - 1) + b"}"
+    assert len(changed[100]) == size
+    (tmp_path / "log.jsonl").write_bytes(b"".join(line + b"\n" for line in changed))
+    config = config_for(settings_for([tmp_path / "log.jsonl"]), tmp_path)
+    assert main(["replay", "--config", config, "--journal", str(worker)]) == 65
+    assert "is not what" in capsys.readouterr().err
+
+
+def test_a_mistaken_command_line_and_a_held_folder_have_their_codes(worked, capsys):
+    assert main(["work", "--config", worked, "--on-gap", "jump"]) == 64
+    with StateFolder(Path(worked).parent / "state"):
+        assert main(["work", "--config", worked, "--until-end"]) == 75
+    assert f"process {os.getpid()}" in capsys.readouterr().err
+
+
+def test_replay_of_a_topic_names_the_commands_for_it(worked, capsys):
+    topic = ["--set", "feed.kind=topic", "--set", "feed.topic=t", "--set", 'feed.servers=["localhost:1"]']
+    assert main(["replay", "--config", worked, "--fresh", *topic]) == 78
+    assert "`bedload work`" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
+def test_the_program_told_to_stop_exits_0_within_seconds(lines, tmp_path, number):
+    (tmp_path / "log.jsonl").write_bytes(b"".join(line + b"\n" for line in lines))
+    config = config_for(settings_for([tmp_path / "log.jsonl"]), tmp_path)
+    program = [sys.executable, "-c", "from stream.cli.main import run; run()"]
+    with subprocess.Popen(
+        [*program, "work", "--config", config, "--json"],
+        cwd=ROOT,
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+    ) as process:
+        deadline = time.monotonic() + 120
+        while not any(tmp_path.glob("state/checkpoints/[0-9]*")):
+            assert time.monotonic() < deadline and process.poll() is None
+            time.sleep(0.05)
+        began = time.monotonic()
+        process.send_signal(number)
+        out, _ = process.communicate(timeout=30)
+    assert time.monotonic() - began < 10
+    assert process.returncode == 0
+    found = json.loads(out)
+    assert found["interrupted"] is True
+    assert int(last_checkpoint(tmp_path / "state")[0]) == found["messages"]
