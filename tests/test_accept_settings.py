@@ -179,7 +179,7 @@ CHANGES = {
     "bounded": {**STRONGER, "state": {"admit_after": 1, "idle_after": None, "max_live": 2_000}},
     "gravity": {"learner": {"learning_rate": 0.01, "l1_per_example": 1e-3}},
 }
-STARS = {"path": "sender", "kind": "words", "name": "sender words"}
+SENDER_WORDS = {"path": "sender", "kind": "words", "name": "sender words"}
 
 
 @pytest.fixture(scope="module")
@@ -256,7 +256,7 @@ def test_several_changes_are_all_told_in_the_checkpoint(feed, tmp_path):
 def test_an_added_field_and_cross_are_learned_beside_the_old_weights(feed, tmp_path):
     old, new = (
         settings_of_run(tmp_path),
-        with_fields(tmp_path, [STARS, *BASIC["fields"]], [["route", "stop"]]),
+        with_fields(tmp_path, [SENDER_WORDS, *BASIC["fields"]], [["route", "stop"]]),
     )
     before = read_snapshot(feed(HALF, old).snapshot).weights
     assert not any(name.startswith((b"sender words", b"route&stop")) for name in before.names)
@@ -282,7 +282,7 @@ def other_fields(change):
 
 
 REFUSALS = {
-    "fields.weight_kg": other_fields(lambda fields: [*fields[:-1], STARS]),
+    "fields.weight_kg": other_fields(lambda fields: [*fields[:-1], SENDER_WORDS]),
     "fields.note.pairs": other_fields(lambda fields: [{**fields[0], "pairs": True}, *fields[1:]]),
     "fields: order": other_fields(lambda fields: fields[::-1]),
     "crosses": lambda tmp_path: settings_of_run(tmp_path).model_copy(update={"crosses": ()}),
