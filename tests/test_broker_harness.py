@@ -13,6 +13,7 @@ from pathlib import Path
 
 import pytest
 from kafka import KafkaConsumer, KafkaProducer, TopicPartition
+from kafka.errors import KafkaError
 
 from tests.broker import Broker, Unavailable, start_or_skip
 from tests.broker.jars import class_path
@@ -44,6 +45,19 @@ def read(broker, topic, first=0, patience_ms=PATIENCE_MS, **options):
         while consumer.position(here) < end and time.monotonic() < deadline:
             values += [record.value for record in consumer.poll(200).get(here, [])]
         return values
+
+
+def is_refused(**options):
+    """A client that fails while it is built leaves a thread behind, unless somebody ends it."""
+    consumer = KafkaConsumer.__new__(KafkaConsumer)
+    try:
+        consumer.__init__(bootstrap_timeout_ms=1000, **options)
+    except KafkaError:
+        consumer._client.close()
+        consumer._net.stop()
+        return True
+    consumer.close()
+    return False
 
 
 def log_start(broker, topic):
@@ -99,7 +113,7 @@ def test_a_topic_made_again_is_empty_and_has_another_id(broker, topic):
 
 
 def shake_hands(broker, listener, ca_file, *client):
-    """What TLS itself says: a client that is refused as it is built would leave its sockets behind."""
+    """What TLS itself says, without a client between."""
     context = ssl.create_default_context(cafile=ca_file)
     if client:
         context.load_cert_chain(*client)
@@ -149,8 +163,7 @@ def test_a_user_with_the_password_is_let_in_and_one_without_is_not(broker, topic
         "ssl_cafile": str(given.ca_file),
     }
     assert read(broker, topic, sasl_plain_password=given.password, **options) == [b"for members"]
-    with pytest.raises(Exception, match=r"(?i)auth|bootstrap"):
-        read(broker, topic, sasl_plain_password="guess", **{**options, "bootstrap_timeout_ms": 1000})
+    assert is_refused(sasl_plain_password="guess", **options)
 
 
 def test_what_was_acknowledged_outlives_a_stop_and_a_kill(own_broker, topic):

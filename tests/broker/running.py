@@ -92,8 +92,10 @@ class Broker:
             )
         atexit.register(self.kill)
         try:
-            wait_for(self._answers, f"the broker of {self._properties} to answer")
+            wait_for(self._answers, f"the broker to answer (its threads are in {self.log})")
         except BaseException:
+            self._signal(signal.SIGQUIT)  # has a running one write what each thread does
+            time.sleep(1)
             self.kill()
             raise
 
