@@ -12,8 +12,8 @@ settings.load_profile("bedload")
 
 
 def pytest_configure(config):
-    """kafka-python drops the socket of each attempt to connect that fails, and the warning hits any test that runs
-    then. Its sockets have proto=6, as clients' have; a server's that somebody forgets to close still counts.
+    """kafka-python drops the socket of each attempt to connect that fails, and the warning hits any test
+    that runs then. Its sockets have proto=6, as clients' have; a server's that somebody forgets to close still counts.
     """
     abandoned = r"unclosed <(ssl\.SSLS|socket\.s)ocket fd=\d+, family=\d+, type=1, proto=6"
     config.addinivalue_line("filterwarnings", f"ignore:{abandoned}:ResourceWarning")
