@@ -10,7 +10,7 @@ from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.learning import WindowTable, show_summary
 from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
-from stream.cli.screen import note, show_json
+from stream.cli.screen import show_json
 from stream.errors import UsageError
 
 if TYPE_CHECKING:
@@ -60,7 +60,6 @@ def work(
         on_gap="skip" if on_gap == "skip" else "refuse",
         accept_settings=accept_settings,
         on_window=_no_window if as_json else table.add,
-        warn=lambda text: note(f"bedload: {text}"),
     )
     found = result.to_json()
     if as_json:
