@@ -32,7 +32,9 @@ def _cache_folder() -> str:
     """
     package = Path(__file__).parent
     sources = {path: path.read_bytes() for path in sorted(package.rglob("*.py"))}
-    compiled = {path for path, source in sources.items() if b"stream.kernel import" in source}
+    compiled = {
+        path for path, source in sources.items() if b"\n@kernel\n" in source or b"\n@small\n" in source
+    }
     folders = {path.parent for path in compiled} - {package}
     digest = hashlib.sha256(Path(__file__).read_bytes())
     for path, source in sources.items():

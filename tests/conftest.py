@@ -13,7 +13,7 @@ settings.load_profile("bedload")
 
 def pytest_configure(config):
     """kafka-python drops the socket of each attempt to connect that fails, and the warning hits any test
-    that runs then. Its sockets have proto=6, as clients' have; a server's that somebody forgets to close still counts.
+    that runs then. Its sockets have proto=6, as clients' have; a server's left open by mistake still counts.
     """
     abandoned = r"unclosed <(ssl\.SSLS|socket\.s)ocket fd=\d+, family=\d+, type=1, proto=6"
     config.addinivalue_line("filterwarnings", f"ignore:{abandoned}:ResourceWarning")

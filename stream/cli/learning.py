@@ -112,7 +112,7 @@ def replay(
     if resume and fresh:
         raise UsageError("--resume goes on and --fresh starts anew: give one of them")
     if accept_settings and not resume:
-        raise UsageError("--accept-settings is about the settings of a state that is gone on from: give --resume")
+        raise UsageError("--accept-settings changes the settings of a state that goes on: give --resume")
     from stream.runs.replay import replay as run_replay
 
     settings = settings_from(config, changes, state)
