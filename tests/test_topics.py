@@ -6,7 +6,6 @@ import logging
 import threading
 import time
 import uuid
-from itertools import pairwise
 
 import pytest
 from kafka import KafkaAdminClient, KafkaConsumer, KafkaProducer, TopicPartition
@@ -16,14 +15,37 @@ from kafka.errors import RetriableError
 from stream.errors import BadSettings, FileTrouble, InputMissing, NoPermission, Unavailable
 from stream.settings import Settings
 from stream.topics import Publisher, Secrets, TopicSource, client, reading
+from tests.broker import start_or_skip
 
 PATIENCE_S = 40
+
+
+@pytest.fixture(scope="module")
+def frail_broker(tmp_path_factory):
+    with start_or_skip(tmp_path_factory.mktemp("frail") / "broker") as running:
+        yield running
+
+
+@pytest.fixture
+def own_broker(frail_broker):
+    """A broker to be stopped, killed and paused; it runs again afterwards."""
+    yield frail_broker
+    if is_running(frail_broker):
+        frail_broker.resume()
+    else:
+        frail_broker.start_again()
+
+
+def is_running(broker):
+    return broker._process is not None
+
+
 pytestmark = pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
 
 
 @pytest.fixture(autouse=True)
 def no_garbage():
-    """kafka-python leaves sockets of failed connections to the garbage collector: here, not in a later test."""
+    """kafka-python leaves sockets of failed connections to the garbage collector: now, in no later test."""
     yield
     gc.collect()
 
@@ -459,7 +481,7 @@ def test_ranges_come_again_in_any_order_of_partitions(broker, filled, opened):
     first = opened(broker.servers, filled)
     first.start()
     spans, contents = [], []
-    for _ in range(60):
+    while not first.at_end():
         before = dict(first.next_offsets())
         block = first.read(13)
         if len(block):
@@ -560,6 +582,7 @@ def test_commits_that_say_something_else_are_told_and_do_not_count(broker, fille
 # ---- a broker that goes away -------------------------------------------------------------------------------
 
 
+@pytest.mark.slow
 def test_a_broker_that_goes_away_and_comes_back_loses_nothing(own_broker, topic, opened):
     fill(own_broker, topic, 2, 50)
     source = opened(own_broker.servers, topic)
@@ -596,14 +619,19 @@ def test_a_broker_that_is_paused_is_waited_for_or_given_up_when_asked(own_broker
     assert [m.value for m in messages(patient, 1)] == [b"on"]
 
 
+@pytest.mark.slow
 def test_a_broker_that_is_away_at_the_start_is_waited_for(own_broker, topic, opened):
     fill(own_broker, topic, 1, 5)
     own_broker.stop()
     with pytest.raises(Unavailable):
         opened(own_broker.servers, topic, unavailable_after_s=1).start()
     source = opened(own_broker.servers, topic)
-    threading.Timer(3, own_broker.start_again).start()
-    source.start()
+    waiting = threading.Thread(target=source.start)
+    waiting.start()
+    time.sleep(2)
+    assert waiting.is_alive()
+    own_broker.start_again()
+    waiting.join(PATIENCE_S)
     assert len(messages(source, 5)) == 5
 
 
@@ -807,6 +835,7 @@ def test_what_is_flushed_is_in_the_topic_with_its_headers(broker, topic, publish
     assert (two.key, two.value, two.headers) == (None, b"", [])
 
 
+@pytest.mark.slow
 def test_what_is_not_acknowledged_is_told_and_arrives_once_when_the_broker_is_back(
     own_broker, topic, publisher_of
 ):
@@ -871,11 +900,3 @@ def test_a_cluster_that_is_away_is_told_when_a_publisher_is_made():
     with pytest.raises(Unavailable, match="see to the brokers"):
         Publisher(settings.feed, Secrets(settings, {}))
     wait_for(lambda: threading.active_count() == before, "no thread is left")
-
-
-def test_places_are_pairwise_in_order_within_a_block(broker, filled, opened):
-    source = opened(broker.servers, filled)
-    source.start()
-    for _ in range(20):
-        offsets = source.read(50).offsets.tolist()
-        assert all(left < right for left, right in pairwise(offsets))

@@ -28,10 +28,20 @@ from stream.errors import BadData, BadSettings, NoPermission
 from stream.settings.models import Feed
 from stream.topics.records import Batch, Single
 
-__all__ = ["Away", "Client", "Fetched", "Identity", "OutOfRange", "open_producer", "translated"]
+__all__ = [
+    "Away",
+    "Client",
+    "Fetched",
+    "Identity",
+    "OutOfRange",
+    "close_producer",
+    "open_producer",
+    "translated",
+]
 
 NO_ID = uuid.UUID(int=0)
 BATCHES_IN_POLL = 64
+FETCH_BYTES = 16 << 20
 BOOTSTRAP_MS = 3_000
 CALL_MS = 2_000
 METADATA_MS = 10_000
@@ -144,6 +154,7 @@ class Client:
                 allow_auto_create_topics=False,
                 isolation_level="read_committed",
                 check_crcs=True,
+                fetch_max_bytes=FETCH_BYTES,
                 metadata_max_age_ms=METADATA_MS,
                 reconnect_backoff_max_ms=5_000,
                 metrics_enabled=False,
@@ -269,13 +280,21 @@ def open_producer(feed: Feed, options: Mapping[str, Any], largest_bytes: int) ->
             enable_idempotence=True,
             allow_auto_create_topics=False,
             delivery_timeout_ms=(1 << 31) - 1,
-            max_block_ms=5_000,
+            max_block_ms=CALL_MS,
             max_request_size=largest_bytes,
             linger_ms=5,
             reconnect_backoff_max_ms=5_000,
             metrics_enabled=False,
             **options,
         )[1]
+
+
+def close_producer(producer: Any) -> None:
+    """Ends it at once, with what is under way: its own `close` waits for that, and then does not end."""
+    try:
+        producer.close(timeout=0)
+    except errors.KafkaTimeoutError:
+        producer._sender.force_close()
 
 
 def _started(kind: Callable[..., Any], **options: Any) -> tuple[Any, Any]:

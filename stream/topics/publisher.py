@@ -8,21 +8,22 @@ from __future__ import annotations
 import threading
 import time
 from collections.abc import Mapping
+from contextlib import suppress
 from functools import partial
 from typing import Any
 
 from stream.errors import FileTrouble, Unavailable
 from stream.settings.models import Feed
 from stream.topics.access import Secrets
-from stream.topics.client import Away, open_producer, translated
+from stream.topics.client import Away, close_producer, open_producer, translated
 
 __all__ = ["Publisher"]
 
 WAITING_BYTES = 32 << 20
 RECORD_BYTES = 1 << 10
 LARGEST_BYTES = 1 << 30
-SEND_S = 30.0
-CLOSE_S = 5.0
+SEND_S = 2.0
+CLOSE_S = 2.0
 
 
 class Publisher:
@@ -44,10 +45,11 @@ class Publisher:
         self._fault: str | None = None
 
     def send(self, topic: str, key: bytes | None, value: bytes, headers: Mapping[str, bytes]) -> None:
-        """Puts a record on its way; waits while much is under way. Raises Unavailable or FileTrouble.
+        """Puts a record on its way; waits seconds while much is under way.
 
-        After FileTrouble, which says that a record was refused, every later call raises it again: what was
-        refused is lost to this object, and nothing that relies on it may become durable.
+        Raises Unavailable where it could not be taken. After FileTrouble, which says that a record
+        was refused, every later call raises it again: what was refused is lost, and nothing that relies on
+        it may become durable.
         """
         size = len(key or b"") + len(value) + sum(len(k) + len(v) for k, v in headers.items()) + RECORD_BYTES
         self._wait(lambda: self._waiting_bytes == 0 or self._waiting_bytes + size <= WAITING_BYTES, SEND_S)
@@ -76,7 +78,9 @@ class Publisher:
 
     def close(self) -> None:
         """Ends the connection; what is not acknowledged within seconds is given up."""
-        self._producer.close(timeout=CLOSE_S)
+        with suppress(Unavailable, FileTrouble):
+            self.flush(CLOSE_S)
+        close_producer(self._producer)
 
     def _wait(self, holds: Any, timeout_s: float) -> None:
         deadline = time.monotonic() + timeout_s
@@ -98,8 +102,8 @@ class Publisher:
     def _raise_fault(self) -> None:
         if self._fault is not None:
             raise FileTrouble(
-                f"{self._fault}: {', '.join(self._feed.servers)} refused a record; look at the topic's limits and "
-                "this user's rights, and start again"
+                f"{self._fault}: {', '.join(self._feed.servers)} refused a record; look at the topic's "
+                "limits and this user's rights, and start again"
             )
 
     def _unavailable(self, why: str) -> Unavailable:

@@ -235,7 +235,8 @@ class Reader:
 
     def _fetch(self, client: Client) -> None:
         """One poll: what came goes to its lane."""
-        turns = {p: lane.turn for p, lane in self.lanes.items()}
+        with self.lock:
+            turns = {p: lane.turn for p, lane in self.lanes.items() if lane.sought}
         try:
             found = client.poll(POLL_S)
         except OutOfRange as error:
@@ -247,8 +248,7 @@ class Reader:
             if identity is not None:
                 self._check(identity)
         chunks = [self._chunk(fetched) for fetched in found]
-        quiet = [] if found else [p for p, lane in self.lanes.items() if lane.sought]
-        behind = {p: client.offset(p) for p in quiet}
+        behind = {} if found else {p: client.offset(p) for p in turns}
         with self.lock:
             for chunk in chunks:
                 self._put(chunk.partition, turns, chunk.after, chunk)
@@ -310,7 +310,7 @@ class Reader:
     def _look(self, client: Client, identity: Identity) -> Identity:
         """Asks for the ends, and looks whether the topic and the connection are what they were."""
         try:
-            ends = client.ends(list(self.lanes)) if self.lanes else {}
+            ends = client.ends(sorted(self._assigned)) if self._assigned else {}
         except Away as away:
             with self.lock:
                 self.trouble = str(away)

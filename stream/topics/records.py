@@ -148,7 +148,7 @@ def unpacked(batches: Sequence[Batch], place: str) -> tuple[bytes, Int64s]:
     table = np.empty((6, int(counts.sum())), np.int64)
     done = _unpack(np.frombuffer(data, np.uint8), facts, table)
     if done < table.shape[1]:
-        raise _broken(place, int(table[0, done - 1]) + 1 if done else int(facts[0, 2]))
+        raise _broken(place, int(table[0, done - 1]) + 1 if done > 0 else int(facts[0, 2]))
     return data, table
 
 
@@ -185,7 +185,7 @@ def _laid_out(data: bytes, first: Int64s, size: Int64s, most: int) -> tuple[byte
 
 @kernel
 def _unpack(data: npt.NDArray[np.uint8], facts: Int64s, table: Int64s) -> Any:
-    """Fills the columns of `table`; returns how many records were whole before the first that was not."""
+    """Fills the columns of `table`; returns how many were whole before one that was not, at most."""
     row = 0
     begin = np.int64(0)
     for batch in range(facts.shape[0]):
@@ -215,7 +215,7 @@ def _unpack(data: npt.NDArray[np.uint8], facts: Int64s, table: Int64s) -> Any:
             row += 1
             at = stop
         if at != end:
-            return row - (facts[batch, 1] > 0)
+            return row - 1
         begin = end
     return row
 

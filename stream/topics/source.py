@@ -158,7 +158,7 @@ class TopicSource:
             lane = self._reader.lanes.get(partition)
             if lane is None:
                 self._reader.lanes[partition] = Lane(partition, offset, moved_s=time.monotonic())
-            elif lane.ahead is None or lane.ahead < offset or offset < self._next.get(partition, offset):
+            elif not max(lane.floor, self._next.get(partition, 0)) <= offset <= (lane.ahead or -1):
                 lane.place(offset)
             self._next[partition] = offset
             if partition in self._last and self._last[partition].offset >= offset:
