@@ -117,6 +117,10 @@ class LivePacer(Pacer):
             )
         self._note(self._background.wait())
 
+    def close(self) -> None:
+        """Waits until no checkpoint is being written any more."""
+        self._background.close()
+
     def _begin(self, snapshot: bool) -> bool:
         """Begins a checkpoint of what is new, and a snapshot with it; False where that must wait."""
         run, now = self._run, self._clock()

@@ -192,6 +192,7 @@ class _Worker:
             if self._outbox is not None:
                 parts.callback(self._outbox.close)
             parts.callback(self.run.rejects.close)
+            parts.callback(self.pacer.close)
 
     def _send(self) -> None:
         """Sends what waits; where too much does, learning waits for the brokers."""
