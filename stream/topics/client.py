@@ -115,7 +115,7 @@ def translated(feed: Feed) -> Iterator[None]:
     except errors.UnsupportedCodecError as error:
         raise BadSettings(
             f"topic {feed.topic} is compressed in a way that is not installed here ({error}): "
-            "add lz4 or python-snappy to the environment"
+            "`pip install 'bedload[compression]'` adds lz4 and snappy"
         ) from None
     except (errors.AuthorizationError, errors.SaslAuthenticationFailedError) as error:
         raise NoPermission(
