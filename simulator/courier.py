@@ -164,5 +164,3 @@ def blocks(feed: CourierFeed) -> Iterator[FeedBlock]:
     courier = Courier(feed)
     for number in range(feed.block_count):
         yield courier.block(number)
-
-
