@@ -376,6 +376,8 @@ def test_the_command_takes_the_settings_and_wants_a_state_to_go_on_from(lines, t
     assert "learner.l1: 0.25 here, 0.0 there" in capsys.readouterr().err
     assert main([*call, "--accept-settings"]) == 64
     assert "give --resume" in capsys.readouterr().err
+    assert main([*call, "--resume", "--accept-settings", "--journal", str(tmp_path)]) == 64
+    assert "leave --accept-settings out" in capsys.readouterr().err
     assert main([*call, "--resume", "--accept-settings"]) == 0
     assert "settings accepted after 2,000 messages" in capsys.readouterr().err
     assert main([*call, "--resume", "--set", "space.seed=4", "--accept-settings"]) == 78

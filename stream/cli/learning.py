@@ -111,6 +111,10 @@ def replay(
     snapshot of what was learned so far."""
     if resume and fresh:
         raise UsageError("--resume goes on and --fresh starts anew: give one of them")
+    if accept_settings and journal is not None:
+        raise UsageError(
+            "--journal learns by the settings of the worker's state: leave --accept-settings out"
+        )
     if accept_settings and not resume:
         raise UsageError("--accept-settings changes the settings of a state that goes on: give --resume")
     from stream.runs.replay import replay as run_replay
