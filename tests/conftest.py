@@ -1,6 +1,8 @@
 """What every test shares: one hypothesis profile, and a real broker for those that ask for it."""
 
+import gc
 import uuid
+import warnings
 
 import pytest
 from hypothesis import HealthCheck, settings
@@ -10,13 +12,21 @@ settings.register_profile(
 )
 settings.load_profile("bedload")
 
+ABANDONED = r"unclosed <(ssl\.SSLS|socket\.s)ocket fd=\d+, family=\d+, type=1, proto=6"
+
 
 def pytest_configure(config):
     """kafka-python drops the socket of each attempt to connect that fails, and the warning hits any test
     that runs then. Its sockets have proto=6, as clients' have; a server's left open by mistake still counts.
     """
-    abandoned = r"unclosed <(ssl\.SSLS|socket\.s)ocket fd=\d+, family=\d+, type=1, proto=6"
-    config.addinivalue_line("filterwarnings", f"ignore:{abandoned}:ResourceWarning")
+    config.addinivalue_line("filterwarnings", f"ignore:{ABANDONED}:ResourceWarning")
+
+
+def pytest_sessionfinish():
+    """Collects what the last test left while that filter still holds; pytest looks again after it."""
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", ABANDONED, ResourceWarning)
+        gc.collect()
 
 
 @pytest.fixture(scope="session")
