@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import tempfile
 from collections.abc import Callable
 from functools import cache
 from pathlib import Path
@@ -15,7 +16,16 @@ from numba.core import config as numba_config
 from numba.core import types
 from numba.extending import intrinsic
 
-__all__ = ["compiled_before", "kernel", "load_u64", "prefetch", "small", "store_u64", "trailing_zeros"]
+__all__ = [
+    "cache_folder",
+    "compiled_before",
+    "kernel",
+    "load_u64",
+    "prefetch",
+    "small",
+    "store_u64",
+    "trailing_zeros",
+]
 
 F = TypeVar("F", bound=Callable[..., Any])
 _intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
@@ -24,11 +34,12 @@ _intrinsic: Callable[[Callable[..., Any]], Callable[..., Any]] = (
 
 
 @cache
-def _cache_folder() -> str:
+def cache_folder() -> str | None:
     """A folder named by the digest of this file, of every other with kernels, and of their neighbours.
 
     numba looks only at the file of the outer function when it decides whether a cached kernel is
-    stale, so that a change in an inlined helper of another file would go unnoticed.
+    stale, so that a change in an inlined helper of another file would go unnoticed. None where no such
+    folder can be written in, as under a service user without a home: kernels are then compiled at each start.
     """
     package = Path(__file__).parent
     sources = {path: path.read_bytes() for path in sorted(package.rglob("*.py"))}
@@ -40,19 +51,39 @@ def _cache_folder() -> str:
     for path, source in sources.items():
         if path in compiled or path.parent in folders:
             digest.update(source)
-    home = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
-    base = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(home, "bedload")
-    return os.path.join(base, f"kernels-{digest.hexdigest()[:16]}")
+    base = _caches()
+    folder = base and os.path.join(base, f"kernels-{digest.hexdigest()[:16]}")
+    return folder if folder and _writable(folder) else None
+
+
+def _caches() -> str | None:
+    """Where this user keeps caches, if anywhere: a user without a home has none."""
+    if told := os.environ.get("NUMBA_CACHE_DIR"):
+        return told
+    if told := os.environ.get("XDG_CACHE_HOME"):
+        return os.path.join(told, "bedload")
+    home = os.path.expanduser("~")
+    return os.path.join(home, ".cache", "bedload") if os.path.isabs(home) else None
+
+
+def _writable(folder: str) -> bool:
+    try:
+        os.makedirs(folder, exist_ok=True)
+        tempfile.TemporaryFile(dir=folder).close()
+    except OSError:
+        return False
+    return True
 
 
 config: Any = numba_config
 
 
 def _compile(function: F, **options: Any) -> F:
-    before = config.CACHE_DIR
-    config.CACHE_DIR = _cache_folder()
+    folder, before = cache_folder(), config.CACHE_DIR
+    config.CACHE_DIR = folder or before
     try:
-        compiled: F = numba.njit(cache=True, nogil=True, error_model="numpy", **options)(function)
+        decorate = numba.njit(cache=folder is not None, nogil=True, error_model="numpy", **options)
+        compiled: F = decorate(function)
     finally:
         config.CACHE_DIR = before
     return compiled
@@ -61,9 +92,11 @@ def _compile(function: F, **options: Any) -> F:
 def compiled_before(module: str) -> bool:
     """Whether a kernel of the file `module`.py was compiled and kept on disk, perhaps by another process.
 
-    numba makes its folders when kernels are declared, so that only files in them tell.
+    A learner's method, as settings write it, does for its file. numba makes its folders when kernels are
+    declared, so that only files in them tell.
     """
-    return any(Path(_cache_folder()).glob(f"*/{module}.*.nbi"))
+    folder = cache_folder()
+    return folder is not None and any(Path(folder).glob(f"*/{module.replace('-', '_')}.*.nbi"))
 
 
 def kernel(function: F) -> F:

@@ -120,7 +120,7 @@ def replay(
     from stream.runs.replay import replay as run_replay
 
     settings = settings_from(config, changes, state)
-    note_compiling(settings.learner.method.replace("-", "_"))
+    note_compiling(settings.learner.method)
     if journal is not None:
         _retrace(settings, journal, resume, fresh, epochs, as_json)
         return

@@ -36,7 +36,7 @@ def work(
         typer.Option(
             "--on-gap",
             metavar="WHAT",
-            help="Where messages were removed before they were read: refuse to start, or skip them.",
+            help="Where messages were removed before they were read: refuse to go on, or skip them.",
         ),
     ] = "refuse",
     accept_settings: AcceptSettings = False,
@@ -51,7 +51,7 @@ def work(
     from stream.runs.work import work as run_work
 
     settings = settings_from(config, changes, state)
-    note_compiling(settings.learner.method.replace("-", "_"))
+    note_compiling(settings.learner.method)
     table = WindowTable()
     result = run_work(
         settings,
