@@ -130,7 +130,10 @@ class LiveSource(Source, Protocol):
         ...
 
     def gaps(self) -> list[tuple[int, int, int]]:
-        """Ranges (partition, from, to) that the last `seek` passed over because they are gone for good."""
+        """Ranges (partition, from, to) that were passed over because they are gone for good, told once.
+
+        `seek` passes over several at once, `read` over one, and returns an empty block then.
+        """
         ...
 
     def at_end(self) -> bool:

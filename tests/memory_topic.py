@@ -42,7 +42,6 @@ class MemoryTopic:
 
     def seek(self, position):
         """Refuses gaps, or passes over them."""
-        self._gaps = []
         self._next = {int(partition): offset for partition, offset in position["next"].items()}
         for partition, offset in self._next.items():
             if offset < self.log_starts[partition]:
@@ -53,8 +52,9 @@ class MemoryTopic:
             self._next[partition] = last
 
     def gaps(self):
-        """What the last seek passed over."""
-        return self._gaps
+        """What was passed over since the last call."""
+        found, self._gaps = self._gaps, []
+        return found
 
     def next_offsets(self) -> Mapping[int, int]:
         """By partition."""
@@ -70,6 +70,11 @@ class MemoryTopic:
         if not waiting or self._random.random() < 0.05:
             return self._block(0, [])
         partition = self._random.choice(waiting)
+        first, log_start = self._next.get(partition, 0), self.log_starts[partition]
+        if first < log_start and self._on_gap == "skip":
+            self._gaps.append((partition, first, log_start))
+            self._next[partition] = log_start
+            return self._block(partition, [])
         return self.read_range(
             partition, self._next.get(partition, 0), self.end(partition), self._random.randint(1, limit)
         )

@@ -306,6 +306,25 @@ def test_a_gap_that_is_passed_over_is_noted_and_what_was_read_past_the_checkpoin
     followed.close()
 
 
+def test_a_gap_that_opens_while_it_reads_is_noted_between_what_was_read_before_and_after(tmp_path):
+    topic = MemoryTopic(TOPIC, 3, on_gap="skip")
+    source = JournalledSource(topic, tmp_path)
+    source.start()
+    before = values(source, most=40)
+    first = topic.next_offsets()[1]
+    topic.log_starts[1] = offset_of(50)
+    after = values(source)
+    assert source.passed_over == offset_of(50) - first
+    assert [value for p, value in after if p == 1] == TOPIC[1][50:]
+    assert [s for s in spans(tmp_path) if s.kind is Kind.GAP] == [Span(Kind.GAP, 1, first, offset_of(50))]
+    last = source.position()
+    source.close()
+    followed = FollowedSource(MemoryTopic(TOPIC, seed=5), tmp_path / FILE_NAME)
+    assert values(followed) == before + after
+    assert followed.position() == last
+    followed.close()
+
+
 def test_a_journal_that_does_not_fit_the_position_is_refused(tmp_path):
     written(tmp_path, Span(Kind.START, 0, 0, 0), Span(Kind.READ, 0, 0, 4), Span(Kind.READ, 0, 6, 9))
     followed = FollowedSource(MemoryTopic(TOPIC), tmp_path / FILE_NAME)

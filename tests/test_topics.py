@@ -450,14 +450,41 @@ def test_messages_removed_before_they_were_read_are_refused_or_passed_over(broke
     assert found == {1: [value(1, i) for i in range(50, 100)], 3: [value(3, i) for i in range(90, 100)]}
 
 
-@pytest.mark.parametrize(("on_gap", "kind"), [("refuse", BadSettings), ("skip", Unavailable)])
-def test_retention_that_overtakes_a_worker_stops_it(broker, filled, opened, monkeypatch, on_gap, kind):
-    monkeypatch.setattr(client.Client, "poll", lambda *_: time.sleep(0.1) or [])  # a worker that is too slow
-    source = opened(broker.servers, filled, on_gap=on_gap)
-    source.start()
-    broker.delete_records(filled, {2: 80})
-    monkeypatch.undo()
-    assert "partition 2: 0 to 80" in until(source, kind)
+@pytest.fixture
+def overtaken(broker, filled, opened, monkeypatch):
+    """Makes sources too slow for the retention of partition 2."""
+
+    def make(on_gap):
+        monkeypatch.setattr(client.Client, "poll", lambda *_: time.sleep(0.1) or [])
+        source = opened(broker.servers, filled, on_gap=on_gap)
+        source.start()
+        broker.delete_records(filled, {2: 80})
+        monkeypatch.undo()
+        return source
+
+    return make
+
+
+def test_retention_that_overtakes_a_reader_stops_it(overtaken):
+    assert "80 offsets were removed from the log before they were read (partition 2: 0 to 80)" in until(
+        overtaken("refuse"), BadSettings
+    )
+
+
+def test_with_leave_a_reader_passes_over_what_retention_took_and_tells_it_once(overtaken):
+    source = overtaken("skip")
+    found = values_by_partition(messages(source, 320))
+    assert found == {p: [value(p, i) for i in range(80 if p == 2 else 0, 100)] for p in range(4)}
+    assert source.gaps() == [(2, 0, 80)]
+    assert source.gaps() == []
+    assert nothing_comes(source)
+
+
+def test_a_range_that_retention_took_is_never_passed_over(overtaken):
+    source = overtaken("skip")
+    with pytest.raises(Unavailable, match=r"partition 2: 0 to 80.*starting again passes over it"):
+        for _ in range(100):
+            source.read_range(2, 0, 90, 100)
 
 
 def test_partitions_that_settings_leave_out_now_are_refused(broker, filled, opened, position):

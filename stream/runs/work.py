@@ -84,7 +84,7 @@ def work(
                 tell(warning)
             watch.opening(worker.run, feed)
             worker.open(tell)
-            worker.live(until_end, on_window)
+            worker.live(until_end, on_window, tell)
             worker.pacer.checkpoint()
             return WorkResult(worker.result(time.monotonic() - began), place.passed_over)
         finally:
@@ -106,6 +106,7 @@ class _Worker:
     ) -> None:
         self._settings, self._source, self._stopping = settings, source, stopping
         self._watch = watch
+        self._told_of = 0
         keep = settings.state
         snapshots = Snapshots(
             state.snapshots, Retention(keep.keep_snapshots, keep.keep_hourly, keep.keep_daily)
@@ -144,10 +145,9 @@ class _Worker:
             self._source.seek(dict(position))
         if self._source.cut_bytes:
             warn(f"the journal's last {self._source.cut_bytes} bytes were torn by a crash and are cut off")
-        if self._source.passed_over:
-            warn(f"{self._source.passed_over:,} messages were removed before they were read: passed over")
+        self._warn_of_gaps(warn)
 
-    def live(self, until_end: bool, on_window: OnWindow) -> None:
+    def live(self, until_end: bool, on_window: OnWindow, warn: Callable[[str], None]) -> None:
         """Learns until a signal comes, or the end where one is wanted."""
 
         watch = self._watch
@@ -158,6 +158,7 @@ class _Worker:
 
         def over(read: bool) -> bool:
             watch.turned(self.run, read, self._source.following)
+            self._warn_of_gaps(warn)
             if not read:
                 time.sleep(IDLE_S)
             self._send()
@@ -193,6 +194,13 @@ class _Worker:
                 parts.callback(self._outbox.close)
             parts.callback(self.run.rejects.close)
             parts.callback(self.pacer.close)
+
+    def _warn_of_gaps(self, warn: Callable[[str], None]) -> None:
+        """Tells of messages that were passed over since the last call."""
+        new = self._source.passed_over - self._told_of
+        if new:
+            self._told_of += new
+            warn(f"{new:,} messages were removed before they were read: passed over")
 
     def _send(self) -> None:
         """Sends what waits; where too much does, learning waits for the brokers."""

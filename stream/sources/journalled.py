@@ -6,6 +6,7 @@ read, and their sum. Of a record that was read in part the source's position say
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 
 from stream.errors import BadData
@@ -143,8 +144,7 @@ class JournalledSource:
         gaps = self._source.gaps()
         if gaps:
             journal.cut_back(mark)
-            journal.append(*(Span(Kind.GAP, *gap) for gap in gaps))
-            self.passed_over += sum(last - first for _, first, last in gaps)
+            self._note_gaps(gaps)
         self._done = mark
         self._follow(journal)
 
@@ -159,6 +159,8 @@ class JournalledSource:
         block = self._source.read(limit)
         if len(block):
             self._note(block)
+        elif gaps := self._source.gaps():
+            self._note_gaps(gaps)
         return block
 
     def position(self) -> Position:
@@ -214,6 +216,12 @@ class JournalledSource:
             spans.insert(0, Span(Kind.START, partition, spans[0].first, spans[0].first))
         self._done = self._append(*spans)
         self._next[partition] = last
+
+    def _note_gaps(self, gaps: Sequence[tuple[int, int, int]]) -> None:
+        self._append(*(Span(Kind.GAP, *gap) for gap in gaps))
+        for partition, first, last in gaps:
+            self._next[partition] = last
+            self.passed_over += last - first
 
     def _append(self, *spans: Span) -> Mark:
         assert self._journal is not None

@@ -28,13 +28,16 @@ class Lane:
 
     `floor`: records before it are not wanted; `fetch`: the offset to ask for next; `check`: a record before
     the floor that must still be what it was; `fresh`: nothing of it was ever given out, so that it may begin
-    wherever the log does. `turn` changes whenever the lane is placed anew, `moved_s` when `fetch` moves.
+    wherever the log does; `log_start`: where the log begins now, where what is to be fetched next was removed
+    from it, None where it is there. `turn` changes whenever the lane is placed anew, `moved_s` when `fetch`
+    moves.
     """
 
     partition: int
     floor: int
     fresh: bool = False
     check: Last | None = None
+    log_start: int | None = None
     fetch: int = 0
     end: int | None = None
     until: int | None = None
@@ -54,7 +57,7 @@ class Lane:
         self._chunks.clear()
         self._row = self.held_bytes = 0
         self.floor = self.fetch = offset
-        self.check = None
+        self.check = self.log_start = None
         self.sought = False
         self.turn += 1
 
@@ -73,6 +76,11 @@ class Lane:
     def reached(self) -> int:
         """Where giving out has come to, transaction marks passed that no record follows."""
         return self.fetch if self.ahead is None else self.ahead
+
+    @property
+    def at_gap(self) -> bool:
+        """Whether all that was fetched is given out and what follows was removed from the log."""
+        return self.log_start is not None and not self._chunks
 
     def take(self, limit: int, last: int | None = None) -> tuple[Block, int, Last] | None:
         """Up to `limit` records, of those before `last`; the offset behind them and the last of them."""

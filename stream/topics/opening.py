@@ -98,7 +98,7 @@ def gap_refused(feed: Feed, gaps: Sequence[Gap]) -> BadSettings:
     more = f"; and {len(gaps) - 5:,} further partitions" if len(gaps) > 5 else ""
     return BadSettings(
         f"topic {feed.topic}: {size:,} offsets were removed from the log before they were read ({told}"
-        f"{more}): retention was too short for the time without a worker. Go on without them by "
+        f"{more}): retention is shorter than the worker was behind. Go on without them by "
         "--on-gap skip, or begin again with a fresh state folder"
     )
 

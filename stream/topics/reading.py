@@ -18,7 +18,7 @@ from stream.errors import BadSettings, InputMissing, Unavailable
 from stream.settings.models import Feed
 from stream.topics.client import Away, Client, Fetched, Identity, OutOfRange
 from stream.topics.lanes import Lane
-from stream.topics.opening import Opened, check_identity, gap_refused
+from stream.topics.opening import Opened, check_identity
 from stream.topics.records import Chunk, chunk_of
 
 __all__ = ["Order", "Reader"]
@@ -49,9 +49,10 @@ class Reader:
 
     `error`: why it ended; the caller raises it when the lanes are empty, at once where `spoiled` says that
     what they hold is not to be trusted. `contact_s`: when the cluster answered last, by the monotonic clock.
+    A lane whose next offset was removed from the log says so and stays there: whoever takes from it decides.
     """
 
-    def __init__(self, feed: Feed, options: Callable[[], Mapping[str, Any]], skip_gaps: bool) -> None:
+    def __init__(self, feed: Feed, options: Callable[[], Mapping[str, Any]]) -> None:
         self.lock = threading.Condition()
         self.lanes: dict[int, Lane] = {}
         self.identity: Identity | None = None
@@ -65,7 +66,6 @@ class Reader:
         self.adds_partitions = False
         self._feed = feed
         self._options = options
-        self._skip_gaps = skip_gaps
         self._closing = False
         self._missing_since: float | None = None
         self._commit_after_s = 0.0
@@ -215,10 +215,10 @@ class Reader:
         """Tells the client what to fetch next; False where nothing is to be fetched for now."""
         with self.lock:
             share = max(LEAST_AHEAD_BYTES, AHEAD_BYTES // max(len(self.lanes), 1))
-            full = [p for p, lane in self.lanes.items() if lane.held_bytes >= share]
-            for partition in full:
+            held = [p for p, x in self.lanes.items() if x.held_bytes >= share or x.log_start is not None]
+            for partition in held:
                 self.lanes[partition].moved_s = time.monotonic()
-            if len(full) == len(self.lanes):
+            if len(held) == len(self.lanes):
                 return False
             to_seek = {p: lane.fetch for p, lane in self.lanes.items() if not lane.sought}
             offsets = {p: lane.fetch for p, lane in self.lanes.items()}
@@ -230,7 +230,7 @@ class Reader:
         else:
             for partition, offset in to_seek.items():
                 client.seek(partition, offset)
-        client.pause(full, [p for p in offsets if p not in full])
+        client.pause(held, [p for p in offsets if p not in held])
         return True
 
     def _fetch(self, client: Client) -> None:
@@ -302,8 +302,8 @@ class Reader:
             elif lane.fresh and offset < start:
                 lane.place(start)
             elif offset < start:
-                refused = gap_refused(self._feed, [(partition, offset, start)])
-                raise Unavailable(f"{refused}; starting again passes over it") if self._skip_gaps else refused
+                lane.log_start = start
+            self.lock.notify_all()
 
     # ---- the look around ---------------------------------------------------------------------------------
 

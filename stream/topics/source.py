@@ -20,7 +20,7 @@ from stream.message import Block, Position
 from stream.settings.models import Feed
 from stream.topics.access import Secrets
 from stream.topics.lanes import Lane, Last
-from stream.topics.opening import CURE, Gap, opened_at, opened_new
+from stream.topics.opening import CURE, Gap, gap_refused, opened_at, opened_new
 from stream.topics.reading import Order, Reader, is_stalled
 
 __all__ = ["Health", "TopicSource"]
@@ -51,8 +51,8 @@ class TopicSource:
 
     `start`, `seek`: wait for the cluster, however long it takes, and raise Unavailable when `stopping` gives
     True meanwhile. `unavailable_after_s`: so long after the cluster's last answer Unavailable is raised;
-    without it the source waits for ever: `read` returns empty blocks. `on_gap`: what `seek` does where
-    messages were removed before they were read.
+    without it the source waits for ever: `read` returns empty blocks. `on_gap`: what `seek` and `read` do
+    where messages were removed before they were read.
 
     Raises what stream.topics.access.Secrets raises, and from any method that reads: BadSettings (another
     topic or log than before; messages gone), InputMissing (no such topic), NoPermission, BadData (a batch is
@@ -73,7 +73,7 @@ class TopicSource:
         self._skip_gaps = on_gap == "skip"
         self._unavailable_after_s = unavailable_after_s
         self._stopping = stopping
-        self._reader = Reader(feed, secrets.options, self._skip_gaps)
+        self._reader = Reader(feed, secrets.options)
         self._began_s = time.monotonic()
         self._next: dict[int, int] = {}
         self._last: dict[int, Last] = {}
@@ -118,7 +118,11 @@ class TopicSource:
             while True:
                 self._raise_if_spoiled()
                 for partition in self._in_turn():
-                    block = self._take(reader.lanes[partition], limit)
+                    lane = reader.lanes[partition]
+                    if lane.at_gap:
+                        self._pass_over(lane)
+                        return self._empty(partition)
+                    block = self._take(lane, limit)
                     if block is not None:
                         self._turn.remove(partition)
                         self._turn.append(partition)
@@ -146,6 +150,8 @@ class TopicSource:
                     self._next[partition] = last
                 if block is not None or self._next[partition] == last:
                     return block or self._empty(partition)
+                if lane.at_gap:
+                    raise self._gap_in_range(lane)
                 self._raise_if_over()
                 if not reader.lock.wait(deadline - time.monotonic()) and time.monotonic() >= deadline:
                     return self._empty(partition)
@@ -169,8 +175,9 @@ class TopicSource:
         return MappingProxyType(self._next)
 
     def gaps(self) -> list[Gap]:
-        """Ranges (partition, from, to) that the last `seek` passed over because they are gone for good."""
-        return list(self._gaps)
+        """Ranges (partition, from, to) that were passed over because they are gone for good, told once."""
+        gaps, self._gaps = self._gaps, []
+        return gaps
 
     def position(self) -> Position:
         """Next message to read of each partition that was read or placed; see the top of this file."""
@@ -260,6 +267,26 @@ class TopicSource:
         if not lane.held_bytes:
             self._reader.lock.notify_all()
         return block
+
+    def _pass_over(self, lane: Lane) -> None:
+        """Goes on where the log begins now; raises BadSettings where gaps are refused."""
+        gap = self._gap_of(lane)
+        if not self._skip_gaps:
+            raise gap_refused(self._feed, [gap])
+        partition, _, start = gap
+        self._gaps.append(gap)
+        self._next[partition] = start
+        lane.place(start)
+        self._reader.lock.notify_all()
+
+    def _gap_in_range(self, lane: Lane) -> BadSettings | Unavailable:
+        """The error for a part of a range that was read before and is gone: it cannot be passed over here."""
+        refused = gap_refused(self._feed, [self._gap_of(lane)])
+        return Unavailable(f"{refused}; starting again passes over it") if self._skip_gaps else refused
+
+    def _gap_of(self, lane: Lane) -> Gap:
+        assert lane.log_start is not None
+        return lane.partition, self._next.get(lane.partition, lane.floor), lane.log_start
 
     def _raise_if_spoiled(self) -> None:
         if self._reader.error is not None and self._reader.spoiled:
