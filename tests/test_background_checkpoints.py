@@ -87,7 +87,7 @@ def test_what_is_written_is_the_moment_of_the_beginning(method, bounds, seed, be
     with names_swept_every(period), pytest.MonkeyPatch.context() as patch:
         model, uninterrupted = Model(settings), Model(settings)
         feed(model, stream[:begin])
-        expected = bytes_of(model)
+        expected, weights = bytes_of(model), model.weights()
         at = begin
 
         def learn():
@@ -97,9 +97,10 @@ def test_what_is_written_is_the_moment_of_the_beginning(method, bounds, seed, be
 
         writer = Interleaved(learn, seed)
         patch.setattr(Table, "_gather", lambda *args: writer.gather(*args))
-        view = model.begin_saving()
+        view = model.begin_saving(weights=True)
         learn()
         assert as_bytes(arrays_of(view)) == expected
+        assert_same(view.weights(), weights)
         assert writer.gathered >= view.rows.length / 7
         feed(model, stream[at:])
         feed(uninterrupted, stream)
@@ -108,6 +109,15 @@ def test_what_is_written_is_the_moment_of_the_beginning(method, bounds, seed, be
         resumed.restore(arrays_from(expected))
         feed(resumed, stream[begin:])
         assert bytes_of(resumed) == bytes_of(uninterrupted)
+
+
+def assert_same(found, expected):
+    """Every field of the weights, bit for bit."""
+    for name in ("addresses", "values", "messages"):
+        one, other = getattr(found, name), getattr(expected, name)
+        assert (one.dtype, one.tobytes()) == (other.dtype, other.tobytes()), name
+    for name in ("names", "intercept", "learned", "fingerprint"):
+        assert getattr(found, name) == getattr(expected, name), name
 
 
 def arrays_from(found):

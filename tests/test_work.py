@@ -119,6 +119,26 @@ def test_killed_at_any_instant_it_ends_as_an_uninterrupted_run_of_its_journal(to
         assert entry.name.isdecimal(), "no snapshot was ever ahead of what a restart goes on from"
 
 
+def test_learning_and_checkpoints_do_not_wait_for_a_snapshot_that_hangs(topic_file, tmp_path, monkeypatch):
+    """The disk lets no snapshot through until the worker has learned all and written its last checkpoint."""
+    settings = quick(worker={"checkpoint_every_s": 0.01, "snapshot_every_s": 0.01})
+    every, last, real = settings.state.checkpoint_every, messages_in(topic_file), Snapshots.write
+    written = []
+
+    def write(snapshots, messages, weights, about):
+        deadline = time.monotonic() + 20
+        while not written and not (tmp_path / f"state/checkpoints/{last:015d}").exists():
+            assert time.monotonic() < deadline, "the worker waits for its snapshot"
+            time.sleep(0.01)
+        written.append(messages)
+        return real(snapshots, messages, weights, about)
+
+    monkeypatch.setattr(Snapshots, "write", write)
+    work(settings, tmp_path / "state", source=topic_from(topic_file, 1), until_end=True)
+    assert written[-1] == last and len(written) >= 2 and written[0] < last
+    assert every < last
+
+
 def test_a_flipped_bit_in_what_was_read_shows_in_retracing(topic_file, tmp_path):
     settings = quick()
     work(settings, tmp_path / "state", source=topic_from(topic_file, 1), until_end=True)

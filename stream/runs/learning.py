@@ -122,10 +122,10 @@ class LearningRun:
         """Arrays of a checkpoint, by name."""
         return {**self.model.state(), **self._metrics_state()}
 
-    def begin_saving(self) -> View:
+    def begin_saving(self, weights: bool = False) -> View:
         """`state` as it is now, for another thread to write meanwhile: see `Model.begin_saving`."""
         metrics = self._metrics_state()
-        view = self.model.begin_saving()
+        view = self.model.begin_saving(weights)
         return replace(view, rest=lambda: {**view.rest(), **metrics})
 
     def restore(self, arrays: Mapping[str, npt.NDArray[Any]]) -> None:

@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from functools import cache
 from typing import Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
 
+from stream.arrays_file import Arrays as ArraysByName
 from stream.arrays_file import Rows
 from stream.background import View
 from stream.batch import Batch
 from stream.coordinate import example_of, tally_of
 from stream.learners import Learner
+from stream.runs.sifting import Sifting
 from stream.settings import Settings
 from stream.tables import NameLedger, Table, names_state
 from stream.weights import Weights
@@ -145,21 +148,32 @@ class Model:
             | _part("names", names_state(self._names.copied()))
         )
 
-    def begin_saving(self) -> View:
+    def begin_saving(self, weights: bool = False) -> View:
         """The state as it is now, for another thread to write while this one goes on learning.
 
         Its `close` must be called before the next one. Learning waits for a copy of eight bytes a coordinate,
-        the admission filter and the names.
+        the admission filter and the names. `weights`: whether the view gives the weights too.
         """
         small = _part("table", self._table.admission()) | self._small_state()
-        names = self._names.copied()
+        copied = self._names.copied()
+        names = cache(lambda: names_state(copied))
         saving = self._table.begin_saving(self.learned)
-        rows = Rows(
-            saving.length,
-            _part("table", saving.dtypes),
-            (_part("table", piece) for piece in saving.pieces()),
+        pieces: Iterator[ArraysByName] = saving.pieces()
+        sifting = self._sifting() if weights else None
+        if sifting is not None:
+            pieces = sifting.passing(pieces)
+        rows = Rows(saving.length, _part("table", saving.dtypes), (_part("table", piece) for piece in pieces))
+        return View(
+            rows,
+            lambda: small | _part("names", names()),
+            saving.close,
+            None if sifting is None else lambda: sifting.weights(names()),
         )
-        return View(rows, lambda: small | _part("names", names_state(names)), saving.close)
+
+    def _sifting(self) -> Sifting:
+        learner = Learner(self._settings.learner)
+        learner.restore(self._learner.state())
+        return Sifting(learner, self._settings.fingerprint())
 
     def _small_state(self) -> Arrays:
         counts = np.array([self._room_sought_from, self._table.refused], np.int64)

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from stream.background import BackgroundCheckpoints
+from stream.background import BackgroundCheckpoints, BackgroundWriter
 from stream.checkpoints import Checkpoints
 from stream.errors import Unavailable
 from stream.runs.learning import LearningRun
@@ -82,30 +83,28 @@ class LivePacer(Pacer):
         self._worker = settings.worker
         self._snapshots = snapshots
         self._background = BackgroundCheckpoints(checkpoints)
+        self._publishing: BackgroundWriter[tuple[Path, int]] = BackgroundWriter("snapshot")
         self._before, self._after, self._clock = before, after, clock
         self._checkpoint_at = clock() + self._worker.checkpoint_every_s
         self._snapshot_at = clock() + self._worker.snapshot_every_s
         self._position: dict[str, Any] | None = None
-        self._weights: tuple[int, Weights, About] | None = None  # of the checkpoint under way
+        self._due: _Due | None = None  # the snapshot of the checkpoint under way
         self._snapshot_of = -1
         self.snapshot: Path | None = None
         self.snapshot_nnz = 0
 
-    @property
-    def under_way(self) -> bool:
-        """Whether a checkpoint is being written that nobody took note of yet."""
-        return self._background.busy
-
     def keep_up(self) -> None:
         """Begins what is due and takes note of what became durable; after each block, and now and then."""
         self._note(self._background.done())
+        self._note_snapshot(self._publishing.done())
         now = self._clock()
         new = self._run.messages != self._saved_at
+        snapshot = now >= self._snapshot_at and not self._publishing.busy
         if new and self._run.messages % self._every == 0:
             self._note(self._background.wait())
-            self._begin(now >= self._snapshot_at)
-        elif not self._background.busy and now >= min(self._checkpoint_at, self._snapshot_at):
-            self._begin(now >= self._snapshot_at)
+            self._begin(snapshot)
+        elif not self._background.busy and (snapshot or now >= self._checkpoint_at):
+            self._begin(snapshot)
 
     def checkpoint(self) -> None:
         """Returns once a checkpoint and a snapshot of the present state are durable."""
@@ -116,10 +115,12 @@ class LivePacer(Pacer):
                 "the one before it is whole, and what came since will be learned again in the same order"
             )
         self._note(self._background.wait())
+        self._note_snapshot(self._publishing.wait())
 
     def close(self) -> None:
-        """Waits until no checkpoint is being written any more."""
+        """Waits until neither checkpoint nor snapshot is being written any more."""
         self._background.close()
+        self._publishing.close()
 
     def _begin(self, snapshot: bool) -> bool:
         """Begins a checkpoint of what is new, and a snapshot with it; False where that must wait."""
@@ -132,13 +133,16 @@ class LivePacer(Pacer):
         self._checkpoint_at = now + self._worker.checkpoint_every_s
         if snapshot:
             self._snapshot_at = now + self._worker.snapshot_every_s
-            if self._snapshot_of != run.messages:
-                self._weights = (run.messages, run.model.weights(), run.about_snapshot())
-        if not new:
+            snapshot = self._snapshot_of != run.messages
+        view = run.begin_saving(snapshot) if new else None
+        if snapshot:
+            weights = view.weights if view is not None else None
+            self._due = _Due(run.messages, weights or _known(run.model.weights()), run.about_snapshot())
+        if view is None:
             self._publish()
             return True
         about = run.about()
-        self._background.begin(run.messages, run.begin_saving(), about)
+        self._background.begin(run.messages, view, about)
         self._saved_at, self._position = run.messages, about["position"]
         return True
 
@@ -152,9 +156,32 @@ class LivePacer(Pacer):
         self._publish()
 
     def _publish(self) -> None:
-        if self._weights is None:
+        """Begins to write the snapshot that is due, after the one before it."""
+        due, self._due = self._due, None
+        if due is None:
             return
-        self._snapshot_of, weights, about = self._weights
-        self._weights = None
-        self.snapshot = self._snapshots.write(self._snapshot_of, weights, about)
-        self.snapshot_nnz = len(weights)
+        self._note_snapshot(self._publishing.wait())
+        self._snapshot_of = due.messages
+        self._publishing.start(lambda: due.write(self._snapshots))
+
+    def _note_snapshot(self, written: tuple[Path, int] | None) -> None:
+        if written is not None:
+            self.snapshot, self.snapshot_nnz = written
+
+
+@dataclass(frozen=True, slots=True)
+class _Due:
+    """A snapshot to be written once the checkpoint of the same moment is durable."""
+
+    messages: int
+    weights: Callable[[], Weights]
+    about: About
+
+    def write(self, snapshots: Snapshots) -> tuple[Path, int]:
+        """Its path and its number of weights."""
+        weights = self.weights()
+        return snapshots.write(self.messages, weights, self.about), len(weights)
+
+
+def _known(weights: Weights) -> Callable[[], Weights]:
+    return lambda: weights

@@ -7,6 +7,7 @@ import threading
 import time
 from collections.abc import Iterator
 from contextlib import ExitStack, contextmanager
+from pathlib import Path
 from types import TracebackType
 from typing import Any
 
@@ -184,7 +185,7 @@ class WatchedPacer(LivePacer):
     def keep_up(self) -> None:
         """As LivePacer's."""
         began = time.monotonic()
-        with self._noted():
+        with self._failures_told():
             super().keep_up()
         took = time.monotonic() - began
         if took >= PAUSE_S:
@@ -192,23 +193,32 @@ class WatchedPacer(LivePacer):
 
     def checkpoint(self) -> None:
         """As LivePacer's."""
-        with self._noted():
+        with self._failures_told():
             super().checkpoint()
 
+    def _begin(self, snapshot: bool) -> bool:
+        self._begun_s = time.monotonic()
+        return super()._begin(snapshot)
+
+    def _note(self, durable: Path | None) -> None:
+        begun_s, now = self._begun_s, time.monotonic()
+        super()._note(durable)
+        if durable is not None:
+            watch = self._watch
+            watch.exposition.checkpoint(now - begun_s)
+            watch.figures.checkpoints, watch.figures.checkpoint_s = self.written, now
+            watch.say("checkpoint", messages=int(durable.name), seconds=round(now - begun_s, 3))
+
+    def _note_snapshot(self, written: tuple[Path, int] | None) -> None:
+        super()._note_snapshot(written)
+        if written is not None:
+            self._watch.say("snapshot", name=written[0].name, nonzeros=written[1])
+
     @contextmanager
-    def _noted(self) -> Iterator[None]:
-        watch, written, began = self._watch, self.written, time.monotonic()
-        begun_s = self._begun_s if self.under_way else began
+    def _failures_told(self) -> Iterator[None]:
         try:
             yield
         except BedloadError as error:
-            watch.figures.checkpoint_failures += 1
-            watch.say("checkpoint_failed", logging.ERROR, error=type(error).__name__, text=str(error))
+            self._watch.figures.checkpoint_failures += 1
+            self._watch.say("checkpoint_failed", logging.ERROR, error=type(error).__name__, text=str(error))
             raise
-        now = time.monotonic()
-        for _ in range(self.written - written):
-            watch.exposition.checkpoint(now - begun_s)
-            watch.figures.checkpoints, watch.figures.checkpoint_s = self.written, now
-            begun_s = began
-        if self.under_way:
-            self._begun_s = begun_s if written == self.written else began
