@@ -5,7 +5,7 @@ from contextlib import contextmanager
 
 import pytest
 
-from stream.runs import model as model_module
+from stream.runs import table_model
 from stream.runs.model import Model
 from stream.settings.models import Learner, Settings, Space, State
 from tests.batches import Example, batch_of
@@ -32,7 +32,7 @@ def settings_of(method="ftrl", *, space=40, l1_per_example=0.02, **state):
 @contextmanager
 def names_swept_every(examples):
     with pytest.MonkeyPatch.context() as patch:
-        patch.setattr(model_module, "NAMES_SWEPT_EVERY", examples)
+        patch.setattr(table_model, "NAMES_SWEPT_EVERY", examples)
         yield
 
 

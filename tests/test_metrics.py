@@ -48,7 +48,7 @@ def feed(
                 margins[part], labels[part], weights[part], None if codes is None else codes[part]
             )
             if progress.window_left == 0:
-                progress.close_window(0, 0)
+                progress.close_window(int, 0)
             start = end
 
 
@@ -171,7 +171,7 @@ def test_metrics_without_ground_are_none_and_null() -> None:
     progress.observe(np.ones(1), np.ones(1, np.int8), np.zeros(1))  # a yes of weight 0 changes counts only
     assert progress.summary().positives == 1
     assert progress.summary().auc is None
-    assert json.loads(json.dumps(progress.close_window(7, 9).to_json()))["auc"] is None
+    assert json.loads(json.dumps(progress.close_window(lambda: 7, 9).to_json()))["auc"] is None
 
 
 def test_only_yes_leaves_auc_and_entropy_undefined_but_calibration_known() -> None:
@@ -203,7 +203,7 @@ def test_a_window_holds_its_own_messages_only_and_the_run_all_of_them() -> None:
     rows = []
     for part in (slice(0, 600), slice(600, 1_000)):
         progress.observe(margins[part], labels[part], weights[part])
-        rows.append(progress.close_window(nnz=part.stop, live=part.stop + 1))
+        rows.append(progress.close_window(lambda part=part: part.stop, part.stop + 1))
     assert [row.through for row in rows] == [600, 1_000]
     assert (rows[1].to_json()["nnz"], rows[1].to_json()["live"]) == (1_000, 1_001)
     known = labels[600:] >= 0

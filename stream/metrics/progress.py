@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import Any
 
 import numpy as np
@@ -158,10 +158,10 @@ class Progress:
             rows.append((OTHER, self._slice(0)))
         return rows
 
-    def close_window(self, nnz: int, live: int) -> WindowRow:
-        """The row of the current window, full or not, and a fresh window."""
+    def close_window(self, nnz: Callable[[], int], live: int) -> WindowRow:
+        """The row of the current window, full or not, and a fresh window; `nnz` is asked for its number."""
         entries = self._rankings.entries(WINDOW)
-        row = WindowRow(self.messages, self._summary(WINDOW, entries), nnz, live)
+        row = WindowRow(self.messages, self._summary(WINDOW, entries), nnz(), live)
         for sums in (self._counts, self._loss, self._bins):
             sums[CLOSED] += sums[WINDOW]
             sums[WINDOW] = 0

@@ -51,11 +51,14 @@ class LearningRun:
         *,
         reject_sink: RejectSink | None = None,
         on_scored: OnScored | None = None,
+        model: Model | None = None,
+        progress: Progress | None = None,
     ) -> None:
         """`saved`: what `about()` gave; then `restore` must follow with the arrays.
 
         `reject_sink`: where rejects are kept instead of files in `rejects_folder`; `on_scored` is given each
         block with the rows that have a margin (int64[m]) and those margins, from before their update.
+        `model`, `progress`: in place of those that the settings make, for many settings side by side.
         """
         self._settings = settings
         self._on_scored = on_scored
@@ -63,8 +66,8 @@ class LearningRun:
         self._batcher = Batcher(settings)
         self._slice_path = _slice_path(settings)
         self.presence = Presence(settings)
-        self.model = Model(settings)
-        self.progress = Progress(settings.metrics.window, self._slice_path is not None)
+        self.model = model or Model(settings)
+        self.progress = progress or Progress(settings.metrics.window, self._slice_path is not None)
         self.messages = self.tokens = self.epoch = 0
         self.position: Mapping[str, Any] | None = None
         self.accepted: list[dict[str, Any]] = []
@@ -110,7 +113,7 @@ class LearningRun:
                 margins, batch.labels, batch.weights, codes, rejected=len(block) - len(batch)
             )
             if self.progress.window_left == 0:
-                return self.progress.close_window(self.model.nnz(), self.model.live)
+                return self.progress.close_window(self.model.nnz, self.model.live)
         return True
 
     def next_epoch(self) -> None:

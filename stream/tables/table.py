@@ -13,9 +13,9 @@ import numpy.typing as npt
 from stream.batch import Batch
 from stream.coordinate import CELLS, FIRST, NAMED, NO_UNDO, SECOND, TOUCH
 from stream.errors import CannotCreate
+from stream.memory import reserve
 from stream.settings.models import State
 from stream.tables import probing
-from stream.tables.memory import reserve
 from stream.tables.saving import Saving
 
 __all__ = ["Table"]

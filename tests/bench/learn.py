@@ -89,7 +89,7 @@ def parts_of_learning(settings: Settings, block: int = 1024) -> dict[str, float]
             first = stopped
         progress.observe(margins[: len(batch)], batch.labels, batch.weights)
         if progress.window_left == 0:
-            progress.close_window(0, table.live)
+            progress.close_window(int, table.live)
         split.mark("metrics")
     source.close()
     return dict(split.seconds)
