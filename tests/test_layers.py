@@ -44,6 +44,7 @@ HOMES = {
     "typing_extensions": "stream/",
     "crc32c": ("stream/manifest.py", "stream/journal.py"),
     "prometheus_client": "stream/operating/exposition.py",
+    "plotly": "stream/reports/plotting.py",
     "pyarrow": "stream/snapshots/export.py",
     "pydantic": "stream/settings/",
     "pydantic_core": "stream/settings/",

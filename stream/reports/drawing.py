@@ -78,6 +78,7 @@ def layout(height: int, **more: Any) -> Figure:
             "font": {"size": 13, "color": "--ink"},
             "align": "left",
         },
+        "modebar": {"bgcolor": CLEAR, "color": "--muted", "activecolor": "--ink"},
         "dragmode": "zoom",
         "uirevision": "kept",
         **more,
@@ -142,22 +143,14 @@ class LogPlaces:
         low = math.log10(self._zero if self.has_zero else self._low)
         span = max(math.log10(self._high) - low, 0.1)
         ends = [low - 0.04 * span, low + 1.04 * span]
-        return axis(
-            title,
-            type="log",
-            tickvals=values,
-            ticktext=texts,
-            range=ends[::-1] if falling else ends,
-            **more,
-        )
+        shown = ends[::-1] if falling else ends
+        return axis(title, **{"type": "log", "tickvals": values, "ticktext": texts, "range": shown, **more})
 
     def _ticks(self) -> tuple[list[float], list[str]]:
         first, last = math.floor(math.log10(self._low)), math.ceil(math.log10(self._high))
         steps: tuple[int, ...] = (1,) if last - first > 3 else (1, 3) if last - first > 1 else (1, 2, 3, 5)
         stride = max(1, math.ceil((last - first) / 8))
-        values = [
-            float(f"{step}e{power}") for power in range(first, last + 1, stride) for step in steps
-        ]
+        values = [float(f"{step}e{power}") for power in range(first, last + 1, stride) for step in steps]
         kept = [value for value in values if self._low * 0.999 <= value <= self._high * 1.001]
         texts = [self._say(value) for value in kept]
         return ([self._zero, *kept], ["0", *texts]) if self.has_zero else (kept, texts)

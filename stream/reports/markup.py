@@ -28,7 +28,9 @@ def paragraphs(*texts: str) -> str:
     return "".join(f"<p>{text}</p>" for text in texts if text)
 
 
-def table(label: str, titles: Sequence[str], rows: Iterable[Sequence[str]], texts: int = 1) -> str:
+def table(
+    label: str, titles: Sequence[str], rows: Iterable[Sequence[str]], texts: int = 1, kind: str = ""
+) -> str:
     """A table that scrolls inside itself; the first `texts` columns are words, the others numbers."""
     kinds = ['class="text"' if i < texts else 'class="number"' for i in range(len(titles))]
     head = "".join(f'<th scope="col" {k}>{t}</th>' for k, t in zip(kinds, titles, strict=True))
@@ -37,7 +39,7 @@ def table(label: str, titles: Sequence[str], rows: Iterable[Sequence[str]], text
         for row in rows
     )
     return (
-        f'<div class="scroll" tabindex="0" role="region" aria-label="{escaped(label)}">'
+        f'<div class="scroll {kind}" tabindex="0" role="region" aria-label="{escaped(label)}">'
         f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table></div>"
     )
 
@@ -48,13 +50,14 @@ def facts(pairs: Iterable[tuple[str, str]], kind: str = "facts") -> str:
     return f'<dl class="{kind}">{rows}</dl>'
 
 
-def pictured(name: str, picture: Picture, reading: str, controls: str = "") -> str:
-    """A picture with its key above, and below it how it is read."""
+def pictured(name: str, picture: Picture, gist: str, reading: str, above: str = "", below: str = "") -> str:
+    """A picture with controls above and below it: what it shows comes first, how it is read last."""
     key = "".join(f"<li>{_swatch(entry.look)}{escaped(entry.text)}</li>" for entry in picture.key)
     return (
-        f'<figure><figcaption>{reading}</figcaption>{controls}<ul class="key">{key}</ul>'
+        f'<figure><p>{gist}</p>{above}<div class="drawn"><ul class="key">{key}</ul>'
         f'<div class="picture" id="picture-{name}" role="img" style="height:{picture.height}px"'
-        f' aria-label="{escaped(picture.summary)}"></div></figure>'
+        f' aria-label="{escaped(picture.summary)}"></div></div>{below}'
+        f"<figcaption>{reading}</figcaption></figure>"
     )
 
 
@@ -66,7 +69,9 @@ def token_cell(token: Mapping[str, Any]) -> str:
     return f'<span class="field">{bdi(field, 40)}</span> {bdi(text) if text else ""}'
 
 
-def two_way(name: str, towards_yes: Sequence[Mapping[str, Any]], towards_no: Sequence[Mapping[str, Any]]) -> str:
+def two_way(
+    name: str, towards_yes: Sequence[Mapping[str, Any]], towards_no: Sequence[Mapping[str, Any]]
+) -> str:
     """The tokens that speak for a yes, and beside them those that speak for a no."""
     titles = ("token", "weight", "odds", "in messages", "kept")
     sides = []
@@ -75,7 +80,7 @@ def two_way(name: str, towards_yes: Sequence[Mapping[str, Any]], towards_no: Seq
             (token_cell(t), weight(t["weight"]), odds(t["weight"]), percent(t["share"]), percent(t["kept"]))
             for t in tokens
         ]
-        listed = table(f"Tokens {words.lower()}", titles, rows)
+        listed = table(f"Tokens {words.lower()}", titles, rows, kind="whole")
         sides.append(f'<div id="{name}-{side}" class="side {side}"><h3>{words}</h3>{listed}</div>')
     return f'<div class="sides">{"".join(sides)}</div>'
 
@@ -99,9 +104,12 @@ _SHAPES = {
     "triangle-up": '<path d="M14 2l5 9H9z" fill="{colour}"/>',
     "triangle-down": '<path d="M14 12l5-9H9z" fill="{colour}"/>',
     "cross": '<path d="M12.5 2h3v3.5H19v3h-3.5V12h-3V8.5H9v-3h3.5z" fill="{colour}"/>',
-    "star": '<path d="M14 1l1.7 4.2 4.5.3-3.5 2.9 1.1 4.4L14 10.4l-3.8 2.4 1.1-4.4-3.5-2.9 4.5-.3z" fill="{colour}"/>',
+    "star": (
+        '<path d="M14 1l1.7 4.2 4.5.3-3.5 2.9 1.1 4.4L14 10.4l-3.8 2.4 1.1-4.4-3.5-2.9 4.5-.3z"'
+        ' fill="{colour}"/>'
+    ),
     "circle-open": '<circle cx="14" cy="7" r="5" fill="none" stroke="{colour}" stroke-width="1.8"/>',
-    "square-open": '<rect x="9" y="2" width="10" height="10" fill="none" stroke="{colour}" stroke-width="1.8"/>',
+    "square-open": '<path d="M9 2h10v10H9z" fill="none" stroke="{colour}" stroke-width="1.8"/>',
     "diamond-open": '<path d="M14 1l6 6-6 6-6-6z" fill="none" stroke="{colour}" stroke-width="1.8"/>',
     "bar": '<rect x="4" y="2" width="20" height="10" fill="{colour}"/>',
 }

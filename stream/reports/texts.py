@@ -64,7 +64,7 @@ def escaped(text: str) -> str:
 
 
 def bdi(text: str, most: int = _FULLY_SHOWN) -> str:
-    """HTML of a token or another text of the feed, shortened, in a box that its own direction cannot leave."""
+    """HTML of a token or another text of the feed, shortened, in a box that its direction cannot leave."""
     shown = visible(text)
     short = shortened(shown, most)
     title = f' title="{escaped(shown)}"' if short != shown else ""
@@ -119,7 +119,8 @@ def odds(value: float | None) -> str:
     if value is None:
         return UNKNOWN
     factor = math.exp(min(value, 700.0))
-    return f"×{factor:,.0f}" if factor >= 100 else f"×{plain(factor)}"
+    digits = 0 if factor >= 100 else 1 if factor >= 10 else 2
+    return f"×{factor:,.{digits}f}" if factor >= 0.1 else f"×{plain(factor, 2)}"
 
 
 def percent(value: float | None) -> str:

@@ -1,4 +1,4 @@
-"""Weights at each strength in, the picture of tokens that come in one by one out, and each model behind it."""
+"""Weights at each strength in, the picture of tokens that come in one by one out, and each model of it."""
 
 from __future__ import annotations
 
@@ -17,12 +17,15 @@ NAMED = 14
 APART = 17
 _LABEL = 18
 _HOVER = 60
+_GIST = (
+    "Each line is one token's weight. On the left the penalty is so strong that every weight is exactly "
+    "zero; as it weakens, tokens come in one by one, those with the most evidence first."
+)
 _READING = (
-    "Each line is one token's weight; further from the middle means that the token says more. On the left the "
-    "penalty is so strong that every weight is exactly zero; as it weakens, tokens come in one by one, those with "
-    "the most evidence first. The dotted line is the model listed below: move it with the slider, or click in "
-    "the picture. Two tokens that often stand in the same messages share their weight, and under L1 they may "
-    "swap places: one at zero does not mean that it says nothing, only that others say it already."
+    "Further from the middle means that a token says more. The dotted line is the model listed below: move "
+    "it with the slider, or click in the picture. Two tokens that often stand in the same messages share "
+    "their weight, and under L1 they may swap places: one at zero does not mean that it says nothing, only "
+    "that others say it already."
 )
 
 
@@ -46,7 +49,10 @@ def paths(document: Mapping[str, Any]) -> Section:
     rate = plain(document["paths"]["learning_rate"])
     shown = f"Learning rate {rate}; the {len(document['paths']['tokens'])} tokens with the largest weights."
     listed = two_way("model", chosen["towards_yes"], chosen["towards_no"])
-    body = pictured("paths", picture, f"{_READING} {shown}") + f'<div class="model">{slider}{listed}</div>'
+    body = (
+        pictured("paths", picture, _GIST, f"{_READING} {shown}", below=slider)
+        + f'<div id="model">{listed}</div>'
+    )
     return Section("paths", title, short, body, {"paths": picture})
 
 
@@ -78,7 +84,8 @@ def _chosen(document: Mapping[str, Any]) -> int:
 def _said(document: Mapping[str, Any], model: Mapping[str, Any]) -> str:
     unit = document["grid"]["unit"]
     at = {c["index"]: c for c in document["candidates"]}.get(model["index"])
-    text = f"{unit} = {plain(model['strength'])}: {count(model['nnz'])} weights, log loss {loss(model['log_loss'])}"
+    text = f"{unit} = {plain(model['strength'])}: {count(model['nnz'])} weights"
+    text += f", log loss {loss(model['log_loss'])}"
     if model["index"] == document["choice"]["index"]:
         text += " (the choice)"
     return text + (f"; {difference(at['difference'], at['log_loss_se'])} to the lowest loss" if at else "")
@@ -96,8 +103,10 @@ def _picture(document: Mapping[str, Any], chosen: float) -> Picture:
         "layout": layout(
             HEIGHT,
             margin={"l": 62, "r": 150, "t": 14, "b": 54},
-            xaxis=places.axis(f"strength of the penalty ({document['grid']['unit']}), weaker →", falling=True),
-            yaxis=axis("weight, log-odds", range=up, zeroline=True, zerolinecolor="--axis", zerolinewidth=1.5),
+            xaxis=places.axis(f"{document['grid']['unit']}, weaker →", falling=True),
+            yaxis=axis(
+                "weight, log-odds", range=up, zeroline=True, zerolinecolor="--axis", zerolinewidth=1.5
+            ),
             shapes=[vertical(places.of(chosen))],
             annotations=_labels(drawn["tokens"], up),
         ),
@@ -140,9 +149,7 @@ def _side(weights: Sequence[float]) -> float:
 def _without_rests(weights: Sequence[float]) -> list[float | None]:
     """Weights, and None where a line would rest on zero: forty lines on one another tell nothing."""
     padded_out = [0.0, *weights, 0.0]
-    return [
-        None if not any(padded_out[i : i + 3]) else w for i, w in enumerate(weights)
-    ]
+    return [None if not any(padded_out[i : i + 3]) else w for i, w in enumerate(weights)]
 
 
 def _labels(tokens: Sequence[Mapping[str, Any]], up: Sequence[float]) -> list[Figure]:
@@ -184,4 +191,5 @@ def _apart(wanted: Sequence[float]) -> list[float]:
 
 def _summary(drawn: Mapping[str, Any]) -> str:
     first = ", ".join(named(token) for token in drawn["tokens"][:5])
-    return f"Weights of {len(drawn['tokens'])} tokens against the strength of the penalty. The strongest: {first}."
+    said = f"Weights of {len(drawn['tokens'])} tokens against the strength of the penalty."
+    return f"{said} The strongest: {first}."

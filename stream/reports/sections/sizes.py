@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -32,12 +33,15 @@ _RINGS = {
     "runner-up": ("square-open", "--ink", 16),
     "half the weights": ("circle-open", "--ink", 18),
 }
+_GIST = (
+    "What is lost on the last part of the log (up; lower is better) by models that keep few weights or many "
+    "(across). Look for the place where a line stops falling: weights to the right of it buy next to nothing."
+)
 _READING = (
-    "Each point is one model: how many weights it keeps (across, tenfold steps) and what it loses per message on "
-    "the last part of the log (up; lower is better). Each line is one learning rate, from the strongest penalty "
-    "on the left to the weakest on the right. Bars show one standard error of the difference to the lowest loss, "
-    "block by block of the same messages; where a bar reaches down to the lowest loss, the log cannot tell the "
-    "two apart. Look for the place where the line stops falling: weights to the right of it buy next to nothing."
+    "Each point is one model, each line one learning rate, from the strongest penalty on the left to the "
+    "weakest on the right. Across, each step is tenfold, and zero stands apart on the left. Bars show one "
+    "standard error of the difference to the lowest loss, block by block of the same messages; where a bar "
+    "reaches down to the lowest loss, the log cannot tell the two apart."
 )
 _SWITCH = (
     '<div class="switch" data-switch="sizes" role="group" aria-label="Part of the picture shown">'
@@ -51,9 +55,11 @@ def sizes(document: Mapping[str, Any]) -> Section:
     drawn = [c for c in document["candidates"] if c["log_loss"] is not None]
     listed = _listed(document)
     if not drawn:
-        return Section("sizes", "Loss against size", "Size", "<p>No candidate has a log loss.</p>" + listed, {})
+        return Section(
+            "sizes", "Loss against size", "Size", "<p>No candidate has a log loss.</p>" + listed, {}
+        )
     picture = _picture(document, drawn)
-    body = pictured("sizes", picture, _READING, _SWITCH) + listed
+    body = pictured("sizes", picture, _GIST, _READING, _SWITCH) + listed
     return Section("sizes", "How much each weight buys", "Loss and size", body, {"sizes": picture})
 
 
@@ -98,7 +104,7 @@ def _picture(document: Mapping[str, Any], drawn: Sequence[Candidate]) -> Picture
             HEIGHT,
             xaxis=places.axis("weights that are not zero", range=whole[0]),
             yaxis=axis("log loss, nats per message", range=whole[1]),
-            annotations=[_label(name, c, places, whole[0]) for name, c in known.items()],
+            annotations=[_label(c, places, whole[0]) for name, c in known.items() if "choice" in name],
         ),
         "views": {
             view: {"xaxis.range": ranges[0], "yaxis.range": ranges[1]}
@@ -152,48 +158,48 @@ def _ring(name: str, candidate: Candidate, places: LogPlaces) -> Figure:
             "symbol": shape,
             "size": points,
             "color": colour,
-            "line": {"width": 1.2 if shape == "star" else 2, "color": "--page" if shape == "star" else colour},
+            "line": {
+                "width": 1.2 if shape == "star" else 2,
+                "color": "--page" if shape == "star" else colour,
+            },
         },
         "hoverinfo": "skip",
     }
 
 
-def _label(name: str, candidate: Candidate, places: LogPlaces, shown: Sequence[float]) -> Figure:
-    """The name of a point: the choice above it, the others below, away from the nearer edge."""
-    import math
+def _label(candidate: Candidate, places: LogPlaces, shown: Sequence[float]) -> Figure:
+    """The name of the choice, above it, where a falling line leaves room."""
 
     x = math.log10(places.of(candidate["nnz"]))
-    right = x > (shown[0] + shown[1]) / 2
-    first = name.split(", ")[0]
-    rise = {"choice": -64, "lowest loss": -36, "runner-up": -100, "half the weights": -136}[first]
-    text = f"<b>{name}</b>" if first == "choice" else name
+    right = x > shown[0] + 0.7 * (shown[1] - shown[0])
     return {
         "x": x,
         "y": candidate["log_loss"],
-        "text": text,
-        "ax": -34 if right else 34,
-        "ay": rise,
+        "text": f"<b>choice</b><br>{count(candidate['nnz'])} weights",
+        "align": "right" if right else "left",
+        "ax": -14 if right else 14,
+        "ay": -92,
         "xanchor": "right" if right else "left",
         "showarrow": True,
         "arrowhead": 0,
         "arrowwidth": 1,
         "arrowcolor": "--muted",
         "standoff": 10,
-        "font": {"color": "--accent" if first == "choice" else "--ink"},
+        "font": {"color": "--accent"},
         "bgcolor": "--page",
         "borderpad": 2,
     }
 
 
-def _views(drawn: Sequence[Candidate], places: LogPlaces, best: float) -> list[tuple[list[float], list[float]]]:
+def _views(
+    drawn: Sequence[Candidate], places: LogPlaces, best: float
+) -> list[tuple[list[float], list[float]]]:
     """Ranges across (log10) and up: of all candidates, and of those that come close to the lowest loss."""
     worst = max(c["log_loss"] for c in drawn)
     limit = best + 0.12 * (worst - best)
     near = [c for c in drawn if c["log_loss"] <= limit]
     views = []
     for shown in (drawn, near):
-        import math
-
         across = padded(math.log10(places.of(c["nnz"])) for c in shown)
         errors = [c["log_loss_se"] or 0.0 for c in shown]
         ends = [c["log_loss"] + sign * e for c, e in zip(shown, errors, strict=True) for sign in (-1, 1)]
@@ -202,7 +208,9 @@ def _views(drawn: Sequence[Candidate], places: LogPlaces, best: float) -> list[t
 
 
 def _summary(document: Mapping[str, Any], known: Mapping[str, Candidate]) -> str:
-    points = "; ".join(f"{n}: {count(c['nnz'])} weights, log loss {loss(c['log_loss'])}" for n, c in known.items())
+    points = "; ".join(
+        f"{n}: {count(c['nnz'])} weights, log loss {loss(c['log_loss'])}" for n, c in known.items()
+    )
     return f"Log loss against the number of non-zero weights, {len(document['candidates'])} models. {points}."
 
 
@@ -211,14 +219,26 @@ def _listed(document: Mapping[str, Any]) -> str:
     forward = any(c.get("forward_log_loss") is not None for c in document["candidates"])
     marks = {index: name for name, index in roles(document).items()}
     titles = ["model", "learning rate", document["grid"]["unit"], "non-zero", "log loss", "to the lowest"]
-    titles += ["whole log", *(["forward"] if forward else []), "AUC", "calibration", "norm. entropy", "snapshot"]
+    titles += [
+        "whole log",
+        *(["forward"] if forward else []),
+        "AUC",
+        "calibration",
+        "norm. entropy",
+        "snapshot",
+    ]
     rows = []
     for c in document["candidates"]:
         row = [f"{c['index']} <b>{escaped(marks.get(c['index'], ''))}</b>", plain(c["learning_rate"])]
         row += [plain(c[document["grid"]["unit"]]), count(c["nnz"]), loss(c["log_loss"])]
         row += [difference(c["difference"], c["log_loss_se"]), loss(c["log_loss_whole"])]
         row += [loss(c["forward_log_loss"])] if forward else []
-        row += [loss(c["auc"]), ratio(c["calibration_ratio"]), ratio(c["normalised_entropy"]), size(c["bytes"])]
+        row += [
+            loss(c["auc"]),
+            ratio(c["calibration_ratio"]),
+            ratio(c["normalised_entropy"]),
+            size(c["bytes"]),
+        ]
         rows.append(row)
     listed = table("All models", titles, rows)
     share = percent(_last_share(document))

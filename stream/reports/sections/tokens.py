@@ -7,17 +7,17 @@ from typing import Any
 
 from stream.reports.drawing import Entry, Figure, LogPlaces, Picture, axis, layout, padded
 from stream.reports.markup import Section, paragraphs, pictured, two_way
-from stream.reports.texts import escaped, named, percent, shortened, weight
+from stream.reports.texts import escaped, named, percent, plain, shortened, weight
 
 __all__ = ["tokens"]
 
 HEIGHT = 380
 STEADY = 0.9
+_GIST = "The same tokens by how common they are (across, tenfold steps) and how much they say (up and down)."
 _READING = (
-    "Each point is a token of the chosen model: in what share of the messages it stands (across, tenfold steps) "
-    "and its weight (up towards yes, down towards no). A full point kept its weight in at least "
-    f"{percent(STEADY)} of the time blocks; a hollow one came and went, so do not lean on it. Common tokens near "
-    "the middle move many scores a little, rare ones far from it move few scores a lot."
+    f"A full point kept its weight in at least {100 * STEADY:.0f} % of the time blocks; a hollow one came "
+    "and went, so do not lean on it. Common tokens near the middle move many scores a little, rare ones "
+    "far from it move few scores a lot."
 )
 _CAUTION = (
     "Weights are associations in this log, not causes: a token may stand for something that is not in the "
@@ -37,13 +37,13 @@ def tokens(document: Mapping[str, Any]) -> Section:
         return Section("tokens", title, short, body, {})
     picture = _picture([*yes, *no])
     listed = two_way("strongest", yes, no)
-    body = f'<p class="caution">{_CAUTION}</p>{listed}' + pictured("tokens", picture, _READING)
+    body = f'<p class="caution">{_CAUTION}</p>{listed}' + pictured("tokens", picture, _GIST, _READING)
     return Section("tokens", title, short, body, {"tokens": picture})
 
 
 def _picture(found: Sequence[Mapping[str, Any]]) -> Picture:
     known = [t for t in found if t["share"] is not None]
-    places = LogPlaces((t["share"] for t in known), percent)
+    places = LogPlaces((t["share"] for t in known), lambda share: f"{plain(100 * share)} %")
     figure = {
         "data": [_points(known, places)] if known else [],
         "layout": layout(
@@ -67,6 +67,7 @@ def _picture(found: Sequence[Mapping[str, Any]]) -> Picture:
 
 
 def _points(known: Sequence[Mapping[str, Any]], places: LogPlaces) -> Figure:
+    colours = ["--yes" if t["weight"] > 0 else "--no" for t in known]
     shapes = ["circle" if t["weight"] > 0 else "square" for t in known]
     steady = [t["kept"] is None or t["kept"] >= STEADY for t in known]
     return {
@@ -75,10 +76,10 @@ def _points(known: Sequence[Mapping[str, Any]], places: LogPlaces) -> Figure:
         "x": [places.of(t["share"]) for t in known],
         "y": [t["weight"] for t in known],
         "marker": {
-            "color": ["--yes" if t["weight"] > 0 else "--no" for t in known],
+            "color": colours,
             "symbol": [s if full else f"{s}-open" for s, full in zip(shapes, steady, strict=True)],
             "size": 9,
-            "line": {"width": 1.8},
+            "line": {"width": 1.8, "color": colours},
         },
         "customdata": [
             [escaped(shortened(named(t), 60)), weight(t["weight"]), percent(t["share"]), percent(t["kept"])]
