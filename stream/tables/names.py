@@ -16,7 +16,7 @@ import numpy.typing as npt
 from stream.batch import Batch
 from stream.kernel import kernel
 
-__all__ = ["NameLedger", "names_state"]
+__all__ = ["NameLedger", "NamePile", "names_at", "names_state"]
 
 Arrays = dict[str, npt.NDArray[Any]]
 
@@ -81,6 +81,52 @@ class NameLedger:
         self._addresses = array("Q", state["addresses"].tobytes())
         self._offsets = array("q", state["offsets"].tobytes())
         self._bytes = bytearray(state["bytes"])
+
+
+class NamePile:
+    """Names by address where each is recorded once and none is dropped: no ledger to look them up in meanwhile."""
+
+    def __init__(self) -> None:
+        self._addresses = [np.empty(0, np.uint64)]
+        self._lengths = [np.empty(0, np.int64)]
+        self._texts = [np.empty(0, np.uint8)]
+        self.name_bytes = 0
+
+    def record(self, batch: Batch, entries: npt.NDArray[np.int64]) -> None:
+        """Takes down the texts of the given entries of a batch, whose addresses are new."""
+        if not len(entries):
+            return
+        lengths = batch.text_lengths[entries].astype(np.int64)
+        offsets = np.concatenate([np.zeros(1, np.int64), np.cumsum(lengths)])
+        texts = np.empty(offsets[-1], np.uint8)
+        _copy_names(batch.texts, batch.text_starts[entries], offsets, texts)
+        self._addresses.append(batch.addresses[entries])
+        self._lengths.append(lengths)
+        self._texts.append(texts)
+        self.name_bytes += len(texts)
+
+    def state(self) -> Arrays:
+        """As `names_state`."""
+        lengths = np.concatenate(self._lengths)
+        offsets = np.concatenate([np.zeros(1, np.int64), np.cumsum(lengths)])
+        piled = {
+            "addresses": np.concatenate(self._addresses),
+            "offsets": offsets,
+            "bytes": np.concatenate(self._texts),
+        }
+        return names_state(piled)
+
+
+def names_at(addresses: npt.NDArray[np.uint64], names: Arrays) -> tuple[bytes, ...]:
+    """The name of each address, b"" where none is known; `names` as `names_state` gives them."""
+    known, text = names["addresses"], names["bytes"].tobytes()
+    places = np.searchsorted(known, addresses)
+    there = places < len(known)
+    there[there] = known[places[there]] == addresses[there]
+    starts, ends = np.zeros((2, len(addresses)), np.int64)
+    starts[there] = names["offsets"][places[there]]
+    ends[there] = names["offsets"][places[there] + 1]
+    return tuple(text[start:end] for start, end in zip(starts.tolist(), ends.tolist(), strict=True))
 
 
 def names_state(copied: Arrays) -> Arrays:
