@@ -1,12 +1,14 @@
 """Memory that grows where it is: a reserved range of addresses in, an array over its first part out.
 
 Pages are taken when they are first touched, so a reservation costs nothing and growing copies nothing. Huge
-pages are not asked for: with memory in fragments, waiting for them cost more than they saved (measured).
+pages are asked for where rows are long and given out one after the other; elsewhere, with memory in fragments,
+waiting for them cost more than they saved (measured).
 """
 
 from __future__ import annotations
 
 import mmap
+from contextlib import suppress
 
 import numpy as np
 import numpy.typing as npt
@@ -19,7 +21,7 @@ NO_RESERVE = getattr(mmap, "MAP_NORESERVE", 0x4000)  # Python names it from 3.12
 LEAST = 1 << 30
 
 
-def reserve(size: int) -> npt.NDArray[np.uint64]:
+def reserve(size: int, *, huge: bool = False) -> npt.NDArray[np.uint64]:
     """Zeros, uint64[size], of which only what is touched takes memory; fewer where the system allows no more.
 
     Raises CannotCreate where not even 1 GiB of addresses is to be had.
@@ -31,6 +33,9 @@ def reserve(size: int) -> npt.NDArray[np.uint64]:
         except OSError:
             wanted //= 2
             continue
+        if huge:
+            with suppress(OSError):  # a system without them
+                memory.madvise(mmap.MADV_HUGEPAGE)
         return np.frombuffer(memory, np.uint64)
     raise CannotCreate(
         "the table cannot reserve 1 GiB of addresses; raise the limit on virtual memory (ulimit -v)"

@@ -18,12 +18,13 @@ from stream.learners.layout import LIMIT
 
 __all__ = [
     "LANES",
-    "any_on",
     "draw_eight",
     "learn_eight",
     "learn_eight_zeros",
     "move_eight",
+    "on_eight",
     "score_eight",
+    "undrawn_eight",
 ]
 
 LANES = 8
@@ -73,32 +74,38 @@ class _Eight:
     def constant(self, value: float) -> Any:
         return ir.Constant(VECTOR, [value] * LANES)
 
-    def any(self, flags: Any) -> Any:
-        """1 where any of eight flags is set, else 0, as int64."""
-        return self.builder.zext(
-            self.builder.icmp_unsigned("!=", self.bits(flags), ir.IntType(64)(0)), ir.IntType(64)
-        )
-
     def bits(self, flags: Any) -> Any:
         """Eight flags as the lowest bits of an int64."""
         return self.builder.zext(self.builder.bitcast(flags, ir.IntType(LANES)), ir.IntType(64))
 
-    def told(self, on: Any, fine: Any) -> Any:
-        """What an update says: bit 0 where any weight is not zero, bits 1 to 8 the lanes that refused."""
-        refused = self.builder.shl(self.bits(self.builder.not_(fine)), ir.IntType(64)(1))
-        return self.builder.or_(self.any(on), refused)
+    def refused(self, fine: Any) -> Any:
+        """The lanes whose update was not fine, as the lowest bits of an int64."""
+        return self.bits(self.builder.not_(fine))
 
 
 @_intrinsic
-def any_on(typing: Any, lanes: Any, z_at: Any, bounds: Any, at: Any) -> Any:
-    """Whether |z| > strength in any of eight lanes."""
+def on_eight(typing: Any, lanes: Any, z_at: Any, bounds: Any, at: Any) -> Any:
+    """In which of eight lanes |z| > strength, as the lowest bits of an int64."""
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         eight = _Eight(context, builder, signature, args)
         size = eight.call("fabs", eight.load(0, 1))
-        return eight.any(builder.fcmp_ordered(">", size, eight.load(2, 3)))
+        return eight.bits(builder.fcmp_ordered(">", size, eight.load(2, 3)))
 
     return types.int64(lanes, z_at, bounds, at), generate
+
+
+@_intrinsic
+def undrawn_eight(typing: Any, lanes: Any, w_at: Any, since_at: Any, strength: Any, at: Any, eta: Any) -> Any:
+    """In which of eight lanes |w| > eta * (strength - since), as the lowest bits of an int64."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        eight = _Eight(context, builder, signature, args)
+        a = builder.fmul(eight.load(5, 4), builder.fsub(eight.load(3, 4), eight.load(0, 2)))
+        size = eight.call("fabs", eight.load(0, 1))
+        return eight.bits(builder.fcmp_ordered(">", size, a))
+
+    return types.int64(lanes, w_at, since_at, strength, at, eta), generate
 
 
 @_intrinsic
@@ -129,9 +136,9 @@ def score_eight(
 
 
 def _learn(eight: _Eight, value: Any, sigma_w: Callable[[Any], Any] | None) -> Any:
-    """The update; says what `told` does."""
+    """The update; which lanes refused it."""
     builder = eight.builder
-    g = builder.fmul(eight.load(5, 4), eight.spread(value))
+    g = builder.fmul(eight.load(3, 4), eight.spread(value))
     z, n = eight.load(0, 1), eight.load(0, 2)
     grown = builder.fadd(n, builder.fmul(g, g))
     moved = builder.fadd(z, g)
@@ -141,40 +148,38 @@ def _learn(eight: _Eight, value: Any, sigma_w: Callable[[Any], Any] | None) -> A
     fine = builder.fcmp_ordered("<", builder.fadd(size, grown), eight.constant(LIMIT))
     eight.store(builder.select(fine, moved, z), 0, 1)
     eight.store(builder.select(fine, grown, n), 0, 2)
-    return eight.told(builder.fcmp_ordered(">", size, eight.load(3, 4)), fine)
+    return eight.refused(fine)
 
 
 @_intrinsic
 def learn_eight(
-    typing: Any, lanes: Any, z_at: Any, n_at: Any, bounds: Any, at: Any, gradients: Any, value: Any,
-    per_alpha: Any, ws: Any, roots: Any, kept_at: Any,
+    typing: Any, lanes: Any, z_at: Any, n_at: Any, gradients: Any, at: Any, value: Any, per_alpha: Any,
+    ws: Any, roots: Any, kept_at: Any,
 ) -> Any:  # fmt: skip
-    """z, n learn the gradients times `value`, with what `score_eight` kept. Says what `told` does."""
+    """z, n learn the gradients times `value`, with what `score_eight` kept. Tells which refused."""
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         eight = _Eight(context, builder, signature, args)
 
         def sigma_w(grown: Any) -> Any:
-            rise = builder.fsub(eight.call("sqrt", grown), eight.load(9, 10))
-            return builder.fmul(builder.fmul(rise, eight.load(7, 4)), eight.load(8, 10))
+            rise = builder.fsub(eight.call("sqrt", grown), eight.load(8, 9))
+            return builder.fmul(builder.fmul(rise, eight.load(6, 4)), eight.load(7, 9))
 
-        return _learn(eight, args[6], sigma_w)
+        return _learn(eight, args[5], sigma_w)
 
-    return types.int64(
-        lanes, z_at, n_at, bounds, at, gradients, value, per_alpha, ws, roots, kept_at
-    ), generate
+    return types.int64(lanes, z_at, n_at, gradients, at, value, per_alpha, ws, roots, kept_at), generate
 
 
 @_intrinsic
 def learn_eight_zeros(
-    typing: Any, lanes: Any, z_at: Any, n_at: Any, bounds: Any, at: Any, gradients: Any, value: Any
+    typing: Any, lanes: Any, z_at: Any, n_at: Any, gradients: Any, at: Any, value: Any
 ) -> Any:
     """`learn_eight` where all eight weights were zero: sigma * w is zero too, so that no root is needed."""
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
-        return _learn(_Eight(context, builder, signature, args), args[6], None)
+        return _learn(_Eight(context, builder, signature, args), args[5], None)
 
-    return types.int64(lanes, z_at, n_at, bounds, at, gradients, value), generate
+    return types.int64(lanes, z_at, n_at, gradients, at, value), generate
 
 
 @_intrinsic
@@ -202,19 +207,18 @@ def draw_eight(
 @_intrinsic
 def move_eight(
     typing: Any, lanes: Any, w_at: Any, since_at: Any, strength: Any, at: Any, steps: Any, value: Any,
-    ws: Any, kept_at: Any, drawn: Any, limit: Any,
+    ws: Any, kept_at: Any, limit: Any,
 ) -> Any:  # fmt: skip
-    """w = ws - steps * value, truncated up to `strength`. Says what `told` does."""
+    """w = ws - steps * value, truncated up to `strength`. Tells which refused."""
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         eight = _Eight(context, builder, signature, args)
         step = builder.fmul(eight.load(5, 4), eight.spread(args[6]))
         w = builder.fsub(eight.load(7, 8), step)
         size = eight.call("fabs", w)
-        fine = builder.fcmp_ordered("<", size, eight.spread(args[10]))
+        fine = builder.fcmp_ordered("<", size, eight.spread(args[9]))
         eight.store(builder.select(fine, w, eight.load(0, 1)), 0, 1)
         eight.store(builder.select(fine, eight.load(3, 4), eight.load(0, 2)), 0, 2)
-        on = builder.and_(fine, builder.fcmp_ordered(">", size, eight.load(9, 4)))
-        return eight.told(on, fine)
+        return eight.refused(fine)
 
-    return types.int64(lanes, w_at, since_at, strength, at, steps, value, ws, kept_at, drawn, limit), generate
+    return types.int64(lanes, w_at, since_at, strength, at, steps, value, ws, kept_at, limit), generate

@@ -16,7 +16,7 @@ import numpy.typing as npt
 from stream.coordinate import FIRST, NAMED, TOUCH, row_of, touched
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch, small
-from stream.learners.eight import LANES, any_on, learn_eight, learn_eight_zeros, score_eight
+from stream.learners.eight import LANES, learn_eight, learn_eight_zeros, on_eight, score_eight
 from stream.learners.ftrl import _weight
 from stream.learners.layout import (
     DAMPING,
@@ -34,6 +34,7 @@ from stream.learners.layout import (
 )
 
 __all__ = [
+    "count_on",
     "count_refused",
     "ftrl_lane_intercepts",
     "ftrl_lane_sweep",
@@ -59,7 +60,7 @@ def ftrl_lane_intercepts(sums: Floats, options: Floats, out: Floats) -> None:
 def count_refused(counts: npt.NDArray[np.int64], at: np.uint64, told: int, gradients: Floats) -> None:
     """Counts the updates that eight lanes refused; one without a gradient has refused the whole example."""
     for k in range(EIGHT):
-        if told >> np.int64(k + ONE) & 1 and not math.isnan(gradients[at + k]):
+        if told >> np.int64(k) & 1 and not math.isnan(gradients[at + k]):
             counts[REFUSED, at + k] += 1
 
 
@@ -90,7 +91,7 @@ def ftrl_lanes_learn(
     zero), examples learned; `sums`, `options` float64[..., K] and `counts` int64[2, K] as in
     `stream.learners.layout`, a column a lane; `scratch` float64[(10 + 2 * longest) * K]; `places`, `masks`
     uint64[longest]; `margins` float64[m, K] is filled. The rest as of `ftrl_learn`, but that a name is
-    wanted where a weight became non-zero in any lane.
+    wanted at the first touch: then it does not depend on who the other lanes are.
     """
     events = 0
     K = np.uint64(sums.shape[1])
@@ -135,7 +136,7 @@ def ftrl_lanes_learn(
             into_at = (i & np.uint64(3)) * K if i < fours else np.uint64(0)
             mask, bit = np.uint64(0), ONE
             for at in range(np.uint64(0), K, EIGHT):
-                if any_on(lanes, place + at, bounds, at):
+                if on_eight(lanes, place + at, bounds, at):
                     mask |= bit
                     score_eight(lanes, place + at, place + K + at, bounds, at, beta, per_alpha, lambda_2,
                                 value, ws, roots, i * K + at, into, into_at + at)  # fmt: skip
@@ -175,20 +176,19 @@ def ftrl_lanes_learn(
             if slots[e] < 0:
                 continue
             value = np.float64(values[e])
-            place, mask, on = places[i], masks[i], 0
+            place, mask = places[i], masks[i]
             for at in range(np.uint64(0), K, EIGHT):
                 if mask & ONE:
-                    told = learn_eight(lanes, place + at, place + K + at, bounds, at, gradients, value,
-                                       per_alpha, ws, roots, i * K + at)  # fmt: skip
+                    told = learn_eight(lanes, place + at, place + K + at, gradients, at, value, per_alpha,
+                                       ws, roots, i * K + at)  # fmt: skip
                 else:
-                    told = learn_eight_zeros(lanes, place + at, place + K + at, bounds, at, gradients, value)
+                    told = learn_eight_zeros(lanes, place + at, place + K + at, gradients, at, value)
                 mask >>= ONE
-                on |= told & 1
-                if told > 1:
+                if told:
                     count_refused(counts, np.uint64(at), told, gradients)
             row = row_of(slots[e])
             word = touched(cells[row + TOUCH], number)
-            if on and word & NAMED == np.uint64(0):
+            if word & NAMED == np.uint64(0):
                 word |= NAMED
                 named[events] = np.int64(e)
                 events += 1
@@ -212,6 +212,18 @@ def ftrl_lane_weights(
             )
 
 
+@small
+def count_on(
+    bits: int, row: np.uint64, at: np.uint64, K: np.uint64, nonzeros: npt.NDArray[np.int64],
+    kept: npt.NDArray[np.uint8],
+) -> None:  # fmt: skip
+    """Counts the lanes of eight whose bits are set."""
+    for k in range(EIGHT):
+        on = bits >> np.int64(k) & 1
+        nonzeros[at + k] += on
+        kept[row * K + at + k] += np.uint8(on)
+
+
 @kernel
 def ftrl_lane_sweep(
     lanes: Floats,
@@ -221,12 +233,19 @@ def ftrl_lane_sweep(
     options: Floats,
     nonzeros: npt.NDArray[np.int64],
     kept: npt.NDArray[np.uint8],
+    some: npt.NDArray[np.uint8],
 ) -> None:
-    """For each non-zero weight of lane rows first to last - 1 adds 1 to nonzeros[k] and kept[row * K + k]."""
-    K = sums.shape[1]
+    """For each non-zero weight of lane rows first to last - 1 adds 1 to nonzeros[k] and kept[row * K + k].
+
+    some[row]: whether any weight of the row is not zero.
+    """
+    K = np.uint64(sums.shape[1])
     bounds = options[L1] + sums[STRENGTH]
-    for row in range(first, last):
-        for k in range(K):
-            on = abs(lanes[row * 2 * K + k]) > bounds[k]
-            nonzeros[k] += on
-            kept[row * K + k] += on
+    for row in range(np.uint64(first), np.uint64(last)):
+        found = 0
+        for at in range(np.uint64(0), K, EIGHT):
+            bits = on_eight(lanes, row * (K + K) + at, bounds, at)
+            found |= bits
+            if bits:
+                count_on(bits, row, np.uint64(at), K, nonzeros, kept)
+        some[row] = found != 0

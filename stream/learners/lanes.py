@@ -77,7 +77,7 @@ class Lanes:
         self._sums = np.zeros((3, self._lanes))
         self._counts = np.zeros((2, self._lanes), np.int64)
         self._used = np.array([1, 0], np.int64)  # lane row 0 stays zero
-        self._rows = reserve(2 * self._lanes * MOST_ROWS).view(np.float64)
+        self._rows = reserve(2 * self._lanes * MOST_ROWS, huge=True).view(np.float64)
         self._kept = reserve(self._lanes * MOST_ROWS // 8).view(np.uint8)
         self._margins = np.empty((0, self._lanes))
         self._scratch, self._places, self._masks = np.empty(0), np.empty(0, np.uint64), np.empty(0, np.uint64)
@@ -148,10 +148,19 @@ class Lanes:
 
     def sweep(self) -> npt.NDArray[np.int64]:
         """Non-zero weights of each lane now, int64[lanes]; each counts as kept once more (`kept`)."""
-        nonzeros = np.zeros(self._lanes, np.int64)
-        used = int(self._used[0])
-        self._method.sweep(self._rows, 1, used, self._sums, self._options, nonzeros, self._kept)
-        return nonzeros[: self.count]
+        return self._sweep(self._kept)[0]
+
+    def any_on(self, cells: npt.NDArray[np.uint64], slots: npt.NDArray[np.int64]) -> npt.NDArray[np.bool_]:
+        """Whether any weight of the rows in the given slots is not zero now, bool[k]."""
+        rows = cells[CELLS * slots + int(FIRST)].astype(np.int64)
+        forgotten = np.zeros(int(self._used[0]) * self._lanes, np.uint8)
+        return np.asarray(self._sweep(forgotten)[1][rows])
+
+    def _sweep(self, kept: npt.NDArray[np.uint8]) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.bool_]]:
+        nonzeros, used = np.zeros(self._lanes, np.int64), int(self._used[0])
+        some = np.zeros(used, np.uint8)
+        self._method.sweep(self._rows, 1, used, self._sums, self._options, nonzeros, kept, some)
+        return nonzeros[: self.count], some.view(np.bool_)
 
     def kept(self, cells: npt.NDArray[np.uint64], slots: npt.NDArray[np.int64]) -> npt.NDArray[np.uint8]:
         """In how many sweeps (modulo 256) each weight was not zero, uint8[k, lanes]."""

@@ -15,8 +15,8 @@ import numpy.typing as npt
 from stream.coordinate import FIRST, NAMED, TOUCH, row_of, touched
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch
-from stream.learners.eight import LANES, draw_eight, move_eight
-from stream.learners.ftrl_lanes import AHEAD_LANES, AHEAD_TABLE, LINE, count_refused
+from stream.learners.eight import LANES, draw_eight, move_eight, undrawn_eight
+from stream.learners.ftrl_lanes import AHEAD_LANES, AHEAD_TABLE, LINE, count_on, count_refused
 from stream.learners.layout import (
     INTERCEPT_FIRST,
     LEARNED,
@@ -72,7 +72,7 @@ def truncated_lanes_learn(
     K = np.uint64(sums.shape[1])
     wide = K + K
     into, strength, steps = scratch[:K], scratch[K : 2 * K], scratch[2 * K : 3 * K]
-    drawn, eta, gradients = scratch[3 * K : 4 * K], scratch[4 * K : 5 * K], scratch[5 * K : 6 * K]
+    eta, gradients = scratch[3 * K : 4 * K], scratch[4 * K : 5 * K]
     ws = scratch[10 * K :]
     top = np.uint64(max(row_ptr[last] - 1, 0))
     eta[:] = options[RATE]
@@ -116,7 +116,6 @@ def truncated_lanes_learn(
             gradients[k] = (sigmoid(margin) - labels[example]) * weight
             steps[k] = eta[k] * gradients[k]
             sums[STRENGTH, k] += options[PER_EXAMPLE, k] * weight
-            drawn[k] = eta[k] * (sums[STRENGTH, k] - strength[k])
             moved = sums[INTERCEPT_FIRST, k] - steps[k]
             if abs(moved) < WEIGHT_LIMIT:
                 sums[INTERCEPT_FIRST, k] = moved
@@ -130,16 +129,15 @@ def truncated_lanes_learn(
             e = begin + i
             if slots[e] < 0:
                 continue
-            value, place, on = np.float64(values[e]), places[i], 0
+            value, place = np.float64(values[e]), places[i]
             for at in range(np.uint64(0), K, EIGHT):
                 told = move_eight(lanes, place + at, place + K + at, strength, at, steps, value, ws,
-                                  i * K + at, drawn, WEIGHT_LIMIT)  # fmt: skip
-                on |= told & 1
-                if told > 1:
+                                  i * K + at, WEIGHT_LIMIT)  # fmt: skip
+                if told:
                     count_refused(counts, np.uint64(at), told, gradients)
             row = row_of(slots[e])
             word = touched(cells[row + TOUCH], number)
-            if on and word & NAMED == np.uint64(0):
+            if word & NAMED == np.uint64(0):
                 word |= NAMED
                 named[events] = np.int64(e)
                 events += 1
@@ -169,12 +167,17 @@ def truncated_lane_sweep(
     options: Floats,
     nonzeros: npt.NDArray[np.int64],
     kept: npt.NDArray[np.uint8],
+    some: npt.NDArray[np.uint8],
 ) -> None:
     """As `ftrl_lane_sweep`."""
-    K = sums.shape[1]
-    for row in range(first, last):
-        for k in range(K):
-            a = options[RATE, k] * (sums[STRENGTH, k] - lanes[row * 2 * K + K + k])
-            on = abs(lanes[row * 2 * K + k]) > a
-            nonzeros[k] += on
-            kept[row * K + k] += on
+    K = np.uint64(sums.shape[1])
+    strength, eta = sums[STRENGTH].copy(), options[RATE].copy()
+    for row in range(np.uint64(first), np.uint64(last)):
+        found = 0
+        for at in range(np.uint64(0), K, EIGHT):
+            place = row * (K + K) + at
+            bits = undrawn_eight(lanes, place, place + K, strength, at, eta)
+            found |= bits
+            if bits:
+                count_on(bits, row, np.uint64(at), K, nonzeros, kept)
+        some[row] = found != 0

@@ -42,12 +42,14 @@ def tally_lanes(
         if labels[i] < 0:
             continue
         weight, positive = weights[i], labels[i] == 1
-        for sums in (totals, slice_totals[codes[i]] if sliced else totals):
-            sums[1] += 1.0
-            sums[2] += weight
-            sums[3] += weight if positive else 0.0
-            if not sliced:
-                break
+        positive_weight = weight if positive else 0.0
+        totals[1] += 1.0
+        totals[2] += weight
+        totals[3] += positive_weight
+        if sliced:
+            slice_totals[codes[i], 1] += 1.0
+            slice_totals[codes[i], 2] += weight
+            slice_totals[codes[i], 3] += positive_weight
         for k in range(K):
             margin = margins[i, k]
             e = exp(-abs(margin))
@@ -62,5 +64,5 @@ def tally_lanes(
             cell = int(min(max(place, 0.0), LANE_BINS - 1.0))
             for scope in range(1 + last):
                 bins[scope, k, cell, WEIGHT] += weight
-                bins[scope, k, cell, POSITIVE] += weight if positive else 0.0
+                bins[scope, k, cell, POSITIVE] += positive_weight
                 bins[scope, k, cell, PROBABILITY] += weight * probability

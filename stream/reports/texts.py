@@ -1,7 +1,7 @@
 """Numbers and names out of a document in, short texts out that no page or picture takes for markup.
 
 A token is arbitrary text: it may hold markup, unprintable characters, text that runs from right to left, or
-be as long as a page. Whoever shows one goes through `named` and then `escaped`.
+be as long as a page. Whoever shows one goes through `bdi`, or through `named` and then `in_picture`.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ __all__ = [
     "count",
     "difference",
     "escaped",
+    "in_picture",
     "json_in_page",
     "loss",
     "named",
@@ -59,8 +60,13 @@ def named(token: Mapping[str, Any]) -> str:
 
 
 def escaped(text: str) -> str:
-    """`text` for HTML, attributes included, and for the markup that the plotting library reads in texts."""
+    """`text` for HTML, attributes included."""
     return html.escape(text, quote=True)
+
+
+def in_picture(text: str, most: int) -> str:
+    """`text`, shortened, for the plotting library, which reads markup, references and formulas in texts."""
+    return html.escape(shortened(text, most), quote=False).replace("$", "&#36;")
 
 
 def bdi(text: str, most: int = _FULLY_SHOWN) -> str:

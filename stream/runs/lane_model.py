@@ -14,6 +14,7 @@ from stream.learners.lanes import Lanes
 from stream.runs.table_model import Floats, Int64s, TableModel
 from stream.settings import Settings
 from stream.settings.models import Learner as LearnerSettings
+from stream.tables import NamePile, names_at
 
 __all__ = ["LaneModel", "LaneWeights"]
 
@@ -43,7 +44,8 @@ class LaneModel(TableModel):
 
     def __init__(self, settings: Settings, lanes: Sequence[LearnerSettings]) -> None:
         self._lanes = Lanes(lanes)
-        super().__init__(settings, self._lanes)
+        self._pile = NamePile()
+        super().__init__(settings, self._lanes, self._pile)
         self.frozen = False
         self.block_nnz: list[Int64s] = []
 
@@ -51,6 +53,11 @@ class LaneModel(TableModel):
     def lane_bytes(self) -> int:
         """Memory of the lanes, beside the table."""
         return self._lanes.row_bytes
+
+    @property
+    def refused(self) -> Int64s:
+        """Updates that each lane refused, since a weight would have stopped being finite: int64[K]."""
+        return self._lanes.refused
 
     def predict_then_update(self, batch: Batch) -> Floats:
         """As `TableModel`'s, margins float64[m, K]; nothing is learned while frozen."""
@@ -68,32 +75,26 @@ class LaneModel(TableModel):
 
     def weights(self) -> LaneWeights:
         """The weights now."""
-        K = self._lanes.count
-        found = [np.empty(0, np.int64)]
-        values, kept = [np.empty((0, K), np.float32)], [np.empty((0, K), np.uint8)]
-        for begin, end in self._table.chunks():
-            slots = begin + np.flatnonzero(self._table.in_use(begin, end))
-            weights = self._lanes.weights(self._table.cells, slots).astype(np.float32)
-            some = np.flatnonzero(weights.any(axis=1))
-            found.append(slots[some])
-            values.append(weights[some])
-            kept.append(self._lanes.kept(self._table.cells, slots[some]))
-        slots = np.concatenate(found)
+        cells = self._table.cells
+        slots = np.flatnonzero(self._table.in_use(0, self._table.slots))
+        slots = slots[self._lanes.any_on(cells, slots)]
+        values = self._lanes.weights(cells, slots).astype(np.float32)
+        some = values.any(axis=1)  # one too small for float32 is left out
+        slots, values = slots[some], values[some]
         addresses = self._table.addresses_at(slots)
         order = np.argsort(addresses)
         addresses = addresses[order]
         return LaneWeights(
             addresses,
-            np.concatenate(values)[order],
-            (np.concatenate(kept)[order] / max(len(self.block_nnz), 1)).astype(np.float32),
-            tuple(self._names[address] for address in addresses.tolist()),
+            values[order],
+            (self._lanes.kept(cells, slots[order]) / max(len(self.block_nnz), 1)).astype(np.float32),
+            names_at(addresses, self._pile.state()),
             tally_of(self._table.touches(slots[order])),
             self._lanes.intercepts,
         )
 
     def _is_zero(self, begin: int, end: int) -> npt.NDArray[np.bool_]:
-        slots = np.arange(begin, end)
-        return np.asarray(~self._lanes.weights(self._table.cells, slots).any(axis=1))
+        return np.asarray(~self._lanes.any_on(self._table.cells, np.arange(begin, end)))
 
     def _forget(self, slots: Int64s) -> None:
         super()._forget(slots)

@@ -1,46 +1,32 @@
-"""The loop of every run that learns: blocks of a source in, a model, metrics and rejects brought up to date.
-
-Order of events for a block: decode, batch, judge rejects, predict then update, sweep, metrics. Blocks are
-cut so that windows and checkpoints fall between them.
-"""
+"""A run that can be left and gone on with: the steps of `stream.runs.steps`, and what a checkpoint holds."""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import replace
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
-import numpy as np
 import numpy.typing as npt
 
 from stream.background import View
-from stream.decoding import Decoder
 from stream.errors import BadSettings
-from stream.features import Batcher
 from stream.fingerprint import differences, fingerprint_difference
-from stream.message import Block, Examples, Reject, Source
-from stream.metrics import Progress, WindowRow
+from stream.metrics import Progress
 from stream.rejects import RejectLog, RejectSink
 from stream.runs.model import Model
-from stream.runs.presence import Presence
+from stream.runs.steps import OnScored, Steps, is_sliced
 from stream.settings import Settings
 from stream.snapshots import About
 
 __all__ = ["LearningRun", "pinned"]
 
-BLOCK = 1024
-"""Messages in a block at most: enough to spread the cost of a call, few enough to stay in the cache."""
 
-OnScored = Callable[[Block, npt.NDArray[np.int64], npt.NDArray[np.float64]], None]
-
-
-class LearningRun:
+class LearningRun(Steps[Model]):
     """Everything that a checkpoint holds, and the step that moves it on by one block.
 
-    `accepted`: after how many messages settings changed, and those before. `messages`: read over all epochs,
-    rejected ones too. Metrics and rejects count the first epoch only.
+    `accepted`: after how many messages settings changed, and those before.
     """
 
     def __init__(
@@ -51,32 +37,14 @@ class LearningRun:
         *,
         reject_sink: RejectSink | None = None,
         on_scored: OnScored | None = None,
-        model: Model | None = None,
-        progress: Progress | None = None,
     ) -> None:
         """`saved`: what `about()` gave; then `restore` must follow with the arrays.
 
-        `reject_sink`: where rejects are kept instead of files in `rejects_folder`; `on_scored` is given each
-        block with the rows that have a margin (int64[m]) and those margins, from before their update.
-        `model`, `progress`: in place of those that the settings make, for many settings side by side.
+        `reject_sink`: where rejects are kept instead of files in `rejects_folder`; `on_scored`: see `Steps`.
         """
-        self._settings = settings
-        self._on_scored = on_scored
-        self._decoder = Decoder(settings)
-        self._batcher = Batcher(settings)
-        self._slice_path = _slice_path(settings)
-        self.presence = Presence(settings)
-        self.model = model or Model(settings)
-        self.progress = progress or Progress(settings.metrics.window, self._slice_path is not None)
-        self.messages = self.tokens = self.epoch = 0
-        self.position: Mapping[str, Any] | None = None
-        self.accepted: list[dict[str, Any]] = []
         if saved is not None:
-            self._check_pinned(saved)
-            self.messages, self.tokens, self.epoch = saved["messages"], saved["tokens"], saved["epoch"]
-            self.position = saved["position"]
-            self.accepted = saved.get("accepted", [])
-        self.rejects = RejectLog(
+            _check_pinned(settings, saved)
+        rejects = RejectLog(
             rejects_folder,
             settings.message,
             saved["rejects"] if saved else None,
@@ -84,37 +52,13 @@ class LearningRun:
             window=settings.metrics.window,
             sink=reject_sink,
         )
-
-    def step(self, source: Source, limit: int) -> WindowRow | bool:
-        """Reads and learns one block of at most `limit` messages.
-
-        Returns False at the end of the source, the window's row when one was filled, else True. Raises
-        BadData when too many messages are rejected; nothing of that block has then been learned.
-        """
-        first_epoch = self.epoch == 0
-        most = min(limit, BLOCK)
-        block = source.read(min(most, self.progress.window_left) if first_epoch else most)
-        if not len(block):
-            return False
-        examples, rejects = self._decoder.decode(block)
-        self.presence.observe(examples)
-        batch, over = self._batcher.batch(examples)
-        if first_epoch:
-            self.rejects.add(block, rejects + over, self.messages)
-        margins = self.model.predict_then_update(batch)
-        if self._on_scored is not None:
-            self._on_scored(block, _without(examples.rows, over), margins)
-        self.messages += len(block)
-        self.tokens += len(batch.addresses)
-        self.position = source.position()
-        if first_epoch:
-            codes = self._slice_codes(examples, over)
-            self.progress.observe(
-                margins, batch.labels, batch.weights, codes, rejected=len(block) - len(batch)
-            )
-            if self.progress.window_left == 0:
-                return self.progress.close_window(self.model.nnz, self.model.live)
-        return True
+        progress = Progress(settings.metrics.window, is_sliced(settings))
+        super().__init__(settings, Model(settings), progress, rejects, on_scored)
+        self.accepted: list[dict[str, Any]] = []
+        if saved is not None:
+            self.messages, self.tokens, self.epoch = saved["messages"], saved["tokens"], saved["epoch"]
+            self.position = saved["position"]
+            self.accepted = saved.get("accepted", [])
 
     def next_epoch(self) -> None:
         """Begins another pass: the log is read again from its beginning."""
@@ -164,26 +108,16 @@ class LearningRun:
     def _metrics_state(self) -> dict[str, npt.NDArray[Any]]:
         return {f"metrics.{name}": array for name, array in self.progress.state().items()}
 
-    def _slice_codes(self, examples: Examples, over: list[Reject]) -> npt.NDArray[np.int64] | None:
-        if self._slice_path is None:
-            return None
-        values = examples.columns[self._slice_path]
-        if over:
-            gone = {reject.row for reject in over}
-            values = [
-                value for value, row in zip(values, examples.rows.tolist(), strict=True) if row not in gone
-            ]
-        return self.progress.slices.codes(values)
 
-    def _check_pinned(self, saved: Mapping[str, Any]) -> None:
-        lines = fingerprint_difference(self._settings.fingerprint(), saved["fingerprint"])
-        lines += differences(pinned(self._settings), saved["pinned"])
-        if lines:
-            raise BadSettings(
-                "the checkpoint was made with other settings (here: now; there: in the checkpoint):\n  "
-                + "\n  ".join(lines)
-                + "\nset them back to go on, take them with --accept-settings, or start again with --fresh"
-            )
+def _check_pinned(settings: Settings, saved: Mapping[str, Any]) -> None:
+    lines = fingerprint_difference(settings.fingerprint(), saved["fingerprint"])
+    lines += differences(pinned(settings), saved["pinned"])
+    if lines:
+        raise BadSettings(
+            "the checkpoint was made with other settings (here: now; there: in the checkpoint):\n  "
+            + "\n  ".join(lines)
+            + "\nset them back to go on, take them with --accept-settings, or start again with --fresh"
+        )
 
 
 def pinned(settings: Settings) -> dict[str, Any]:
@@ -195,12 +129,3 @@ def pinned(settings: Settings) -> dict[str, Any]:
         "state": {name: state[name] for name in bounds},
         "metrics": settings.metrics.model_dump(mode="json"),
     }
-
-
-def _without(rows: npt.NDArray[np.int64], over: list[Reject]) -> npt.NDArray[np.int64]:
-    return rows[~np.isin(rows, [reject.row for reject in over])] if over else rows
-
-
-def _slice_path(settings: Settings) -> str | None:
-    by = settings.metrics.slice_by
-    return next((field.path for field in settings.fields if field.name == by), None)

@@ -17,7 +17,7 @@ from stream.learners import Learner
 from stream.runs.sifting import Sifting
 from stream.runs.table_model import TableModel
 from stream.settings import Settings
-from stream.tables import names_state
+from stream.tables import NameLedger, names_state
 from stream.weights import Weights
 
 __all__ = ["Model"]
@@ -34,8 +34,8 @@ class Model(TableModel):
     """One learner over its table."""
 
     def __init__(self, settings: Settings) -> None:
-        self._learner = Learner(settings.learner)
-        super().__init__(settings, self._learner)
+        self._learner, self._names = Learner(settings.learner), NameLedger()
+        super().__init__(settings, self._learner, self._names)
 
     @property
     def intercept(self) -> float:
@@ -138,3 +138,15 @@ class Model(TableModel):
     def _is_zero(self, begin: int, end: int) -> npt.NDArray[np.bool_]:
         """Whether the weight in each slot of begin to end - 1 is exactly zero."""
         return np.asarray(self._learner.weights(self._table.cells, begin, end) == 0.0)
+
+    def _drop_names_of_zeros(self) -> None:
+        addresses = self._names.addresses()
+        slots = self._table.slots_of(addresses)
+        order = np.argsort(slots)
+        zero = slots < 0
+        for begin, end in self._table.chunks():
+            first, last = np.searchsorted(slots, (begin, end), sorter=order)
+            here = order[first:last]
+            zero[here] = self._is_zero(begin, end)[slots[here] - begin]
+        self._names.drop(addresses[zero])
+        self._table.clear_named(slots[zero & (slots >= 0)])

@@ -6,11 +6,11 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
-import numpy.typing as npt
 
 from stream.arrays_file import Arrays
 from stream.coordinate import CELLS, FIRST, SECOND, TOUCH, tally_of
 from stream.learners import Learner
+from stream.tables import names_at
 from stream.weights import Weights
 
 __all__ = ["Sifting"]
@@ -39,7 +39,7 @@ class Sifting:
         return Weights(
             addresses,
             np.concatenate(self._values),
-            _names_of(addresses, names),
+            names_at(addresses, names),
             tally_of(np.concatenate(self._touches)),
             self._learner.intercept,
             self._learner.learned,
@@ -57,15 +57,3 @@ class Sifting:
         self._addresses.append(piece["addresses"][found])
         self._values.append(weights[found])
         self._touches.append(piece["touch"][found])
-
-
-def _names_of(addresses: npt.NDArray[np.uint64], names: Arrays) -> tuple[bytes, ...]:
-    """The name of each address, b"" where none is known."""
-    known, text = names["addresses"], names["bytes"].tobytes()
-    places = np.searchsorted(known, addresses)
-    there = places < len(known)
-    there[there] = known[places[there]] == addresses[there]
-    starts, ends = np.zeros((2, len(addresses)), np.int64)
-    starts[there] = names["offsets"][places[there]]
-    ends[there] = names["offsets"][places[there] + 1]
-    return tuple(text[start:end] for start, end in zip(starts.tolist(), ends.tolist(), strict=True))

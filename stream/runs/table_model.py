@@ -11,7 +11,7 @@ import numpy.typing as npt
 from stream.batch import Batch
 from stream.coordinate import NO_UNDO, example_of
 from stream.settings import Settings
-from stream.tables import NameLedger, Table
+from stream.tables import Table
 
 __all__ = ["KEPT_WHEN_CROWDED", "NAMES_SWEPT_EVERY", "TableModel"]
 
@@ -41,14 +41,22 @@ class _Learns(Protocol):
     ) -> tuple[Floats, Int64s]: ...
 
 
+class _Names(Protocol):
+    """Where names are taken down; see `NameLedger`."""
+
+    @property
+    def name_bytes(self) -> int: ...
+
+    def record(self, batch: Batch, entries: Int64s) -> None: ...
+
+
 class TableModel(ABC):
     """A learner over its table. What it does depends on examples and their numbers, never on batch cuts."""
 
-    def __init__(self, settings: Settings, learner: _Learns) -> None:
+    def __init__(self, settings: Settings, learner: _Learns, names: _Names) -> None:
         self._settings = settings
         self._table = Table(settings.state)
-        self._learns = learner
-        self._names = NameLedger()
+        self._learns, self._records = learner, names
         self._room_sought_from = 0  # learned examples before which no room is made again
         state = settings.state
         self._periods = [NAMES_SWEPT_EVERY]
@@ -77,7 +85,7 @@ class TableModel(ABC):
         return {
             "table_bytes": self._table.table_bytes,
             "admission_bytes": self._table.filter_bytes,
-            "name_bytes": self._names.name_bytes,
+            "name_bytes": self._records.name_bytes,
         }
 
     def predict_then_update(self, batch: Batch) -> Floats:
@@ -96,7 +104,7 @@ class TableModel(ABC):
                 margins, named = self._learns.predict_then_update(
                     self._table.cells, batch, slots, first, stopped, undo
                 )
-            self._names.record(batch, named)
+            self._records.record(batch, named)
             if self.learned > before:
                 self._sweep_if_due()
             first = stopped
@@ -159,13 +167,4 @@ class TableModel(ABC):
             self._drop_names_of_zeros()
 
     def _drop_names_of_zeros(self) -> None:
-        addresses = self._names.addresses()
-        slots = self._table.slots_of(addresses)
-        order = np.argsort(slots)
-        zero = slots < 0
-        for begin, end in self._table.chunks():
-            first, last = np.searchsorted(slots, (begin, end), sorter=order)
-            here = order[first:last]
-            zero[here] = self._is_zero(begin, end)[slots[here] - begin]
-        self._names.drop(addresses[zero])
-        self._table.clear_named(slots[zero & (slots >= 0)])
+        """Forgets the names of zero weights; called after every NAMES_SWEPT_EVERY learned examples."""

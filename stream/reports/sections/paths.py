@@ -132,7 +132,7 @@ def _line(token: Mapping[str, Any], x: Sequence[float], strengths: Sequence[str]
             "dash": "solid" if yes else "6px,2px",
         },
         "opacity": 0.95 if rank < NAMED else 0.6,
-        "meta": [escaped(shortened(named(token), _HOVER)), percent(token["share"])],
+        "meta": [in_picture(named(token), _HOVER), percent(token["share"])],
         "customdata": [[s, weight(w)] for s, w in zip(strengths, weights, strict=True)],
         "hovertemplate": (
             "<b>%{meta[0]}</b><br>weight %{customdata[1]} at strength %{customdata[0]}"
@@ -163,7 +163,7 @@ def _labels(tokens: Sequence[Mapping[str, Any]], up: Sequence[float]) -> list[Fi
             "xref": "paper",
             "x": 1,
             "y": end,
-            "text": escaped(shortened(named(token), _LABEL)),
+            "text": in_picture(named(token), _LABEL),
             "showarrow": True,
             "arrowhead": 0,
             "arrowwidth": 0.8,

@@ -28,7 +28,10 @@ def slices(document: Mapping[str, Any]) -> Section:
     """The picture of the largest slices and a table of all."""
     title, short = "Where it helps, slice by slice", "Slices"
     by, rows = document["slices"]["by"], document["slices"]["rows"]
-    if not by or not rows:
+    if by and not rows:
+        body = paragraphs(f"No labelled message was scored in a slice by <code>{escaped(visible(str(by)))}</code>.")
+        return Section("slices", title, short, body, {})
+    if not by:
         body = paragraphs(
             "The settings name no field to slice by. Set <code>metrics.slice_by</code> to see the loss by "
             "its values."
@@ -54,10 +57,10 @@ def slices(document: Mapping[str, Any]) -> Section:
 def _picture(rows: Sequence[Mapping[str, Any]]) -> Picture:
     guesses = [_entropy(row["base_rate"]) for row in rows]
     height = 80 + ROW * len(rows)
-    names = [escaped(shortened(visible(str(row["slice"])), 18)) for row in rows]
+    names = [in_picture(visible(str(row["slice"])), 18) for row in rows]
     told = [
         [
-            escaped(shortened(visible(str(row["slice"])), 60)),
+            in_picture(visible(str(row["slice"])), 60),
             count(row["messages"]),
             loss(row["log_loss"]),
             loss(guess),

@@ -82,7 +82,7 @@ def _points(known: Sequence[Mapping[str, Any]], places: LogPlaces) -> Figure:
             "line": {"width": 1.8, "color": colours},
         },
         "customdata": [
-            [escaped(shortened(named(t), 60)), weight(t["weight"]), percent(t["share"]), percent(t["kept"])]
+            [in_picture(named(t), 60), weight(t["weight"]), percent(t["share"]), percent(t["kept"])]
             for t in known
         ],
         "hovertemplate": (
