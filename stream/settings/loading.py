@@ -22,7 +22,9 @@ __all__ = ["ENVIRONMENT_PREFIX", "load"]
 
 ENVIRONMENT_PREFIX = "BEDLOAD_"
 LISTS = ("fields", "crosses")
-NOT_SETTINGS = frozenset(f"{ENVIRONMENT_PREFIX}{name}" for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER"))
+NOT_SETTINGS = frozenset(
+    f"{ENVIRONMENT_PREFIX}{name}" for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER", "REQUIRE_BROWSER")
+)
 """Switches of the command line and of the tests."""
 
 

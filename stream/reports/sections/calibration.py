@@ -6,7 +6,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from stream.reports.drawing import Entry, Picture, axis, layout
+from stream.reports.drawing import Entry, Figure, Picture, axis, layout
 from stream.reports.markup import Section, paragraphs, pictured
 from stream.reports.texts import count, loss, percent, plain, ratio
 
@@ -59,60 +59,11 @@ def _said(reliability: Mapping[str, Any]) -> list[str]:
 
 
 def _picture(bins: Sequence[Mapping[str, Any]]) -> Picture:
-    total = sum(b["weight"] for b in bins)
     top = max(max(b["predicted"], b["observed"], b["to"]) for b in bins)
     end = min(1.0, math.ceil(top * 10 - 1e-9) / 10)
-    told = [
-        [
-            f"{percent(b['from'])} to {percent(b['to'])}",
-            percent(b["predicted"]),
-            percent(b["observed"]),
-            f"{count(b['weight'])} ({percent(b['weight'] / total)})",
-        ]
-        for b in bins
-    ]
-    hover = (
-        "bin %{customdata[0]}<br>predicted %{customdata[1]}<br>observed %{customdata[2]}"
-        "<br>messages %{customdata[3]}<extra></extra>"
-    )
-    ideal = {
-        "type": "scatter",
-        "mode": "lines",
-        "x": [0, end],
-        "y": [0, end],
-        "line": {"color": "--muted", "width": 1.5, "dash": "dash"},
-        "hoverinfo": "skip",
-    }
-    points = {
-        "type": "scatter",
-        "mode": "lines+markers",
-        "x": [b["predicted"] for b in bins],
-        "y": [b["observed"] for b in bins],
-        "error_y": {
-            "type": "data",
-            "array": [2 * math.sqrt(b["observed"] * (1 - b["observed"]) / b["weight"]) for b in bins],
-            "color": "--accent",
-            "thickness": 1.4,
-            "width": 4,
-        },
-        "line": {"color": "--accent", "width": 1.6},
-        "marker": {"color": "--accent", "size": 8},
-        "customdata": told,
-        "hovertemplate": hover,
-    }
-    bars = {
-        "type": "bar",
-        "x": [(b["from"] + b["to"]) / 2 for b in bins],
-        "width": [0.92 * (b["to"] - b["from"]) for b in bins],
-        "y": [b["weight"] / total for b in bins],
-        "yaxis": "y2",
-        "marker": {"color": "--bars"},
-        "customdata": told,
-        "hovertemplate": hover,
-    }
     shares = {"tickformat": ".0%"}
     figure = {
-        "data": [ideal, points, bars],
+        "data": [_ideal(end), *_measured(bins)],
         "layout": layout(
             HEIGHT,
             xaxis=axis("predicted", anchor="y2", range=[0, end], **shares),
@@ -128,3 +79,58 @@ def _picture(bins: Sequence[Mapping[str, Any]]) -> Picture:
     return Picture(
         figure, HEIGHT, f"Observed against predicted share of yes answers in {len(bins)} bins.", key
     )
+
+
+def _ideal(end: float) -> Figure:
+    return {
+        "type": "scatter",
+        "mode": "lines",
+        "x": [0, end],
+        "y": [0, end],
+        "line": {"color": "--muted", "width": 1.5, "dash": "dash"},
+        "hoverinfo": "skip",
+    }
+
+
+def _measured(bins: Sequence[Mapping[str, Any]]) -> list[Figure]:
+    """Points above and bars below, which tell the same when they are pointed at."""
+    total = sum(b["weight"] for b in bins)
+    told = {
+        "customdata": [
+            [
+                f"{percent(b['from'])} to {percent(b['to'])}",
+                percent(b["predicted"]),
+                percent(b["observed"]),
+                f"{count(b['weight'])} ({percent(b['weight'] / total)})",
+            ]
+            for b in bins
+        ],
+        "hovertemplate": (
+            "bin %{customdata[0]}<br>predicted %{customdata[1]}<br>observed %{customdata[2]}"
+            "<br>messages %{customdata[3]}<extra></extra>"
+        ),
+    }
+    points = {
+        "type": "scatter",
+        "mode": "lines+markers",
+        "x": [b["predicted"] for b in bins],
+        "y": [b["observed"] for b in bins],
+        "error_y": {
+            "type": "data",
+            "array": [2 * math.sqrt(b["observed"] * (1 - b["observed"]) / b["weight"]) for b in bins],
+            "color": "--accent",
+            "thickness": 1.4,
+            "width": 4,
+        },
+        "line": {"color": "--accent", "width": 1.6},
+        "marker": {"color": "--accent", "size": 8},
+    }
+    bars = {
+        "type": "bar",
+        "x": [(b["from"] + b["to"]) / 2 for b in bins],
+        "width": [0.92 * (b["to"] - b["from"]) for b in bins],
+        "y": [b["weight"] / total for b in bins],
+        "yaxis": "y2",
+        "marker": {"color": "--bars"},
+    }
+    return [points | told, bars | told]

@@ -7,7 +7,7 @@ from typing import Any
 
 from stream.reports.drawing import Entry, Figure, LogPlaces, Picture, axis, layout, padded, vertical
 from stream.reports.markup import Section, paragraphs, pictured, two_way
-from stream.reports.texts import count, difference, escaped, loss, named, percent, plain, shortened, weight
+from stream.reports.texts import count, difference, escaped, in_picture, loss, named, percent, plain, weight
 
 __all__ = ["models", "paths"]
 

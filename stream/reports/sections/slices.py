@@ -8,7 +8,7 @@ from typing import Any
 
 from stream.reports.drawing import Entry, Figure, Picture, axis, layout, padded
 from stream.reports.markup import Section, paragraphs, pictured, table
-from stream.reports.texts import bdi, count, escaped, loss, percent, ratio, shortened, visible
+from stream.reports.texts import bdi, count, escaped, in_picture, loss, percent, ratio, visible
 
 __all__ = ["slices"]
 
@@ -29,7 +29,8 @@ def slices(document: Mapping[str, Any]) -> Section:
     title, short = "Where it helps, slice by slice", "Slices"
     by, rows = document["slices"]["by"], document["slices"]["rows"]
     if by and not rows:
-        body = paragraphs(f"No labelled message was scored in a slice by <code>{escaped(visible(str(by)))}</code>.")
+        field = escaped(visible(str(by)))
+        body = paragraphs(f"No labelled message was scored in a slice by <code>{field}</code>.")
         return Section("slices", title, short, body, {})
     if not by:
         body = paragraphs(

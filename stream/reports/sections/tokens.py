@@ -7,7 +7,7 @@ from typing import Any
 
 from stream.reports.drawing import Entry, Figure, LogPlaces, Picture, axis, layout, padded
 from stream.reports.markup import Section, paragraphs, pictured, two_way
-from stream.reports.texts import escaped, named, percent, plain, shortened, weight
+from stream.reports.texts import in_picture, named, percent, plain, weight
 
 __all__ = ["tokens"]
 
