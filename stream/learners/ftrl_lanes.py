@@ -247,5 +247,5 @@ def ftrl_lane_sweep(
             bits = on_eight(lanes, row * (K + K) + at, bounds, at)
             found |= bits
             if bits:
-                count_on(bits, row, np.uint64(at), K, nonzeros, kept)
+                count_on(bits, np.uint64(row), np.uint64(at), K, nonzeros, kept)
         some[row] = found != 0

@@ -179,5 +179,5 @@ def truncated_lane_sweep(
             bits = undrawn_eight(lanes, place, place + K, strength, at, eta)
             found |= bits
             if bits:
-                count_on(bits, row, np.uint64(at), K, nonzeros, kept)
+                count_on(bits, np.uint64(row), np.uint64(at), K, nonzeros, kept)
         some[row] = found != 0

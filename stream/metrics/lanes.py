@@ -82,7 +82,7 @@ class LaneProgress(Progress):
         self._through += len(margins) + rejected
 
     def close_window(self, nnz: Callable[[], int], live: int) -> WindowRow:
-        """Closes what ends here. `nnz` is asked at the end of every SWEPT_EVERY-th block, else it counts as 0."""
+        """Closes what ends here. `nnz` is asked at the end of each SWEPT_EVERY-th block, else it is 0."""
         nonzeros = 0
         if self._through == self._window_at + self.window:
             self._window_at = self._through

@@ -168,3 +168,4 @@ class TableModel(ABC):
 
     def _drop_names_of_zeros(self) -> None:
         """Forgets the names of zero weights; called after every NAMES_SWEPT_EVERY learned examples."""
+        return

@@ -84,7 +84,7 @@ class NameLedger:
 
 
 class NamePile:
-    """Names by address where each is recorded once and none is dropped: no ledger to look them up in meanwhile."""
+    """Names of addresses that are recorded once each and never dropped: nothing is looked up meanwhile."""
 
     def __init__(self) -> None:
         self._addresses = [np.empty(0, np.uint64)]
@@ -117,7 +117,7 @@ class NamePile:
         return names_state(piled)
 
 
-def names_at(addresses: npt.NDArray[np.uint64], names: Arrays) -> tuple[bytes, ...]:
+def names_at(addresses: npt.NDArray[np.uint64], names: Mapping[str, npt.NDArray[Any]]) -> tuple[bytes, ...]:
     """The name of each address, b"" where none is known; `names` as `names_state` gives them."""
     known, text = names["addresses"], names["bytes"].tobytes()
     places = np.searchsorted(known, addresses)

@@ -1,0 +1,123 @@
+"""A log, settings and a grid in; the choice, and the document that shows why, out."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from stream.errors import BadSettings
+from stream.runs.tuning.choosing import Rule
+from stream.runs.tuning.document import document
+from stream.runs.tuning.first_pass import LogFacts, count, digest_of_log, find_strongest
+from stream.runs.tuning.grid import Grid, blocks_of, candidates
+from stream.runs.tuning.keeping import KeptTrials
+from stream.runs.tuning.merging import merge
+from stream.runs.tuning.passes import Pool, run_passes, workers_on_this_machine
+from stream.runs.tuning.trial import Plan, Trial
+from stream.settings import Settings
+
+__all__ = ["Job", "tune"]
+
+Tell = Callable[[float, str], None]
+
+
+@dataclass(frozen=True, slots=True)
+class Job:
+    """What is to be tuned, and where.
+
+    `forward_share`: share of the messages after which a forward test freezes the weights; None: no such test.
+    `workers`: processes on this machine; `cluster`: address of a Dask scheduler instead.
+    `memory_bytes`: for tables and lanes of all passes that run at once.
+    """
+
+    grid: Grid = field(default_factory=Grid)
+    rule: Rule = field(default_factory=Rule)
+    forward_share: float | None = None
+    truth: Path | None = None
+    workers: int = 1
+    cluster: str | None = None
+    memory_bytes: int = 4_000_000_000
+
+
+def tune(
+    settings: Settings,
+    trials: Path,
+    job: Job,
+    *,
+    command: str = "",
+    tell: Tell = lambda share, text: None,
+    say: Callable[[str], None] = lambda text: None,
+) -> dict[str, Any]:
+    """Tries all candidates of the grid over the log of `settings`, and chooses; see docs/tuning.md.
+
+    `trials`: the folder where finished trials stay, so that an interrupted run goes on. `tell` is given the
+    share of the present pass that is done and what it is; `say` what a person should know. Returns the document
+    of docs/tuning.md. Raises what a replay raises; BadSettings and BadData for what cannot be tuned.
+    """
+    if settings.feed.kind != "log":
+        raise BadSettings('tune reads logs: set feed.kind = "log" with feed.paths')
+    began, passes = time.monotonic(), []
+
+    def note(text: str) -> None:
+        passes.append(text)
+        say(text)
+
+    files, digest = digest_of_log(settings)
+    facts = _first_pass(settings, job.grid, tell, note)
+    lanes = candidates(job.grid, settings.learner, facts)
+
+    def tried(plan: Plan, pool: Pool | None, workers: int) -> Trial:
+        kept = KeptTrials(trials, settings, digest, plan)
+        return merge(run_passes(settings, lanes, plan, kept, job.memory_bytes, pool, workers, tell, note))
+
+    with _pool(job) as (pool, workers):
+        trial = tried(blocks_of(facts.messages), pool, workers)
+        frozen = None
+        if job.forward_share is not None:
+            note(f"forward test: the log once more, learned up to {job.forward_share:.0%} of it, then only scored")
+            frozen = tried(blocks_of(facts.messages, job.forward_share), pool, workers)
+    return document(
+        settings=settings,
+        command=command,
+        files=files,
+        digest=digest,
+        facts=facts,
+        grid=job.grid,
+        plan=blocks_of(facts.messages),
+        trial=trial,
+        rule=job.rule,
+        frozen=frozen,
+        frozen_plan=None if job.forward_share is None else blocks_of(facts.messages, job.forward_share),
+        truth=job.truth,
+        passes=passes,
+        seconds=time.monotonic() - began,
+    )
+
+
+def _first_pass(settings: Settings, grid: Grid, tell: Tell, note: Callable[[str], None]) -> LogFacts:
+    if not grid.searched:
+        return count(settings, lambda fraction, messages: tell(fraction or 0.0, "counting messages"))
+    facts = find_strongest(
+        settings, lambda fraction, messages: tell(fraction or 0.0, "looking for the strongest useful penalty")
+    )
+    note(
+        f"first pass: {facts.messages:,} messages, {facts.coordinates:,} tokens; from l1_per_example = "
+        f"{facts.strongest:.6g} on a batch fit of the log has no weight"
+    )
+    return facts
+
+
+@contextmanager
+def _pool(job: Job) -> Iterator[tuple[Pool | None, int]]:
+    if job.cluster is None:
+        with workers_on_this_machine(job.workers) as pool:
+            yield pool, job.workers
+        return
+    from stream.runs.tuning.cluster import workers_of_cluster
+
+    with workers_of_cluster(job.cluster) as (pool, threads):
+        yield pool, threads
