@@ -16,7 +16,7 @@ import pytest
 from stream.errors import InputMissing
 from stream.reports import page, write_report, write_tables
 from stream.reports.drawing import LogPlaces
-from stream.reports.texts import named, odds, percent, plain, shortened, size, visible
+from stream.reports.texts import difference, named, odds, percent, plain, shortened, size, visible
 from tests import report_documents
 from tests.report_documents import NASTY
 
@@ -400,6 +400,8 @@ def read_csv(path):
         (odds(0.0), "×1.00"),
         (odds(-9.0), "×0.00012"),
         (odds(20.0), "×485,165,195"),
+        (difference(0.0, 0.0), "0"),
+        (difference(-0.0012, 0.0003), "−0.00120 ± 0.00030"),
         (size(999), "999 bytes"),
         (size(15_700), "15.7 kB"),
         (shortened("abcdefghij", 7), "abcd…ij"),

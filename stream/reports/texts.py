@@ -111,6 +111,8 @@ def difference(value: float | None, error: float | None = None) -> str:
     """A signed difference, with its standard error where it has one."""
     if value is None:
         return UNKNOWN
+    if value == 0 and not error:
+        return "0"
     text = f"{value:+.5f}".replace("-", "−")
     return f"{text} ± {error:.5f}" if error is not None else text
 
