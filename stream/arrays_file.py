@@ -26,7 +26,15 @@ from stream.durable import Content, Sink, write_folder
 from stream.errors import BadData
 from stream.manifest import PIECE, FileSum, open_plain, read_manifest, verify_file
 
-__all__ = ["ARRAYS", "Arrays", "Rows", "array_content", "read_array_folder", "write_array_folder"]
+__all__ = [
+    "ARRAYS",
+    "Arrays",
+    "Rows",
+    "array_content",
+    "content_size",
+    "read_array_folder",
+    "write_array_folder",
+]
 
 ARRAYS = "arrays.safetensors"
 Arrays = Mapping[str, npt.NDArray[Any]]
@@ -91,19 +99,7 @@ def array_content(arrays: Arrays, rows: Rows | None = None) -> Content:
     shapes = {name: (array.dtype, array.shape) for name, array in arrays.items()}
     if rows is not None:
         shapes |= {name: (dtype, (rows.length,)) for name, dtype in rows.dtypes.items()}
-    coded = []
-    for name, (dtype, shape) in shapes.items():
-        code = _CODES.get(dtype.newbyteorder("<"))
-        if code is None:
-            raise TypeError(f"array {name!r}: dtype {dtype} has no place in a safetensors file")
-        coded.append((-_RANK[code], name, code, shape))
-    header, starts, start = {}, {}, 0
-    for _, name, code, shape in sorted(coded):
-        end = start + _TYPES[code].itemsize * prod(shape)
-        header[name] = {"dtype": code, "shape": list(shape), "data_offsets": [start, end]}
-        starts[name], start = start, end
-    text = json.dumps(header, separators=(",", ":"), ensure_ascii=False).encode()
-    text += b" " * (-len(text) % 8)
+    text, starts, _ = _laid_out(shapes)
 
     def write(sink: Sink) -> None:
         sink.write(len(text).to_bytes(8, "little") + text)
@@ -122,6 +118,31 @@ def array_content(arrays: Arrays, rows: Rows | None = None) -> Content:
         sink.sum_placed()
 
     return write
+
+
+def content_size(shapes: Mapping[str, tuple[np.dtype[Any], tuple[int, ...]]]) -> int:
+    """Bytes of the file that `array_content` makes of arrays with these dtypes and shapes."""
+    text, _, end = _laid_out(shapes)
+    return 8 + len(text) + end
+
+
+def _laid_out(
+    shapes: Mapping[str, tuple[np.dtype[Any], tuple[int, ...]]],
+) -> tuple[bytes, dict[str, int], int]:
+    """Header, where the bytes of each array begin behind it, in the file's order, and where the last end."""
+    coded = []
+    for name, (dtype, shape) in shapes.items():
+        code = _CODES.get(dtype.newbyteorder("<"))
+        if code is None:
+            raise TypeError(f"array {name!r}: dtype {dtype} has no place in a safetensors file")
+        coded.append((-_RANK[code], name, code, shape))
+    header, starts, start = {}, {}, 0
+    for _, name, code, shape in sorted(coded):
+        end = start + _TYPES[code].itemsize * prod(shape)
+        header[name] = {"dtype": code, "shape": list(shape), "data_offsets": [start, end]}
+        starts[name], start = start, end
+    text = json.dumps(header, separators=(",", ":"), ensure_ascii=False).encode()
+    return text + b" " * (-len(text) % 8), starts, start
 
 
 def _plain(array: npt.NDArray[Any]) -> memoryview:

@@ -12,16 +12,17 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from stream.arrays_file import read_array_folder, write_array_folder
+from stream.arrays_file import ARRAYS, content_size, read_array_folder, write_array_folder
 from stream.errors import BadData
+from stream.manifest import manifest_bytes
 from stream.weights import Weights
 
-__all__ = ["About", "Snapshot", "check_format", "read_snapshot", "write_snapshot"]
+__all__ = ["About", "Snapshot", "check_format", "read_snapshot", "snapshot_size", "write_snapshot"]
 
 FORMAT = "bedload snapshot"
 FORMAT_VERSION = 1
 
-_DTYPES = {
+_DTYPES: dict[str, np.dtype[Any]] = {
     "addresses": np.dtype("u8"),
     "weights": np.dtype("f4"),
     "messages": np.dtype("f8"),
@@ -58,6 +59,18 @@ class Snapshot:
     passed_over: tuple[str, ...] = ()
 
 
+def snapshot_size(nnz: int, name_bytes: int, fingerprint: dict[str, Any], about: About) -> int:
+    """Bytes of a snapshot of `nnz` weights whose names have `name_bytes` in all.
+
+    Off only by some digits of the manifest: counts and the intercept have nine and seventeen here.
+    """
+    lengths = dict.fromkeys(_DTYPES, nnz) | {"name_offsets": nnz + 1, "names": name_bytes}
+    arrays = content_size({name: (dtype, (lengths[name],)) for name, dtype in _DTYPES.items()})
+    sums = {ARRAYS: {"size": arrays, "crc32c": "0" * 8, "sha256": "0" * 64}}
+    manifest = _manifest(10**8, 10**8, -1 / 3, nnz, fingerprint, about)
+    return arrays + len(manifest_bytes(manifest, sums))
+
+
 def write_snapshot(
     path: Path, messages: int, weights: Weights, about: About, make_way: Callable[[], object] | None = None
 ) -> Path:
@@ -73,20 +86,28 @@ def write_snapshot(
         "name_offsets": np.concatenate([np.zeros(1, np.int64), np.cumsum(lengths)]),
         "names": np.frombuffer(b"".join(weights.names), np.uint8),
     }
-    manifest = {
-        "format": FORMAT,
-        "format_version": FORMAT_VERSION,
-        "fingerprint": weights.fingerprint,
-        "messages": messages,
-        "learned": weights.learned,
-        "intercept": weights.intercept,
-        "nnz": len(weights),
-        **asdict(about),
-    }
+    manifest = _manifest(
+        messages, weights.learned, weights.intercept, len(weights), weights.fingerprint, about
+    )
     wrong = _wrong_in(manifest, arrays)
     if wrong:
         raise ValueError(f"these weights make no snapshot: {wrong}")
     return write_array_folder(path.parent, path.name, arrays, manifest, make_way)
+
+
+def _manifest(
+    messages: int, learned: int, intercept: float, nnz: int, fingerprint: dict[str, Any], about: About
+) -> dict[str, Any]:
+    return {
+        "format": FORMAT,
+        "format_version": FORMAT_VERSION,
+        "fingerprint": fingerprint,
+        "messages": messages,
+        "learned": learned,
+        "intercept": intercept,
+        "nnz": nnz,
+        **asdict(about),
+    }
 
 
 def read_snapshot(path: Path) -> Snapshot:
