@@ -23,6 +23,7 @@ __all__ = [
     "share",
     "show_json",
     "show_table",
+    "stage_bar",
     "visible",
 ]
 
@@ -131,6 +132,40 @@ def progress_bar(title: str) -> Iterator[Progress]:
 
     with bar:
         yield advance
+
+
+@contextmanager
+def stage_bar() -> Iterator[Callable[[float, str], None]]:
+    """Gives a function of (share done of 1, what is being done); it draws on a terminal only."""
+    if not sys.stderr.isatty():
+        yield lambda share, text: None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, TaskID, TextColumn, TimeElapsedColumn, TimeRemainingColumn
+    from rich.progress import Progress as Bar
+
+    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f} %")
+    times = TimeElapsedColumn(), TextColumn("elapsed"), TimeRemainingColumn(), TextColumn("left")
+    bar = Bar(*columns, *times, console=Console(stderr=True), auto_refresh=False, transient=True)
+    stages: dict[str, TaskID] = {}
+    shown = 0.0
+
+    def tell(share: float, text: str) -> None:
+        nonlocal shown
+        now = time.monotonic()
+        if text in stages and now - shown < 0.1:
+            return
+        shown = now
+        if text not in stages:  # each stage has a clock of its own
+            for task in stages.values():
+                bar.remove_task(task)
+            stages.clear()
+            stages[text] = bar.add_task(text, total=1.0)
+        bar.update(stages[text], completed=share)
+        bar.refresh()
+
+    with bar:
+        yield tell
 
 
 def _fit(columns: Sequence[Column], rows: Sequence[Sequence[str]]) -> list[Column]:

@@ -9,15 +9,20 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+import numpy.typing as npt
+
 from stream.errors import BadSettings
 from stream.runs.tuning.choosing import Rule
-from stream.runs.tuning.document import document
+from stream.runs.tuning.document import Tuned, document
+from stream.runs.tuning.excess import expected_excess
 from stream.runs.tuning.first_pass import LogFacts, count, digest_of_log, find_strongest
 from stream.runs.tuning.grid import Grid, blocks_of, candidates
 from stream.runs.tuning.keeping import KeptTrials
 from stream.runs.tuning.merging import merge
 from stream.runs.tuning.passes import Pool, run_passes, workers_on_this_machine
 from stream.runs.tuning.trial import Plan, Trial
+from stream.runs.tuning.truth import Truth, read_truth
 from stream.settings import Settings
 
 __all__ = ["Job", "tune"]
@@ -55,7 +60,7 @@ def tune(
     """Tries all candidates of the grid over the log of `settings`, and chooses; see docs/tuning.md.
 
     `trials`: the folder where finished trials stay, so that an interrupted run goes on. `tell` is given the
-    share of the present pass that is done and what it is; `say` what a person should know. Returns the document
+    share done of the present stage and its name; `say` what a person should know. Returns the document
     of docs/tuning.md. Raises what a replay raises; BadSettings and BadData for what cannot be tuned.
     """
     if settings.feed.kind != "log":
@@ -74,36 +79,54 @@ def tune(
         kept = KeptTrials(trials, settings, digest, plan)
         return merge(run_passes(settings, lanes, plan, kept, job.memory_bytes, pool, workers, tell, note))
 
+    plan, frozen, frozen_plan = blocks_of(facts.messages), None, None
     with _pool(job) as (pool, workers):
-        trial = tried(blocks_of(facts.messages), pool, workers)
-        frozen = None
+        trial = tried(plan, pool, workers)
         if job.forward_share is not None:
-            note(f"forward test: the log once more, learned up to {job.forward_share:.0%} of it, then only scored")
-            frozen = tried(blocks_of(facts.messages, job.forward_share), pool, workers)
+            note(f"forward test: learned up to {job.forward_share:.0%} of the log, then only scored")
+            frozen_plan = blocks_of(facts.messages, job.forward_share)
+            frozen = tried(frozen_plan, pool, workers)
     return document(
-        settings=settings,
-        command=command,
-        files=files,
-        digest=digest,
-        facts=facts,
-        grid=job.grid,
-        plan=blocks_of(facts.messages),
-        trial=trial,
-        rule=job.rule,
-        frozen=frozen,
-        frozen_plan=None if job.forward_share is None else blocks_of(facts.messages, job.forward_share),
-        truth=job.truth,
-        passes=passes,
-        seconds=time.monotonic() - began,
+        Tuned(
+            settings,
+            command,
+            files,
+            digest,
+            facts,
+            job.grid,
+            plan,
+            trial,
+            job.rule,
+            frozen,
+            frozen_plan,
+            truth=_compared(settings, job, plan, trial, tell),
+            passes=passes,
+            seconds=time.monotonic() - began,
+        )
     )
+
+
+def _compared(
+    settings: Settings, job: Job, plan: Plan, trial: Trial, tell: Tell
+) -> tuple[Truth, npt.NDArray[np.float64]] | None:
+    if job.truth is None:
+        return None
+    truth = read_truth(job.truth)
+
+    def progress(fraction: float | None, messages: int) -> None:
+        tell(fraction or 0.0, "comparing with the truth")
+
+    return truth, expected_excess(settings, trial.lanes, plan, truth, job.memory_bytes, progress)
 
 
 def _first_pass(settings: Settings, grid: Grid, tell: Tell, note: Callable[[str], None]) -> LogFacts:
     if not grid.searched:
         return count(settings, lambda fraction, messages: tell(fraction or 0.0, "counting messages"))
-    facts = find_strongest(
-        settings, lambda fraction, messages: tell(fraction or 0.0, "looking for the strongest useful penalty")
-    )
+
+    def looking(fraction: float | None, messages: int) -> None:
+        tell(fraction or 0.0, "looking for the strongest useful penalty")
+
+    facts = find_strongest(settings, looking)
     note(
         f"first pass: {facts.messages:,} messages, {facts.coordinates:,} tokens; from l1_per_example = "
         f"{facts.strongest:.6g} on a batch fit of the log has no weight"
