@@ -33,7 +33,11 @@ class Opened:
     def __init__(self, browser, path, width=1280, scheme="light"):
         phone = {"is_mobile": True, "has_touch": True} if width < 500 else {}
         self.window = browser.new_context(
-            viewport={"width": width, "height": 900}, color_scheme=scheme, offline=True, **phone
+            viewport={"width": width, "height": 900},
+            color_scheme=scheme,
+            reduced_motion="reduce",
+            offline=True,
+            **phone,
         )
         self.page = self.window.new_page()
         self.complaints, self.asked = [], []

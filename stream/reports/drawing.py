@@ -71,7 +71,7 @@ def layout(height: int, **more: Any) -> Figure:
         "plot_bgcolor": CLEAR,
         "showlegend": False,
         "hovermode": "closest",
-        "hoverdistance": 40,
+        "hoverdistance": 120,
         "hoverlabel": {
             "bgcolor": "--raised",
             "bordercolor": "--axis",

@@ -53,7 +53,11 @@ def course(document: Mapping[str, Any]) -> Section:
 def _known(document: Mapping[str, Any]) -> dict[str, Candidate]:
     """The drawn candidates by what they are known for, each once, the choice first."""
     by_index = {c["index"]: c for c in document["candidates"]}
-    found = {n: by_index[i] for n, i in roles(document).items() if i in by_index and n != "runner-up"}
+    found = {}
+    for name, index in roles(document).items():
+        drawn = [role for role in name.split(", ") if role in _LOOKS]  # a runner-up only as something else
+        if drawn and index in by_index:
+            found[", ".join(drawn)] = by_index[index]
     chosen = by_index[document["choice"]["index"]]
     unit = document["grid"]["unit"]
     same_rate = [c for c in by_index.values() if c["learning_rate"] == chosen["learning_rate"]]
