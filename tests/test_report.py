@@ -231,6 +231,14 @@ def test_loss_against_size_has_a_trace_for_each_rate_with_paired_errors_and_name
     }
 
 
+def test_a_runner_up_that_has_half_the_weights_is_drawn_over_time_as_that():
+    document = copy.deepcopy(DOCUMENTS["tuned"])
+    document["choice"]["runner_up"] = document["choice"]["halved"]["index"]
+    carries = json.loads(re.search(r'id="report">(.*?)</script>', page(document), re.S)[1])
+    names = [trace["name"] for trace in carries["figures"]["course"]["data"]]
+    assert "half the weights" in names and not any("runner-up" in name for name in names)
+
+
 def test_a_model_without_weights_stands_apart_on_the_log_axis():
     places = LogPlaces([0, 10, 1000])
     ticks = dict(zip(places.axis("")["ticktext"], places.axis("")["tickvals"], strict=True))
