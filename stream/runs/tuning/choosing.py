@@ -188,7 +188,7 @@ def _nothing_fits(candidates: Candidates, rule: Rule, finite: npt.NDArray[np.boo
     least = int(np.argmin(np.where(finite, sizes, np.iinfo(np.int64).max)))
     lane = candidates.lanes[least]
     return BadSettings(
-        f"no candidate keeps to {rule.limit:,} {unit}: the smallest has {sizes[least]:,} "
+        f"no candidate keeps to a limit of {rule.limit:,} on {unit}: the smallest has {sizes[least]:,} "
         f"({candidates.over} {candidates.strength(least):.3g}, learning rate {lane.learning_rate:g}). "
         "Allow as many, or give stronger strengths"
     )

@@ -31,8 +31,9 @@ class NamedWeights:
         values = self._weights.values[:, lane]
         signed = values if yes else -values
         here = np.flatnonzero(signed > 0)
+        kept = self._weights.kept[:, lane]
         return [
-            {**self._token(i), "weight": _finite(values[i]), "kept": round(float(self._weights.kept[i, lane]), 6)}
+            {**self._token(i), "weight": _finite(values[i]), "kept": round(float(kept[i]), 6)}
             for i in here[np.argsort(-signed[here], kind="stable")[:most]]
         ]
 
