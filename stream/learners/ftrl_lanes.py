@@ -43,7 +43,7 @@ __all__ = [
 ]
 
 Floats = npt.NDArray[np.float64]
-AHEAD_TABLE, AHEAD_LANES = np.uint64(48), np.uint64(12)
+AHEAD_TABLE, AHEAD_LANES, AHEAD_SWEEP = np.uint64(48), np.uint64(12), np.uint64(16)
 LINE = np.uint64(8)
 ONE, EIGHT = np.uint64(1), np.uint64(LANES)
 
@@ -242,6 +242,9 @@ def ftrl_lane_sweep(
     K = np.uint64(sums.shape[1])
     bounds = options[L1] + sums[STRENGTH]
     for row in range(np.uint64(first), np.uint64(last)):
+        ahead = min(row + AHEAD_SWEEP, np.uint64(last) - ONE) * (K + K)
+        for line in range(np.uint64(0), K, LINE):
+            prefetch(lanes, ahead + line)
         found = 0
         for at in range(np.uint64(0), K, EIGHT):
             bits = on_eight(lanes, row * (K + K) + at, bounds, at)

@@ -16,7 +16,7 @@ from stream.coordinate import FIRST, NAMED, TOUCH, row_of, touched
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch
 from stream.learners.eight import LANES, draw_eight, move_eight, undrawn_eight
-from stream.learners.ftrl_lanes import AHEAD_LANES, AHEAD_TABLE, LINE, count_on, count_refused
+from stream.learners.ftrl_lanes import AHEAD_LANES, AHEAD_SWEEP, AHEAD_TABLE, LINE, count_on, count_refused
 from stream.learners.layout import (
     INTERCEPT_FIRST,
     LEARNED,
@@ -173,6 +173,9 @@ def truncated_lane_sweep(
     K = np.uint64(sums.shape[1])
     strength, eta = sums[STRENGTH].copy(), options[RATE].copy()
     for row in range(np.uint64(first), np.uint64(last)):
+        ahead = min(row + AHEAD_SWEEP, np.uint64(last) - np.uint64(1)) * (K + K)
+        for line in range(np.uint64(0), K + K, LINE):
+            prefetch(lanes, ahead + line)
         found = 0
         for at in range(np.uint64(0), K, EIGHT):
             place = row * (K + K) + at

@@ -14,7 +14,7 @@ from stream.learners.lanes import Lanes
 from stream.runs.table_model import Floats, Int64s, TableModel
 from stream.settings import Settings
 from stream.settings.models import Learner as LearnerSettings
-from stream.tables import NamePile, names_at
+from stream.tables import NamePile
 
 __all__ = ["LaneModel", "LaneWeights"]
 
@@ -88,7 +88,7 @@ class LaneModel(TableModel):
             addresses,
             values[order],
             (self._lanes.kept(cells, slots[order]) / max(len(self.block_nnz), 1)).astype(np.float32),
-            names_at(addresses, self._pile.state()),
+            self._pile.at(addresses),
             tally_of(self._table.touches(slots[order])),
             self._lanes.intercepts,
         )

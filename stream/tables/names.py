@@ -105,16 +105,21 @@ class NamePile:
         self._texts.append(texts)
         self.name_bytes += len(texts)
 
-    def state(self) -> Arrays:
-        """As `names_state`."""
-        lengths = np.concatenate(self._lengths)
-        offsets = np.concatenate([np.zeros(1, np.int64), np.cumsum(lengths)])
-        piled = {
-            "addresses": np.concatenate(self._addresses),
-            "offsets": offsets,
-            "bytes": np.concatenate(self._texts),
-        }
-        return names_state(piled)
+    def at(self, addresses: npt.NDArray[np.uint64]) -> tuple[bytes, ...]:
+        """The name of each address, b"" where none is known; `addresses` in ascending order."""
+        names = [b""] * len(addresses)
+        for known, lengths, texts in zip(self._addresses, self._lengths, self._texts, strict=True):
+            places = np.searchsorted(addresses, known)
+            found = np.flatnonzero(places < len(addresses))
+            found = found[addresses[places[found]] == known[found]]
+            if not len(found):
+                continue
+            ends = np.cumsum(lengths)
+            for place, start, end in zip(
+                places[found].tolist(), (ends - lengths)[found].tolist(), ends[found].tolist(), strict=True
+            ):
+                names[place] = texts[start:end].tobytes()
+        return tuple(names)
 
 
 def names_at(addresses: npt.NDArray[np.uint64], names: Mapping[str, npt.NDArray[Any]]) -> tuple[bytes, ...]:

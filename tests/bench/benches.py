@@ -36,6 +36,7 @@ BENCHES = {
     "kernel": Bench("learn_kernel", {"messages": 300_000, "rounds": 15}, {"messages": 60_000, "rounds": 3}),
     "width": Bench("width", {"messages": 400_000, "rounds": 5}, {"messages": 60_000, "rounds": 3}),
     "score": Bench("score", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
+    "tune": Bench("tune", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
     "memory": Bench("memory", {"live": 20_000_000}, {"live": 20_000_000}),
     "checkpoint": Bench("checkpoint", {"live": 10_000_000, "rounds": 4}, {"live": 2_000_000, "rounds": 2}),
     "start": Bench("start", {"rounds": 11}, {"rounds": 3}),
