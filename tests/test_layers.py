@@ -29,8 +29,8 @@ HOMES = {
     "typer": "stream/cli/",
     "rich": "stream/cli/screen.py",
     "mmh3": "nowhere: the compiled hash is held to it by the tests",
-    "numba": "stream/kernel.py",
-    "llvmlite": "stream/kernel.py",
+    "numba": ("stream/kernel.py", "stream/learners/eight.py"),
+    "llvmlite": ("stream/kernel.py", "stream/learners/eight.py"),
     "kafka": "stream/topics/client.py",
     "msgspec": (
         "stream/decoding/",
@@ -46,6 +46,8 @@ HOMES = {
     "prometheus_client": "stream/operating/exposition.py",
     "plotly": "stream/reports/plotting.py",
     "pyarrow": "stream/snapshots/export.py",
+    "tomlkit": "stream/runs/tuning/settings_copy.py",
+    "distributed": "stream/runs/tuning/cluster.py",
     "pydantic": "stream/settings/",
     "pydantic_core": "stream/settings/",
 }
