@@ -12,6 +12,7 @@ from types import TracebackType
 from typing import Any
 
 from stream.errors import BedloadError
+from stream.kernel import compiled_before
 from stream.metrics import WindowRow
 from stream.operating import (
     Exposition,
@@ -44,7 +45,7 @@ class Watch:
     """
 
     def __init__(self, settings: Settings, stopping: list[int]) -> None:
-        self.figures = Figures()
+        self.figures = Figures(to_compile=not compiled_before(settings.learner.method))
         self._worker = settings.worker
         self._stopping = stopping
         self._source: HasHealth | None = None
