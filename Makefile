@@ -6,8 +6,9 @@ PYTHON ?= python3
 BIN := .venv/bin
 READY := .venv/.ready
 WORKERS ?= 2
+MESSAGES ?= 20000000
 
-.PHONY: demo test lint bench clean
+.PHONY: demo test lint bench soak clean
 
 demo: $(READY)
 	$(BIN)/bedload demo
@@ -22,6 +23,9 @@ lint: $(READY)
 
 bench: $(READY)
 	$(BIN)/python -m tests.bench
+
+soak: $(READY)
+	$(BIN)/python -m tests.soak --messages $(MESSAGES)
 
 clean:
 	rm -rf .venv .mypy_cache .ruff_cache .pytest_cache .hypothesis build dist
