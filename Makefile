@@ -7,8 +7,10 @@ BIN := .venv/bin
 READY := .venv/.ready
 WORKERS ?= 2
 MESSAGES ?= 20000000
+KILLS ?= 200
+SEED ?= 7
 
-.PHONY: demo test lint bench soak clean
+.PHONY: demo test lint bench soak chaos clean
 
 demo: $(READY)
 	$(BIN)/bedload demo
@@ -26,6 +28,9 @@ bench: $(READY)
 
 soak: $(READY)
 	$(BIN)/python -m tests.soak --messages $(MESSAGES)
+
+chaos: $(READY)
+	$(BIN)/python -m tests.chaos --kills $(KILLS) --seed $(SEED)
 
 clean:
 	rm -rf .venv .mypy_cache .ruff_cache .pytest_cache .hypothesis build dist
