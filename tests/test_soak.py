@@ -9,7 +9,7 @@ from tests.soak.judging import Outcome, complaints, growth_bytes
 from tests.soak.running import soak
 from tests.soak.sampling import Sample
 
-MESSAGES = 60_000
+MESSAGES = 40_000
 LEAKS = (sys.executable, "-m", "tests.soak.leaking", "work")
 STEADY = [
     Sample(
@@ -33,6 +33,7 @@ WELL = Outcome(
     learned=20_000,
     rejected=200,
     dead_letters=200,
+    scores=19_800,
     exit_code=0,
     stop_s=2.0,
     checkpoints=9,
@@ -42,9 +43,19 @@ WELL = Outcome(
 
 
 def test_a_short_soak_counts_every_message_and_catches_what_leaks(broker, topic, tmp_path):
-    found = soak(broker, topic, tmp_path / "worker", MESSAGES, every_s=0.1, most_per_s=15_000, worker=LEAKS)
+    found = soak(
+        broker,
+        topic,
+        tmp_path / "worker",
+        MESSAGES,
+        every_s=0.1,
+        most_per_s=12_000,
+        scores=True,
+        worker=LEAKS,
+    )
     assert (found.sent, found.learned, found.exit_code) == (MESSAGES, MESSAGES, 0)
     assert found.bad == found.rejected == found.dead_letters == MESSAGES // 100
+    assert found.scores == MESSAGES - found.bad
     assert found.samples[-1].lag == 0
     assert max(sample.live for sample in found.samples) <= 2_000
     told = " ".join(complaints(found))
@@ -63,6 +74,7 @@ def test_a_steady_worker_gets_no_complaint():
         ({"learned": 19_999}, "messages learned: 19999, not 20000"),
         ({"rejected": 201}, "messages rejected: 201, not 200"),
         ({"dead_letters": 199}, "dead letters: 199, not 200"),
+        ({"scores": 19_799}, "scores: 19799, not 19800"),
         ({"exit_code": -9}, "exit code: -9, not 0"),
         ({"stop_s": 10.5}, "SIGTERM to the end took 10.5 s, more than 10"),
         ({"samples": STEADY[:-1]}, "lag at the end: 7, not 0"),

@@ -21,6 +21,7 @@ def main(arguments: Sequence[str]) -> int:
     """Exit code 1 where something is not as it should be."""
     parser = argparse.ArgumentParser(prog="python -m tests.soak")
     parser.add_argument("--messages", type=int, default=20_000_000)
+    parser.add_argument("--scores", action="store_true", help="have the worker send a score of each message")
     parser.add_argument("--every", type=float, default=2.0, metavar="SECONDS", help="between two looks")
     parser.add_argument("--folder", type=Path, help="of broker and state; removed only where none is given")
     options = parser.parse_args(arguments)
@@ -29,7 +30,13 @@ def main(arguments: Sequence[str]) -> int:
         with Broker.start(folder / "broker") as broker:
             show = _Show()
             found = soak(
-                broker, "soak", folder / "worker", options.messages, every_s=options.every, seen=show
+                broker,
+                "soak",
+                folder / "worker",
+                options.messages,
+                every_s=options.every,
+                scores=options.scores,
+                seen=show,
             )
     print("\nin short")
     _show_rows(found.samples)
@@ -74,7 +81,8 @@ def _verdict(found: Outcome) -> int:
     last = found.samples[-1]
     told = (
         f"{found.learned:,} of {found.sent:,} messages learned; of {found.bad:,} bad ones {found.rejected:,} "
-        f"rejected, {found.dead_letters:,} dead letters",
+        f"rejected, {found.dead_letters:,} dead letters"
+        + ("" if found.scores is None else f"; {found.scores:,} scores"),
         f"{found.checkpoints} checkpoints, {found.refused_coordinates:,} coordinates refused; "
         f"the broker held {found.broker_bytes / 1e9:.1f} GB at most",
         f"{last.messages / last.seconds:,.0f} messages/s from the start, "

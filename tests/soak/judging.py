@@ -16,7 +16,8 @@ MOST_STOP_S = 10.0
 
 @dataclass(frozen=True)
 class Outcome:
-    """What a soak saw: `learned`, `rejected` by the worker's last document, `dead_letters` in their topic."""
+    """What a soak saw: `learned` and `rejected` by the worker's last document, `dead_letters` and `scores` in
+    their topics; no scores where none were wanted."""
 
     samples: Sequence[Sample]
     sent: int
@@ -24,6 +25,7 @@ class Outcome:
     learned: int
     rejected: int
     dead_letters: int
+    scores: int | None
     exit_code: int
     stop_s: float
     checkpoints: int
@@ -37,6 +39,7 @@ def complaints(found: Outcome) -> list[str]:
         ("messages learned", found.learned, found.sent),
         ("messages rejected", found.rejected, found.bad),
         ("dead letters", found.dead_letters, found.bad),
+        ("scores", found.scores, None if found.scores is None else found.sent - found.bad),
         ("exit code", found.exit_code, 0),
         ("lag at the end", found.samples[-1].lag, 0),
     )

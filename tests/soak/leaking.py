@@ -3,6 +3,8 @@
 import threading
 
 from stream.cli.main import run
+from stream.message import Source
+from stream.metrics import WindowRow
 from stream.runs.learning import LearningRun
 
 KEPT: list[object] = []
@@ -11,7 +13,7 @@ BYTES = 1 << 20
 step = LearningRun.step
 
 
-def leaking(self, source, limit):
+def leaking(self: LearningRun, source: Source, limit: int) -> WindowRow | bool:
     KEPT.append(b"x" * BYTES)
     if len(KEPT) % EVERY == 0:
         KEPT.append(open("/dev/null"))  # noqa: SIM115
@@ -20,5 +22,5 @@ def leaking(self, source, limit):
 
 
 if __name__ == "__main__":
-    LearningRun.step = leaking
+    LearningRun.step = leaking  # type: ignore[method-assign]
     run()

@@ -69,6 +69,7 @@ horizon = {horizon}
 [rejects]
 topic = "{topic}.bad"
 
+{scores}
 [state]
 folder = "state"
 idle_after = {idle_after}
@@ -93,17 +94,20 @@ def soak(
     *,
     every_s: float = 2.0,
     most_per_s: float = float("inf"),
+    scores: bool = False,
     worker: Sequence[str] = WORKER,
     seen: Callable[[Sample], None] = lambda sample: None,
 ) -> Outcome:
     """Sends `messages` to a new topic while a worker, its state in `folder`, learns them; then stops it.
 
-    What is behind the offsets that the worker committed is deleted on the way. `worker`: the command; `seen`
-    is given each sample, taken every `every_s`.
+    What is behind the offsets that the worker committed is deleted on the way. `scores`: whether it sends
+    them to a topic; `worker`: the command; `seen` is given each sample, taken every `every_s`.
     """
-    broker.make_topic(topic, PARTITIONS, {"segment.bytes": str(32 << 20), "file.delete.delay.ms": "1000"})
+    small = {"segment.bytes": str(32 << 20), "file.delete.delay.ms": "1000"}
+    broker.make_topic(topic, PARTITIONS, small)
     broker.make_topic(f"{topic}.bad", 1)
-    port = _write_settings(broker, topic, folder, messages)
+    broker.make_topic(f"{topic}.scores", 1, {**small, "retention.bytes": str(256 << 20)})
+    port = _write_settings(broker, topic, folder, messages, scores)
     with ExitStack() as parts:
         shared = parts.enter_context(_sender(broker, topic, messages, most_per_s))
         process = parts.enter_context(_worker([*worker, "--json"], folder))
@@ -126,6 +130,7 @@ def soak(
         learned=document.get("messages", 0),
         rejected=document.get("rejected", 0),
         dead_letters=_records(broker, f"{topic}.bad"),
+        scores=_records(broker, f"{topic}.scores") if scores else None,
         exit_code=exit_code,
         stop_s=stop_s,
         checkpoints=document.get("checkpoints", 0),
@@ -181,7 +186,7 @@ class _Watch:
             self._broker.delete_records(self._topic, behind)
 
 
-def _write_settings(broker: Broker, topic: str, folder: Path, messages: int) -> int:
+def _write_settings(broker: Broker, topic: str, folder: Path, messages: int, scores: bool) -> int:
     """Bounds of memory that are reached long before the end. Returns the port of the metrics."""
     with socket.socket() as trial:
         trial.bind(("127.0.0.1", 0))
@@ -189,6 +194,7 @@ def _write_settings(broker: Broker, topic: str, folder: Path, messages: int) -> 
     text = SETTINGS.format(
         servers=json.dumps(broker.servers),
         topic=topic,
+        scores=f'[scores]\ntopic = "{topic}.scores"\n' if scores else "",
         horizon=max(1_000, messages // 4),
         idle_after=max(1_000, messages // 20),
         max_live=min(max(messages // 40, 2_000), 150_000),
