@@ -194,7 +194,8 @@ class Worker:
 
 
 def is_object(line):
-    return line.startswith("{")
+    """Whether it is a line of the log, which a full disk may have cut."""
+    return line.startswith("{") and line.endswith("}")
 
 
 def free_port():

@@ -53,9 +53,9 @@ class Figures:
 
     `messages` and `rejects` (by reason) are those of this process, so that they only rise; `learned` is what
     the state holds. `log_loss`, `calibration_ratio` and `nonzeros` are those of the last window that was
-    closed. `waiting`: learning waits for brokers to take what is sent out. `to_compile`: kernels were not
-    compiled before; they are by the time of the first checkpoint. Times (`_s`) are of the monotonic clock,
-    None before the first.
+    closed. `waiting`: learning waits for brokers to take what is sent out; `untaken`: why they do not.
+    `to_compile`: kernels were not compiled before; they are by the time of the first checkpoint. Times (`_s`)
+    are of the monotonic clock, None before the first.
     """
 
     phase: Literal["starting", "opening", "replaying", "live", "ending"] = "starting"
@@ -72,6 +72,7 @@ class Figures:
     message_s: float | None = None
     turned_s: float | None = None
     waiting: bool = False
+    untaken: str | None = None
     to_compile: bool = False
 
 
@@ -92,6 +93,8 @@ def not_ready(
         return "compiling, which the first start of a release does (about a minute)"
     if figures.phase == "replaying":
         return "learning again what the journal holds behind the newest checkpoint"
+    if figures.untaken is not None:
+        return f"dead letters or scores are not taken, and no checkpoint is made: {figures.untaken}"
     if figures.waiting:
         return "learning waits until the brokers take dead letters and scores"
     still_s = _still_s(figures, now_s)

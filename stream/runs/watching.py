@@ -129,6 +129,12 @@ class Watch:
             self.figures.waiting = False
             self.figures.turned_s = time.monotonic()
 
+    def sending(self, trouble: str | None) -> None:
+        """Why brokers do not take what is sent out; None where they do."""
+        if trouble is not None and self.figures.untaken is None:
+            self.warn(f"dead letters or scores are not taken: {trouble}")
+        self.figures.untaken = trouble
+
     def ending(self) -> None:
         """Nothing more is learned; the last checkpoint is to be written."""
         self.figures.phase = "ending"
