@@ -8,7 +8,7 @@ import random
 import pytest
 
 from tests.chaos.places import PLACES
-from tests.chaos.series import ANY_TIME
+from tests.chaos.series import ANY_TIME, TOGETHER
 from tests.chaos.trial import killed_again_and_again
 from tests.chaos.worker import DoomedWorkers
 
@@ -33,11 +33,11 @@ def kills_at(outward, places, seed):
 
 
 @pytest.mark.slow
-def test_killed_at_every_step_it_takes_a_worker_loses_and_doubles_nothing(broker, workers, tmp_path):
+def test_killed_at_every_step_it_takes_a_worker_loses_and_doubles_nothing(own_broker, workers, tmp_path):
     places = [place for place in PLACES["topics"] if place != AGAIN]
-    kills = kills_at("topics", places, seed=1)
-    found = killed_again_and_again(broker, workers, tmp_path / "trial", "topics", kills)
-    assert found.kills == {**dict.fromkeys(PLACES["topics"], 1), ANY_TIME: 3}
+    kills = [*kills_at("topics", places, seed=1), (TOGETHER, 1.0)]
+    found = killed_again_and_again(own_broker, workers, tmp_path / "trial", "topics", kills)
+    assert found.kills == {**dict.fromkeys([*PLACES["topics"], TOGETHER], 1), ANY_TIME: 3}
     assert found.again > 0
     assert found.scores_repeated > 0
 

@@ -8,7 +8,7 @@ from pathlib import Path
 
 from tests.broker import Broker
 from tests.chaos.places import PLACES
-from tests.chaos.series import drawn_kills
+from tests.chaos.series import ANY_TIME, TOGETHER, drawn_kills
 from tests.chaos.trial import killed_again_and_again
 from tests.chaos.worker import DoomedWorkers
 
@@ -18,9 +18,9 @@ TITLES = {"topics": "dead letters and scores to topics", "files": "rejects to fi
 def show(outward, found):
     kills = sum(found.kills.values())
     print(f"\n{TITLES[outward]}: {kills} kills, {kills + 1} lives")
-    for place in ("any time", *PLACES[outward]):
+    for place in (ANY_TIME, TOGETHER, *PLACES[outward]):
         missed = f"  ({found.missed[place]} more not reached in time)" if found.missed[place] else ""
-        print(f"  {place:34}{found.kills[place]:>8,}{missed}")
+        print(f"  {place:42}{found.kills[place]:>8,}{missed}")
     for what, figure in (
         ("lives that left a newer checkpoint", found.advances),
         ("messages", found.messages),
@@ -30,7 +30,7 @@ def show(outward, found):
         ("scores sent once more", found.scores_repeated),
         ("seconds", round(found.seconds)),
     ):
-        print(f"  {what:34}{figure:>8,}")
+        print(f"  {what:42}{figure:>8,}")
 
 
 def main(arguments):

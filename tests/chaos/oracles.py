@@ -31,6 +31,7 @@ __all__ = [
     "same_as_learned_from_a_log",
     "same_as_uninterrupted",
     "scores_are_complete",
+    "topic_holds_what_was_sent",
 ]
 
 HEADER_BYTES, RECORD = 32, struct.Struct("<B3xIqqII")
@@ -67,6 +68,12 @@ def nothing_left_over(folder):
     """No file or folder under a temporary name."""
     assert list(folder.rglob(".*")) == []
     assert not (folder / "checkpoints" / "broken").exists()
+
+
+def topic_holds_what_was_sent(servers, feed):
+    """The truth itself: the producer may not have sent a record twice, or the broker have lost one."""
+    found = {(r.partition, r.offset): (r.key, r.value) for r in everything(servers, feed.topic)}
+    assert found == {place: (record.key, record.value) for place, record in feed.sent.items()}
 
 
 def same_as_uninterrupted(settings, folder, again):

@@ -67,6 +67,7 @@ def killed_again_and_again(broker, workers, folder, outward, kills, seed=7):
 def check(broker, feed, settings, folder, outward):
     """All oracles; returns repeats of dead letters and of scores."""
     state = folder / "state"
+    oracles.topic_holds_what_was_sent(broker.servers, feed)
     oracles.nothing_broken(state)
     oracles.nothing_left_over(state)
     order = oracles.journal_reads_each_offset_once(state, feed.sent)
