@@ -145,6 +145,10 @@ class Worker:
         """Waits until the state holds so many."""
         self.until(lambda: self.figure("bedload_learned_messages") == messages, f"{messages} learned")
 
+    def past(self, name, least):
+        """Waits until a figure of its metrics is larger."""
+        self.until(lambda: (self.figure(name) or 0) > least, f"{name} past {least}")
+
     def ready(self):
         """Waits until it says so."""
         self.until(lambda: self.ask("/readyz")[0] == 200, "it is ready")
