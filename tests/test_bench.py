@@ -18,6 +18,7 @@ TINY = {
     "memory": {"live": 200_000},
     "checkpoint": {"live": 100_000, "rounds": 1},
     "worker": {"messages": 300, "rounds": 1, "distinct": 200},
+    "sizing": {"live": 5_000},
     "start": {"rounds": 1},
     "entry": {"learned_before": 50_000, "tokens": 2, "block": 20_011},
     "years": {"examples": 60_000, "block": 20_011},
