@@ -35,7 +35,7 @@ def kills_at(outward, places, seed):
 @pytest.mark.slow
 def test_killed_at_every_step_it_takes_a_worker_loses_and_doubles_nothing(own_broker, workers, tmp_path):
     places = [place for place in PLACES["topics"] if place != AGAIN]
-    kills = [*kills_at("topics", places, seed=1), (TOGETHER, 1.0)]
+    kills = [*kills_at("topics", places, seed=1), (TOGETHER, 0.5)]
     found = killed_again_and_again(own_broker, workers, tmp_path / "trial", "topics", kills)
     assert found.kills == {**dict.fromkeys([*PLACES["topics"], TOGETHER], 1), ANY_TIME: 3}
     assert found.again > 0
