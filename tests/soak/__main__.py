@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from tests.broker.running import Broker
-from tests.soak.judging import Outcome, complaints, growth_bytes
+from tests.soak.judging import Outcome, complaints, growth_bytes, most_bytes
 from tests.soak.running import soak
 from tests.soak.sampling import Sample
 
@@ -78,7 +78,8 @@ def _row(s: Sample) -> str:
 
 
 def _verdict(found: Outcome) -> int:
-    last = found.samples[-1]
+    last, growth = found.samples[-1], growth_bytes(found.samples)
+    before, after = (most_bytes(found.samples, *quarters) / 1e6 for quarters in ((2, 2), (3, 4)))
     told = (
         f"{found.learned:,} of {found.sent:,} messages learned; of {found.bad:,} bad ones {found.rejected:,} "
         f"rejected, {found.dead_letters:,} dead letters"
@@ -87,7 +88,8 @@ def _verdict(found: Outcome) -> int:
         f"the broker held {found.broker_bytes / 1e9:.1f} GB at most",
         f"{last.messages / last.seconds:,.0f} messages/s from the start, "
         f"{last.cpu_s:,.0f} s of processor time",
-        f"memory after warm-up: {growth_bytes(found.samples):+.2f} MB a million messages",
+        f"memory at most {before:,.0f} MB in the second quarter of the messages, {after:,.0f} MB later",
+        f"a straight line through all but the first quarter: {growth:+.2f} MB a million messages",
         f"SIGTERM to the end {found.stop_s:.1f} s, exit code {found.exit_code}",
     )
     print("", *told, sep="\n")

@@ -8,7 +8,7 @@ import numpy as np
 
 from tests.soak.sampling import Sample
 
-__all__ = ["Outcome", "complaints", "growth_bytes"]
+__all__ = ["Outcome", "complaints", "growth_bytes", "most_bytes"]
 
 MOST_GROWTH = 1.05
 MOST_STOP_S = 10.0
@@ -56,25 +56,32 @@ def unsteady(samples: Sequence[Sample]) -> list[str]:
     the median of the last quarter is at most that of the second. They come and go with checkpoints, lost
     connections and those who ask for metrics, but what leaks stays, and lifts the median.
     """
-    end = samples[-1].messages
-    second = [s for s in samples if end / 4 <= s.messages < end / 2]
-    last_half = [s for s in samples if s.messages >= end / 2]
-    last_quarter = [s for s in samples if s.messages >= 3 * end / 4]
-    if min(map(len, (second, last_half, last_quarter))) < 3:
+    if min(len(part(samples, quarter, quarter)) for quarter in (2, 3, 4)) < 3:
         return ["too few samples to say whether anything grew"]
     wrong = []
-    before, after = (max(s.resident_bytes for s in some) for some in (second, last_half))
+    before, after = most_bytes(samples, 2, 2), most_bytes(samples, 3, 4)
     if after > MOST_GROWTH * before:
         wrong.append(f"memory grew from {before / 1e6:,.0f} to {after / 1e6:,.0f} MB")
     for what in ("open_files", "threads"):
-        few, many = (median_low(getattr(s, what) for s in some) for some in (second, last_quarter))
+        few, many = (median_low(getattr(s, what) for s in part(samples, q, q)) for q in (2, 4))
         if many > few:
             wrong.append(f"{what.replace('_', ' ')} went from {few} to {many}")
     return wrong
 
 
+def part(samples: Sequence[Sample], first: int, last: int) -> list[Sample]:
+    """Those of quarters `first` to `last` of the messages: 1 to 4."""
+    end = samples[-1].messages
+    return [s for s in samples if first <= min(1 + 4 * s.messages // end, 4) <= last]
+
+
+def most_bytes(samples: Sequence[Sample], first: int, last: int) -> int:
+    """The most memory in those quarters."""
+    return max((s.resident_bytes for s in part(samples, first, last)), default=0)
+
+
 def growth_bytes(samples: Sequence[Sample]) -> float:
     """Bytes of memory that a message added after warm-up, by a straight line through the samples."""
-    warm = [s for s in samples if s.messages >= samples[-1].messages / 4]
+    warm = part(samples, 2, 4)
     slope, _ = np.polyfit([s.messages for s in warm], [s.resident_bytes for s in warm], 1)
     return float(slope)
