@@ -6,8 +6,11 @@ PYTHON ?= python3
 BIN := .venv/bin
 READY := .venv/.ready
 WORKERS ?= 2
+MESSAGES ?= 20000000
+KILLS ?= 200
+SEED ?= 7
 
-.PHONY: demo test lint bench clean
+.PHONY: demo test lint bench soak chaos clean
 
 demo: $(READY)
 	$(BIN)/bedload demo
@@ -22,6 +25,12 @@ lint: $(READY)
 
 bench: $(READY)
 	$(BIN)/python -m tests.bench
+
+soak: $(READY)
+	$(BIN)/python -m tests.soak --messages $(MESSAGES)
+
+chaos: $(READY)
+	$(BIN)/python -m tests.chaos --kills $(KILLS) --seed $(SEED)
 
 clean:
 	rm -rf .venv .mypy_cache .ruff_cache .pytest_cache .hypothesis build dist

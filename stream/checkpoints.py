@@ -103,7 +103,7 @@ class Checkpoints:
             found = "; ".join(moved) or f"all are in {broken}"
             raise BadData(
                 f"{self.folder}: no whole checkpoint is left, and learning does not start from nothing "
-                f"unasked ({found}). Put back a copy, or start again with --fresh"
+                f"unasked ({found}). Put back a copy, or begin again in another state.folder"
             )
         return None
 
@@ -163,5 +163,5 @@ def _check_format(path: Path, manifest: Mapping[str, Any]) -> None:
     if manifest["format_version"] != FORMAT_VERSION:
         raise BadSettings(
             f"{path}: expected format_version {FORMAT_VERSION}, found {manifest['format_version']}: "
-            "go on with the program version that wrote it, or start again with --fresh"
+            "go on with the program version that wrote it, or begin again in another state.folder"
         )

@@ -210,7 +210,9 @@ def about_of(folder):
 def test_where_nothing_new_came_only_the_settings_changed(feed, tmp_path, name):
     old, new = settings_of_run(tmp_path, name), settings_of_run(tmp_path, name, **CHANGES[name])
     before = read_snapshot(feed(HALF, old).snapshot).weights
-    with pytest.raises(BadSettings, match="take them with --accept-settings"):
+    with pytest.raises(
+        BadSettings, match=r"take them with --accept-settings, or begin again in another state\.folder"
+    ):
         feed(HALF, new, resume=True)
     result = feed(HALF, new, resume=True, accept_settings=True)
     after = read_snapshot(result.snapshot).weights

@@ -2,11 +2,12 @@
 
 import json
 import math
+from contextlib import nullcontext
 
 import pytest
 
 from tests.bench import __main__ as command
-from tests.bench import benches
+from tests.bench import benches, worker
 from tests.bench.figures import Figure, Seconds, alternating, best
 
 TINY = {
@@ -16,6 +17,8 @@ TINY = {
     "score": {"messages": 300, "rounds": 1, "distinct": 200},
     "memory": {"live": 200_000},
     "checkpoint": {"live": 100_000, "rounds": 1},
+    "worker": {"messages": 300, "rounds": 1, "distinct": 200},
+    "sizing": {"live": 5_000},
     "start": {"rounds": 1},
     "entry": {"learned_before": 50_000, "tokens": 2, "block": 20_011},
     "years": {"examples": 60_000, "block": 20_011},
@@ -33,7 +36,10 @@ def tiny(monkeypatch):
 
 
 @pytest.mark.parametrize("name", TINY)
-def test_every_bench_gives_figures_that_can_be_read(name, tiny):
+def test_every_bench_gives_figures_that_can_be_read(name, tiny, request, monkeypatch):
+    if name == "worker":
+        broker = request.getfixturevalue("broker")
+        monkeypatch.setattr(worker, "running_broker", lambda: nullcontext(broker))
     figures = tiny[name](quick=True)
     assert figures
     for figure in figures:

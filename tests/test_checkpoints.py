@@ -144,7 +144,7 @@ def test_with_only_broken_checkpoints_it_refuses_now_and_later(tmp_path: Path) -
     for number in (10, 20):
         damage(tmp_path / f"{number:015d}" / ARRAYS)
     for _ in range(2):
-        with pytest.raises(BadData, match=r"does not start from nothing.*broken.*--fresh"):
+        with pytest.raises(BadData, match=r"does not start from nothing.*broken.*another state\.folder"):
             checkpoints.newest()
 
 

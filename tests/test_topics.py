@@ -16,6 +16,7 @@ from stream.errors import BadSettings, FileTrouble, InputMissing, NoPermission, 
 from stream.settings import Settings
 from stream.topics import Publisher, Secrets, TopicSource, client, reading
 from tests.broker import start_or_skip
+from tests.broker.filling import Filler
 
 PATIENCE_S = 40
 
@@ -284,6 +285,33 @@ def test_what_is_read_ahead_is_bounded(broker, topic, opened, monkeypatch):
     time.sleep(1)
     assert source._reader.lanes[0].held_bytes < 8 * reading.LEAST_AHEAD_BYTES, "of 30 MB"
     assert [m.value for m in messages(source, 300)] == sent
+
+
+def test_a_partition_that_was_paused_amid_what_was_fetched_of_it_goes_on(broker, topic):
+    broker.make_topic(topic, 2)
+    with Filler(broker.servers[0], topic) as filler:
+        for number in range(3 * client.BATCHES_IN_POLL):
+            filler.send({partition: [b"%d-%d" % (partition, number)] for partition in range(2)})
+    reader = client.Client(feed_of(broker.servers, topic).feed, {"security_protocol": "PLAINTEXT"})
+    try:
+        reader.assign({0: 0, 1: 0})
+        first = polled(reader).partition
+        reader.pause([first], [1 - first])
+        while reader.offset(1 - first) < 3 * client.BATCHES_IN_POLL:
+            polled(reader)
+        reader.pause([], [0, 1])
+        assert polled(reader).partition == first
+    finally:
+        reader.close()
+
+
+def polled(reader):
+    """The first that comes."""
+    deadline = time.monotonic() + PATIENCE_S
+    while time.monotonic() < deadline:
+        for found in reader.poll(0.2):
+            return found
+    raise AssertionError("nothing comes any more")
 
 
 def test_partitions_added_later_are_read_from_their_beginning(broker, topic, opened, monkeypatch):

@@ -15,6 +15,8 @@ from stream.checkpoints import Checkpoints
 from stream.errors import BadData, BadSettings, CannotCreate, TryLater, Unavailable
 from stream.journal import FILE_NAME, Kind, Mark, spans_after
 from stream.manifest import MANIFEST
+from stream.runs.learning import LearningRun
+from stream.runs.pacing import LivePacer
 from stream.runs.replay import replay
 from stream.runs.retracing import retrace
 from stream.runs.work import work
@@ -137,6 +139,24 @@ def test_learning_and_checkpoints_do_not_wait_for_a_snapshot_that_hangs(topic_fi
     work(settings, tmp_path / "state", source=topic_from(topic_file, 1), until_end=True)
     assert written[-1] == last and len(written) >= 2 and written[0] < last
     assert every < last
+
+
+def test_before_the_first_message_there_is_no_snapshot(tmp_path):
+    settings, now = quick(), [0.0]
+    run = LearningRun(settings, tmp_path / "rejects")
+    parts = Checkpoints(tmp_path / "checkpoints", 2), Snapshots(tmp_path / "snapshots", 2)
+    pacer = LivePacer(run, settings, *parts, lambda: True, lambda position: None, lambda: now[0])
+    for _ in range(3):
+        now[0] += 10_000
+        pacer.keep_up()
+    pacer.close()
+    assert not (tmp_path / "snapshots").exists() and not (tmp_path / "checkpoints").exists()
+    topic = MemoryTopic([[UNLABELLED]])
+    topic.start()
+    run.step(topic, 10)
+    pacer.keep_up()
+    pacer.checkpoint()
+    assert [entry.messages for entry in parts[1].list()] == [1]
 
 
 def test_a_flipped_bit_in_what_was_read_shows_in_retracing(topic_file, tmp_path):

@@ -7,6 +7,7 @@ import os
 import sys
 import traceback
 from collections.abc import Callable
+from typing import TextIO
 
 import typer
 
@@ -48,9 +49,12 @@ def exit_code_of(call: Callable[[], None]) -> int:
 
 
 def _say(text: str, code: int) -> int:
-    _show_traceback()
-    for line in text.splitlines():
-        print(f"bedload: {visible(line)}", file=sys.stderr)
+    try:
+        _show_traceback()
+        for line in text.splitlines():
+            print(f"bedload: {visible(line)}", file=sys.stderr)
+    except OSError:  # the log may be on the very disk that is full; the code still says what was wrong
+        _discard(sys.stderr)
     return code
 
 
@@ -68,11 +72,15 @@ def _usage(error: typer.TyperException) -> str:
 
 def _system(error: OSError) -> int:
     if error.errno == errno.EPIPE:
-        # What is left in the buffer has no reader; closing would raise once more at exit.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _discard(sys.stdout)
         return BROKEN_PIPE
     place = f"{error.filename}: " if error.filename else ""
     return _say(f"{place}{error.strerror or error}", _system_code(error))
+
+
+def _discard(stream: TextIO) -> None:
+    """What is left in the buffer goes nowhere; closing would raise once more at exit."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), stream.fileno())
 
 
 def _system_code(error: OSError) -> int:

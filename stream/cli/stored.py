@@ -249,7 +249,7 @@ def restore(name: OneName, config: Config = None, state: StateFolder = None, as_
             }
         )
         return
-    print(f"{done.checkpoint.name} is the newest checkpoint now; `bedload replay --resume` goes on from it")
+    print(f"{done.checkpoint.name} is the newest checkpoint now; `work` and `replay --resume` go on from it")
     for path in done.moved:
         print(f"  set aside: {path}")
     for old, new in done.renamed:

@@ -10,6 +10,8 @@ __all__ = ["FeedHealth", "Figures", "HasHealth", "not_ready", "stuck"]
 
 STUCK_S = 300.0
 """Longer than any block, sweep or wait for a slow disk should take."""
+COMPILING_S = 5.0
+"""Longer than a block takes, and much shorter than kernels take to compile."""
 
 
 class FeedHealth(Protocol):
@@ -51,8 +53,9 @@ class Figures:
 
     `messages` and `rejects` (by reason) are those of this process, so that they only rise; `learned` is what
     the state holds. `log_loss`, `calibration_ratio` and `nonzeros` are those of the last window that was
-    closed. `waiting`: learning waits for brokers to take what is sent out. Times (`_s`) are of the
-    monotonic clock, None before the first.
+    closed. `waiting`: learning waits for brokers to take what is sent out; `untaken`: why they do not.
+    `to_compile`: kernels were not compiled before; they are by the time of the first checkpoint. Times (`_s`)
+    are of the monotonic clock, None before the first.
     """
 
     phase: Literal["starting", "opening", "replaying", "live", "ending"] = "starting"
@@ -69,6 +72,8 @@ class Figures:
     message_s: float | None = None
     turned_s: float | None = None
     waiting: bool = False
+    untaken: str | None = None
+    to_compile: bool = False
 
 
 def not_ready(
@@ -84,8 +89,12 @@ def not_ready(
         return f"waiting for the feed to answer{': ' + trouble if trouble else ''}"
     if trouble is not None:
         return trouble
+    if _compiling(figures, now_s):
+        return "compiling, which the first start of a release does (about a minute)"
     if figures.phase == "replaying":
         return "learning again what the journal holds behind the newest checkpoint"
+    if figures.untaken is not None:
+        return f"dead letters or scores are not taken, and no checkpoint is made: {figures.untaken}"
     if figures.waiting:
         return "learning waits until the brokers take dead letters and scores"
     still_s = _still_s(figures, now_s)
@@ -98,7 +107,7 @@ def not_ready(
 
 def stuck(figures: Figures, feed: FeedHealth | None, now_s: float, stale_after_s: float) -> str | None:
     """What a new start would cure: a loop that stands still while it waits for nobody. None: nothing."""
-    if figures.phase not in ("replaying", "live") or figures.waiting:
+    if figures.phase not in ("replaying", "live") or figures.waiting or _compiling(figures, now_s):
         return None
     still_s = _still_s(figures, now_s)
     if still_s <= STUCK_S or _feed_trouble(feed, stale_after_s) is not None:
@@ -108,6 +117,10 @@ def stuck(figures: Figures, feed: FeedHealth | None, now_s: float, stale_after_s
 
 def _still_s(figures: Figures, now_s: float) -> float:
     return 0.0 if figures.turned_s is None else now_s - figures.turned_s
+
+
+def _compiling(figures: Figures, now_s: float) -> bool:
+    return figures.to_compile and not figures.checkpoints and _still_s(figures, now_s) > COMPILING_S
 
 
 def _feed_trouble(feed: FeedHealth | None, stale_after_s: float) -> str | None:

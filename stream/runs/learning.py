@@ -116,7 +116,8 @@ def _check_pinned(settings: Settings, saved: Mapping[str, Any]) -> None:
         raise BadSettings(
             "the checkpoint was made with other settings (here: now; there: in the checkpoint):\n  "
             + "\n  ".join(lines)
-            + "\nset them back to go on, take them with --accept-settings, or start again with --fresh"
+            + "\nset them back to go on, take them with --accept-settings, or begin again in another "
+            "state.folder"
         )
 
 

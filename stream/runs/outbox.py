@@ -61,8 +61,8 @@ class Outbox:
     so that no reader sees a score that a resumed run would not give again. `snapshot` names the newest one.
 
     While the brokers are away records wait: `full` then says that no more may be added. After
-    `unavailable_after_s` of that Unavailable is raised, without it never but by `sync`. Raises what the
-    publisher raises.
+    `unavailable_after_s` of that Unavailable is raised, without it never but by `sync`. `trouble`: why they
+    take no records, while they take none. Raises what the publisher raises.
     """
 
     def __init__(
@@ -82,6 +82,7 @@ class Outbox:
         self._waiting: deque[tuple[str, bytes | None, bytes, Mapping[str, bytes]]] = deque()
         self._send_at = clock() + WAITING_S
         self._away_since: float | None = None
+        self.trouble: str | None = None
         self._encoder = msgspec.json.Encoder()
         only_id = settings.model_copy(update={"fields": (), "crosses": ()})
         self._ids = Decoder(only_id, ids=True, labels=False) if settings.message.id else None
@@ -142,13 +143,14 @@ class Outbox:
     def _attempt(self, call: Callable[[], None]) -> bool:
         try:
             call()
-        except Unavailable:
+        except Unavailable as away:
+            self.trouble = str(away)
             now = self._clock()
             self._away_since = now if self._away_since is None else self._away_since
             if self._give_up_after_s is not None and now - self._away_since >= self._give_up_after_s:
                 raise
             return False
-        self._away_since = None
+        self._away_since = self.trouble = None
         return True
 
     def _send(self) -> None:

@@ -99,7 +99,7 @@ class LivePacer(Pacer):
         self._note_snapshot(self._publishing.done())
         now = self._clock()
         new = self._run.messages != self._saved_at
-        snapshot = now >= self._snapshot_at and not self._publishing.busy
+        snapshot = self._run.messages > 0 and now >= self._snapshot_at and not self._publishing.busy
         if new and self._run.messages % self._every == 0:
             self._note(self._background.wait())
             self._begin(snapshot)

@@ -32,7 +32,7 @@ def held(folder: Path) -> StateFolder:
 def restore(folder: Path, name: str) -> Rollback:
     """Makes checkpoint `name` the newest; what came after it is set aside under other names, not removed.
 
-    `bedload replay --resume` then goes on from there. Raises InputMissing, BadData for a broken one,
+    `bedload work` and `replay --resume` then go on from there. Raises InputMissing, BadData for a broken one,
     TryLater while the folder is in use.
     """
     with held(folder) as state:

@@ -12,6 +12,7 @@ from types import TracebackType
 from typing import Any
 
 from stream.errors import BedloadError
+from stream.kernel import compiled_before
 from stream.metrics import WindowRow
 from stream.operating import (
     Exposition,
@@ -44,7 +45,7 @@ class Watch:
     """
 
     def __init__(self, settings: Settings, stopping: list[int]) -> None:
-        self.figures = Figures()
+        self.figures = Figures(to_compile=not compiled_before(settings.learner.method))
         self._worker = settings.worker
         self._stopping = stopping
         self._source: HasHealth | None = None
@@ -127,6 +128,12 @@ class Watch:
         finally:
             self.figures.waiting = False
             self.figures.turned_s = time.monotonic()
+
+    def sending(self, trouble: str | None) -> None:
+        """Why brokers do not take what is sent out; None where they do."""
+        if trouble is not None and self.figures.untaken is None:
+            self.warn(f"dead letters or scores are not taken: {trouble}")
+        self.figures.untaken = trouble
 
     def ending(self) -> None:
         """Nothing more is learned; the last checkpoint is to be written."""

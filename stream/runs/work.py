@@ -207,12 +207,14 @@ class _Worker:
         if self._outbox is None:
             return
         self._outbox.keep_up()
+        self._watch.sending(self._outbox.trouble)
         if not self._outbox.full:
             return
         with self._watch.waiting():
             while self._outbox.full and not self._stopping:
                 time.sleep(IDLE_S)
                 self._outbox.keep_up()
+                self._watch.sending(self._outbox.trouble)
 
     def _ready(self) -> bool:
         """Makes durable what a checkpoint relies on: order, rejects, scores. False: perhaps later."""

@@ -6,6 +6,8 @@ Checked against kafka-python 3.0.12, whose ways the rest of the house need not k
 - A client that fails to start leaves its thread and sockets behind: kept at hand and closed.
 - Parsing records one by one in Python costs more than everything else together: whole batches are taken and
   unpacked by a kernel (`_WholeBatch`); CRC, transactions and offsets stay the library's business.
+- What is left of a fetch when its partition is paused comes again, once that is resumed, only while nothing
+  else was taken up: where the others go on, the partition stands still for ever. `poll` sees to it.
 - Its debugging lines show requests and configuration, with passwords and records: they are off.
 - A refusal of user or password mostly looks like a lost connection: see `translated`.
 """
@@ -214,6 +216,9 @@ class Client:
 
     def poll(self, wait_s: float) -> list[Fetched]:
         """What came, of each partition at most once; waits up to `wait_s` for it. Raises OutOfRange too."""
+        fetcher = self._consumer._fetcher
+        if not fetcher._next_partition_records:  # used up: it makes way for what was left of a paused one
+            fetcher._next_partition_records = None
         with translated(self._feed):
             found = self._consumer.poll(timeout_ms=int(wait_s * 1000), max_records=BATCHES_IN_POLL)
             return [

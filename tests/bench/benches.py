@@ -39,6 +39,8 @@ BENCHES = {
     "tune": Bench("tune", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
     "memory": Bench("memory", {"live": 20_000_000}, {"live": 20_000_000}),
     "checkpoint": Bench("checkpoint", {"live": 10_000_000, "rounds": 4}, {"live": 2_000_000, "rounds": 2}),
+    "worker": Bench("worker", {"messages": 1_000_000, "rounds": 3}, {"messages": 100_000, "rounds": 2}),
+    "sizing": Bench("sizing", {"live": 10_000_000}, {"live": 1_000_000}),
     "start": Bench("start", {"rounds": 11}, {"rounds": 3}),
     "entry": Bench("entry", {"learned_before": 10**8, "tokens": 15}, {"learned_before": 10**7, "tokens": 3}),
     "years": Bench("years", {"examples": 10**9}, {"examples": 10**8}),
