@@ -1,8 +1,8 @@
 """Memory that grows where it is: a reserved range of addresses in, an array over its first part out.
 
 Pages are taken when they are first touched, so a reservation costs nothing and growing copies nothing. Huge
-pages are asked for where rows are long and given out one after the other; elsewhere, with memory in fragments,
-waiting for them cost more than they saved (measured).
+pages are asked for where rows are long and given out one after the other; elsewhere, with memory in
+fragments, waiting for them cost more than they saved (measured).
 """
 
 from __future__ import annotations

@@ -25,7 +25,7 @@ PEERS = 2
 
 
 def tune(messages: int, rounds: int, distinct: int = 1_000_000) -> list[Figure]:
-    """Seconds of `tune`, document included, over those of `replay`; the peer's 32 runs over those of `tune`."""
+    """Seconds of `tune` with its document over those of `replay`; the peer's 32 runs over those of `tune`."""
     with log_of(messages, distinct) as folder:
         settings = learning_settings(folder)
         for grid in (Grid(GIVEN), Grid(STRENGTHS)):  # kernels compiled, file in the page cache
