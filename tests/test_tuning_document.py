@@ -341,6 +341,13 @@ def test_a_log_without_times_slices_truth_or_search_is_told_as_such(tuned):
     assert found["grid"]["strongest"] is None and not found["grid"]["searched"]
 
 
+def test_messages_without_an_outcome_do_not_lower_the_share_of_a_token(tuned, found):
+    totals = tuned.trial.block_totals.copy()
+    totals[:, 0] += 10.0
+    other = document(replace(tuned, trial=replace(tuned.trial, block_totals=totals)))
+    assert other["strongest"] == found["strongest"]
+
+
 def test_bounds_that_remove_coordinates_and_refused_updates_are_warned_of(tuned, found):
     assert not any("refused" in line or "remove" in line for line in found["warnings"])
     state = tuned.settings.state.model_copy(update={"max_live": 10_000})
@@ -450,7 +457,7 @@ def test_reliability_bins_hold_everything_once_and_predict_within_their_limits(d
 
 def test_a_rare_outcome_is_spread_over_the_reliability_bins():
     rng = np.random.default_rng(5)
-    margins = rng.normal(-7, 0.7, 20_000)
+    margins = np.append(rng.normal(-7, 0.7, 19_980), [3.0] * 20)  # a few far out
     labels = (rng.random(20_000) < 1 / (1 + np.exp(-margins))).astype(np.int8)
     assert len(histograms.reliability(bins_of(margins, labels, np.ones(20_000)))) >= 15
 
@@ -528,18 +535,13 @@ def named_weights(values, messages, names=None, learned=100.0):
 
 def test_paths_put_what_tells_most_down_to_the_choice_before_the_noise_of_weaker_penalties():
     named = named_weights(
-        [[0, 0.1, 0.2, 0.2], [0, 0, 0, 9.0], [0, 0.3, 0.0, 0.0], [0, 0, 0, 0], [0, 0, 1.0, 1.0]],
+        [[0, 0.1, 0.2, 0.2], [0, 0, 0, 9.0], [0, 0.5, 0.0, 0.0], [0, 0, 0, 0], [0, 0, 1.0, 1.0]],
         [100, 100, 25, 100, 1],
     )
     found = named.paths([0, 1, 2, 3], 2, 40)
-    assert [path["token"] for path in found] == ["t0", "t2", "t4", "t1"], "0.2, 0.15, 0.1; then only later"
-    assert found[1] == {
-        "field": "note",
-        "token": "t2",
-        "share": 0.25,
-        "weights": pytest.approx([0, 0.3, 0, 0]),
-    }
-    assert [path["token"] for path in named.paths([0, 1, 2, 3], 2, 2)] == ["t0", "t2"]
+    assert [path["token"] for path in found] == ["t2", "t0", "t4", "t1"], "0.25, 0.2, 0.1; then only later"
+    assert found[0] == {"field": "note", "token": "t2", "share": 0.25, "weights": [0, 0.5, 0, 0]}
+    assert [path["token"] for path in named.paths([0, 1, 2, 3], 2, 2)] == ["t2", "t0"]
     assert [path["token"] for path in named.paths([0, 1, 2, 3], 0, 1)] == ["t1"], "a choice without weights"
 
 
