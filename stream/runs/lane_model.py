@@ -94,7 +94,10 @@ class LaneModel(TableModel):
         )
 
     def _is_zero(self, begin: int, end: int) -> npt.NDArray[np.bool_]:
-        return np.asarray(~self._lanes.any_on(self._table.cells, np.arange(begin, end)))
+        zero = np.ones(end - begin, np.bool_)
+        used = np.flatnonzero(self._table.in_use(begin, end))
+        zero[used] = ~self._lanes.weights(self._table.cells, begin + used).any(axis=1)
+        return zero
 
     def _forget(self, slots: Int64s) -> None:
         super()._forget(slots)
