@@ -50,7 +50,7 @@ def candidates(grid: Grid, learner: Learner, facts: LogFacts) -> list[Lane]:
             f"--over l1 is for ftrl; {learner.method} takes l1_per_example alone, since it draws weights "
             "towards zero at each example"
         )
-    rates = grid.rates or (learner.learning_rate,)
+    rates = dict.fromkeys(grid.rates or (learner.learning_rate,))
     strengths = _strengths(grid, facts)
     return [_lane(rate, strength, grid.over, learner) for rate in rates for strength in strengths]
 
@@ -71,9 +71,13 @@ def _strengths(grid: Grid, facts: LogFacts) -> Sequence[float]:
             "message.label and the fields, or give --strengths"
         )
     top = facts.strongest * (facts.weight if grid.over == "l1" else 1.0)
-    if grid.strengths == 1:
-        return [top]
-    return [float(s) for s in np.geomspace(top, top / grid.span, grid.strengths)]
+    spread = np.geomspace(top, top / grid.span, grid.strengths).tolist()
+    return list(dict.fromkeys([top, *map(_short, spread[1:])]))
+
+
+def _short(strength: float) -> float:
+    """To six digits, which people can read in a settings file."""
+    return float(f"{strength:.6g}")
 
 
 def blocks_of(messages: int, frozen_share: float | None = None) -> Plan:
