@@ -64,7 +64,7 @@ def test_clocks_that_jump_ahead_and_back_change_no_interval_and_lose_nothing(bro
         for number, year in ((signal.SIGUSR1, this_year + 1), (signal.SIGUSR2, this_year - 1)):
             worker.tell(number)
             more()
-            assert year_of(worker) in (year, year + 1), "the clock of the process has jumped"
+            worker.until(lambda year=year: year_of(worker) in (year, year + 1), f"a log line of {year}")
         for shift in (2 * YEAR_S, -2 * YEAR_S):
             at = time.time() + shift
             os.utime(newest(worker.state), (at, at))
