@@ -18,6 +18,7 @@ from stream.checkpoints import Checkpoints
 from stream.journal import FILE_NAME, Kind, Mark, spans_after
 from stream.runs.retracing import retrace
 from stream.snapshots import Snapshots, read_snapshot
+from tests.broker.running import dying_with_parent
 from tests.replays import config_for, settings_for
 
 ROOT = Path(__file__).parent.parent
@@ -91,7 +92,7 @@ class Worker:
         arguments = ["work", "--config", config, "--json", "--set", f"worker.metrics_port={self._port}"]
         with self._errors.open("wb") as errors:
             self._process = subprocess.Popen(
-                [sys.executable, "-c", code, *arguments, *options],
+                [*dying_with_parent(), sys.executable, "-c", code, *arguments, *options],
                 cwd=ROOT,
                 stdin=subprocess.DEVNULL,
                 stdout=subprocess.PIPE,
