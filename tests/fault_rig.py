@@ -146,6 +146,15 @@ class Worker:
         """Waits until the state holds so many."""
         self.until(lambda: self.figure("bedload_learned_messages") == messages, f"{messages} learned")
 
+    def saved(self, messages):
+        """Waits until its newest checkpoint holds so many; it may remove older ones meanwhile."""
+
+        def holds():
+            found = Checkpoints(self.state / "checkpoints", 1).newest_manifest()
+            return found is not None and found[1]["messages"] == messages
+
+        self.until(holds, f"a checkpoint of {messages}")
+
     def past(self, name, least):
         """Waits until a figure of its metrics is larger."""
         self.until(lambda: (self.figure(name) or 0) > least, f"{name} past {least}")
