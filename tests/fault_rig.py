@@ -18,6 +18,7 @@ from stream.checkpoints import Checkpoints
 from stream.journal import FILE_NAME, Kind, Mark, spans_after
 from stream.runs.retracing import retrace
 from stream.snapshots import Snapshots, read_snapshot
+from tests.broker.running import dying_with_parent
 from tests.replays import config_for, settings_for
 
 ROOT = Path(__file__).parent.parent
@@ -91,7 +92,7 @@ class Worker:
         arguments = ["work", "--config", config, "--json", "--set", f"worker.metrics_port={self._port}"]
         with self._errors.open("wb") as errors:
             self._process = subprocess.Popen(
-                [sys.executable, "-c", code, *arguments, *options],
+                [*dying_with_parent(), sys.executable, "-c", code, *arguments, *options],
                 cwd=ROOT,
                 stdin=subprocess.DEVNULL,
                 stdout=subprocess.PIPE,
@@ -144,6 +145,15 @@ class Worker:
     def learned(self, messages):
         """Waits until the state holds so many."""
         self.until(lambda: self.figure("bedload_learned_messages") == messages, f"{messages} learned")
+
+    def saved(self, messages):
+        """Waits until its newest checkpoint holds so many; it may remove older ones meanwhile."""
+
+        def holds():
+            found = Checkpoints(self.state / "checkpoints", 1).newest_manifest()
+            return found is not None and found[1]["messages"] == messages
+
+        self.until(holds, f"a checkpoint of {messages}")
 
     def past(self, name, least):
         """Waits until a figure of its metrics is larger."""

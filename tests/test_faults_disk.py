@@ -70,7 +70,7 @@ def test_a_disk_that_fills_ends_the_worker_with_73_and_space_lets_it_go_on_with_
 ):
     settings = settings_of(broker, filled)
     with Worker(settings, small_disk) as worker:
-        worker.until(lambda: kept_whole(worker.state) == 2_000, "a checkpoint of all")
+        worker.saved(2_000)
         ballast = fill_up(small_disk)
         before = last_checkpoint(worker.state)
         send(broker, filled, notes(2_000, 4_000))
@@ -90,7 +90,7 @@ def test_a_journal_that_cannot_grow_ends_the_worker_before_it_learns_what_is_not
     """A limit of file sizes, as a quota sets one, holds for its log too; what it has to say goes nowhere."""
     settings = settings_of(broker, filled)
     with Worker(settings, tmp_path) as worker:
-        worker.until(lambda: kept_whole(worker.state) == 2_000, "a checkpoint of all")
+        worker.saved(2_000)
         before = tree(worker.state)
         size = len(before[FILE_NAME])
         resource.prlimit(worker.pid, resource.RLIMIT_FSIZE, (size + 5, size + 5))

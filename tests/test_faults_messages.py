@@ -89,7 +89,7 @@ def test_a_dead_letter_that_its_topic_refuses_ends_the_worker_and_is_in_no_check
     bad = b'{"note": "%s' % (b"porter " * 500)
     with Worker(settings, tmp_path) as worker:
         send(broker, topic, notes(0, 300))
-        worker.until(lambda: kept_whole(worker.state) == 300, "a checkpoint of the first")
+        worker.saved(300)
         send(broker, topic, [bad, *notes(300, 600)])
         assert worker.wait() == 74
         for word in (f"topic {dead}", "MessageSizeTooLarge", "limits"):
@@ -114,7 +114,7 @@ def test_while_the_topic_of_dead_letters_is_missing_it_is_not_ready_and_no_check
     settings = settings_of(broker, topic, rejects={"topic": dead})
     with Worker(settings, tmp_path) as worker:
         send(broker, topic, notes(0, 300))
-        worker.until(lambda: kept_whole(worker.state) == 300, "a checkpoint of the first")
+        worker.saved(300)
         worker.ready()
         send(broker, topic, [b"[]", *notes(300, 600)])
         worker.not_ready("dead letters", dead)
@@ -123,7 +123,7 @@ def test_while_the_topic_of_dead_letters_is_missing_it_is_not_ready_and_no_check
         assert any(dead in event["text"] for event in worker.events("warning"))
         broker.make_topic(dead)
         worker.ready()
-        worker.until(lambda: kept_whole(worker.state) == 601, "a checkpoint of all")
+        worker.saved(601)
         worker.stop()
     assert [record.value for record in everything(broker, dead)] == [b"[]"]
     nothing_lost_or_doubled(settings, tmp_path, {0: 601})

@@ -132,6 +132,7 @@ def test_with_leave_a_running_worker_passes_over_what_retention_took_and_its_jou
         worker.learned(621)
         worker.ready()
         assert any("80 messages were removed" in event["text"] for event in worker.events("warning"))
+        worker.saved(621)
         worker.tell(signal.SIGKILL)
         worker.wait()
     done = worked(settings, tmp_path)
