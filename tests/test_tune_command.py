@@ -10,6 +10,7 @@ import subprocess
 import sys
 import time
 import tomllib
+from datetime import datetime, timedelta, timezone
 
 import pytest
 
@@ -243,6 +244,30 @@ def test_a_forward_test_scores_what_was_not_learned(ask, here):
     assert {one["forward_log_loss"] for one in document(here)["candidates"]} == {None}
 
 
+def test_a_forward_test_may_begin_at_a_time(ask, here, log):
+    """That of the message after 70 % of them, written in another zone, and the moment before."""
+    lines = log.read_text().splitlines()
+    at = json.loads(lines[MESSAGES * 7 // 10])["at"]
+    assert at > json.loads(lines[MESSAGES * 7 // 10 - 1])["at"] and at.endswith("Z")
+    there = datetime.fromisoformat(at).astimezone(timezone(timedelta(hours=5, minutes=30))).isoformat()
+
+    def losses(forward_from, **options):
+        ask("--forward-from", forward_from, **options)
+        return [one["forward_log_loss"] for one in document(here)["candidates"]]
+
+    share, given = losses("70%"), "1e-2,1e-3"
+    assert losses(at) == losses(there) == share
+    assert any(f"learned {MESSAGES * 7 // 10:,} of" in text for text in document(here)["passes"])
+    assert losses("71%") != share
+    assert losses(at, strengths=given) == losses("70%", strengths=given)
+
+
+def test_a_forward_test_from_a_time_on_wants_to_know_where_times_are(here, capsys):
+    (here / "bedload.toml").write_text(SETTINGS.replace('time = "at"\n', ""))
+    assert main(["tune", "--out", "x", "--forward-from", "2031-03-03T00:00:00Z"]) == 78
+    assert "needs message.time; or give a share" in capsys.readouterr().err
+
+
 # The settings with the choice
 
 
@@ -287,7 +312,10 @@ def test_a_file_that_is_there_is_not_written_over(here, capsys):
         (["--out", "x", "--memory", "lots"], 64, "--memory takes bytes, or a number with KB, MB or GB"),
         (["--out", "x", "--memory", "10KB"], 78, "--memory allows"),
         (["--out", "x", "--forward-from", "7"], 64, "--forward-from takes a share of the log such as 70%"),
-        (["--out", "x", "--forward-from", "0.1%"], 78, "messages on both sides"),
+        (["--out", "x", "--forward-from", "0.01%"], 78, "share or time in between"),
+        (["--out", "x", "--forward-from", "2031-03-03"], 64, "2031-03-03T06:00:00Z; got '2031-03-03'"),
+        (["--out", "x", "--forward-from", "2001-03-03T00:00:00Z"], 78, "share or time in between"),
+        (["--out", "x", "--forward-from", "2041-03-03T00:00:00Z"], 65, "no message of the log has the time"),
         (["--out", "x", "--pick", "boldest"], 64, "lowest_loss"),
         (["--out", "x", "--max-weights", "5", "--max-bytes", "1MB"], 64, "give one of them"),
         (["--out", "x", "--max-weights", "5", "--pick", "sparsest_within_one_se"], 64, "give one of them"),

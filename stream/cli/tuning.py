@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 import shlex
 import sys
+from contextlib import suppress
 from enum import StrEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -78,8 +79,8 @@ def tune(
         str | None,
         typer.Option(
             "--forward-from",
-            metavar="SHARE",
-            help="Forward test: learn up to this share of the log (70%), then score only.",
+            metavar="SHARE|TIME",
+            help="Forward test: learn up to this share of the log (70%) or RFC 3339 time, then score only.",
         ),
     ] = None,
     truth: Annotated[
@@ -118,10 +119,12 @@ def tune(
         if config is None:
             raise UsageError("--write-settings copies a settings file: give --config FILE")
         check_output(write_settings, "--write-settings", new=True)
+    forward_share, forward_ms = _forward(forward_from)
     job = Job(
         grid=Grid(_strengths(strengths), _numbers(rates, "--learning-rates"), _span(span), over.value),
         rule=_rule(pick, max_weights, max_bytes),
-        forward_share=_share(forward_from),
+        forward_share=forward_share,
+        forward_ms=forward_ms,
         truth=truth,
         workers=workers,
         cluster=cluster,
@@ -258,14 +261,22 @@ def _rule(pick: Pick, max_weights: int | None, max_bytes: str | None) -> Rule:
     return Rule(pick.value)
 
 
-def _share(text: str | None) -> float | None:
+def _forward(text: str | None) -> tuple[float | None, int | None]:
+    """A share, or epoch milliseconds."""
     if text is None:
-        return None
+        return None, None
+    from stream.decoding.times import epoch_ms
+
+    with suppress(ValueError):
+        return None, epoch_ms(text)
     match = re.fullmatch(r"([0-9]+(?:\.[0-9]+)?|\.[0-9]+)(%?)", text)
     share = float(match[1]) / (100 if match[2] else 1) if match else 0.0
     if not 0 < share < 1:
-        raise UsageError(f"--forward-from takes a share of the log such as 70% or 0.7; got {text!r}")
-    return share
+        raise UsageError(
+            f"--forward-from takes a share of the log such as 70% or 0.7, or a time such as "
+            f"2031-03-03T06:00:00Z; got {text!r}"
+        )
+    return share, None
 
 
 def _bytes(text: str, option: str) -> int:

@@ -29,7 +29,8 @@ def snapshot_sizes(trial: Trial, settings: Settings) -> npt.NDArray[np.int64]:
     """Bytes of a snapshot of each lane, to within some digits of its manifest: int64[K]."""
     weights = trial.weights
     lengths = np.fromiter(map(len, weights.names), np.int64, len(weights.names))
-    figures = {field.name: 1 / 3 for field in fields(Summary)}  # as many digits as most have
+    counts = ("messages", "rejected", "labelled", "positives")
+    figures = {field.name: 1 / 3 for field in fields(Summary)} | dict.fromkeys(counts, 10**8)
     calibration = dict.fromkeys(("calibration_ratio", "expected_calibration_error", "base_rate"), 1 / 3)
     about = About(settings.model_dump(mode="json"), figures, calibration, version("bedload"))
     fingerprint = settings.fingerprint()

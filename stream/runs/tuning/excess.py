@@ -95,7 +95,8 @@ class _Excess:
         here, there = here[some], there[some]
         weight, rate, margin = batch.weights[there], rates[there], margins[here]
         loss = np.logaddexp(0.0, margin) - rate[:, np.newaxis] * margin
-        self.sums += weight @ (loss - _entropy(rate)[:, np.newaxis])
+        more = weight[:, np.newaxis] * (loss - _entropy(rate)[:, np.newaxis])
+        self.sums += np.ascontiguousarray(more.T).sum(axis=1)  # each lane alone, whatever others are there
         self.weight += float(weight.sum())
 
 

@@ -35,6 +35,8 @@ COUNTED_AT_ONCE = 1 << 14
 class LogFacts:
     """A log, read once: its messages, times of the first and the last (None where unknown).
 
+    `reached_after`: where a time was asked for, how many messages came before the first of that time or
+    later; None where none came.
     Where gradients were taken: the strongest useful `l1_per_example`, the sum of weights, and how many
     coordinates there are.
     """
@@ -45,6 +47,7 @@ class LogFacts:
     strongest: float | None = None
     weight: float | None = None
     coordinates: int | None = None
+    reached_after: int | None = None
 
 
 def digest_of_log(settings: Settings) -> tuple[list[str], str]:
@@ -62,36 +65,38 @@ def digest_of_log(settings: Settings) -> tuple[list[str], str]:
     return [file.name for file in files], digest.hexdigest()
 
 
-def count(settings: Settings, progress: OnProgress) -> LogFacts:
-    """Counts the messages without decoding them."""
-    messages, ends = 0, _Ends(settings)
-    source = _Watched(settings, ends)
+def count(settings: Settings, progress: OnProgress, until_ms: int | None = None) -> LogFacts:
+    """Counts the messages without decoding them, but for their times until one is `until_ms` or later."""
+    messages, times = 0, _Times(settings, until_ms)
+    source = _Watched(settings, times)
     try:
         while len(block := source.read(COUNTED_AT_ONCE)):
             messages += len(block)
             progress(source.fraction_read(), messages)
     finally:
         source.close()
-    return LogFacts(messages, *ends.times())
+    return LogFacts(messages, *times.ends(), reached_after=times.reached_after)
 
 
-def find_strongest(settings: Settings, progress: OnProgress) -> LogFacts:
+def find_strongest(settings: Settings, progress: OnProgress, until_ms: int | None = None) -> LogFacts:
     """Takes the gradients of all tokens of the log at the best constant model.
 
     Every token counts, whatever `state` bounds: the strength is that of a batch fit of the whole log.
     """
     free = settings.state.model_copy(update={"admit_after": 1, "idle_after": None, "max_live": None})
     settings = settings.model_copy(update={"state": free})
-    model, ends = _SumsModel(settings), _Ends(settings)
+    model, times = _SumsModel(settings), _Times(settings, until_ms)
     rejects = RejectLog(Path(), settings.message, action="skip")
     run = Steps(settings, model, _Nothing(settings.metrics.window), rejects)
-    source = _Watched(settings, ends)
+    source = _Watched(settings, times)
     try:
         while run.step(source, BLOCK):
             progress(source.fraction_read(), run.messages)
     finally:
         source.close()
-    return LogFacts(run.messages, *ends.times(), model.strongest, model.sums.weight, model.live)
+    return LogFacts(
+        run.messages, *times.ends(), model.strongest, model.sums.weight, model.live, times.reached_after
+    )
 
 
 class _SumsModel(TableModel):
@@ -126,36 +131,50 @@ class _Nothing(Progress):
         raise AssertionError("no window ends")
 
 
-class _Ends:
-    """Times of the first and the last message that blocks showed, in epoch milliseconds."""
+class _Times:
+    """Times of the first and the last message that blocks showed, in epoch milliseconds.
 
-    def __init__(self, settings: Settings) -> None:
+    `reached_after`: how many messages came before the first whose time is `until_ms` or later, if any.
+    """
+
+    def __init__(self, settings: Settings, until_ms: int | None) -> None:
         self._decoder = Decoder(settings, times=True, labels=False) if settings.message.time else None
         self._first: Block | None = None
         self._last: Block | None = None
+        self._until_ms = until_ms
+        self._messages = 0
+        self.reached_after: int | None = None
 
     def see(self, block: Block) -> None:
-        if len(block):
-            self._first, self._last = self._first or block, block
+        if not len(block):
+            return
+        self._first, self._last = self._first or block, block
+        if self._until_ms is not None and self.reached_after is None:
+            late = [row for row, time in self._times(block) if time >= self._until_ms]
+            self.reached_after = self._messages + late[0] if late else None
+        self._messages += len(block)
 
-    def times(self) -> tuple[int | None, int | None]:
+    def ends(self) -> tuple[int | None, int | None]:
         first, last = self._times(self._first), self._times(self._last)
-        return (first[0] if first else None), (last[-1] if last else None)
+        return (first[0][1] if first else None), (last[-1][1] if last else None)
 
-    def _times(self, block: Block | None) -> list[int]:
+    def _times(self, block: Block | None) -> list[tuple[int, int]]:
+        """Rows of a block that have a time, with it."""
         if self._decoder is None or block is None:
             return []
-        return [time for time in self._decoder.decode(block)[0].times if time is not None]
+        examples, _ = self._decoder.decode(block)
+        found = zip(examples.rows.tolist(), examples.times, strict=True)
+        return [(row, time) for row, time in found if time is not None]
 
 
 class _Watched(LogSource):
-    """A log whose blocks are shown to `ends`."""
+    """A log whose blocks are shown to `times`."""
 
-    def __init__(self, settings: Settings, ends: _Ends) -> None:
+    def __init__(self, settings: Settings, times: _Times) -> None:
         super().__init__(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
-        self._ends = ends
+        self._times = times
 
     def read(self, limit: int) -> Block:
         block = super().read(limit)
-        self._ends.see(block)
+        self._times.see(block)
         return block

@@ -13,7 +13,7 @@ from stream.runs.tuning.first_pass import LogFacts
 from stream.runs.tuning.trial import Lane, Plan
 from stream.settings.models import Learner
 
-__all__ = ["BLOCKS", "Grid", "Over", "blocks_of", "candidates"]
+__all__ = ["BLOCKS", "Grid", "Over", "blocks_of", "candidates", "frozen_after"]
 
 Over = Literal["l1_per_example", "l1"]
 BLOCKS = 80
@@ -81,10 +81,9 @@ def _short(strength: float) -> float:
 
 
 def blocks_of(messages: int, frozen_share: float | None = None) -> Plan:
-    """Time blocks of equal message counts, to within one; after `frozen_share` of them nothing is learned.
+    """Time blocks of equal message counts, to within one; `frozen_share`: see `frozen_after`.
 
-    Raises BadData for a log that is too short for the blocks, BadSettings for a share that leaves none on one
-    side.
+    Raises BadData for a log that is too short for the blocks, and what `frozen_after` raises.
     """
     if messages < 5 * BLOCKS:
         raise BadData(
@@ -92,9 +91,21 @@ def blocks_of(messages: int, frozen_share: float | None = None) -> Plan:
             f"{BLOCKS} time blocks"
         )
     ends = tuple(messages * block // BLOCKS for block in range(1, BLOCKS + 1))
-    if frozen_share is None:
-        return Plan(ends, LAST_PART_FROM)
-    frozen_from = round(frozen_share * BLOCKS)
-    if not 0 < frozen_from < BLOCKS:
-        raise BadSettings(f"a forward test needs messages on both sides of {frozen_share:.2%} of the log")
-    return Plan(ends, LAST_PART_FROM, frozen_from)
+    plan = Plan(ends, LAST_PART_FROM)
+    return plan if frozen_share is None else frozen_after(plan, round(frozen_share * messages))
+
+
+def frozen_after(plan: Plan, messages: int) -> Plan:
+    """The plan that learns nothing after so many messages: the nearest end of a block moves there.
+
+    Raises BadSettings where nothing would be left to learn, or to score.
+    """
+    if not 0 < messages < plan.ends[-1]:
+        raise BadSettings(
+            f"a forward test learns some messages and scores others: of {plan.ends[-1]:,} it would learn "
+            f"{messages:,}. Set --forward-from to a share or time in between"
+        )
+    inner = np.array(plan.ends[:-1])
+    nearest = int(np.argmin(np.abs(inner - messages)))
+    ends = (*plan.ends[:nearest], messages, *plan.ends[nearest + 1 :])
+    return Plan(ends, plan.last_from, nearest + 1)

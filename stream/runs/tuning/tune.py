@@ -12,12 +12,12 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from stream.errors import BadSettings
+from stream.errors import BadData, BadSettings
 from stream.runs.tuning.choosing import Rule
 from stream.runs.tuning.document import Tuned, document
 from stream.runs.tuning.excess import expected_excess
 from stream.runs.tuning.first_pass import LogFacts, count, digest_of_log, find_strongest
-from stream.runs.tuning.grid import Grid, blocks_of, candidates
+from stream.runs.tuning.grid import Grid, blocks_of, candidates, frozen_after
 from stream.runs.tuning.keeping import KeptTrials
 from stream.runs.tuning.merging import merge
 from stream.runs.tuning.passes import Pool, run_passes, workers_on_this_machine
@@ -34,7 +34,8 @@ Tell = Callable[[float, str], None]
 class Job:
     """What is to be tuned, and where.
 
-    `forward_share`: share of the messages after which a forward test freezes the weights; None: no such test.
+    `forward_share`: share of the messages after which a forward test freezes the weights; `forward_ms`: or
+    the time, epoch milliseconds; both None: no such test.
     `workers`: processes on this machine; `cluster`: address of a Dask scheduler instead.
     `memory_bytes`: for tables and lanes of all passes that run at once.
     """
@@ -42,6 +43,7 @@ class Job:
     grid: Grid = field(default_factory=Grid)
     rule: Rule = field(default_factory=Rule)
     forward_share: float | None = None
+    forward_ms: int | None = None
     truth: Path | None = None
     workers: int = 1
     cluster: str | None = None
@@ -65,6 +67,8 @@ def tune(
     """
     if settings.feed.kind != "log":
         raise BadSettings('tune reads logs: set feed.kind = "log" with feed.paths')
+    if job.forward_ms is not None and settings.message.time is None:
+        raise BadSettings("a forward test from a time on needs message.time; or give a share, such as 70%")
     began, passes = time.monotonic(), []
 
     def note(text: str) -> None:
@@ -72,19 +76,20 @@ def tune(
         say(text)
 
     files, digest = digest_of_log(settings)
-    facts = _first_pass(settings, job.grid, tell, note)
+    facts = _first_pass(settings, job, tell, note)
+    frozen_plan = _frozen_plan(job, facts)
     lanes = candidates(job.grid, settings.learner, facts)
 
     def tried(plan: Plan, pool: Pool | None, workers: int) -> Trial:
         kept = KeptTrials(trials, settings, digest, plan)
         return merge(run_passes(settings, lanes, plan, kept, job.memory_bytes, pool, workers, tell, note))
 
-    plan, frozen, frozen_plan = blocks_of(facts.messages), None, None
+    plan, frozen = blocks_of(facts.messages), None
     with _pool(job) as (pool, workers):
         trial = tried(plan, pool, workers)
-        if job.forward_share is not None:
-            note(f"forward test: learned up to {job.forward_share:.0%} of the log, then only scored")
-            frozen_plan = blocks_of(facts.messages, job.forward_share)
+        if frozen_plan is not None and frozen_plan.frozen_from is not None:
+            learned = frozen_plan.ends[frozen_plan.frozen_from - 1]
+            note(f"forward test: learned {learned:,} of {facts.messages:,} messages, then only scored")
             frozen = tried(frozen_plan, pool, workers)
     return document(
         Tuned(
@@ -119,14 +124,28 @@ def _compared(
     return truth, expected_excess(settings, trial.lanes, plan, truth, job.memory_bytes, progress)
 
 
-def _first_pass(settings: Settings, grid: Grid, tell: Tell, note: Callable[[str], None]) -> LogFacts:
-    if not grid.searched:
-        return count(settings, lambda fraction, messages: tell(fraction or 0.0, "counting messages"))
+def _frozen_plan(job: Job, facts: LogFacts) -> Plan | None:
+    if job.forward_share is not None:
+        return blocks_of(facts.messages, job.forward_share)
+    if job.forward_ms is None:
+        return None
+    if facts.reached_after is None:
+        raise BadData("no message of the log has the time of the forward test or a later one")
+    return frozen_after(blocks_of(facts.messages), facts.reached_after)
+
+
+def _first_pass(settings: Settings, job: Job, tell: Tell, note: Callable[[str], None]) -> LogFacts:
+    if not job.grid.searched:
+
+        def counting(fraction: float | None, messages: int) -> None:
+            tell(fraction or 0.0, "counting messages")
+
+        return count(settings, counting, job.forward_ms)
 
     def looking(fraction: float | None, messages: int) -> None:
         tell(fraction or 0.0, "looking for the strongest useful penalty")
 
-    facts = find_strongest(settings, looking)
+    facts = find_strongest(settings, looking, job.forward_ms)
     note(
         f"first pass: {facts.messages:,} messages, {facts.coordinates:,} tokens; from l1_per_example = "
         f"{facts.strongest:.6g} on a batch fit of the log has no weight"
