@@ -59,7 +59,9 @@ def tune(
     rates: Annotated[
         str | None,
         typer.Option(
-            "--learning-rates", metavar="A,B,...", help="Learning rates to try; that of the settings."
+            "--learning-rates",
+            metavar="A,B,...",
+            help="Learning rates to try, not just that of the settings.",
         ),
     ] = None,
     span: Annotated[
@@ -69,11 +71,13 @@ def tune(
     pick: Annotated[Pick, typer.Option("--pick", help="Rule of choice.")] = Pick.lowest_loss,
     max_weights: Annotated[
         int | None,
-        typer.Option("--max-weights", min=1, metavar="N", help="The best of those with so many weights."),
+        typer.Option(
+            "--max-weights", min=1, metavar="N", help="The best of those with at most so many weights."
+        ),
     ] = None,
     max_bytes: Annotated[
         str | None,
-        typer.Option("--max-bytes", metavar="SIZE", help="The best of those whose snapshot is so small."),
+        typer.Option("--max-bytes", metavar="SIZE", help="The best of those whose snapshot is no larger."),
     ] = None,
     forward_from: Annotated[
         str | None,
