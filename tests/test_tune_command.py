@@ -321,7 +321,6 @@ def test_a_file_that_is_there_is_not_written_over(here, capsys):
         (["--out", "x", "--max-weights", "5", "--pick", "sparsest_within_one_se"], 64, "give one of them"),
         (["--out", "x", "--max-bytes", "100"], 78, "the smallest has"),
         (["--out", "x", "--workers", "0"], 64, "--workers"),
-        (["--out", "x", "--truth", "absent.json"], 66, "absent.json"),
         (["--out", "x", "--config", "absent.toml"], 66, "absent.toml"),
         (["--out", "x", "--set", 'feed.paths=["-"]'], 78, "standard input"),
         (["--out", "x", "--set", 'feed.paths=["absent.jsonl"]'], 66, "absent.jsonl"),
@@ -342,6 +341,25 @@ def test_a_mistake_ends_with_its_code_and_a_cure(arguments, code, said, here, ca
     last = err.splitlines()[-1]
     assert last.startswith("bedload: ") and said in last, err
     assert not (here / "x" / "report.html").exists()
+
+
+@pytest.mark.parametrize(
+    ("arguments", "code", "said"),
+    [
+        (["--out", "log.jsonl"], 73, "is no folder: give another --out"),
+        (["--out", "log.jsonl/deeper/x"], 73, "is no folder: give another --out"),
+        (["--out", "x", "--truth", "bedload.toml"], 65, "is no truth file"),
+        (["--out", "x", "--truth", "absent.json"], 66, "absent.json"),
+    ],
+)
+def test_what_would_fail_in_the_end_is_told_before_the_log_is_gone_through(
+    arguments, code, said, here, capsys
+):
+    before = sorted(here.iterdir())
+    assert main(["tune", *arguments]) == code
+    err = capsys.readouterr().err
+    assert said in err and "first pass" not in err
+    assert sorted(here.iterdir()) == before
 
 
 def test_a_copy_of_settings_wants_a_file_to_copy(here, capsys, monkeypatch):

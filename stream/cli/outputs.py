@@ -7,7 +7,7 @@ from pathlib import Path
 
 from stream.errors import CannotCreate, NoPermission
 
-__all__ = ["check_output"]
+__all__ = ["check_folder", "check_output"]
 
 
 def check_output(path: Path, option: str = "--out", *, new: bool = False) -> None:
@@ -24,3 +24,13 @@ def check_output(path: Path, option: str = "--out", *, new: bool = False) -> Non
         raise CannotCreate(f"{path} is there already: take it away, or {cure}")
     if not os.access(path.parent, os.W_OK | os.X_OK):
         raise NoPermission(f"{path}: the folder {path.parent} may not be written by this user: {cure}")
+
+
+def check_folder(path: Path, option: str = "--out") -> None:
+    """Raises CannotCreate where something else than a folder is at `path` or above it, NoPermission where the
+    nearest folder that is there may not be written."""
+    there = next(place for place in (path, *path.absolute().parents) if place.exists())
+    if not there.is_dir():
+        raise CannotCreate(f"{there} is no folder: give another {option}")
+    if not os.access(there, os.W_OK | os.X_OK):
+        raise NoPermission(f"the folder {there} may not be written by this user: give another {option}")

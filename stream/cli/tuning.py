@@ -16,7 +16,7 @@ from stream.cli.compiling import note_compiling
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
 from stream.cli.learning import write_new
 from stream.cli.options import AsJson, Changes, Config
-from stream.cli.outputs import check_output
+from stream.cli.outputs import check_folder, check_output
 from stream.cli.screen import Column, count, decimal, note, show_json, show_table, stage_bar, visible
 from stream.errors import UsageError
 
@@ -124,6 +124,7 @@ def tune(
             raise UsageError("--write-settings copies a settings file: give --config FILE")
         check_output(write_settings, "--write-settings", new=True)
     forward_share, forward_ms = _forward(forward_from)
+    check_folder(out)
     job = Job(
         grid=Grid(_strengths(strengths), _numbers(rates, "--learning-rates"), _span(span), over.value),
         rule=_rule(pick, max_weights, max_bytes),

@@ -69,7 +69,8 @@ def _beyond(end: str, value: float, more: str) -> str:
 
 def _rule(candidates: Candidates, choice: Choice) -> str:
     limit = choice.rule.limit
-    of = f"of {count(len(candidates.lanes))} candidates"
+    lanes = len(candidates.lanes)
+    of = f"of {count(lanes)} {_plural('candidate', lanes)}"
     match choice.rule.pick:
         case "lowest_loss":
             return f"Rule: the lowest log loss {of}."

@@ -75,22 +75,22 @@ def tune(
         passes.append(text)
         say(text)
 
+    truth = None if job.truth is None else read_truth(job.truth)
     files, digest = digest_of_log(settings)
-    facts = _first_pass(settings, job, tell, note)
-    frozen_plan = _frozen_plan(job, facts)
-    lanes = candidates(job.grid, settings.learner, facts)
-
-    def tried(plan: Plan, pool: Pool | None, workers: int) -> Trial:
-        kept = KeptTrials(trials, settings, digest, plan)
-        return merge(run_passes(settings, lanes, plan, kept, job.memory_bytes, pool, workers, tell, note))
-
-    plan, frozen = blocks_of(facts.messages), None
     with _pool(job) as (pool, workers):
-        trial = tried(plan, pool, workers)
+        facts = _first_pass(settings, job, tell, note)
+        lanes = candidates(job.grid, settings.learner, facts)
+
+        def tried(plan: Plan) -> Trial:
+            kept = KeptTrials(trials, settings, digest, plan)
+            return merge(run_passes(settings, lanes, plan, kept, job.memory_bytes, pool, workers, tell, note))
+
+        plan, frozen_plan, frozen = blocks_of(facts.messages), _frozen_plan(job, facts), None
+        trial = tried(plan)
         if frozen_plan is not None and frozen_plan.frozen_from is not None:
             learned = frozen_plan.ends[frozen_plan.frozen_from - 1]
             note(f"forward test: learned {learned:,} of {facts.messages:,} messages, then only scored")
-            frozen = tried(frozen_plan, pool, workers)
+            frozen = tried(frozen_plan)
     return document(
         Tuned(
             settings,
@@ -104,7 +104,7 @@ def tune(
             job.rule,
             frozen,
             frozen_plan,
-            truth=_compared(settings, job, plan, trial, tell),
+            truth=None if truth is None else _compared(settings, job, plan, trial, truth, tell),
             passes=passes,
             seconds=time.monotonic() - began,
         )
@@ -112,12 +112,8 @@ def tune(
 
 
 def _compared(
-    settings: Settings, job: Job, plan: Plan, trial: Trial, tell: Tell
-) -> tuple[Truth, npt.NDArray[np.float64]] | None:
-    if job.truth is None:
-        return None
-    truth = read_truth(job.truth)
-
+    settings: Settings, job: Job, plan: Plan, trial: Trial, truth: Truth, tell: Tell
+) -> tuple[Truth, npt.NDArray[np.float64]]:
     def progress(fraction: float | None, messages: int) -> None:
         tell(fraction or 0.0, "comparing with the truth")
 
