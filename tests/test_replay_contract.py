@@ -17,7 +17,7 @@ from stream.checkpoints import Checkpoints
 from stream.cli import learning as commands
 from stream.cli.main import main
 from stream.errors import BadSettings
-from stream.runs import learning
+from stream.runs import steps
 from stream.runs.replay import replay
 from stream.snapshots import Snapshots
 from tests.replay_child import Children
@@ -280,7 +280,7 @@ def test_a_newest_checkpoint_that_broke_is_set_aside_and_the_one_before_goes_on(
 def test_neither_batches_nor_checkpoints_change_a_byte(name, block, every, short, tmp_path, monkeypatch):
     variant, epochs = VARIANTS[name]
     replay(settings_for([short], variant), tmp_path / "usual", epochs=epochs)
-    monkeypatch.setattr(learning, "BLOCK", block)
+    monkeypatch.setattr(steps, "BLOCK", block)
     settings = settings_for([short], variant, state={"checkpoint_every": every})
     replay(settings, tmp_path / "cut", epochs=epochs)
     assert last_checkpoint(tmp_path / "cut") == last_checkpoint(tmp_path / "usual")

@@ -512,7 +512,14 @@ def test_known_keys_of_kinds_are_those_of_the_models():
 
 
 @pytest.mark.parametrize(
-    "name", ["BEDLOAD_TRACEBACK", "BEDLOAD_LONG", "BEDLOAD_REQUIRE_BROKER", "BEDLOAD_REQUIRE_BROWSER"]
+    "name",
+    [
+        "BEDLOAD_TRACEBACK",
+        "BEDLOAD_LONG",
+        "BEDLOAD_REQUIRE_BROKER",
+        "BEDLOAD_REQUIRE_BROWSER",
+        "BEDLOAD_REQUIRE_SPAMBASE",
+    ],
 )
 def test_switches_in_the_environment_are_no_settings(name):
     assert load(None, environ={name: "1"}) == Settings().placed_in(Path())

@@ -797,7 +797,7 @@ def test_a_wrong_password_is_told_without_showing_it(broker, topic, opened, capl
     caplog.set_level(logging.DEBUG)
     fill(broker, topic, 1, 1)
     environ = {"DEPOT_PASSWORD": "silt-and-clay"}
-    source = opened(topic=topic, environ=environ, unavailable_after_s=4, **door(broker, "sasl", sasl=sasl))
+    source = opened(topic=topic, environ=environ, unavailable_after_s=8, **door(broker, "sasl", sasl=sasl))
     with pytest.raises((NoPermission, Unavailable), match=r"a user or password|refused gauge") as raised:
         source.start()
     assert "silt-and-clay" not in caplog.text + str(raised.value)

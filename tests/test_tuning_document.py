@@ -258,7 +258,7 @@ def test_the_figures_of_the_choice_are_those_of_a_replay_with_its_settings(tuned
     slices = {name: summary.log_loss for name, summary in result.slices}
     assert {row["slice"]: row["log_loss"] for row in found["slices"]["rows"]} == pytest.approx(slices)
     on_disk = sum(file.stat().st_size for file in snapshot.path.iterdir())
-    assert chosen["bytes"] == pytest.approx(on_disk, abs=120)
+    assert chosen["bytes"] == pytest.approx(on_disk, abs=300)  # digits of some twenty numbers
     expected = sorted(snapshot.weights.values.tolist(), reverse=True)
     shown = found["strongest"]["towards_yes"]
     assert [token["weight"] for token in shown] == [w for w in expected[:25] if w > 0]

@@ -23,7 +23,8 @@ __all__ = ["ENVIRONMENT_PREFIX", "load"]
 ENVIRONMENT_PREFIX = "BEDLOAD_"
 LISTS = ("fields", "crosses")
 NOT_SETTINGS = frozenset(
-    f"{ENVIRONMENT_PREFIX}{name}" for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER", "REQUIRE_BROWSER")
+    f"{ENVIRONMENT_PREFIX}{name}"
+    for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER", "REQUIRE_BROWSER", "REQUIRE_SPAMBASE")
 )
 """Switches of the command line and of the tests."""
 
