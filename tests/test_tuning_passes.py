@@ -116,7 +116,7 @@ def test_blocks_and_slices_add_up_to_the_whole(whole):
 
 def test_too_little_memory_splits_the_grid_and_changes_nothing(folder, tmp_path, whole):
     said = []
-    found = found_by(folder, tmp_path, memory=2_200_000, said=said)
+    found = found_by(folder, tmp_path, memory=850_000, said=said)
     assert any("gone through twice" in text for text in said)
     assert_equal(found, whole)
     with pytest.raises(BadSettings, match="--memory"):
