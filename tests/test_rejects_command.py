@@ -142,10 +142,23 @@ def test_a_mistaken_command_line_and_a_held_folder_have_their_codes(worked, caps
     assert f"process {os.getpid()}" in capsys.readouterr().err
 
 
-def test_replay_of_a_topic_names_the_commands_for_it(worked, capsys):
+def test_replay_of_a_topic_names_the_commands_for_it_and_removes_nothing(worked, capsys):
+    before = last_checkpoint(Path(worked).parent / "state")
     topic = ["--set", "feed.kind=topic", "--set", "feed.topic=t", "--set", 'feed.servers=["localhost:1"]']
     assert main(["replay", "--config", worked, "--fresh", *topic]) == 78
     assert "`bedload work`" in capsys.readouterr().err
+    assert last_checkpoint(Path(worked).parent / "state") == before
+
+
+@pytest.mark.parametrize("call", ["work", "work --accept-settings", "replay --fresh --journal"])
+def test_a_state_of_logs_does_not_go_on_from_a_topic(worked, tmp_path, capsys, call):
+    topic = ["--set", "feed.kind=topic", "--set", "feed.topic=t", "--set", 'feed.servers=["localhost:1"]']
+    folder = Path(worked).parent / "state"
+    state = [folder, "--state", tmp_path / "again"] if "journal" in call else []
+    before = last_checkpoint(folder)
+    assert main([*call.split(), *map(str, state), "--config", worked, *topic]) == 78
+    assert "the state was learned from logs; the settings read topic t" in capsys.readouterr().err
+    assert last_checkpoint(folder) == before
 
 
 @pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
