@@ -330,6 +330,17 @@ def test_counters_of_a_resumed_worker_begin_at_nothing_and_a_failed_checkpoint_i
     assert by_event["failed"]["messages"] == 706
 
 
+def test_the_line_of_a_failure_has_the_exit_code_of_a_bug_too(tmp_path, capsys):
+    class Broken(Endless):
+        def read(self, limit):
+            raise KeyError("files")
+
+    with pytest.raises(KeyError):
+        work(worker_settings(None), tmp_path / "state", source=Broken([[]]))
+    line = json.loads(capsys.readouterr().err.splitlines()[-1])
+    assert (line["event"], line["exit_code"]) == ("failed", 70)
+
+
 def test_a_worker_whose_port_is_taken_does_not_begin(tmp_path):
     with socket.socket() as taken:
         taken.bind(("127.0.0.1", 0))

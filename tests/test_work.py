@@ -289,6 +289,23 @@ def test_other_settings_are_refused_with_the_difference(topic_file, tmp_path):
         work(changed, tmp_path / "state", source=topic_from(topic_file), until_end=True)
 
 
+def test_a_state_of_a_topic_does_not_go_on_from_logs(topic_file, tmp_path):
+    class Named(MemoryTopic):
+        def position(self):
+            return {**super().position(), "topic": "handoffs"}
+
+    source = Named(topic_from(topic_file).partitions)
+    work(quick(), tmp_path / "state", source=source, until_end=True)
+    (tmp_path / "log.jsonl").write_bytes(b"{}\n")
+    logs = settings_for([tmp_path / "log.jsonl"])
+    said = "the state was learned from topic handoffs; the settings read logs"
+    for accept in (False, True):
+        with pytest.raises(BadSettings, match=said):
+            work(logs, tmp_path / "state", until_end=True, accept_settings=accept)
+    with pytest.raises(BadSettings, match=said):
+        retrace(logs, tmp_path / "again", tmp_path / "state")
+
+
 def test_a_gap_is_refused_and_with_leave_passed_over_and_counted(topic_file, tmp_path):
     settings = quick()
     first = topic_from(topic_file)
