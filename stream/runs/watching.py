@@ -45,7 +45,9 @@ class Watch:
     """
 
     def __init__(self, settings: Settings, stopping: list[int]) -> None:
-        self.figures = Figures(to_compile=not compiled_before(settings.learner.method))
+        self.figures = Figures(
+            message_s=time.monotonic(), to_compile=not compiled_before(settings.learner.method)
+        )
         self._worker = settings.worker
         self._stopping = stopping
         self._source: HasHealth | None = None
