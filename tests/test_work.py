@@ -255,6 +255,24 @@ def test_messages_that_come_while_it_waits_are_learned(tmp_path):
     assert topic.commits == [topic.position()]
 
 
+@pytest.mark.parametrize("resumed", [False, True])
+def test_told_to_stop_before_the_feed_ever_answered_it_ends_well(topic_file, tmp_path, resumed):
+    class Away(MemoryTopic):
+        def start(self, position=None):
+            os.kill(os.getpid(), signal.SIGTERM)
+            raise Unavailable("stopped while waiting for the cluster")
+
+        seek = start
+
+    if resumed:
+        work(quick(), tmp_path / "state", source=topic_from(topic_file), until_end=True)
+    done = work(quick(), tmp_path / "state", source=Away([[]]))
+    assert done.run.interrupted
+    assert done.run.summary.messages == (messages_in(topic_file) if resumed else 0)
+    later = work(quick(), tmp_path / "state", source=topic_from(topic_file), until_end=True)
+    assert later.run.summary.messages == messages_in(topic_file)
+
+
 def test_a_second_worker_is_told_who_holds_the_folder(tmp_path):
     with StateFolder(tmp_path / "state"), pytest.raises(TryLater, match=f"process {os.getpid()}") as caught:
         work(quick(), tmp_path / "state", source=MemoryTopic([[]]), until_end=True)
