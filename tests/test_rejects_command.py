@@ -11,7 +11,9 @@ from pathlib import Path
 import pytest
 
 from stream.cli.main import main
+from stream.runs.work import work
 from stream.state_folder import StateFolder
+from tests.memory_topic import MemoryPublisher
 from tests.replays import config_for, courier_lines, last_checkpoint, settings_for
 
 ROOT = Path(__file__).parent.parent
@@ -99,6 +101,23 @@ def test_a_record_that_is_just_being_written_is_passed_over(worked, tmp_path, ca
     (tmp_path / "state/rejects/rejects.jsonl").write_bytes(content[:-20])
     found = document(capsys, "rejects", "counts", "--state", tmp_path / "state")
     assert found["rejects"] == content.count(b"\n") - 1
+
+
+def test_rejects_that_went_to_a_topic_are_counted_and_said_to_be_there(lines, tmp_path, capsys):
+    (tmp_path / "log.jsonl").write_bytes(b"".join(line + b"\n" for line in lines))
+    kept = settings_for([tmp_path / "log.jsonl"])
+    settings = kept.model_copy(update={"rejects": kept.rejects.model_copy(update={"topic": "bad"})})
+    config = config_for(settings, tmp_path)
+    publisher = MemoryPublisher()
+    work(settings, tmp_path / "state", until_end=True, connect=lambda: publisher)
+    found = document(capsys, "rejects", "counts", "--config", config)
+    assert found["rejects"] == sum(found["by_reason"].values()) == len(publisher.acknowledged) > 0
+    assert document(capsys, "rejects", "counts", "--state", tmp_path / "state") == found
+    for command in ("counts", "list"):
+        assert main(["rejects", command, "--config", config]) == 0
+        assert "rejects go to topic bad (rejects.topic)" in capsys.readouterr().err
+        assert main(["rejects", command, "--state", str(tmp_path / "state")]) == 0
+        assert "they went to rejects.topic" in capsys.readouterr().err
 
 
 # ---- work and replay --journal -----------------------------------------------------------------------------
