@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from stream.checkpoints import Checkpoints
-from stream.errors import Unavailable
+from stream.errors import BedloadError, Unavailable
 from stream.message import LiveSource
 from stream.metrics import WindowRow
 from stream.retention import Retention
@@ -23,7 +23,7 @@ from stream.runs.stopping import stop_on_signal
 from stream.runs.watching import Watch, WatchedPacer
 from stream.settings import Settings
 from stream.snapshots import Snapshots
-from stream.sources import JournalledSource
+from stream.sources import JournalledSource, Overwritten
 from stream.state_folder import StateFolder
 
 __all__ = ["WorkResult", "work"]
@@ -90,6 +90,10 @@ def work(
             watch.ending()
             worker.pacer.checkpoint()
             return WorkResult(worker.result(time.monotonic() - began), place.passed_over)
+        except Overwritten:
+            with suppress(BedloadError):  # no journal can give again what was learned since the last one
+                worker.pacer.checkpoint()
+            raise
         finally:
             worker.close()
 
