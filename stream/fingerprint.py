@@ -6,7 +6,7 @@ import json
 from collections.abc import Mapping
 from typing import Any
 
-__all__ = ["differences", "fingerprint_difference"]
+__all__ = ["differences", "fingerprint_difference", "unlivable"]
 
 _IN_SPACE = ("address_bits", "seed", "unit_length")
 
@@ -38,6 +38,26 @@ def differences(here: Any, there: Any, place: str = "") -> list[str]:
         return lines
     a, b = _text(here), _text(there)
     return [] if a == b else [f"{place}: {a} here, {b} there"]
+
+
+def unlivable(
+    here: Mapping[str, Any], there: Mapping[str, Any], now: Mapping[str, Any], then: Mapping[str, Any]
+) -> list[str]:
+    """Lines on the changes that no model lives through; added fields and crosses are none.
+
+    `here`, `there`: fingerprints; `now`, `then`: the other settings that a state is made of.
+    """
+    names = [field["name"] for field in there["fields"]]
+    kept = {
+        **here,
+        "fields": [field for field in here["fields"] if field["name"] in names],
+        "crosses": [cross for cross in here["crosses"] if cross in there["crosses"]],
+    }
+    return (
+        fingerprint_difference(kept, there)
+        + differences(now["learner"]["method"], then["learner"]["method"], "learner.method")
+        + differences(now["metrics"], then["metrics"], "metrics")
+    )
 
 
 def _by_setting(fingerprint: Mapping[str, Any]) -> dict[str, Any]:

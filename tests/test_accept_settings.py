@@ -311,6 +311,16 @@ def test_what_a_model_cannot_live_through_is_refused_with_the_difference(feed, t
     assert tree(tmp_path / "state") == before
 
 
+def test_the_option_is_named_as_a_cure_only_where_it_is_one(feed, tmp_path):
+    feed(2_000, settings_of_run(tmp_path))
+    window, both = {"metrics": {"window": 1_000}}, {"metrics": {"window": 1_000}, "learner": {"l2": 0.5}}
+    with pytest.raises(BadSettings, match=r"cannot take another metrics\.window, or") as caught:
+        feed(2_000, settings_of_run(tmp_path, **window), resume=True)
+    assert "--accept-settings" not in str(caught.value)
+    with pytest.raises(BadSettings, match=r"set metrics\.window back.* the rest with --accept-settings, or"):
+        feed(2_000, settings_of_run(tmp_path, **both), resume=True)
+
+
 def test_the_admission_filter_is_kept_where_it_fits_and_else_starts_empty(feed, tmp_path):
     feed(2_000, settings_of_run(tmp_path, "bounded"))
     filled = arrays_of(tmp_path)["table.admission"]

@@ -102,8 +102,9 @@ def test_init_says_at_once_what_of_the_sample_is_doubtful(here, capsys):
     with (here / "log.jsonl").open("a") as log:
         log.write('{"note": "gate", "redelivered": "maybe"}\n' + "nonsense\n" * 9)
     assert main(["init", "--sample", "log.jsonl", "--out", "new.toml"]) == 0
-    malformed, label = capsys.readouterr().err.splitlines()
-    assert "9 of the sample's 310 lines are malformed" in malformed
+    malformed, many, label = capsys.readouterr().err.splitlines()
+    assert "9 of the sample's 310 lines are malformed and will be rejected" in malformed
+    assert "With 10 of 310 lines rejected, more than message.max_reject_share = 0.01 allows" in many
     assert '"redelivered" is true / false or 1 / 0 but for 1 of 301 values' in label
 
 

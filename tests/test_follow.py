@@ -485,6 +485,35 @@ def test_a_log_that_was_worked_until_its_end_leaves_the_model_of_a_replay(courie
     assert done.run.checkpoints == 0, "nothing new, nothing written"
 
 
+def test_a_copy_beside_an_emptied_log_is_read_at_the_next_start_and_nothing_is_lost(courier, tmp_path):
+    log, copy = tmp_path / "app.log", tmp_path / "app.log.1"
+    write(log, courier[:3_000])
+    settings = settings_for([log])
+
+    def rotate(row):
+        if not copy.exists():
+            shutil.copy(log, copy)
+            os.truncate(log, 0)
+
+    with pytest.raises(BadSettings, match=r"app\.log\.1 begins like it .* start again"):
+        work(settings, tmp_path / "state", until_end=True, on_window=rotate)
+    name, *_ = last_checkpoint(tmp_path / "state")
+    assert 1_500 <= int(name) < 3_000
+    write(log, courier[3_000:3_500])
+    done = work(settings, tmp_path / "state", until_end=True)
+    assert done.run.summary.messages == 3_500
+
+
+def test_a_log_that_was_read_and_is_gone_without_a_checkpoint_is_named(tmp_path):
+    (tmp_path / "app.log").write_bytes(b"1\n22\n")
+    settings = settings_for([tmp_path / "app.log"])
+    work(settings, tmp_path / "state", until_end=True)
+    shutil.rmtree(tmp_path / "state/checkpoints")
+    os.truncate(tmp_path / "app.log", 0)
+    with pytest.raises(BadSettings, match=r"file number 0 of the log was read, and nothing .*app\.log"):
+        work(settings, tmp_path / "state", until_end=True)
+
+
 def test_killed_again_and_again_while_the_log_grows_and_turns_over_it_loses_and_doubles_nothing(
     courier, tmp_path, workers
 ):

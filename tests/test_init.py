@@ -363,6 +363,90 @@ def test_an_object_used_as_a_map_is_left_out_as_one(drafted):
     assert "seen.k1" not in text
 
 
+# ---- a few values unlike all others ------------------------------------------------------------------------
+
+
+@pytest.fixture
+def drafted_with_odd(tmp_path):
+    """Settings drafted from messages, what was said at once, and the rejects of a run over them."""
+
+    def _drafted(messages):
+        (tmp_path / "log.jsonl").write_bytes(as_lines(messages))
+        doubts = []
+        text = draft(tmp_path / "log.jsonl", tmp_path, doubts.append)
+        (tmp_path / "bedload.toml").write_text(text, encoding="utf-8")
+        settings = load(tmp_path / "bedload.toml", environ={})
+        return text, settings, doubts, rejects_of(settings)
+
+    return _drafted
+
+
+@pytest.mark.parametrize(
+    ("key", "bad", "told"),
+    [
+        ("note", 7, '"note": 1 of 1,000 values is a whole number; it will be rejected.'),
+        ("note", ["gate"], '"note": 1 of 1,000 values is a list; it will be rejected.'),
+        ("note", {"text": "gate"}, '"note": 1 of 1,000 values is an object; it will be rejected.'),
+        ("route", 1.5, '"route": 1 of 1,000 values is a number with a decimal point'),
+        ("hour", [], '"hour": 1 of 1,000 values is a list; it will be rejected.'),
+        ("parcel", "small", '"parcel": 1 of 1,000 values is text; it will be rejected.'),
+        ("parcel", {"weight": "2 kg"}, '"parcel.weight": 1 of 1,000 values is text; it will be rejected.'),
+        ("parcel", {"tags": "wet"}, '"parcel.tags": 1 of 1,000 values is text; it will be rejected.'),
+        ("parcel", {"tags": [1.5]}, '"parcel.tags": 1 of 1,000 values is a list whose items are not all'),
+        ("id", [1], '"id": 1 of 1,000 values is a list; it will be rejected.'),
+        ("at", "soon", '"at": 1 of 1,000 values is a text that is no RFC 3339 time; it will be rejected.'),
+        ("at", True, '"at": 1 of 1,000 values is true or false; it will be rejected.'),
+    ],
+)
+def test_one_value_of_a_wrong_type_changes_no_guess_and_is_told(drafted_with_odd, key, bad, told):
+    clean = drafted_with_odd(courier(1_000))[1]
+    messages = courier(1_000)
+    messages[500][key] = bad
+    text, settings, doubts, rejects = drafted_with_odd(messages)
+    assert kinds(settings) == kinds(clean)
+    assert settings.message == clean.message
+    (doubt,) = doubts
+    assert doubt.startswith(told)
+    assert doubt in text.replace("\n# ", " ")
+    assert [reject.row for reject in rejects] == [500]
+
+
+def test_what_the_field_takes_as_well_is_not_called_a_reject(drafted_with_odd):
+    messages = courier(1_000)
+    messages[500]["route"] = 7
+    messages[501]["id"] = 8
+    messages[502]["at"] = 1_930_000_000
+    messages[503]["id"] = messages[504]["at"] = None
+    messages[505]["id"] = messages[506]["id"]
+    text, settings, doubts, rejects = drafted_with_odd(messages)
+    assert (doubts, rejects) == ([], [])
+    assert (settings.message.id, settings.message.time) == ("id", "at")
+    remark = remark_before(text, 'id = "id"')
+    assert "different in every message but 1 of 1,000 that have none and 1 that repeats another's" in remark
+    assert "a time in every message but 1 of 1,000 that have none" in remark_before(text, 'time = "at"')
+
+
+def test_as_many_as_stop_a_run_are_told_so(drafted_with_odd):
+    messages = courier(1_000)
+    for place in range(6):
+        messages[100 * place]["note"] = place
+        messages[100 * place + 1]["at"] = "soon"
+    text, _, (first, *others), rejects = drafted_with_odd(messages)
+    assert first.startswith("With 12 of 1,000 lines rejected, more than message.max_reject_share = 0.01")
+    assert len(others) == 2 and len(rejects) == 12
+    assert first in text.split("\n\n")[0].replace("\n# ", " ")
+
+
+def test_many_values_of_another_type_are_no_errors_of_the_feed(drafted_with_odd):
+    messages = courier(1_000)
+    for place in range(30):
+        messages[10 * place]["parcel"]["weight"] = "heavy"
+    text, settings, doubts, rejects = drafted_with_odd(messages)
+    assert "parcel.weight" not in kinds(settings)
+    assert "no numbers in others" in left_out(text, "parcel.weight")
+    assert (doubts, rejects) == ([], [])
+
+
 # ---- samples -----------------------------------------------------------------------------------------------
 
 
@@ -387,10 +471,16 @@ def test_lines_that_are_no_message_are_told(tmp_path):
         as_lines(courier(30)) + b"[1]\n" + b'{"a":"\xff"}\n' + b'{"a":"' + b"x" * (1 << 20) + b'"}\n'
     )
     head = draft(path, tmp_path).split("\n\n")[0].replace("\n# ", " ")
-    assert "3 lines of the sample would be rejected; the first is message 31 (not a JSON object)" in head
-    assert "3 of the sample's 33 lines are malformed, more than message.max_reject_share = 0.01" in head
+    told = (
+        "3 of the sample's 33 lines are malformed and will be rejected; the first is message 31 (not a JSON"
+    )
+    assert told in head
+    assert "With 3 of 33 lines rejected, more than message.max_reject_share = 0.01 allows" in head
     path.write_bytes(as_lines(courier(400)) + b"[1]\n")
-    assert "max_reject_share" not in draft(path, tmp_path).split("\n\n")[0]
+    doubts = []
+    assert "max_reject_share" not in draft(path, tmp_path, doubts.append).split("\n\n")[0]
+    (doubt,) = doubts
+    assert "1 of the sample's 401 lines is malformed and will be rejected" in doubt
 
 
 def test_the_feed_is_found_from_wherever_the_file_is_put(tmp_path):
@@ -401,6 +491,15 @@ def test_the_feed_is_found_from_wherever_the_file_is_put(tmp_path):
         folder.mkdir(exist_ok=True)
         (folder / "bedload.toml").write_text(draft(log, folder), encoding="utf-8")
         assert rejects_of(load(folder / "bedload.toml", environ={})) == []
+
+
+def test_examples_of_crosses_name_fields_of_the_feed_or_say_that_they_do_not(drafted):
+    crossed = r"^# \[\[crosses\]\]\n# paths = (.*)$"
+    messages = [{"place": n % 3, "text": " ".join(WORDS[n % 5 :]), "y": n % 2 > 0} for n in range(50)]
+    text, _ = drafted(messages)
+    assert re.search(crossed, text, re.MULTILINE)[1] == '["place", "text"]'
+    text, _ = drafted([{"place": n % 3, "y": n % 2 > 0} for n in range(50)])
+    assert re.search(crossed, text, re.MULTILINE)[1] == '["one field", "another"]'
 
 
 @pytest.mark.parametrize("content", [b"", b"\n\n", b"not json\n", b"[1]\n[2]\n", b"\x00" * 100])

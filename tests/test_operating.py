@@ -21,6 +21,7 @@ from prometheus_client.parser import text_string_to_metric_families as parse
 from stream.errors import BadSettings, CannotCreate, FileTrouble
 from stream.operating import Exposition, Figures, Port, log_lines, not_ready, progress_fields, stuck
 from stream.operating.figures import STUCK_S
+from stream.runs.watching import Watch
 from stream.runs.work import work
 from stream.settings import Settings
 from tests.memory_topic import MemoryTopic
@@ -328,6 +329,23 @@ def test_counters_of_a_resumed_worker_begin_at_nothing_and_a_failed_checkpoint_i
     assert "input/output error" in by_event["checkpoint_failed"]["text"]
     assert by_event["failed"]["exit_code"] == 74
     assert by_event["failed"]["messages"] == 706
+
+
+def test_a_feed_that_is_silent_since_the_start_has_an_age_to_alert_on():
+    with Watch(worker_settings(None), []) as watch:
+        age = values(watch.exposition.page()[0].decode())[("bedload_last_message_age_seconds",)]
+    assert 0 <= age < 60
+
+
+def test_the_line_of_a_failure_has_the_exit_code_of_a_bug_too(tmp_path, capsys):
+    class Broken(Endless):
+        def read(self, limit):
+            raise KeyError("files")
+
+    with pytest.raises(KeyError):
+        work(worker_settings(None), tmp_path / "state", source=Broken([[]]))
+    line = json.loads(capsys.readouterr().err.splitlines()[-1])
+    assert (line["event"], line["exit_code"]) == ("failed", 70)
 
 
 def test_a_worker_whose_port_is_taken_does_not_begin(tmp_path):

@@ -11,7 +11,9 @@ from pathlib import Path
 import pytest
 
 from stream.cli.main import main
+from stream.runs.work import work
 from stream.state_folder import StateFolder
+from tests.memory_topic import MemoryPublisher
 from tests.replays import config_for, courier_lines, last_checkpoint, settings_for
 
 ROOT = Path(__file__).parent.parent
@@ -101,6 +103,23 @@ def test_a_record_that_is_just_being_written_is_passed_over(worked, tmp_path, ca
     assert found["rejects"] == content.count(b"\n") - 1
 
 
+def test_rejects_that_went_to_a_topic_are_counted_and_said_to_be_there(lines, tmp_path, capsys):
+    (tmp_path / "log.jsonl").write_bytes(b"".join(line + b"\n" for line in lines))
+    kept = settings_for([tmp_path / "log.jsonl"])
+    settings = kept.model_copy(update={"rejects": kept.rejects.model_copy(update={"topic": "bad"})})
+    config = config_for(settings, tmp_path)
+    publisher = MemoryPublisher()
+    work(settings, tmp_path / "state", until_end=True, connect=lambda: publisher)
+    found = document(capsys, "rejects", "counts", "--config", config)
+    assert found["rejects"] == sum(found["by_reason"].values()) == len(publisher.acknowledged) > 0
+    assert document(capsys, "rejects", "counts", "--state", tmp_path / "state") == found
+    for command in ("counts", "list"):
+        assert main(["rejects", command, "--config", config]) == 0
+        assert "rejects go to topic bad (rejects.topic)" in capsys.readouterr().err
+        assert main(["rejects", command, "--state", str(tmp_path / "state")]) == 0
+        assert "they went to rejects.topic" in capsys.readouterr().err
+
+
 # ---- work and replay --journal -----------------------------------------------------------------------------
 
 
@@ -142,10 +161,23 @@ def test_a_mistaken_command_line_and_a_held_folder_have_their_codes(worked, caps
     assert f"process {os.getpid()}" in capsys.readouterr().err
 
 
-def test_replay_of_a_topic_names_the_commands_for_it(worked, capsys):
+def test_replay_of_a_topic_names_the_commands_for_it_and_removes_nothing(worked, capsys):
+    before = last_checkpoint(Path(worked).parent / "state")
     topic = ["--set", "feed.kind=topic", "--set", "feed.topic=t", "--set", 'feed.servers=["localhost:1"]']
     assert main(["replay", "--config", worked, "--fresh", *topic]) == 78
     assert "`bedload work`" in capsys.readouterr().err
+    assert last_checkpoint(Path(worked).parent / "state") == before
+
+
+@pytest.mark.parametrize("call", ["work", "work --accept-settings", "replay --fresh --journal"])
+def test_a_state_of_logs_does_not_go_on_from_a_topic(worked, tmp_path, capsys, call):
+    topic = ["--set", "feed.kind=topic", "--set", "feed.topic=t", "--set", 'feed.servers=["localhost:1"]']
+    folder = Path(worked).parent / "state"
+    state = [folder, "--state", tmp_path / "again"] if "journal" in call else []
+    before = last_checkpoint(folder)
+    assert main([*call.split(), *map(str, state), "--config", worked, *topic]) == 78
+    assert "the state was learned from logs; the settings read topic t" in capsys.readouterr().err
+    assert last_checkpoint(folder) == before
 
 
 @pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])

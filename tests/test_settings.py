@@ -318,6 +318,9 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
         ('[state]\nfolder = ""', 'state.folder = ""', "a text"),
         ('[rejects]\naction = "halt"\ntopic = "bad"', 'rejects.topic = "bad"', "keeps no message"),
         ('[scores]\ntopic = "to whom?"', 'scores.topic = "to whom?"', "letters, digits"),
+        (TOPIC + 'servers = "h:1"\ntopic = "t"\n[scores]\ntopic = "t"', "scores.topic", "feed.topic too"),
+        (TOPIC + 'servers = "h:1"\ntopic = "t"\n[rejects]\ntopic = "t"', "rejects.topic", "feed.topic too"),
+        ('[rejects]\ntopic = "t"\n[scores]\ntopic = "t"', "scores.topic", "is rejects.topic too"),
     ],
 )  # fmt: skip
 def test_what_cannot_work_is_refused_with_reason(write, text, key, why):

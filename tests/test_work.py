@@ -255,6 +255,24 @@ def test_messages_that_come_while_it_waits_are_learned(tmp_path):
     assert topic.commits == [topic.position()]
 
 
+@pytest.mark.parametrize("resumed", [False, True])
+def test_told_to_stop_before_the_feed_ever_answered_it_ends_well(topic_file, tmp_path, resumed):
+    class Away(MemoryTopic):
+        def start(self, position=None):
+            os.kill(os.getpid(), signal.SIGTERM)
+            raise Unavailable("stopped while waiting for the cluster")
+
+        seek = start
+
+    if resumed:
+        work(quick(), tmp_path / "state", source=topic_from(topic_file), until_end=True)
+    done = work(quick(), tmp_path / "state", source=Away([[]]))
+    assert done.run.interrupted
+    assert done.run.summary.messages == (messages_in(topic_file) if resumed else 0)
+    later = work(quick(), tmp_path / "state", source=topic_from(topic_file), until_end=True)
+    assert later.run.summary.messages == messages_in(topic_file)
+
+
 def test_a_second_worker_is_told_who_holds_the_folder(tmp_path):
     with StateFolder(tmp_path / "state"), pytest.raises(TryLater, match=f"process {os.getpid()}") as caught:
         work(quick(), tmp_path / "state", source=MemoryTopic([[]]), until_end=True)
@@ -287,6 +305,23 @@ def test_other_settings_are_refused_with_the_difference(topic_file, tmp_path):
     with pytest.raises(BadSettings, match="l1_per_example"):
         changed = quick(learner={"l1_per_example": 1e-5})
         work(changed, tmp_path / "state", source=topic_from(topic_file), until_end=True)
+
+
+def test_a_state_of_a_topic_does_not_go_on_from_logs(topic_file, tmp_path):
+    class Named(MemoryTopic):
+        def position(self):
+            return {**super().position(), "topic": "handoffs"}
+
+    source = Named(topic_from(topic_file).partitions)
+    work(quick(), tmp_path / "state", source=source, until_end=True)
+    (tmp_path / "log.jsonl").write_bytes(b"{}\n")
+    logs = settings_for([tmp_path / "log.jsonl"])
+    said = "the state was learned from topic handoffs; the settings read logs"
+    for accept in (False, True):
+        with pytest.raises(BadSettings, match=said):
+            work(logs, tmp_path / "state", until_end=True, accept_settings=accept)
+    with pytest.raises(BadSettings, match=said):
+        retrace(logs, tmp_path / "again", tmp_path / "state")
 
 
 def test_a_gap_is_refused_and_with_leave_passed_over_and_counted(topic_file, tmp_path):

@@ -9,9 +9,9 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from stream.cli.inputs import state_folder
+from stream.cli.inputs import settings_from, state_folder
 from stream.cli.options import AsJson, Config, StateFolder
-from stream.cli.screen import Column, count, show_json, show_table, visible
+from stream.cli.screen import Column, count, note, show_json, show_table, visible
 from stream.errors import InputMissing
 
 if TYPE_CHECKING:
@@ -40,7 +40,10 @@ def list_rejects(
     as_json: AsJson = False,
 ) -> None:
     """List rejected messages, the latest last, without what they say."""
-    found = [kept for kept in _kept(config, state) if reason is None or kept.reason == reason]
+    kept_here = list(_kept(config, state))
+    if not kept_here:
+        _note_elsewhere(config, state, _counted(config, state))
+    found = [kept for kept in kept_here if reason is None or kept.reason == reason]
     shown = found[-most:] if most else found
     if as_json:
         show_json({"rejects": [_facts(kept) for kept in shown], "of": len(found)})
@@ -68,6 +71,9 @@ def list_rejects(
 def counts(config: Config = None, state: StateFolder = None, as_json: AsJson = False) -> None:
     """Count rejected messages by reason, most first."""
     found = Counter(kept.reason for kept in _kept(config, state))
+    if not found:
+        found = _counted(config, state)
+        _note_elsewhere(config, state, found)
     by_reason = dict(sorted(found.items(), key=lambda item: (-item[1], item[0])))
     if as_json:
         show_json({"rejects": found.total(), "by_reason": by_reason})
@@ -107,6 +113,25 @@ def _kept(config: Path | None, state: Path | None) -> Iterator[KeptReject]:
     from stream.reject_file import kept_rejects
 
     return kept_rejects(_folder(config, state))
+
+
+def _counted(config: Path | None, state: Path | None) -> Counter[str]:
+    """By reason, as the newest checkpoint counts them, wherever they went."""
+    from stream.checkpoints import Checkpoints
+
+    newest = Checkpoints(_folder(config, state).parent / "checkpoints", keep=1).newest_manifest()
+    return Counter() if newest is None else Counter(newest[1]["about"]["rejects"]["by_reason"])
+
+
+def _note_elsewhere(config: Path | None, state: Path | None, counted: Counter[str]) -> None:
+    """Says where rejected messages are, none of which is kept in files."""
+    topic = None if config is None and state is not None else settings_from(config, None).rejects.topic
+    if topic is not None:
+        note(f"bedload: rejects go to topic {topic} (rejects.topic), and none is kept in files; counts by")
+        note("bedload: reason are those of the newest checkpoint, and bedload_rejects_total of a worker")
+    elif counted:
+        note(f"bedload: {count(counted.total())} messages were rejected up to the newest checkpoint; none is")
+        note("bedload: kept in files: they went to rejects.topic, or rejects.action keeps none")
 
 
 def _folder(config: Path | None, state: Path | None) -> Path:

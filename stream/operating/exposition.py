@@ -86,7 +86,11 @@ class Exposition(Collector):
                 "Predicted over observed outcomes in the last window.",
                 figures.calibration_ratio,
             ),
-            ("last_message_age_seconds", "Since the last message.", self._age(figures.message_s)),
+            (
+                "last_message_age_seconds",
+                "Since the last message, or since this process began.",
+                self._age(figures.message_s),
+            ),
             (
                 "last_checkpoint_age_seconds",
                 "Since the last checkpoint of this process became durable, or since it began to learn.",

@@ -55,7 +55,7 @@ class Figures:
     the state holds. `log_loss`, `calibration_ratio` and `nonzeros` are those of the last window that was
     closed. `waiting`: learning waits for brokers to take what is sent out; `untaken`: why they do not.
     `to_compile`: kernels were not compiled before; they are by the time of the first checkpoint. Times (`_s`)
-    are of the monotonic clock, None before the first.
+    are of the monotonic clock, None before the first; a worker's `message_s` is its start until one comes.
     """
 
     phase: Literal["starting", "opening", "replaying", "live", "ending"] = "starting"

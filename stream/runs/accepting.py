@@ -11,7 +11,7 @@ import numpy.typing as npt
 
 from stream.checkpoints import Checkpoint
 from stream.errors import BadSettings
-from stream.fingerprint import differences, fingerprint_difference
+from stream.fingerprint import differences, fingerprint_difference, unlivable
 from stream.learners import Rows, rebuild
 from stream.runs.learning import pinned
 from stream.settings import Settings
@@ -31,7 +31,7 @@ def accept_settings(settings: Settings, saved: Checkpoint) -> tuple[Checkpoint, 
     changed = fingerprint_difference(fingerprint, about["fingerprint"]) + differences(now, about["pinned"])
     if not changed:
         return saved, []
-    _refuse(_outlived(fingerprint, about["fingerprint"], now, about["pinned"]))
+    _refuse(unlivable(fingerprint, about["fingerprint"], now, about["pinned"]))
     before = {"fingerprint": about["fingerprint"], "pinned": about["pinned"]}
     accepted = [*about.get("accepted", []), {"messages": saved.messages, "before": before}]
     arrays, lines = _arrays(saved.arrays, settings, about["pinned"])
@@ -43,23 +43,6 @@ def accept_settings(settings: Settings, saved: Checkpoint) -> tuple[Checkpoint, 
             about={**about, "fingerprint": fingerprint, "pinned": now, "accepted": accepted},
         ),
         [said, *(f"  {line}" for line in changed), *lines],
-    )
-
-
-def _outlived(
-    here: Mapping[str, Any], there: Mapping[str, Any], now: Mapping[str, Any], then: Mapping[str, Any]
-) -> list[str]:
-    """Lines on the changes that no model lives through; added fields and crosses are none."""
-    names = [field["name"] for field in there["fields"]]
-    kept = {
-        **here,
-        "fields": [field for field in here["fields"] if field["name"] in names],
-        "crosses": [cross for cross in here["crosses"] if cross in there["crosses"]],
-    }
-    return (
-        fingerprint_difference(kept, there)
-        + differences(now["learner"]["method"], then["learner"]["method"], "learner.method")
-        + differences(now["metrics"], then["metrics"], "metrics")
     )
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from typing import Any, Literal
 
 from stream.errors import BadSettings
@@ -11,7 +11,7 @@ from stream.runs.outbox import Publisher
 from stream.settings import Settings
 from stream.sources import FollowSource
 
-__all__ = ["OnGap", "live_source", "publisher_of"]
+__all__ = ["OnGap", "live_source", "publisher_of", "refuse_other_kind"]
 
 OnGap = Literal["refuse", "skip"]
 
@@ -49,3 +49,18 @@ def publisher_of(settings: Settings) -> Callable[[], Publisher]:
     from stream.topics import Publisher, Secrets
 
     return lambda: Publisher(settings.feed, Secrets(settings))
+
+
+def refuse_other_kind(settings: Settings, position: Mapping[str, Any]) -> None:
+    """Raises BadSettings where the feed is of another kind than the one that `position` is a place in."""
+    feed = settings.feed
+    if "files" in position and feed.kind == "topic":
+        was, now = "logs", f"topic {feed.topic}"
+    elif "topic" in position and feed.kind == "log":
+        was, now = f"topic {position['topic']}", "logs"
+    else:
+        return
+    raise BadSettings(
+        f"the state was learned from {was}; the settings read {now}, where the place that it stands at means "
+        "nothing. Set feed.kind back, or begin again in another state.folder"
+    )

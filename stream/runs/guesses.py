@@ -1,178 +1,86 @@
-"""Guessing the parts of a message: columns of a sample in, roles and field kinds with reasons out."""
+"""Guessing the fields of a message: a column of a sample in, the kind of field with the reason out."""
 
 from __future__ import annotations
 
 import math
 import re
+from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
-from stream.decoding.uses import MAX_QUANTITY, MAX_WEIGHT
+from stream.decoding.uses import BY_KIND, MAX_QUANTITY, Use
 from stream.runs.columns import Column
-from stream.settings import MessagePaths
 
-__all__ = ["FieldGuess", "Role", "guess_field", "guess_roles"]
+__all__ = ["TIME_HINT", "FieldGuess", "guess_field", "is_prose", "rejects", "unfit"]
 
-ID_HINT = re.compile(r"(^|_)(id|uuid|guid|key)$")
 TIME_HINT = re.compile(r"(^|_)(at|on|time|timestamp|ts|date|datetime|when|created)$|_(s|ms)$")
-LABEL_HINT = re.compile(r"label|outcome|target|result|converted|success|fail|^is_|ed$")
-WEIGHT_NAMES = {"example_weight", "sample_weight", "importance"}
 CODE_HINT = re.compile(r"(^|_)(id|code|no|nr|number|zip|postcode|type|kind|class)$")
 
 FEW_NUMBERS = 50
 """Whole numbers with no more different values than this are taken for codes, not amounts."""
-NEARLY = 0.05
-"""A path with 0 and 1 and no larger share of other values is told as a possible outcome."""
-BAD_LABELS = MessagePaths().max_reject_share
-"""Up to this share it can be the outcome: messages with other values are rejected, and the run goes on."""
-FEW_MESSAGES = 20
-"""Below this many messages, different values in each are no sign of an id."""
-
-
-@dataclass(frozen=True, slots=True)
-class Role:
-    """A path for message.id, time, label or weight (None: none found), and a remark for the reader.
-
-    `doubt`: what of the remark needs a look before anything is learned.
-    """
-
-    path: str | None
-    remark: str
-    doubt: str = ""
+OBJECTS = Use("a path into objects", frozenset(("an object",)))
 
 
 @dataclass(frozen=True, slots=True)
 class FieldGuess:
-    """A field as it would stand in the settings; `kind` None: cannot be one; not `active`: commented out."""
+    """A field as it would stand in the settings; `kind` None: cannot be one; not `active`: commented out.
+
+    `doubt`: what needs a look before anything is learned. `rejected`: rows of the sample that would be
+    rejected for this path.
+    """
 
     path: str
     kind: str | None
     active: bool
     reason: str
     options: dict[str, Any] = field(default_factory=dict)
+    doubt: str = ""
+    rejected: frozenset[int] = frozenset()
 
 
-def guess_roles(columns: Sequence[Column]) -> dict[str, Role]:
-    """Which paths look like id, time, label and weight."""
-    usable = [column for column in columns if column.values and not _unfit(column)]
-    roles = {"label": _label(usable, [column for column in columns if column.values and column.addressable])}
-    roles["time"] = _time(usable)
-    roles["id"] = _id(
-        [column for column in usable if column.path not in (roles["label"].path, roles["time"].path)]
-    )
-    roles["weight"] = _weight(usable)
-    return {name: roles[name] for name in ("id", "time", "label", "weight")}
-
-
-def _id(columns: Sequence[Column]) -> Role:
-    found = []
-    for column in columns:
-        if column.missing or column.distinct < column.messages or len(column.types) > 1:
-            continue
-        hinted = bool(ID_HINT.search(column.last))
-        telling = column.types == {str} and column.messages >= FEW_MESSAGES
-        if (hinted and column.types <= {str, int}) or (
-            telling and not column.instants and not _is_prose(column)
-        ):
-            found.append((column.last != "id", not hinted, column.path.count("."), column.path))
-    found.sort(key=lambda candidate: candidate[:3])
-    return _role(
-        [path for *_, path in found], "different in every message", "No path is different in every message."
-    )
-
-
-def _time(columns: Sequence[Column]) -> Role:
-    found = []
-    for column in columns:
-        hinted = bool(TIME_HINT.search(column.last))
-        if not column.missing and (column.instants or (column.epochs and hinted)):
-            rising = sum(a <= b for a, b in zip(column.values, column.values[1:], strict=False))
-            found.append((not hinted, -rising, column.path))
-    found.sort(key=lambda candidate: candidate[:2])
-    return _role(
-        [path for *_, path in found], "a time in every message", "No path holds a time in every message."
-    )
-
-
-def _label(columns: Sequence[Column], all_columns: Sequence[Column]) -> Role:
-    found = []
-    for place, column in enumerate(columns):
-        if column.types <= {bool, int} and set(column.counts) <= {0, 1}:
-            hinted = bool(LABEL_HINT.search(column.last))
-            both = column.distinct == 2
-            if both or hinted:
-                found.append((not both, -_evidence(column, column.types), 0, not hinted, -place, column.path))
-    nearly = {}
-    for place, column in enumerate(all_columns):
-        types, odd = _nearly_yes_no(column)
-        if odd:
-            nearly[column.path] = f"but for {odd:,} of {len(column.values):,} values"
-            if odd <= BAD_LABELS * column.messages and LABEL_HINT.search(column.last):
-                found.append((False, -_evidence(column, types), 1, False, -place, column.path))
-    found.sort()
-    role = _label_role(columns, [path for *_, path in found])
-    doubts = [
-        f'"{path}" is true / false or 1 / 0 {but}'
-        + (", which would be rejected." if path == role.path else "; it was not taken.")
-        for path, but in list(nearly.items())[:5]
+def rejects(column: Column, use: Use) -> tuple[str, frozenset[int]]:
+    """What to say of the odd values that `use` does not take, and their rows in the sample."""
+    odd = {row: name for row, name in column.odd.items() if name not in use.kinds}
+    if not odd:
+        return "", frozenset()
+    count = len(column.values) + column.objects + len(column.odd)
+    names = [
+        f"{name} ({number:,})" if len(odd) > number else name
+        for name, number in Counter(odd.values()).most_common(3)
     ]
-    return Role(role.path, " ".join([role.remark, *doubts]), " ".join(doubts))
-
-
-def _evidence(column: Column, types: frozenset[type]) -> int:
-    return 2 * bool(column.missing) + 2 * bool(LABEL_HINT.search(column.last)) + (types == {bool})
-
-
-def _nearly_yes_no(column: Column) -> tuple[frozenset[type], int]:
-    """Types of the values that an outcome may have, and how many others a path has that is nearly one."""
-    fit = [value for value in column.values if isinstance(value, bool | int) and value in (0, 1)]
-    odd = len(column.values) - len(fit) + column.objects
-    nearly = 0 < odd <= NEARLY * len(column.values) and len(set(fit)) == 2
-    return frozenset(map(type, fit)), odd if nearly else 0
-
-
-def _label_role(columns: Sequence[Column], found: list[str]) -> Role:
-    absent = "No path holds true / false or 1 / 0: messages would be scored, never learned."
-    worded = [
-        f'"{column.path}"'
-        for column in columns
-        if column.types == {str} and column.distinct == 2 and not column.constant
-    ]
-    if not found and worded:
-        absent += f" Two texts stand in {', '.join(worded[:5])}; a label must be true, false, 1 or 0."
-    return _role(found, "true / false or 1 / 0", absent)
-
-
-def _weight(columns: Sequence[Column]) -> Role:
-    numbers = [
-        c for c in columns if c.types <= {int, float} and min(c.values) >= 0 and max(c.values) <= MAX_WEIGHT
-    ]
-    found = [c.path for c in numbers if c.last in WEIGHT_NAMES]
-    similar = [f'"{c.path}"' for c in numbers if c.last == "weight"]
-    absent = "No path is named like an example weight."
-    if similar:
-        absent = f"{similar[0]} was taken for a property of the message, not for an example weight."
-    return _role(found, "numbers, none negative", absent)
-
-
-def _role(paths: list[str], why: str, absent: str) -> Role:
-    if not paths:
-        return Role(None, absent)
-    remark = f"Guess: {why}."
-    if len(paths) > 1:
-        others = [f'"{path}"' for path in paths[1:6]] + ["..."] * (len(paths) > 6)
-        remark += f" Other candidates: {', '.join(others)}; check which one it is."
-    return Role(paths[0], remark)
+    are, they = ("is", "it") if len(odd) == 1 else ("are each", "they")
+    what = f"{len(odd):,} of {count:,} values {are} {' or '.join(names)}"
+    text = f'"{column.path}": {what}; {they} will be rejected.'
+    return text, frozenset(odd)
 
 
 def guess_field(column: Column, label: Column | None) -> FieldGuess | None:
-    """The field that `column` would make; None where it only holds objects."""
+    """The field that `column` would make; None where it only holds objects.
+
+    Values of another kind than nearly all do not decide, unless the field takes them as well.
+    """
+    plain = _guess_field(column, label)
+    if column.usual is column:
+        return plain
+    usual = _guess_field(column.usual, label)
+    if usual is None:
+        doubt, rows = rejects(column.usual, OBJECTS)
+        return FieldGuess(column.path, None, False, f"an object. {doubt}", {}, doubt, rows)
+    if plain is not None and (plain.kind == usual.kind or (plain.active and not usual.active)):
+        return plain
+    if usual.kind is None:
+        return usual
+    doubt, rows = rejects(column.usual, BY_KIND[usual.kind])
+    return replace(usual, reason=f"{usual.reason}. {doubt}".rstrip(". "), doubt=doubt, rejected=rows)
+
+
+def _guess_field(column: Column, label: Column | None) -> FieldGuess | None:
     if column.objects and not column.values:
         return None
-    unfit = _unfit(column)
-    if unfit or not column.values:
-        return FieldGuess(column.path, None, False, unfit or "null in every message of the sample")
+    why_not = unfit(column)
+    if why_not or not column.values:
+        return FieldGuess(column.path, None, False, why_not or "null in every message of the sample")
     kind, reason, options = _kind(column)
     if kind is None:
         return FieldGuess(column.path, None, False, reason)
@@ -180,7 +88,7 @@ def guess_field(column: Column, label: Column | None) -> FieldGuess | None:
     return FieldGuess(column.path, kind, not against, against or reason, options)
 
 
-def _unfit(column: Column) -> str:
+def unfit(column: Column) -> str:
     """Why a path cannot be read as a field at all."""
     if not column.addressable:
         return (
@@ -188,7 +96,7 @@ def _unfit(column: Column) -> str:
         )
     above = column.parent
     while above is not None:
-        if above.values:
+        if above.usual.values:
             return f'"{above.path}" is an object in some messages and none in others'
         above = above.parent
     if column.objects and column.values:
@@ -215,7 +123,7 @@ def _kind(column: Column) -> tuple[str | None, str, dict[str, Any]]:
         return "list", f"lists of {column.distinct:,} different items", {}
     if column.types == {str}:
         few = column.distinct <= 50 and column.distinct * 10 <= len(column.values)
-        if not few and not column.instants and _is_prose(column):
+        if not few and not column.instants and is_prose(column):
             return "words", f"free text, {_mean_length(column):.0f} characters on average", {}
         return "category", count, {}
     if not column.types <= {int, float}:
@@ -227,7 +135,8 @@ def _kind(column: Column) -> tuple[str | None, str, dict[str, Any]]:
     return "quantity", f"numbers from {low:g} to {high:g}", {"bins": _deciles(column.values)}
 
 
-def _is_prose(column: Column) -> bool:
+def is_prose(column: Column) -> bool:
+    """Whether texts look like sentences rather than codes."""
     long = sum(len(value.split()) >= 3 for value in column.values)
     unspaced = sum(sum(ord(c) >= 0x2E80 for c in value) >= 6 for value in column.values)
     several = column.nearly_unique and column.mostly_texts_with_spaces

@@ -11,7 +11,8 @@ from pathlib import Path
 from typing import Any
 
 from stream.runs.columns import Column, columns_of
-from stream.runs.guesses import FieldGuess, guess_field, guess_roles
+from stream.runs.guesses import FieldGuess, guess_field
+from stream.runs.roles import Role, guess_roles
 from stream.runs.sample import Sample, read_sample
 from stream.settings import MessagePaths
 from stream.settings.keys import FIELD_KINDS, Key, known_keys
@@ -25,7 +26,8 @@ WIDTH = 100
 SECTIONS = {
     "feed": "Where messages come from.",
     "message": "Where the parts of a message stand: dotted paths into its JSON object.",
-    "space": "The weight space. Changing it, or a field, starts a new model.",
+    "space": "The weight space. A change here, or of a field, wants a new model; fields and crosses may be "
+    "added to a live one (--accept-settings).",
     "learner": "How weights are learned.",
     "state": "What is kept on disk, and what bounds the memory.",
     "metrics": "Metrics of predictions made before each update.",
@@ -45,12 +47,15 @@ ACTIVE = {
 }
 EXAMPLES = {
     "feed.start": "earliest",
+    "feed.topic": "messages",
     "feed.sasl": "SCRAM-SHA-512",
     "learner.horizon": 10_000_000,
     "state.idle_after": 10_000_000,
     "state.max_live": 20_000_000,
-    "worker.metrics_port": 9_100,
+    "worker.metrics_port": 9_464,
     "worker.unavailable_after_s": 600,
+    "rejects.topic": "rejected",
+    "scores.topic": "scored",
 }
 """Shown, commented out, for keys without a default."""
 
@@ -65,8 +70,6 @@ def draft(sample: Path, folder: Path | None = None, doubt: Callable[[str], None]
     read = read_sample(sample)
     columns, maps = columns_of(read.messages)
     roles = guess_roles(columns)
-    for text in filter(None, [_too_many_bad(read), *(role.doubt for role in roles.values())]):
-        doubt(text)
     taken = {role.path for role in roles.values()}
     label = next((column for column in columns if column.path == roles["label"].path), None)
     guesses = [
@@ -74,8 +77,15 @@ def draft(sample: Path, folder: Path | None = None, doubt: Callable[[str], None]
         for column in columns[:MOST_PATHS]
         if column.path not in taken and (guess := guess_field(column, label)) is not None
     ]
+    used: list[Role | FieldGuess] = [
+        *roles.values(),
+        *(guess for guess in guesses if guess.active or _leads_on(guess, guesses, taken)),
+    ]
+    malformed = [*_malformed(read), *_too_many(read, frozenset().union(*(one.rejected for one in used)))]
+    for text in [*malformed, *(one.doubt for one in used if one.doubt)]:
+        doubt(text)
     parts = [
-        _head(sample, read),
+        _head(sample, read, malformed),
         _section("feed", {"feed.paths": ([_feed_path(sample, folder or Path())], "")}),
         _section("message", {f"message.{name}": (role.path, role.remark) for name, role in roles.items()}),
         _fields(guesses, maps, len(columns) - MOST_PATHS),
@@ -100,30 +110,43 @@ def _feed_path(sample: Path, folder: Path) -> str:
     return glob.escape(str(path))
 
 
-def _head(sample: Path, read: Sample) -> str:
-    lines = [
+def _leads_on(guess: FieldGuess, guesses: Sequence[FieldGuess], taken: set[str | None]) -> bool:
+    """Whether a path below that of `guess` is read, so that what is no object there is rejected."""
+    read = {one.path for one in guesses if one.active} | taken
+    return any(path is not None and path.startswith(f"{guess.path}.") for path in read)
+
+
+def _head(sample: Path, read: Sample, malformed: Sequence[str]) -> str:
+    return _remark(
         f"Settings for Bedload, from the first {len(read.messages):,} messages of {_quoted(sample.name)}.",
         "A line that begins with # is a remark, or a key at its default; take the # away to change it.",
         "What was guessed says so: read it once. docs/settings.md has every key.",
-    ]
-    if read.bad_lines:
-        lines.append(
-            f"{read.bad_lines:,} lines of the sample would be rejected; the first is {read.first_bad}."
-        )
-        lines += filter(None, [_too_many_bad(read)])
-    return _remark(*lines)
-
-
-def _too_many_bad(read: Sample) -> str:
-    """What to say where a run over such lines would stop, or nothing."""
-    allowed = MessagePaths().max_reject_share
-    lines = read.bad_lines + len(read.messages)
-    if read.bad_lines <= allowed * lines:
-        return ""
-    return (
-        f"{read.bad_lines:,} of the sample's {lines:,} lines are malformed, more than "
-        f"message.max_reject_share = {allowed:g} allows: a run would stop. Mend the log, or raise that share."
+        *malformed,
     )
+
+
+def _malformed(read: Sample) -> list[str]:
+    """What to say of lines that are no message at all."""
+    if not read.bad_lines:
+        return []
+    lines = read.bad_lines + len(read.messages)
+    are = "is" if read.bad_lines == 1 else "are"
+    return [
+        f"{read.bad_lines:,} of the sample's {lines:,} lines {are} malformed and will be rejected; the first "
+        f"is {read.first_bad}."
+    ]
+
+
+def _too_many(read: Sample, rejected: frozenset[int]) -> list[str]:
+    """What to say where a run over such lines would stop; `rejected`: messages that do not fit the guess."""
+    allowed = MessagePaths().max_reject_share
+    lines, count = read.bad_lines + len(read.messages), read.bad_lines + len(rejected)
+    if count <= allowed * lines:
+        return []
+    return [
+        f"With {count:,} of {lines:,} lines rejected, more than message.max_reject_share = {allowed:g} "
+        "allows, a run would stop: mend the feed, or raise that share."
+    ]
 
 
 def _section(name: str, guessed: dict[str, tuple[Any, str]] | None = None) -> str:
@@ -208,8 +231,9 @@ def _name(path: str, names: set[str]) -> str:
 
 def _crosses(guesses: Sequence[FieldGuess]) -> str:
     key = next(key for key in known_keys() if key.dotted == "crosses.paths")
-    names = _categories(guesses)
-    example = names[:2] if len(names) > 1 else ["route", "hour"]
+    categories = _own_names(guesses, "category")
+    names = [*categories, *_own_names(guesses, "quantity", "list"), *_own_names(guesses, "words")]
+    example = names[:2] if len(names) > 1 else ["one field", "another"]
     return "\n".join(
         [
             _remark(
@@ -222,12 +246,14 @@ def _crosses(guesses: Sequence[FieldGuess]) -> str:
     )
 
 
-def _categories(guesses: Iterable[FieldGuess]) -> list[str]:
-    return [g.path for g in guesses if g.active and g.kind == "category" and _name(g.path, set()) == g.path]
+def _own_names(guesses: Iterable[FieldGuess], *kinds: str) -> list[str]:
+    """Fields of these kinds whose name is their path."""
+    return [g.path for g in guesses if g.active and g.kind in kinds and _name(g.path, set()) == g.path]
 
 
 def _slice_remark(guesses: Sequence[FieldGuess], columns: Sequence[Column]) -> str:
-    sizes = {column.path: column.distinct for column in columns if column.path in _categories(guesses)}
+    categories = _own_names(guesses, "category")
+    sizes = {column.path: column.usual.distinct for column in columns if column.path in categories}
     few = [path for path, size in sizes.items() if size <= 20]
     return f"Candidates: {', '.join(_quoted(path) for path in few[:5])}." if few else ""
 

@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from stream.background import View
 from stream.errors import BadSettings
-from stream.fingerprint import differences, fingerprint_difference
+from stream.fingerprint import differences, fingerprint_difference, unlivable
 from stream.metrics import Progress
 from stream.rejects import RejectLog, RejectSink
 from stream.runs.model import Model
@@ -110,15 +110,25 @@ class LearningRun(Steps[Model]):
 
 
 def _check_pinned(settings: Settings, saved: Mapping[str, Any]) -> None:
-    lines = fingerprint_difference(settings.fingerprint(), saved["fingerprint"])
-    lines += differences(pinned(settings), saved["pinned"])
+    here, there = settings.fingerprint(), saved["fingerprint"]
+    now, then = pinned(settings), saved["pinned"]
+    lines = fingerprint_difference(here, there) + differences(now, then)
     if lines:
         raise BadSettings(
             "the checkpoint was made with other settings (here: now; there: in the checkpoint):\n  "
             + "\n  ".join(lines)
-            + "\nset them back to go on, take them with --accept-settings, or begin again in another "
-            "state.folder"
+            + f"\n{_cure(lines, unlivable(here, there, now, then))}, or begin again in another state.folder"
         )
+
+
+def _cure(lines: list[str], unlivable: list[str]) -> str:
+    """What to do about settings that differ, some of which no model lives through."""
+    if not unlivable:
+        return "set them back to go on, take them with --accept-settings"
+    keys = ", ".join(line.partition(":")[0] for line in unlivable)
+    if len(unlivable) == len(lines):
+        return f"set them back to go on, as a live model cannot take another {keys}"
+    return f"set {keys} back, which a live model cannot change, and take the rest with --accept-settings"
 
 
 def pinned(settings: Settings) -> dict[str, Any]:

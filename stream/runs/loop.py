@@ -10,6 +10,7 @@ from stream.errors import BadSettings, CannotCreate
 from stream.message import Source
 from stream.metrics import WindowRow
 from stream.runs.accepting import accept_settings
+from stream.runs.feeds import refuse_other_kind
 from stream.runs.learning import LearningRun
 from stream.runs.pacing import Pacer
 from stream.settings import Settings
@@ -59,6 +60,8 @@ def begin(
             f"{saved.path} was left by `bedload {by}`, and only that goes on from it: who else reads the "
             "feed keeps the place in another way. Give another state.folder"
         )
+    if position is not None and journalled:
+        refuse_other_kind(settings, position["source"])
     found, changes = accept_settings(settings, saved) if accept else (saved, [])
     run = LearningRun(settings, state.rejects, found.about, **options)
     run.restore(found.arrays)

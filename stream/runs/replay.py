@@ -46,6 +46,7 @@ def replay(
     one ends it at once. Raises what the stages raise; the last checkpoint is then whole.
     """
     refuse_unlearnable(settings)
+    _refuse_topic(settings)
     began = time.monotonic()
     with StateFolder(folder) as state, stop_on_signal() as stopping:
         checkpoints = Checkpoints(state.checkpoints, settings.state.keep_checkpoints)
@@ -82,6 +83,14 @@ def replay(
         )
 
 
+def _refuse_topic(settings: Settings) -> None:
+    if settings.feed.kind != "log":
+        raise BadSettings(
+            'replay reads logs: set feed.kind = "log" with feed.paths. A topic is learned by `bedload work`, '
+            "and again in the same order by `bedload replay --journal STATE`"
+        )
+
+
 def _learn(
     run: LearningRun,
     settings: Settings,
@@ -96,11 +105,6 @@ def _learn(
         raise BadSettings(
             f"the checkpoint is in epoch {run.epoch + 1}, beyond --epochs {epochs}: "
             f"give at least {run.epoch + 1}"
-        )
-    if settings.feed.kind != "log":
-        raise BadSettings(
-            'replay reads logs: set feed.kind = "log" with feed.paths. A topic is learned by `bedload work`, '
-            "and again in the same order by `bedload replay --journal STATE`"
         )
     while not stopping:
         source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)

@@ -12,7 +12,7 @@ from stream.checkpoints import Checkpoints
 from stream.errors import BadSettings
 from stream.journal import FILE_NAME
 from stream.message import LiveSource
-from stream.runs.feeds import live_source
+from stream.runs.feeds import live_source, refuse_other_kind
 from stream.runs.learning import LearningRun
 from stream.runs.loop import OnWindow, begin, learn, refuse_used
 from stream.runs.pacing import Pacer
@@ -68,6 +68,9 @@ def retrace(
         raise BadSettings(f"{folder} is the worker's own state folder: name another with --state")
     found = Checkpoints(worker / "checkpoints", 1).newest_manifest()
     most = None if found is None else int(found[1]["messages"])
+    stands_at = _source_position(found)
+    if stands_at is not None:
+        refuse_other_kind(settings, stands_at)
     with StateFolder(folder) as state, stop_on_signal() as stopping:
         checkpoints = Checkpoints(state.checkpoints, settings.state.keep_checkpoints)
         snapshots = Snapshots(state.snapshots, settings.state.keep_snapshots)
@@ -75,9 +78,7 @@ def retrace(
         run, warnings, resumed_from = begin(settings, state, checkpoints, journalled=True)
         _refuse_changed(run, found)
         pacer = Pacer(run, settings, checkpoints, most)
-        place = FollowedSource(
-            source or live_source(settings, known=_source_position(found)), worker / FILE_NAME
-        )
+        place = FollowedSource(source or live_source(settings, known=stands_at), worker / FILE_NAME)
 
         def over(read: bool) -> bool:
             if not read and not place.at_end():

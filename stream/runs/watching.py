@@ -45,7 +45,9 @@ class Watch:
     """
 
     def __init__(self, settings: Settings, stopping: list[int]) -> None:
-        self.figures = Figures(to_compile=not compiled_before(settings.learner.method))
+        self.figures = Figures(
+            message_s=time.monotonic(), to_compile=not compiled_before(settings.learner.method)
+        )
         self._worker = settings.worker
         self._stopping = stopping
         self._source: HasHealth | None = None
@@ -77,7 +79,7 @@ class Watch:
         if kind is None:
             self.say("stopped", **fields)
         else:  # its text may hold a part of a message, and goes to whoever called
-            code = error.exit_code if isinstance(error, BedloadError) else None
+            code = error.exit_code if isinstance(error, BedloadError) else _code_of_bug(error)
             self.say("failed", logging.ERROR, error=kind.__name__, exit_code=code, **fields)
         self._parts.close()
 
@@ -229,3 +231,9 @@ class WatchedPacer(LivePacer):
             self._watch.figures.checkpoint_failures += 1
             self._watch.say("checkpoint_failed", logging.ERROR, error=type(error).__name__, text=str(error))
             raise
+
+
+def _code_of_bug(error: BaseException | None) -> int | None:
+    """Of what is no error of ours: that of a bug, but for what the operating system or a person did."""
+    is_bug = isinstance(error, Exception) and not isinstance(error, OSError)
+    return BedloadError.exit_code if is_bug else None

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from stream.checkpoints import Checkpoints
+from stream.errors import BedloadError, Unavailable
 from stream.message import LiveSource
 from stream.metrics import WindowRow
 from stream.retention import Retention
@@ -22,7 +23,7 @@ from stream.runs.stopping import stop_on_signal
 from stream.runs.watching import Watch, WatchedPacer
 from stream.settings import Settings
 from stream.snapshots import Snapshots
-from stream.sources import JournalledSource
+from stream.sources import JournalledSource, Overwritten
 from stream.state_folder import StateFolder
 
 __all__ = ["WorkResult", "work"]
@@ -65,7 +66,8 @@ def work(
     says which can change). `on_window` is given each window's row, `warn` a line on what a person should
     know. `source`, `connect`: in place of the feed's own and its cluster's.
 
-    A signal ends it after the block at hand, with a checkpoint and a snapshot. Raises TryLater where another
+    A signal ends it after the block at hand, with a checkpoint and a snapshot, also while the feed is
+    waited for. Raises TryLater where another
     process holds the folder, and what the stages raise; the last checkpoint is then whole.
     """
     refuse_unlearnable(settings)
@@ -83,10 +85,15 @@ def work(
             for warning in (*_entry_delay(settings), *worker.warnings):
                 tell(warning)
             watch.opening(worker.run, feed)
-            worker.open(tell)
-            worker.live(until_end, on_window, tell)
+            if worker.open(tell):
+                worker.live(until_end, on_window, tell)
+            watch.ending()
             worker.pacer.checkpoint()
             return WorkResult(worker.result(time.monotonic() - began), place.passed_over)
+        except Overwritten:
+            with suppress(BedloadError):  # no journal can give again what was learned since the last one
+                worker.pacer.checkpoint()
+            raise
         finally:
             worker.close()
 
@@ -136,16 +143,22 @@ class _Worker:
         )
         self._first_snapshot = next((entry.name for entry in snapshots.list()), None)
 
-    def open(self, warn: Callable[[str], None]) -> None:
-        """Goes to where the run goes on."""
+    def open(self, warn: Callable[[str], None]) -> bool:
+        """Goes to where the run goes on; False where a signal came before the feed answered."""
         position = self.run.position
-        if position is None:
-            self._source.start()
-        else:
-            self._source.seek(dict(position))
+        try:
+            if position is None:
+                self._source.start()
+            else:
+                self._source.seek(dict(position))
+        except Unavailable:
+            if self._stopping:
+                return False
+            raise
         if self._source.cut_bytes:
             warn(f"the journal's last {self._source.cut_bytes} bytes were torn by a crash and are cut off")
         self._warn_of_gaps(warn)
+        return True
 
     def live(self, until_end: bool, on_window: OnWindow, warn: Callable[[str], None]) -> None:
         """Learns until a signal comes, or the end where one is wanted."""
@@ -169,7 +182,6 @@ class _Worker:
         with watch.waiting():
             while self._outbox is not None and not self._stopping and not self._outbox.try_sync():
                 time.sleep(IDLE_S)
-        watch.ending()
 
     def result(self, seconds: float) -> RunResult:
         """What it found, after the last checkpoint."""

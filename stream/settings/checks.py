@@ -216,6 +216,7 @@ def settings_problems(settings: Settings) -> list[Problem]:
         *_cross_problems(settings),
         *_slice_problems(settings),
         *_memory_problems(settings),
+        *_topic_problems(settings),
     ]
 
 
@@ -263,6 +264,16 @@ def _memory_problems(settings: Settings) -> Iterable[Problem]:
     if live is not None and live > 1 << bits:
         why = f"the space has only 2**{bits} = {1 << bits:,} addresses: this limit never acts; leave it out"
         yield ("state", "max_live"), why
+
+
+def _topic_problems(settings: Settings) -> Iterable[Problem]:
+    """A worker reads nothing that it wrote, and who reads scores finds no dead letters among them."""
+    feed, rejects, scores = settings.feed, settings.rejects.topic, settings.scores.topic
+    for section, topic in (("rejects", rejects), ("scores", scores)):
+        if feed.kind == "topic" and topic is not None and topic == feed.topic:
+            yield (section, "topic"), "is feed.topic too: the worker would read what it wrote; name another"
+    if scores is not None and scores == rejects:
+        yield ("scores", "topic"), "is rejects.topic too: scores and dead letters need a topic each"
 
 
 def _listed(names: Iterable[str]) -> str:

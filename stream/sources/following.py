@@ -179,7 +179,12 @@ class FollowSource:
         else:
             found = self._successor()
         if found is None:
-            raise BadSettings(f"file number {partition} of the log was read, and is not there. {CURE}")
+            name = f"{self._known[number]['name']}, " if number < len(self._known) else ""
+            raise BadSettings(
+                f"{name}file number {partition} of the log was read, and nothing that matches "
+                f"{', '.join(self._files.patterns)} (feed.paths) or was moved aside from there holds it now. "
+                f"{CURE}"
+            )
         return found
 
     def _go_on(self) -> bool:

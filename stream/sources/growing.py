@@ -10,11 +10,16 @@ from stream.errors import BadSettings
 from stream.message import Block
 from stream.sources.lines import HEAD_BYTES, LineReader, digest_of
 from stream.sources.opening import PlainStream, open_stream
+from stream.sources.recognising import copy_of
 
-__all__ = ["CURE", "GrowingFile"]
+__all__ = ["CURE", "GrowingFile", "Overwritten"]
 
 QUIET_S = 2.0
 CURE = "Put the log back as it was, or begin again with another state folder"
+
+
+class Overwritten(BadSettings):
+    """A file is not what was read of it any more. What was given out before is sound."""
 
 
 class GrowingFile:
@@ -113,9 +118,15 @@ class GrowingFile:
             return
         size = os.fstat(self._plain.fileno()).st_size
         if size < self.offset or os.pread(self._plain.fileno(), len(self._head), 0) != self._head:
-            raise BadSettings(
+            copy = copy_of(self.path, self.mark(None), self.offset)
+            cure = (
+                "put back the file with all that it held, or begin again with another state folder"
+                if copy is None
+                else f"{copy.name} begins like it and holds all that was read: start again, and that is read "
+                "to its end first"
+            )
+            raise Overwritten(
                 f"{self.name} was emptied or written over while it was followed: {self.offset:,} bytes were "
                 f"read, {size:,} are there. Lines written just before may be lost, so nothing more is "
-                "learned. Let logs be rotated by renaming; put back the file with all that it held, or begin "
-                "again with another state folder"
+                f"learned. Let logs be rotated by renaming; {cure}"
             )

@@ -16,7 +16,7 @@ from stream.sources.files import LogFile, matching_files
 from stream.sources.lines import HEAD_BYTES, digest_of
 from stream.sources.opening import open_stream
 
-__all__ = ["Recognition", "has_more", "is_blank"]
+__all__ = ["Recognition", "copy_of", "has_more", "is_blank"]
 
 Mark = Mapping[str, Any]
 
@@ -42,38 +42,38 @@ def is_blank(path: Path) -> bool:
     return len(head) < HEAD_BYTES and not head.strip()
 
 
+def copy_of(own: Path, mark: Mark, size: int) -> Path | None:
+    """What was moved aside from `own`, begins like the mark and has at least `size` bytes (plain files)."""
+    for path in _moved_aside(own):
+        if _known(path, [mark]) is not None and (path.suffix in (".gz", ".zst") or _size(path) >= size):
+            return path
+    return None
+
+
 class Recognition:
     """The files of a log on disk, known by their beginnings."""
 
     def __init__(self, patterns: Sequence[str], folder: Path) -> None:
-        self._patterns, self._folder = patterns, folder
+        self.patterns = patterns
+        self._folder = folder
 
     def matching(self) -> list[LogFile]:
         """Files that match now and are not empty, sorted; none where one is just being renamed."""
         try:
-            files = matching_files(self._patterns, self._folder)
+            files = matching_files(self.patterns, self._folder)
         except InputMissing:
             return []
         return [file for file in files if _size(file.path)]
 
     def known(self, path: Path, marks: Iterable[Mark]) -> Mark | None:
         """The mark that a file begins like; None for a file that was not read."""
-        head = _head(path)
-        digests: dict[int, str] = {}
-        for mark in marks:
-            length = mark["of_bytes"]
-            if 0 < length <= len(head):
-                if length not in digests:
-                    digests[length] = digest_of(head[:length])
-                if digests[length] == mark["sha256"]:
-                    return mark
-        return None
+        return _known(path, marks)
 
     def find(self, mark: Mark) -> Path | None:
         """Where the file of a mark is now: under its name, else under another that matches or follows it."""
         own = self._folder / str(mark["name"])
         matching = (file.path for file in self.matching())
-        for path in (own, *matching, *self._moved_aside(own)):
+        for path in (own, *matching, *_moved_aside(own)):
             if self.known(path, [mark]) is not None:
                 return path
         return None
@@ -82,16 +82,29 @@ class Recognition:
         """Names of files that were moved aside from `own` after `since_ns` and that no mark knows."""
         return [
             path.name
-            for path in self._moved_aside(own)
+            for path in _moved_aside(own)
             if _written_ns(path) > since_ns and not is_blank(path) and self.known(path, marks) is None
         ]
 
-    @staticmethod
-    def _moved_aside(own: Path) -> Iterator[Path]:
-        with suppress(OSError):
-            for path in sorted(own.parent.iterdir()):
-                if path.name.startswith(own.name) and ROTATED.fullmatch(path.name[len(own.name) :]):
-                    yield path
+
+def _known(path: Path, marks: Iterable[Mark]) -> Mark | None:
+    head = _head(path)
+    digests: dict[int, str] = {}
+    for mark in marks:
+        length = mark["of_bytes"]
+        if 0 < length <= len(head):
+            if length not in digests:
+                digests[length] = digest_of(head[:length])
+            if digests[length] == mark["sha256"]:
+                return mark
+    return None
+
+
+def _moved_aside(own: Path) -> Iterator[Path]:
+    with suppress(OSError):
+        for path in sorted(own.parent.iterdir()):
+            if path.name.startswith(own.name) and ROTATED.fullmatch(path.name[len(own.name) :]):
+                yield path
 
 
 def _head(path: Path) -> bytes:
