@@ -1,0 +1,1 @@
+"""How far a snapshot is from the batch optimum of a log."""
