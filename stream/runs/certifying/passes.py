@@ -30,7 +30,7 @@ from stream.tables import Table
 from stream.tables.lookup import Lookup
 from stream.weights import Weights
 
-__all__ = ["Findings", "Progress", "Scored", "examine"]
+__all__ = ["Findings", "Log", "Progress", "Scored", "examine"]
 
 BLOCK = 4_096
 LOOKED_AT = 20_000
@@ -108,7 +108,7 @@ class Findings:
         return max(self.objective - self.bound, 0.0)
 
 
-class _Log:
+class Log:
     """A log as batches, as often as wanted."""
 
     def __init__(self, settings: Settings, paths: tuple[str, ...], folder: Path) -> None:
@@ -182,7 +182,7 @@ def examine(
 ) -> Findings:
     """Goes through the log twice. `strength`: per example, > 0. Raises BadData without labelled messages of
     both labels, and what reading raises."""
-    log = _Log(settings, paths, folder)
+    log = Log(settings, paths, folder)
     sums, scored = _Sums(_frequent_of(log, progress)), Scored()
     lookup = Lookup(weights)
     for batch in log.batches("gradients", progress):
@@ -230,7 +230,7 @@ def examine(
     )
 
 
-def _frequent_of(log: _Log, progress: Progress) -> npt.NDArray[np.uint64]:
+def _frequent_of(log: Log, progress: Progress) -> npt.NDArray[np.uint64]:
     """Addresses in most of the first messages, ascending."""
     parts = [batch.addresses.copy() for batch in log.batches("frequent tokens", progress, LOOKED_AT)]
     found, counts = np.unique(np.concatenate([np.empty(0, np.uint64), *parts]), return_counts=True)
