@@ -61,7 +61,7 @@ def refine(
         entries += int(kept.sum())
         if entries * ENTRY_BYTES > memory_bytes:
             raise CannotCreate(
-                f"refining holds the log in memory: {entries:,} tokens of its first {log.messages:,} messages "
+                f"refining holds the log in memory: {entries:,} tokens of its first {log.messages:,} "
                 f"take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer files"
             )
         fresh, first = np.unique(batch.addresses, return_index=True)
