@@ -120,6 +120,14 @@ def test_rejects_that_went_to_a_topic_are_counted_and_said_to_be_there(lines, tm
         assert "they went to rejects.topic" in capsys.readouterr().err
 
 
+def test_before_the_first_snapshot_a_reader_is_told_when_a_worker_leaves_one(tmp_path, capsys):
+    StateFolder(tmp_path / "state").close()
+    assert main(["snapshots", "show", "--state", str(tmp_path / "state")]) == 66
+    assert "`bedload work` leaves one every worker.snapshot_every_s" in capsys.readouterr().err
+    assert main(["snapshots", "list", "--state", str(tmp_path / "absent")]) == 66
+    assert "`bedload work` and `bedload replay` make one" in capsys.readouterr().err
+
+
 # ---- work and replay --journal -----------------------------------------------------------------------------
 
 
