@@ -95,6 +95,8 @@ def make_folder(folder: Path) -> None:
     with os_errors("create", folder):
         missing = [folder, *folder.parents]
         for path in reversed(missing):
+            if path.is_file():
+                raise CannotCreate(f"{path} is a file: a folder is wanted there; name another place")
             if not path.is_dir():
                 os.mkdir(path, 0o700)
                 _sync_folder(path.parent)

@@ -10,6 +10,7 @@
     ├── TryLater                 75  somebody else holds the state folder
     ├── NoPermission             77  the operating system refused
     └── BadSettings              78  settings are wrong, or do not match the state
+        └── MessagesGone         78  messages that are to be read were removed from their topic
 
 A message names place, value, limit and cure, in one or two sentences.
 """
@@ -23,6 +24,7 @@ __all__ = [
     "CannotCreate",
     "FileTrouble",
     "InputMissing",
+    "MessagesGone",
     "NoPermission",
     "TryLater",
     "Unavailable",
@@ -88,3 +90,14 @@ class BadSettings(BedloadError):
     """Settings are wrong, or do not match the state they are used with."""
 
     exit_code = 78
+
+
+class MessagesGone(BadSettings):
+    """Messages that are to be read were removed from their topic; `loss` says which, without a cure."""
+
+    def __init__(self, loss: str) -> None:
+        super().__init__(
+            f"{loss}: retention is shorter than the worker was behind. Go on without them by "
+            "--on-gap skip, or begin again with a fresh state folder"
+        )
+        self.loss = loss

@@ -59,10 +59,10 @@ def drafted(tmp_path):
     return _drafted
 
 
-def rejects_of(settings):
-    """What a run over the settings' own feed would reject."""
+def rejects_of(settings, *, ids=True, times=True):
+    """What a run over the settings' own feed would reject, where ids and times are read or not."""
     source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
-    decoder = Decoder(settings, ids=True, times=True)
+    decoder = Decoder(settings, ids=ids, times=times)
     rejects = []
     while len(block := source.read(10_000)):
         rejects += decoder.decode(block)[1]
@@ -393,9 +393,13 @@ def drafted_with_odd(tmp_path):
         ("parcel", {"weight": "2 kg"}, '"parcel.weight": 1 of 1,000 values is text; it will be rejected.'),
         ("parcel", {"tags": "wet"}, '"parcel.tags": 1 of 1,000 values is text; it will be rejected.'),
         ("parcel", {"tags": [1.5]}, '"parcel.tags": 1 of 1,000 values is a list whose items are not all'),
-        ("id", [1], '"id": 1 of 1,000 values is a list; it will be rejected.'),
-        ("at", "soon", '"at": 1 of 1,000 values is a text that is no RFC 3339 time; it will be rejected.'),
-        ("at", True, '"at": 1 of 1,000 values is true or false; it will be rejected.'),
+        ("id", [1], '"id": 1 of 1,000 values is a list; it will be learned, and rejected by `bedload score`'),
+        ("at", "soon", '"at": 1 of 1,000 values is a text that is no RFC 3339 time; it will be learned, but'),
+        (
+            "at",
+            True,
+            '"at": 1 of 1,000 values is true or false; it will be learned, but `bedload tune`',
+        ),
     ],
 )
 def test_one_value_of_a_wrong_type_changes_no_guess_and_is_told(drafted_with_odd, key, bad, told):
@@ -409,6 +413,8 @@ def test_one_value_of_a_wrong_type_changes_no_guess_and_is_told(drafted_with_odd
     assert doubt.startswith(told)
     assert doubt in text.replace("\n# ", " ")
     assert [reject.row for reject in rejects] == [500]
+    learned = rejects_of(settings, ids=False, times=False) == []
+    assert learned == ("will be learned" in doubt)
 
 
 def test_what_the_field_takes_as_well_is_not_called_a_reject(drafted_with_odd):
@@ -430,10 +436,11 @@ def test_as_many_as_stop_a_run_are_told_so(drafted_with_odd):
     messages = courier(1_000)
     for place in range(6):
         messages[100 * place]["note"] = place
-        messages[100 * place + 1]["at"] = "soon"
+        messages[100 * place + 1]["route"] = 1.5
+        messages[100 * place + 2]["at"] = "soon"  # which is learned
     text, _, (first, *others), rejects = drafted_with_odd(messages)
     assert first.startswith("With 12 of 1,000 lines rejected, more than message.max_reject_share = 0.01")
-    assert len(others) == 2 and len(rejects) == 12
+    assert len(others) == 3 and len(rejects) == 18
     assert first in text.split("\n\n")[0].replace("\n# ", " ")
 
 

@@ -202,6 +202,14 @@ def test_text_lines_stay_on_one_line():
     assert re.fullmatch(r'\S+Z warning note text="one\\ntwo\\u001b\[31m" part=stream\.x\n', out.getvalue())
 
 
+def test_a_warning_is_called_that_once():
+    out = io.StringIO()
+    with log_lines("text", out):
+        fields = {"event": "warning", "fields": {"text": "watch out"}}
+        logging.getLogger("stream.x").warning("warning", extra=fields)
+    assert re.fullmatch(r'\S+Z warning text="watch out"\n', out.getvalue())
+
+
 # ---- a worker --------------------------------------------------------------------------------------------
 
 
@@ -305,6 +313,7 @@ def test_a_worker_is_watched_from_its_start_to_its_stop(tmp_path, capsys):
     for event in ("began", "live", "progress", "feed_away", "feed_back", "stopping"):
         assert event in events
     assert lines[-1]["messages"] == 503
+    assert "messages" not in lines[events.index("began")]
     with pytest.raises(OSError, match="refused"):
         ask(port, "/metrics")
 

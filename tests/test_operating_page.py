@@ -70,6 +70,27 @@ def only(container, word):
     return found
 
 
+# ---- first start -----------------------------------------------------------------------------------------
+
+
+def test_the_keys_of_the_first_start_load_and_are_kept_by_no_default(tmp_path):
+    (text,) = blocks("toml")
+    (tmp_path / "bedload.toml").write_text(text + FIELDS)
+    found = load(tmp_path / "bedload.toml", environ={})
+    assert found.feed.kind == "topic" and found.feed.servers and found.feed.start
+    assert None not in (found.feed.topic, found.learner.horizon, found.rejects.topic, found.scores.topic)
+    assert found.worker.metrics_port is not None
+
+
+def test_the_calls_of_the_first_start_are_taken_and_the_proof_is_another_folder_than_the_worker():
+    lines = [line for text in blocks("sh") for line in text.splitlines()]
+    calls = [parsed(shlex.split(line)) for line in lines if line.startswith("bedload")]
+    assert [name for name, _ in calls] == ["init", "replay", "work", "snapshots", "replay"]
+    worker, proof = calls[2][1]["state"], calls[4][1]
+    assert proof["journal"] == worker != proof["state"]
+    assert {"handoffs.rejected", "handoffs.scored"} <= {word for line in lines for word in line.split()}
+
+
 # ---- metrics and alerts ----------------------------------------------------------------------------------
 
 

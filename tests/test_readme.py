@@ -32,3 +32,10 @@ def test_the_session_is_what_demo_prints(tmp_path: Path) -> None:
     assert any(TIMES.fullmatch(line) for line in lines)
     wrong = [line for line in lines if line not in printed and not TIMES.fullmatch(line)]
     assert wrong == []
+
+
+def test_the_proof_of_a_worker_is_made_in_another_folder_than_its_own() -> None:
+    text = README.read_text("utf-8")
+    ((worker, proof),) = re.findall(r"^bedload replay --journal (\S+) --state (\S+)", text, re.MULTILINE)
+    assert f"bedload work --state {worker} " in text
+    assert proof != worker

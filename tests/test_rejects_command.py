@@ -13,7 +13,7 @@ import pytest
 from stream.cli.main import main
 from stream.runs.work import work
 from stream.state_folder import StateFolder
-from tests.memory_topic import MemoryPublisher
+from tests.memory_topic import MemoryPublisher, MemoryTopic, offset_of
 from tests.replays import config_for, courier_lines, last_checkpoint, settings_for
 
 ROOT = Path(__file__).parent.parent
@@ -120,6 +120,14 @@ def test_rejects_that_went_to_a_topic_are_counted_and_said_to_be_there(lines, tm
         assert "they went to rejects.topic" in capsys.readouterr().err
 
 
+def test_before_the_first_snapshot_a_reader_is_told_when_a_worker_leaves_one(tmp_path, capsys):
+    StateFolder(tmp_path / "state").close()
+    assert main(["snapshots", "show", "--state", str(tmp_path / "state")]) == 66
+    assert "`bedload work` leaves one every worker.snapshot_every_s" in capsys.readouterr().err
+    assert main(["snapshots", "list", "--state", str(tmp_path / "absent")]) == 66
+    assert "`bedload work` and `bedload replay` make one" in capsys.readouterr().err
+
+
 # ---- work and replay --journal -----------------------------------------------------------------------------
 
 
@@ -167,6 +175,23 @@ def test_replay_of_a_topic_names_the_commands_for_it_and_removes_nothing(worked,
     assert main(["replay", "--config", worked, "--fresh", *topic]) == 78
     assert "`bedload work`" in capsys.readouterr().err
     assert last_checkpoint(Path(worked).parent / "state") == before
+
+
+def test_a_state_that_is_a_file_is_told_apart_from_a_broken_disk(worked, tmp_path, capsys):
+    (tmp_path / "state").write_text("a list of depots")
+    for state in (tmp_path / "state", tmp_path / "state/inner"):
+        assert main(["work", "--config", worked, "--state", str(state), "--until-end"]) == 73
+        assert f"{tmp_path / 'state'} is a file" in capsys.readouterr().err
+    assert (tmp_path / "state").read_text() == "a list of depots"
+
+
+def test_messages_that_were_passed_over_are_told_at_the_end_too(worked, tmp_path, capsys, monkeypatch):
+    topic = MemoryTopic([[b'{"note": "gate code", "redelivered": true}'] * 9], on_gap="skip")
+    topic.start()
+    topic.log_starts[0] = offset_of(4)
+    monkeypatch.setattr("stream.runs.work.live_source", lambda *_, **__: topic)
+    told = output(capsys, "work", "--config", worked, "--state", tmp_path / "state", "--until-end")
+    assert f"{offset_of(4)} messages were removed before they were read: passed over" in told
 
 
 @pytest.mark.parametrize("call", ["work", "work --accept-settings", "replay --fresh --journal"])

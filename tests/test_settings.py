@@ -159,6 +159,11 @@ def test_broken_toml_is_told_with_its_line(tmp_path, content, line):
 # ---- topics ------------------------------------------------------------------------------------------------
 
 
+def test_all_that_a_topic_needs_is_told_at_once(write):
+    told = [line.split(": ")[1] for line in refusal(write(TOPIC))]
+    assert told == ["feed.servers", "feed.topic", "feed.start"]
+
+
 def test_one_file_serves_a_topic_and_its_recorded_logs(write):
     path = write(TOPIC + 'servers = "h:1"\ntopic = "t"\npaths = "t/*.jsonl"\nstart = "latest"\n')
     assert load(path, environ={}).feed.kind == "topic"
@@ -252,6 +257,7 @@ CROSSES = "[[crosses]]\n"
 CROSS_1 = "paths of [[crosses]] number 1"
 SPACE_20 = "[space]\naddress_bits = 20\n"
 TOPIC = '[feed]\nkind = "topic"\n'
+BEGUN = TOPIC + 'start = "earliest"\n'
 TWO_PLACES = 'password_file = "a"\npassword_variable = "A"'
 SASL = '[feed]\nsasl = "PLAIN"\n'
 TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
@@ -260,8 +266,8 @@ TRUNCATED = '[learner]\nmethod = "truncated-gradient"\n'
 @pytest.mark.parametrize(
     ("text", "key", "why"),
     [
-        (TOPIC + 'topic = "a"', "feed.servers", "at least one host:port"),
-        (TOPIC + 'servers = "h:1"', "feed.topic", "name the topic"),
+        (BEGUN + 'topic = "a"', "feed.servers", "at least one host:port"),
+        (BEGUN + 'servers = "h:1"', "feed.topic", "name the topic"),
         ('[feed]\nkind = "queue"', 'feed.kind = "queue"', '"log" or "topic"'),
         ('[feed]\nservers = "h"', 'feed.servers (item 1) = "h"', "must be host:port"),
         ('[feed]\nservers = "h:0"', 'feed.servers (item 1) = "h:0"', "must be host:port"),

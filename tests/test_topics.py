@@ -10,11 +10,11 @@ import uuid
 import pytest
 from kafka import KafkaAdminClient, KafkaConsumer, KafkaProducer, TopicPartition
 from kafka.admin import NewPartitions
-from kafka.errors import RetriableError
+from kafka.errors import CoordinatorNotAvailableError, KafkaTimeoutError, RetriableError
 
 from stream.errors import BadSettings, FileTrouble, InputMissing, NoPermission, Unavailable
 from stream.settings import Settings
-from stream.topics import Publisher, Secrets, TopicSource, client, reading
+from stream.topics import Publisher, Secrets, TopicSource, client, opening, reading
 from tests.broker import start_or_skip
 from tests.broker.filling import Filler
 
@@ -955,3 +955,54 @@ def test_a_cluster_that_is_away_is_told_when_a_publisher_is_made():
     with pytest.raises(Unavailable, match="see to the brokers"):
         Publisher(settings.feed, Secrets(settings, {}))
     wait_for(lambda: not set(threading.enumerate()) - before, "no thread is left")
+
+
+# ---- words: no broker needed -----------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("error", "cause", "told"),
+    [
+        (KafkaTimeoutError("no answer"), "", "KafkaTimeoutError: no answer"),
+        (KafkaTimeoutError("KafkaTimeoutError: no answer"), "", "KafkaTimeoutError: no answer"),
+        (KafkaTimeoutError(), "", "KafkaTimeoutError"),
+        (CoordinatorNotAvailableError(), "", "CoordinatorNotAvailableError"),
+        (OSError("no route"), "connection refused", "OSError: no route; connection refused"),
+    ],
+)
+def test_why_the_cluster_is_away_is_said_once(monkeypatch, error, cause, told):
+    monkeypatch.setattr(client.TROUBLES, "last", cause)
+    with pytest.raises(client.Away) as caught, client.translated(feed_of(["h:1"], "t").feed):
+        raise error
+    assert str(caught.value) == told
+
+
+@pytest.mark.parametrize(
+    ("error", "level"),
+    [("CoordinatorNotAvailableError", logging.INFO), ("KafkaTimeoutError: gone", logging.WARNING)],
+)
+def test_that_nobody_ever_committed_to_a_cluster_is_no_warning(caplog, error, level):
+    class Cluster:
+        def starts(self, partitions):
+            return dict.fromkeys(partitions, 0)
+
+        ends = starts
+
+        def committed(self, group, partitions):
+            raise client.Away(error)
+
+    caplog.set_level(logging.INFO)
+    feed = feed_of(["h:1"], "t", group="depot").feed
+    opening.opened_new(feed, Cluster(), client.Identity("c", "i", (0,)))
+    assert [record.levelno for record in caplog.records] == [level]
+
+
+def test_topics_that_are_written_to_are_named_by_their_keys_where_they_do_not_answer(monkeypatch):
+    def away(*options):
+        raise client.Away("nobody there")
+
+    monkeypatch.setattr("stream.topics.publisher.open_producer", away)
+    settings = feed_of(["h:1"], "t")
+    with pytest.raises(Unavailable, match=r"rejects\.topic and scores\.topic are there") as caught:
+        Publisher(settings.feed, Secrets(settings))
+    assert "start again" not in str(caught.value)

@@ -3,6 +3,7 @@
 import json
 import os
 import random
+import shutil
 import signal
 import time
 
@@ -124,6 +125,23 @@ def test_a_first_start_without_a_place_to_begin_is_refused(broker, filled, tmp_p
     settings = settings_of(broker, filled, feed={"start": None})
     with pytest.raises(BadSettings, match=r"feed\.start is missing"):
         work(settings, tmp_path / "state", until_end=True)
+
+
+def test_a_journal_whose_messages_are_gone_is_followed_from_a_later_checkpoint_of_the_worker(
+    broker, filled, lines, tmp_path
+):
+    settings = settings_of(broker, filled)
+    work(settings, tmp_path / "state", until_end=True)
+    send(broker, filled, lines[:400])
+    broker.delete_records(filled, {1: 20})
+    with pytest.raises(BadSettings, match="20 offsets were removed") as refused:
+        retrace(settings, tmp_path / "again", tmp_path / "state")
+    assert "--on-gap" not in str(refused.value)
+    assert "--resume" in str(refused.value)
+    for name in ("checkpoints", "rejects"):
+        shutil.copytree(tmp_path / "state" / name, tmp_path / "later" / name)
+    work(settings, tmp_path / "state", until_end=True)
+    assert retrace(settings, tmp_path / "later", tmp_path / "state", resume=True).differences == []
 
 
 def test_messages_that_retention_removed_are_refused_or_noted_as_a_gap(broker, filled, lines, tmp_path):

@@ -309,7 +309,7 @@ def _stored(config: Path | None, state: Path | None) -> Snapshots:
 
     folder = state_folder(config, state)
     if not folder.is_dir():
-        raise InputMissing(f"{folder}: no such state folder; `bedload replay` makes one")
+        raise InputMissing(f"{folder}: no such state folder; `bedload work` and `bedload replay` make one")
     return Snapshots(folder / "snapshots", keep=1)
 
 

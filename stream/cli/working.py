@@ -10,7 +10,7 @@ from stream.cli.compiling import note_compiling
 from stream.cli.inputs import settings_from
 from stream.cli.learning import WindowTable, show_summary
 from stream.cli.options import AcceptSettings, AsJson, Changes, Config, StateFolder
-from stream.cli.screen import show_json
+from stream.cli.screen import count, show_json
 from stream.errors import UsageError
 
 if TYPE_CHECKING:
@@ -67,6 +67,8 @@ def work(
     else:
         table.begin()
         show_summary(found)
+        if found["passed_over"]:
+            print(f"{count(found['passed_over'])} messages were removed before they were read: passed over")
 
 
 def _no_window(row: WindowRow) -> None:

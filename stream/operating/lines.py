@@ -77,7 +77,9 @@ class _Text(logging.Formatter):
     def format(self, record: logging.LogRecord) -> str:
         event, fields = _parts(record)
         told = " ".join(f"{name}={_plain(value)}" for name, value in fields.items())
-        return f"{_time(record)} {record.levelname.lower()} {event} {told}".rstrip()
+        level = record.levelname.lower()
+        head = event if event == level else f"{level} {event}"
+        return f"{_time(record)} {head} {told}".rstrip()
 
 
 def _plain(value: Any) -> str:

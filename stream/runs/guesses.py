@@ -39,8 +39,8 @@ class FieldGuess:
     rejected: frozenset[int] = frozenset()
 
 
-def rejects(column: Column, use: Use) -> tuple[str, frozenset[int]]:
-    """What to say of the odd values that `use` does not take, and their rows in the sample."""
+def rejects(column: Column, use: Use, fate: str = "will be rejected") -> tuple[str, frozenset[int]]:
+    """What to say of the odd values that `use` does not take, and their rows; `fate`: what they meet."""
     odd = {row: name for row, name in column.odd.items() if name not in use.kinds}
     if not odd:
         return "", frozenset()
@@ -51,7 +51,7 @@ def rejects(column: Column, use: Use) -> tuple[str, frozenset[int]]:
     ]
     are, they = ("is", "it") if len(odd) == 1 else ("are each", "they")
     what = f"{len(odd):,} of {count:,} values {are} {' or '.join(names)}"
-    text = f'"{column.path}": {what}; {they} will be rejected.'
+    text = f'"{column.path}": {what}; {they} {fate}.'
     return text, frozenset(odd)
 
 

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from stream.checkpoints import Checkpoints
-from stream.errors import BadSettings
+from stream.errors import BadSettings, MessagesGone
 from stream.journal import FILE_NAME
 from stream.message import LiveSource
 from stream.runs.feeds import live_source, refuse_other_kind
@@ -26,6 +26,10 @@ from stream.state_folder import StateFolder
 __all__ = ["Retraced", "retrace"]
 
 IDLE_S = 0.05
+LATER = (
+    "Copy {checkpoint} of the worker into checkpoints/ of an empty folder, and its rejects/ beside it, name "
+    "that folder with --state, and go on from there with --resume"
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -93,6 +97,11 @@ def retrace(
             pacer.checkpoint()
             weights = run.model.weights()
             snapshot = snapshots.write(run.messages, weights, run.about_snapshot())
+        except MessagesGone as error:
+            raise BadSettings(
+                f"{error.loss}, so that what the worker learned can no longer be learned again from its "
+                f"beginning. {LATER.format(checkpoint='a checkpoint past that place')}"
+            ) from None
         finally:
             place.close()
             run.rejects.close()
@@ -121,9 +130,8 @@ def _refuse_changed(run: LearningRun, found: tuple[Path, Mapping[str, Any]] | No
         since = accepted[-1]["messages"] if accepted else 0
         raise BadSettings(
             f"the worker's settings changed last after {since:,} messages (--accept-settings), and what it "
-            "learned before cannot be learned again under the present ones. Copy its checkpoint "
-            f"{since:015d} or a later one, and its rejects/, into the folder that --state names, and go on "
-            "from there with --resume"
+            "learned before cannot be learned again under the present ones. "
+            + LATER.format(checkpoint=f"checkpoint {since:015d} or a later one")
         )
 
 

@@ -25,6 +25,8 @@ BAD_LABELS = MessagePaths().max_reject_share
 FEW_MESSAGES = 20
 """Below this many messages, different values in each are no sign of an id."""
 NO_TIME = "a text that is no RFC 3339 time"
+BAD_ID = "will be learned, and rejected by `bedload score`"
+BAD_TIME = "will be learned, but `bedload tune` is told no time by it"
 ODD_TIME = replace(TIME, kinds=TIME.kinds - {"text"})  # any number is a time; an odd text is not
 
 
@@ -76,7 +78,7 @@ def _id(columns: Sequence[Column]) -> Role:
         f"different in every message{found[0][2]}" if found else "",
         "No path is different in every message.",
     )
-    return _with_rejects(role, found[0][1], ID) if found else role
+    return _with_doubt(role, found[0][1], ID, BAD_ID) if found else role
 
 
 def _time(columns: Sequence[Column]) -> Role:
@@ -98,7 +100,7 @@ def _time(columns: Sequence[Column]) -> Role:
         f"a time in every message{found[0][2]}" if found else "",
         "No path holds a time in every message.",
     )
-    return _with_rejects(role, found[0][1], ODD_TIME) if found else role
+    return _with_doubt(role, found[0][1], ODD_TIME, BAD_TIME) if found else role
 
 
 def _flaws(messages: int, absent: int, repeats: int) -> str:
@@ -107,9 +109,9 @@ def _flaws(messages: int, absent: int, repeats: int) -> str:
     return f" but {' and '.join(told)}" if told else ""
 
 
-def _with_rejects(role: Role, column: Column, use: Use) -> Role:
-    doubt, rows = rejects(column, use)
-    return replace(role, remark=" ".join(filter(None, [role.remark, doubt])), doubt=doubt, rejected=rows)
+def _with_doubt(role: Role, column: Column, use: Use, fate: str) -> Role:
+    doubt, _ = rejects(column, use, fate)
+    return replace(role, remark=" ".join(filter(None, [role.remark, doubt])), doubt=doubt)
 
 
 def _label(columns: Sequence[Column], all_columns: Sequence[Column]) -> Role:
@@ -181,7 +183,10 @@ def _weight(columns: Sequence[Column]) -> Role:
     if similar:
         absent = f"{similar[0]} was taken for a property of the message, not for an example weight."
     role = _role([c.path for c in found], "numbers, none negative", absent)
-    return _with_rejects(role, found[0], WEIGHT) if found else role
+    if not found:
+        return role
+    doubt, rows = rejects(found[0], WEIGHT)
+    return replace(role, remark=" ".join(filter(None, [role.remark, doubt])), doubt=doubt, rejected=rows)
 
 
 def _role(paths: list[str], why: str, absent: str) -> Role:

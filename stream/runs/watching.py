@@ -97,7 +97,10 @@ class Watch:
         self._source = source if isinstance(source, HasHealth) else None
         self._take(run)
         self.figures.phase = "opening"
-        self.say("resumed" if run.position is not None else "began", messages=run.messages)
+        if run.position is None:
+            self.say("began")
+        else:
+            self.say("resumed", messages=run.messages)
 
     def opened(self) -> None:
         """The feed is open: what the journal holds behind the checkpoint comes first."""

@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "CONFLICT",
+    "START",
     "Problem",
     "dotted_path",
     "edges",
@@ -37,6 +38,10 @@ Problem = tuple[tuple[str | int, ...], str]
 
 REFUSED = "refused"
 CONFLICT = "conflict"
+START = (
+    'a first start on a topic needs to know where to begin; set it to "earliest", "latest" or an RFC 3339 '
+    "time"
+)
 _UNREADABLE = re.compile(r'[\x00-\x1f"\\]')
 _CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f]")
 
@@ -135,6 +140,8 @@ def feed_problems(feed: Feed) -> list[Problem]:
             problems.append((("servers",), "is missing: a topic needs at least one host:port"))
         if feed.topic is None:
             problems.append((("topic",), "is missing: name the topic to read"))
+        if problems and feed.start is None:  # alone it is not: who goes on from a checkpoint needs none
+            problems.append((("start",), f"is missing: {START}"))
     if len(set(feed.partitions)) < len(feed.partitions):
         problems.append((("partitions",), "names a partition twice"))
     for name in ("ca_file", "cert_file", "key_file"):

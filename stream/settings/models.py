@@ -174,7 +174,10 @@ class MessagePaths(Section):
         description="Largest share of rejected messages; a run that goes past it stops.",
     )
     rejects_allowed_before: Whole = Field(
-        default=1_000, ge=0, description="Messages before max_reject_share is looked at."
+        default=1_000,
+        ge=0,
+        description="Messages before the share of a whole run is judged; a window that is judged by itself "
+        "has at least so many, and ends the run as soon as it has more rejects than its share allows.",
     )
 
 

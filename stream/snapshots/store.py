@@ -109,7 +109,10 @@ class Snapshots:
                 passed_over.append(str(error))
         if passed_over:
             raise BadData(f"{self.folder}: no snapshot is whole: {'; '.join(passed_over)}")
-        raise InputMissing(f"{self.folder}: there is no snapshot yet; `bedload replay` leaves one")
+        raise InputMissing(
+            f"{self.folder}: there is no snapshot yet; `bedload work` leaves one every "
+            "worker.snapshot_every_s and at its stop, `bedload replay` at its end"
+        )
 
     def find(self, name: str) -> Path:
         """The folder of a snapshot by its name, or by its number without the zeros. Raises InputMissing."""

@@ -15,6 +15,7 @@ Checked against kafka-python 3.0.12, whose ways the rest of the house need not k
 from __future__ import annotations
 
 import logging
+import re
 import uuid
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -117,7 +118,7 @@ def translated(feed: Feed) -> Iterator[None]:
     except errors.UnsupportedCodecError as error:
         raise BadSettings(
             f"topic {feed.topic} is compressed in a way that is not installed here ({error}): "
-            "`pip install 'bedload[compression]'` adds lz4 and snappy"
+            "`pip install lz4 python-snappy` in the environment of Bedload adds lz4 and snappy"
         ) from None
     except (errors.AuthorizationError, errors.SaslAuthenticationFailedError) as error:
         raise NoPermission(
@@ -130,7 +131,16 @@ def translated(feed: Feed) -> Iterator[None]:
         cause = TROUBLES.last
         if feed.sasl and "socket disconnected" in cause:  # the answer is lost when a closed socket follows it
             cause += " (a user or password that the broker refuses looks like this too)"
-        raise Away(f"{type(error).__name__}: {error}; {cause}") from None
+        raise Away("; ".join(filter(None, (_told(error), cause)))) from None
+
+
+def _told(error: Exception) -> str:
+    """Kind and text of an error; those of the library name their kind themselves, often more than once."""
+    kind, text = type(error).__name__, str(error).strip()
+    named = re.compile(rf"(?:\[Error \S+\] )?{kind}:?\s*")
+    while match := named.match(text):
+        text = text[match.end() :]
+    return f"{kind}: {text}" if text else kind
 
 
 class Client:

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from stream.errors import BadSettings
+from stream.errors import BadSettings, MessagesGone
 from stream.message import Position
 from stream.settings.models import Feed
 from stream.topics.client import Away, Client, Identity
@@ -91,15 +91,13 @@ def check_identity(feed: Feed, identity: Identity, cluster: str | None, topic_id
         )
 
 
-def gap_refused(feed: Feed, gaps: Sequence[Gap]) -> BadSettings:
+def gap_refused(feed: Feed, gaps: Sequence[Gap]) -> MessagesGone:
     """The error for messages that are gone before they were read."""
     size = sum(last - first for _, first, last in gaps)
     told = "; ".join(f"partition {p}: {first:,} to {last:,}" for p, first, last in gaps[:5])
     more = f"; and {len(gaps) - 5:,} further partitions" if len(gaps) > 5 else ""
-    return BadSettings(
-        f"topic {feed.topic}: {size:,} offsets were removed from the log before they were read ({told}"
-        f"{more}): retention is shorter than the worker was behind. Go on without them by "
-        "--on-gap skip, or begin again with a fresh state folder"
+    return MessagesGone(
+        f"topic {feed.topic}: {size:,} offsets were removed from the log before they were read ({told}{more})"
     )
 
 
@@ -145,7 +143,9 @@ def _warn_of_commits(feed: Feed, client: Client, ours: Mapping[int, int], whose:
     try:
         committed = client.committed(feed.group, list(ours))
     except Away as away:
-        log.warning("what is committed to group %s is not known: %s", feed.group, away)
+        new = "CoordinatorNotAvailable" in str(away)  # nobody ever committed to this cluster
+        level = logging.INFO if new else logging.WARNING
+        log.log(level, "what is committed to group %s is not known: %s", feed.group, away)
         return
     for partition, offset in sorted(committed.items()):
         if offset > ours[partition] or whose.startswith("feed.start"):

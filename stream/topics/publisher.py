@@ -108,6 +108,6 @@ class Publisher:
 
     def _unavailable(self, why: str) -> Unavailable:
         return Unavailable(
-            f"{', '.join(self._feed.servers)}: {why}; see to the brokers and "
-            "whether the topic is there, and start again"
+            f"{', '.join(self._feed.servers)}: {why}; see to the brokers and whether the topics of "
+            "rejects.topic and scores.topic are there: they are never made"
         )

@@ -17,6 +17,7 @@ import numpy as np
 
 from stream.errors import BadSettings, Unavailable
 from stream.message import Block, Position
+from stream.settings.checks import START
 from stream.settings.models import Feed
 from stream.topics.access import Secrets
 from stream.topics.lanes import Lane, Last
@@ -83,10 +84,7 @@ class TopicSource:
     def start(self) -> None:
         """Goes to where feed.start says."""
         if self._feed.start is None:
-            raise BadSettings(
-                "feed.start is missing: a first start on a topic needs to know where to begin; set it to "
-                '"earliest", "latest" or an RFC 3339 time'
-            )
+            raise BadSettings(f"feed.start is missing: {START}")
         self._last = {}
         self._open(Order(lambda client, identity: opened_new(self._feed, client, identity)))
 
