@@ -18,6 +18,7 @@ STAGES = {
     "learners",
     "tables",
     "metrics",
+    "optimality",
     "snapshots",
     "reports",
     "operating",

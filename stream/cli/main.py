@@ -11,7 +11,7 @@ from typing import Annotated
 
 import typer
 
-from stream.cli import demo, learning, rejecting, scoring, simulating, stored, tuning, working
+from stream.cli import certifying, demo, learning, rejecting, scoring, simulating, stored, tuning, working
 from stream.cli.exits import exit_code_of
 
 __all__ = ["app", "main", "run"]
@@ -47,7 +47,7 @@ def bedload(
     """
 
 
-for commands in (demo, learning, working, tuning, scoring, stored, rejecting, simulating):
+for commands in (demo, learning, working, tuning, certifying, scoring, stored, rejecting, simulating):
     commands.add_to(app)
 
 

@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from stream.runs.explaining import Explanation
     from stream.runs.scoring import Scored, Scorer
 
-__all__ = ["add_to", "show_explanation", "show_scores"]
+__all__ = ["add_to", "log_pattern", "show_explanation", "show_scores"]
 
 Logs = Annotated[
     list[str] | None,
@@ -195,19 +195,19 @@ def _scorer(logs: list[str] | None, config: Path | None, state: Path | None, nam
     from stream.runs.scoring import Scorer
 
     settings = None if config is None else settings_from(config, None)
-    paths = [_pattern(text) for text in logs or ["-"]]
+    paths = [log_pattern(text) for text in logs or ["-"]]
     scorer = Scorer(read_snapshot_of(config, state, name), paths, settings)
     note_compiling("rows")
     return scorer
 
 
-def _pattern(text: str) -> str:
+def log_pattern(text: str, without: str = "to read standard input") -> str:
     """A file's name as a pattern that finds it alone; others as they are. InputMissing without any file."""
     if text == "-" or glob.glob(text):
         return text
     if os.path.exists(text):
         return glob.escape(text)
-    raise InputMissing(f"{text}: no such log: correct the name, or leave it out to read standard input")
+    raise InputMissing(f"{text}: no such log: correct the name, or leave it out {without}")
 
 
 def _tell_rejects(scorer: Scorer) -> None:

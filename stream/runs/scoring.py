@@ -22,7 +22,7 @@ from stream.snapshots import Snapshot
 from stream.sources import LogSource
 from stream.tables.lookup import Lookup
 
-__all__ = ["Scored", "ScoredBlock", "Scorer", "json_lines", "score"]
+__all__ = ["Scored", "ScoredBlock", "Scorer", "json_lines", "must_match", "score", "settings_of"]
 
 BLOCK = 4_096
 """Messages read at once."""
@@ -63,8 +63,8 @@ class Scorer:
     """
 
     def __init__(self, snapshot: Snapshot, paths: Sequence[str], settings: Settings | None = None) -> None:
-        self.settings = settings or _settings_of(snapshot)
-        _must_match(self.settings, snapshot)
+        self.settings = settings or settings_of(snapshot)
+        must_match(self.settings, snapshot)
         self.lookup = Lookup(snapshot.weights)
         self.intercept = float(snapshot.weights.intercept)
         self.messages = 0
@@ -144,16 +144,19 @@ def json_lines(lines: list[Scored]) -> bytes:
     return msgspec.json.Encoder().encode_lines(lines)
 
 
-def _settings_of(snapshot: Snapshot) -> Settings:
+def settings_of(snapshot: Snapshot) -> Settings:
+    """The settings stored in a snapshot. Raises BadSettings where they are not known here."""
     try:
         return Settings.model_validate(snapshot.about.settings)
     except ValueError as error:
         raise BadSettings(
-            f"{snapshot.path}: the settings stored in it are not known here; give --config: {error}"
+            f"{snapshot.path}: the settings stored in it are not known here; give --config, and to certify "
+            f"--strength: {error}"
         ) from None
 
 
-def _must_match(settings: Settings, snapshot: Snapshot) -> None:
+def must_match(settings: Settings, snapshot: Snapshot) -> None:
+    """Raises BadSettings with the difference where `settings` have another feature space."""
     lines = fingerprint_difference(settings.fingerprint(), snapshot.weights.fingerprint)
     if lines:
         raise BadSettings(

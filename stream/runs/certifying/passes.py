@@ -4,7 +4,8 @@ First a look at the beginning of the log: its most frequent coordinates. Pass on
 snapshot and takes the gradient in every coordinate, with the full curvature of the frequent ones. From these
 come weights nearer to the optimum: a Newton step where the curvature is full, a damped step for each
 coordinate elsewhere. Pass two takes the residuals and gradients of those; the bound is made of them, since
-scaling down the snapshot's own gives one that is valid but tells little (docs/proof.md has both).
+scaling down the snapshot's own gives one that is valid but tells little (docs/proof.md has both). It also
+takes names and exact gradients, with the intercept made optimal, of what seemed worst in pass one.
 """
 
 from __future__ import annotations
@@ -21,8 +22,9 @@ from stream.decoding import Decoder
 from stream.errors import BadData
 from stream.features import Batcher
 from stream.message import Block
-from stream.optimality.bound import best_intercept, log_losses, lower_bound, probabilities
+from stream.optimality.bound import Bound, best_intercept, log_losses, lower_bound, probabilities
 from stream.optimality.sums_kernel import add_sums, gather_sums, solve_model
+from stream.runs.certifying.worst import Watched, Worst
 from stream.settings import Settings
 from stream.settings.models import State
 from stream.sources import LogSource
@@ -37,6 +39,7 @@ LOOKED_AT = 20_000
 FREQUENT = 1_000
 DAMPING = 0.3
 ROUNDS = 200
+WORST = 20
 Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, float | None], None]
 
@@ -77,9 +80,9 @@ class Findings:
     """What two passes found; figures per unit of example weight, in nats.
 
     `mean_loss`: of the snapshot with its intercept made optimal for the log, `shift` away from its own;
-    `penalty`: strength * sum of |weights|; `plain_bound`: from the snapshot's own residuals, `bound`: the better
-    of that and the one from nearby weights; `addresses` uint64[n], all of the log, ascending; `gradient`
-    float64[n] of the mean loss at the snapshot.
+    `penalty`: strength * sum of |weights|; `plain_bound`: from the snapshot's own residuals, `bound`: the
+    better of that and the one from nearby weights; `coordinates`: different addresses in the log;
+    `worst`: those that break the conditions of an optimum most, with that intercept.
     """
 
     messages: int
@@ -93,8 +96,8 @@ class Findings:
     plain_bound: float
     bound: float
     scale: float
-    addresses: npt.NDArray[np.uint64]
-    gradient: Floats
+    coordinates: int
+    worst: tuple[Worst, ...]
     scored: Scored
 
     @property
@@ -179,9 +182,12 @@ def examine(
     weights: Weights,
     strength: float,
     progress: Progress = lambda stage, fraction: None,
+    *,
+    on_sum: float = 0.0,
 ) -> Findings:
-    """Goes through the log twice. `strength`: per example, > 0. Raises BadData without labelled messages of
-    both labels, and what reading raises."""
+    """Goes through the log twice. `strength`: per example; `on_sum`: on the sum of the losses of all messages
+    that the weights learned, each at the mean weight of the log's; not both 0. Raises BadData without
+    labelled messages of both labels or where the log changes on the way, and what reading raises."""
     log = Log(settings, paths, folder)
     sums, scored = _Sums(_frequent_of(log, progress)), Scored()
     lookup = Lookup(weights)
@@ -190,44 +196,83 @@ def examine(
         scored.add(batch, margins)
         sums.add(batch, margins)
     labels, example_weights, margins = scored.labels, scored.weights, scored.margins
-    total = float(example_weights.sum())
-    positive = float(example_weights[labels == 1].sum())
-    if not 0.0 < positive < total:
-        raise BadData(
-            f"the log has {len(labels):,} labelled messages with weight, of one label only: there is no batch "
-            "fit to compare with. Check message.label"
-        )
+    total = _total_of_both(labels, example_weights)
+    strength += on_sum / ((weights.learned or len(labels)) * total / len(labels))
     shift = best_intercept(margins, labels, example_weights)
     mean_loss = float((log_losses(margins + shift, labels) * example_weights).sum()) / total
     addresses, (up, down, curve) = sums.found()
     plain = lower_bound(margins, labels, example_weights, up, down, strength)
+    # A token that is present counts 1: its curvature says how its gradient moves with the intercept.
+    watched = Watched(addresses, (down - up + shift * curve) / total, weights, strength)
     pull = float((example_weights * (probabilities(margins) - labels)).sum())
     near = _nearer(weights, addresses, (up, down, curve), sums, pull, strength * total)
-    other, near_scored = _Sums(np.empty(0, np.uint64)), Scored()
-    lookup = Lookup(near)
-    for batch in log.batches("bound", progress):
-        near_margins, _ = lookup.score(batch)
-        near_scored.add(batch, near_margins)
-        other.add(batch, near_margins)
-    _, (near_up, near_down, _) = other.found()
-    better = lower_bound(near_scored.margins, labels, example_weights, near_up, near_down, strength)
+    pulls = example_weights * (probabilities(margins + shift) - labels)
+    better = _second(log, near, scored, watched, pulls, strength, progress)
     best = max(plain, better, key=lambda bound: bound.value)
     return Findings(
-        log.messages,
-        len(labels),
-        log.rejected,
-        total,
-        strength,
-        mean_loss,
-        strength * float(np.abs(weights.values.astype(np.float64)).sum()),
-        shift,
-        plain.value,
-        best.value,
-        best.scale,
-        addresses,
-        (down - up) / total,
-        scored,
+        messages=log.messages,
+        labelled=len(labels),
+        rejected=log.rejected,
+        total_weight=total,
+        strength=strength,
+        mean_loss=mean_loss,
+        penalty=strength * float(np.abs(weights.values.astype(np.float64)).sum()),
+        shift=shift,
+        plain_bound=plain.value,
+        bound=best.value,
+        scale=best.scale,
+        coordinates=len(addresses),
+        worst=watched.worst(total, WORST),
+        scored=scored,
     )
+
+
+def _second(
+    log: Log,
+    near: Weights,
+    scored: Scored,
+    watched: Watched,
+    pulls: Floats,
+    strength: float,
+    progress: Progress,
+) -> Bound:
+    """The bound from the residuals of `near`; `watched` is given each batch with its part of `pulls`."""
+    sums, margins_of = _Sums(np.empty(0, np.uint64)), Scored()
+    lookup, labels, before, done = Lookup(near), scored.labels, log.messages, 0
+    for batch in log.batches("bound", progress):
+        margins, _ = lookup.score(batch)
+        margins_of.add(batch, margins)
+        sums.add(batch, margins)
+        there = batch.labels >= 0
+        end = done + int(there.sum())
+        if not np.array_equal(batch.labels[there], labels[done:end]):
+            raise _changed(before, log.messages)
+        of_batch = np.zeros(len(batch))
+        of_batch[there] = pulls[done:end]
+        watched.add(batch, of_batch)
+        done = end
+    if log.messages != before or not np.array_equal(margins_of.weights, scored.weights):
+        raise _changed(before, log.messages)
+    _, (up, down, _) = sums.found()
+    return lower_bound(margins_of.margins, labels, scored.weights, up, down, strength)
+
+
+def _changed(before: int, now: int) -> BadData:
+    return BadData(
+        f"the log changed between two readings: {before:,} messages, then others within {now:,}. Give files "
+        "that nothing is written to any more"
+    )
+
+
+def _total_of_both(labels: npt.NDArray[np.int8], weights: Floats) -> float:
+    """Total example weight. Raises BadData where not both labels have some: the batch fit has no end then."""
+    total, positive = float(weights.sum()), float(weights[labels == 1].sum())
+    if not 0.0 < positive < total:
+        raise BadData(
+            f"the log has {len(labels):,} labelled messages, and not both labels have weight there: no batch "
+            "fit to compare with. Check message.label, or give a longer log"
+        )
+    return total
 
 
 def _frequent_of(log: Log, progress: Progress) -> npt.NDArray[np.uint64]:

@@ -1,0 +1,90 @@
+"""Gradients and weights in; the coordinates that break the conditions of an optimum most, with names, out.
+
+At an optimum the gradient of the mean loss is -strength * sign(weight) where a weight is not zero, and within
++-strength where it is (docs/proof.md). How much a coordinate breaks that is its violation.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from stream.batch import Batch
+from stream.weights import Weights
+
+__all__ = ["Watched", "Worst", "violations"]
+
+CANDIDATES = 200
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Worst:
+    """A coordinate, its `name` as tokens are hashed, and by how much it breaks its condition, nats a unit."""
+
+    address: int
+    name: bytes
+    weight: float
+    gradient: float
+    violation: float
+
+
+def violations(weights: Floats, gradient: Floats, strength: float) -> Floats:
+    """How far each gradient is from where an optimum has it: float64[n]."""
+    of_zero = np.maximum(np.abs(gradient) - strength, 0.0)
+    return np.where(weights == 0.0, of_zero, np.abs(gradient + strength * np.sign(weights)))
+
+
+class Watched:
+    """Coordinates that seem to break their conditions most: their exact gradients, and names, from a pass.
+
+    `addresses` uint64[n], ascending, of the log, with their `gradient` as far as it is known. Coordinates of
+    `weights` that the log lacks are watched too: their gradient is 0, so that weights there cost for nothing.
+    """
+
+    def __init__(
+        self, addresses: npt.NDArray[np.uint64], gradient: Floats, weights: Weights, strength: float
+    ) -> None:
+        every = np.union1d(addresses, weights.addresses)
+        here, slope = np.zeros(len(every)), np.zeros(len(every))
+        here[np.searchsorted(every, weights.addresses)] = weights.values
+        slope[np.searchsorted(every, addresses)] = gradient
+        seem = np.argsort(-violations(here, slope, strength), kind="stable")[:CANDIDATES]
+        chosen = np.sort(seem)
+        self._addresses, self._weights, self._strength = every[chosen], here[chosen], strength
+        self._sums = np.zeros(len(chosen))
+        known = dict(zip(weights.addresses.tolist(), weights.names, strict=True))
+        self._names = [known.get(address, b"") for address in self._addresses.tolist()]
+
+    def add(self, batch: Batch, pulls: Floats) -> None:
+        """`pulls` float64[m]: of each example its weight times (probability - label); 0 without a label."""
+        if not len(self._addresses):
+            return
+        places = np.searchsorted(self._addresses, batch.addresses)
+        places[places == len(self._addresses)] = 0
+        entries = np.flatnonzero(self._addresses[places] == batch.addresses)
+        rows = np.searchsorted(batch.row_ptr, entries, side="right") - 1
+        found = places[entries]
+        self._sums += np.bincount(found, pulls[rows] * batch.values[entries], len(self._sums))
+        for place, first in zip(*np.unique(found, return_index=True), strict=True):
+            if not self._names[place]:
+                self._names[place] = batch.text(int(entries[first]))
+
+    def worst(self, total: float, most: int) -> tuple[Worst, ...]:
+        """The `most` worst that break their conditions at all, worst first; `total` example weight."""
+        gradient = self._sums / total
+        broken = violations(self._weights, gradient, self._strength)
+        order = np.argsort(-broken, kind="stable")[:most]
+        return tuple(
+            Worst(
+                int(self._addresses[i]),
+                self._names[i],
+                float(self._weights[i]),
+                float(gradient[i]),
+                float(broken[i]),
+            )
+            for i in order.tolist()
+            if broken[i] > 0.0
+        )
