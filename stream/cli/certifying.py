@@ -9,7 +9,8 @@ import typer
 
 from stream.cli.compiling import note_compiling
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
-from stream.cli.options import AsJson, Config, Name, StateFolder
+from stream.cli.options import AsJson, Config, Name, StateFolder, size_of
+from stream.cli.outputs import check_output
 from stream.cli.scoring import log_pattern
 from stream.cli.screen import Column, count, decimal, note, share, show_json, show_table, stage_bar
 from stream.cli.stored import read_snapshot_of
@@ -44,6 +45,22 @@ def certify(
             help="Strength of the batch fit, as l1_per_example; that of the snapshot by default.",
         ),
     ] = None,
+    refine: Annotated[
+        bool, typer.Option("--refine", help="Then find the batch optimum itself; the log must fit memory.")
+    ] = False,
+    fresh: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--fresh", metavar="LOG", help="With --refine: a later log, to see what refining is worth."
+        ),
+    ] = None,
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", metavar="FOLDER", help="With --refine: a snapshot of the optimum; new."),
+    ] = None,
+    memory: Annotated[
+        str, typer.Option("--memory", metavar="SIZE", help="With --refine: memory for the log.")
+    ] = "4GB",
     as_json: AsJson = False,
 ) -> None:
     """Bound how far a snapshot is from the batch optimum of a log.
@@ -54,6 +71,11 @@ def certify(
 
     if strength is not None and not 0.0 <= strength < float("inf"):
         raise UsageError(f"--strength {strength:g}: give a number above 0")
+    if not refine and (fresh or out is not None):
+        raise UsageError("--fresh and --out are about the batch optimum: give --refine too")
+    memory_bytes = size_of(memory, "--memory")
+    if out is not None:
+        check_output(out, new=True)
     settings, paths, folder = _log(logs, config)
     snapshot = read_snapshot_of(config, state, name)
     note_compiling("sums_kernel")
@@ -66,11 +88,31 @@ def certify(
             strength=strength,
             progress=lambda stage, fraction: tell(fraction or 0.0, stage),
         )
-    document = found.to_json()
+        refined = None
+        if refine:
+            from stream.runs.certifying.worth import worth
+
+            refined = worth(
+                snapshot,
+                found,
+                tuple(paths),
+                folder,
+                settings,
+                tuple(log_pattern(text, "for no comparison") for text in fresh or ()),
+                memory_bytes,
+                lambda stage, fraction: tell(fraction or 0.0, stage),
+            )
+    document = found.to_json() | ({} if refined is None else refined.to_json())
+    if out is not None and refined is not None:
+        from stream.snapshots import write_snapshot
+
+        write_snapshot(out, snapshot.messages, refined.refined.weights, snapshot.about)
     if as_json:
         show_json(document)
     else:
         _show(document)
+        if refined is not None:
+            _show_refined(document, out)
     if found.findings.rejected:
         note(f"bedload: {count(found.findings.rejected)} rejected messages were left out")
 
@@ -112,6 +154,26 @@ def _show(found: dict[str, Any]) -> None:
     )
     _show_worst(found["worst"])
     _show_windows(found)
+
+
+def _show_refined(found: dict[str, Any], out: Path | None) -> None:
+    gained = found["objective"] - found["refined_objective"]
+    print(
+        f"\nbatch optimum: objective {found['refined_objective']:.{DIGITS}f}, proved to within "
+        f"{found['refined_gap']:.1e}; {count(found['refined_nnz'])} non-zero weights\n"
+        f"The snapshot is {gained:.{DIGITS}f} nats a message above it "
+        f"({share(gained / found['refined_objective'])}); {count(found['refined_changed'])} weights came, went "
+        "or changed sign."
+    )
+    if found["fresh_messages"] is not None:
+        before, after = found["fresh_log_loss"], found["fresh_log_loss_refined"]
+        verdict = "better" if after < before else "no better"
+        print(
+            f"On {count(found['fresh_messages'])} fresh messages: log loss {before:.5f} as it is, "
+            f"{after:.5f} refined: {verdict} by {abs(after - before):.5f}."
+        )
+    if out is not None:
+        print(f"Snapshot of the optimum: {out}")
 
 
 def _shifted(shift: float) -> str:

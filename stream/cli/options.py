@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 from typing import Annotated
 
 import typer
 
-__all__ = ["AcceptSettings", "AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder"]
+from stream.errors import UsageError
+
+__all__ = ["AcceptSettings", "AsJson", "AsJsonLines", "Changes", "Config", "Name", "StateFolder", "size_of"]
 
 Config = Annotated[
     Path | None,
@@ -40,3 +43,15 @@ AcceptSettings = Annotated[
         help="Go on with other settings than before: [learner], bounds of [state], more fields or crosses.",
     ),
 ]
+
+UNITS = {"": 1, "KB": 10**3, "MB": 10**6, "GB": 10**9}
+
+
+def size_of(text: str, option: str) -> int:
+    """Bytes that `text` says, a number with KB, MB, GB or nothing. Raises UsageError for another text."""
+    match = re.fullmatch(r"([0-9]+(?:\.[0-9]+)?) ?(|KB|MB|GB)", text.upper())
+    if match is None or not float(match[1]) > 0:
+        raise UsageError(
+            f"{option} takes bytes, or a number with KB, MB or GB, for example 4GB; got {text!r}"
+        )
+    return int(float(match[1]) * UNITS[match[2]])

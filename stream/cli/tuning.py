@@ -15,7 +15,7 @@ import typer
 from stream.cli.compiling import note_compiling
 from stream.cli.inputs import DEFAULT_CONFIG, settings_from
 from stream.cli.learning import write_new
-from stream.cli.options import AsJson, Changes, Config
+from stream.cli.options import AsJson, Changes, Config, size_of
 from stream.cli.outputs import check_folder, check_output
 from stream.cli.screen import Column, count, decimal, note, show_json, show_table, stage_bar, visible
 from stream.errors import UsageError
@@ -24,8 +24,6 @@ if TYPE_CHECKING:
     from stream.runs.tuning.choosing import Rule
 
 __all__ = ["add_to"]
-
-UNITS = {"": 1, "KB": 10**3, "MB": 10**6, "GB": 10**9}
 
 
 class Pick(StrEnum):
@@ -133,7 +131,7 @@ def tune(
         truth=truth,
         workers=workers,
         cluster=cluster,
-        memory_bytes=_bytes(memory, "--memory"),
+        memory_bytes=size_of(memory, "--memory"),
     )
     note_compiling("ftrl_lanes" if settings.learner.method == "ftrl" else "truncated_gradient_lanes")
     with stage_bar() as tell:
@@ -262,7 +260,7 @@ def _rule(pick: Pick, max_weights: int | None, max_bytes: str | None) -> Rule:
     if max_weights is not None:
         return Rule("max_weights", max_weights)
     if max_bytes is not None:
-        return Rule("max_bytes", _bytes(max_bytes, "--max-bytes"))
+        return Rule("max_bytes", size_of(max_bytes, "--max-bytes"))
     return Rule(pick.value)
 
 
@@ -282,12 +280,3 @@ def _forward(text: str | None) -> tuple[float | None, int | None]:
             f"2031-03-03T06:00:00Z; got {text!r}"
         )
     return share, None
-
-
-def _bytes(text: str, option: str) -> int:
-    match = re.fullmatch(r"([0-9]+(?:\.[0-9]+)?) ?(|KB|MB|GB)", text.upper())
-    if match is None or not float(match[1]) > 0:
-        raise UsageError(
-            f"{option} takes bytes, or a number with KB, MB or GB, for example 4GB; got {text!r}"
-        )
-    return int(float(match[1]) * UNITS[match[2]])

@@ -1,0 +1,75 @@
+"""A certificate and its log in; the refined weights, what they cost and what they are worth, out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from stream.runs.certifying.certify import Certificate
+from stream.runs.certifying.passes import Progress
+from stream.runs.certifying.refining import Refined, fresh_loss, refine
+from stream.runs.scoring import settings_of
+from stream.settings import Settings
+from stream.snapshots import Snapshot
+
+__all__ = ["Worth", "worth"]
+
+
+@dataclass(frozen=True, slots=True)
+class Worth:
+    """`refined`, and on `fresh_messages` labelled messages of other logs the log loss before and after."""
+
+    refined: Refined
+    changed: int
+    fresh_messages: int | None
+    fresh_before: float | None
+    fresh_after: float | None
+
+    def to_json(self) -> dict[str, Any]:
+        """As JSON types; the gap in nats a message."""
+        solution = self.refined.solution
+        return {
+            "refined_objective": solution.objective,
+            "refined_lower_bound": solution.bound,
+            "refined_gap": solution.gap,
+            "refined_nnz": len(self.refined.weights),
+            "refined_steps": solution.steps,
+            "refined_changed": self.changed,
+            "fresh_messages": self.fresh_messages,
+            "fresh_log_loss": self.fresh_before,
+            "fresh_log_loss_refined": self.fresh_after,
+        }
+
+
+def worth(
+    snapshot: Snapshot,
+    certificate: Certificate,
+    paths: tuple[str, ...],
+    folder: Path,
+    settings: Settings | None,
+    fresh: tuple[str, ...],
+    memory_bytes: int,
+    progress: Progress,
+) -> Worth:
+    """Refines the snapshot on the log until the gap is 1e-6 of the objective.
+
+    `fresh`: patterns of logs that neither learned from, or none. Raises what `refine` and reading raise.
+    """
+    reading = settings or settings_of(snapshot)
+    strength = certificate.l1_per_example
+    refined = refine(reading, paths, folder, snapshot.weights, strength, memory_bytes, progress)
+    before = dict(
+        zip(snapshot.weights.addresses.tolist(), np.sign(snapshot.weights.values).tolist(), strict=True)
+    )
+    after = dict(
+        zip(refined.weights.addresses.tolist(), np.sign(refined.weights.values).tolist(), strict=True)
+    )
+    changed = sum(before.get(address) != after.get(address) for address in before.keys() | after.keys())
+    if not fresh:
+        return Worth(refined, changed, None, None, None)
+    models = snapshot.weights, refined.weights
+    messages, (one, two) = fresh_loss(reading, fresh, Path(), models, progress)
+    return Worth(refined, changed, messages, one, two)
