@@ -162,8 +162,8 @@ def _show_refined(found: dict[str, Any], out: Path | None) -> None:
         f"\nbatch optimum: objective {found['refined_objective']:.{DIGITS}f}, proved to within "
         f"{found['refined_gap']:.1e}; {count(found['refined_nnz'])} non-zero weights\n"
         f"The snapshot is {gained:.{DIGITS}f} nats a message above it "
-        f"({share(gained / found['refined_objective'])}); {count(found['refined_changed'])} weights came, went "
-        "or changed sign."
+        f"({share(gained / found['refined_objective'])}); {count(found['refined_changed'])} weights came, "
+        "went or changed sign."
     )
     if found["fresh_messages"] is not None:
         before, after = found["fresh_log_loss"], found["fresh_log_loss_refined"]

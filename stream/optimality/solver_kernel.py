@@ -76,8 +76,8 @@ def descend(
 
     `columns` int64[k], with `weights`, `gradient` and `curvature` float64[k] of each; `curve` float64[m] of
     each example; `pull` the gradient in the intercept; all of sums over examples. `step` float64[k] and
-    `moved` float64[m], zeros, are filled: the change of weights, and of margins. Ends after `rounds` passes, or
-    when the largest gain of a pass is under `tolerance` of the first's.
+    `moved` float64[m], zeros, are filled: the change of weights, and of margins. Ends after `rounds` passes,
+    or when the largest gain of a pass is under `tolerance` of the first's.
     """
     total_curve = curve.sum()
     shift, first = 0.0, 0.0
