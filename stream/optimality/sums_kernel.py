@@ -53,7 +53,8 @@ def add_sums(
         if labels[example] < 0:
             continue
         p, weight = sigmoid(margins[example]), weights[example]
-        up = weight * (1.0 - p) if labels[example] == 1 else 0.0
+        # not 1 - p: the bound scales residuals up, and with them what that would have lost
+        up = weight * sigmoid(-margins[example]) if labels[example] == 1 else 0.0
         down = weight * p if labels[example] == 0 else 0.0
         curve = weight * p * (1.0 - p)
         count = 0
