@@ -8,8 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from stream.errors import BadData, BadSettings, UsageError
-from stream.optimality.bound import log_losses
-from stream.runs.certifying.passes import Findings, Progress, Scored, examine
+from stream.runs.certifying.passes import Findings, Progress, examine
 from stream.runs.certifying.worst import Worst
 from stream.runs.scoring import must_match, settings_of
 from stream.settings import Settings
@@ -104,7 +103,7 @@ def certify(
     weights = snapshot.weights
     found = examine(reading, tuple(paths), folder or Path(), weights, per_example, progress, on_sum=on_sum)
     _check_rejects(found, reading)
-    windows = last_windows(found.scored, found.shift, reading.metrics.window)
+    windows = last_windows(found, reading.metrics.window)
     return Certificate(snapshot.path, len(weights), found, windows)
 
 
@@ -129,18 +128,18 @@ def _share_pressed(learner: Learner, learned: int) -> float:
     return learner.horizon / learned
 
 
-def last_windows(scored: Scored, shift: float, size: int) -> tuple[Window, ...]:
+def last_windows(found: Findings, size: int) -> tuple[Window, ...]:
     """The last whole windows of `size` labelled messages, counted back from the end of the log."""
-    labels, weights = scored.labels, scored.weights
-    losses = log_losses(scored.margins + shift, labels) * weights
-    found = []
-    for back in range(min(WINDOWS, len(labels) // size), 0, -1):
-        first = len(labels) - back * size
+    weights = found.example_weights
+    losses = found.losses * weights
+    windows = []
+    for back in range(min(WINDOWS, len(losses) // size), 0, -1):
+        first = len(losses) - back * size
         part = slice(first, first + size)
         weight = float(weights[part].sum())
         mean = float(losses[part].sum()) / weight if weight > 0 else None
-        found.append(Window(first + 1, first + size, mean))
-    return tuple(found)
+        windows.append(Window(first + 1, first + size, mean))
+    return tuple(windows)
 
 
 def _check_rejects(found: Findings, settings: Settings) -> None:

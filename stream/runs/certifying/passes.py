@@ -1,7 +1,8 @@
 """A snapshot and a log in; its objective, gradients and a bound on the batch optimum out, in two passes.
 
-First a look at the beginning of the log: its most frequent coordinates. Pass one scores the log with the
-snapshot and takes the gradient in every coordinate, with the full curvature of the frequent ones. From these
+First a look at the beginning of the log: its most frequent coordinates, and the intercept that fits it. Pass
+one scores the log with the snapshot and takes the gradient in every coordinate, with the full curvature of
+the frequent ones. From these
 come weights nearer to the optimum: a Newton step where the curvature is full, a damped step for each
 coordinate elsewhere. Pass two takes the residuals and gradients of those; the bound is made of them, since
 scaling down the snapshot's own gives one that is valid but tells little (docs/proof.md has both). It also
@@ -11,7 +12,7 @@ takes names and exact gradients, with the intercept made optimal, of what seemed
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -39,6 +40,7 @@ LOOKED_AT = 20_000
 FREQUENT = 1_000
 DAMPING = 0.3
 ROUNDS = 200
+FARTHEST = 1e3
 WORST = 20
 Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, float | None], None]
@@ -81,8 +83,9 @@ class Findings:
 
     `mean_loss`: of the snapshot with its intercept made optimal for the log, `shift` away from its own;
     `penalty`: strength * sum of |weights|; `plain_bound`: from the snapshot's own residuals, `bound`: the
-    better of that and the one from nearby weights; `coordinates`: different addresses in the log;
-    `worst`: those that break the conditions of an optimum most, with that intercept.
+    better of that and the one from nearby weights; `coordinates`: addresses in labelled messages;
+    `worst`: those that break the conditions of an optimum most; `losses`: float64[labelled], like
+    `example_weights`; all with that intercept.
     """
 
     messages: int
@@ -98,7 +101,8 @@ class Findings:
     scale: float
     coordinates: int
     worst: tuple[Worst, ...]
-    scored: Scored
+    losses: Floats
+    example_weights: Floats
 
     @property
     def objective(self) -> float:
@@ -189,8 +193,10 @@ def examine(
     that the weights learned, each at the mean weight of the log's; not both 0. Raises BadData without
     labelled messages of both labels or where the log changes on the way, and what reading raises."""
     log = Log(settings, paths, folder)
-    sums, scored = _Sums(_frequent_of(log, progress)), Scored()
-    lookup = Lookup(weights)
+    frequent, moved = _look(log, weights, progress)
+    begun = replace(weights, intercept=weights.intercept + moved)
+    sums, scored = _Sums(frequent), Scored()
+    lookup = Lookup(begun)
     for batch in log.batches("gradients", progress):
         margins, _ = lookup.score(batch)
         scored.add(batch, margins)
@@ -199,13 +205,13 @@ def examine(
     total = _total_of_both(labels, example_weights)
     strength += on_sum / ((weights.learned or len(labels)) * total / len(labels))
     shift = best_intercept(margins, labels, example_weights)
-    mean_loss = float((log_losses(margins + shift, labels) * example_weights).sum()) / total
+    losses = log_losses(margins + shift, labels)
     addresses, (up, down, curve) = sums.found()
     plain = lower_bound(margins, labels, example_weights, up, down, strength)
     # A token that is present counts 1: its curvature says how its gradient moves with the intercept.
     watched = Watched(addresses, (down - up + shift * curve) / total, weights, strength)
     pull = float((example_weights * (probabilities(margins) - labels)).sum())
-    near = _nearer(weights, addresses, (up, down, curve), sums, pull, strength * total)
+    near = _nearer(begun, addresses, (up, down, curve), sums, pull, strength * total)
     pulls = example_weights * (probabilities(margins + shift) - labels)
     better = _second(log, near, scored, watched, pulls, strength, progress)
     best = max(plain, better, key=lambda bound: bound.value)
@@ -215,15 +221,16 @@ def examine(
         rejected=log.rejected,
         total_weight=total,
         strength=strength,
-        mean_loss=mean_loss,
+        mean_loss=float((losses * example_weights).sum()) / total,
         penalty=strength * float(np.abs(weights.values.astype(np.float64)).sum()),
-        shift=shift,
+        shift=moved + shift,
         plain_bound=plain.value,
         bound=best.value,
         scale=best.scale,
         coordinates=len(addresses),
         worst=watched.worst(total, WORST),
-        scored=scored,
+        losses=losses,
+        example_weights=example_weights,
     )
 
 
@@ -275,11 +282,16 @@ def _total_of_both(labels: npt.NDArray[np.int8], weights: Floats) -> float:
     return total
 
 
-def _frequent_of(log: Log, progress: Progress) -> npt.NDArray[np.uint64]:
-    """Addresses in most of the first messages, ascending."""
-    parts = [batch.addresses.copy() for batch in log.batches("frequent tokens", progress, LOOKED_AT)]
-    found, counts = np.unique(np.concatenate([np.empty(0, np.uint64), *parts]), return_counts=True)
-    return np.sort(found[np.argsort(-counts, kind="stable")[:FREQUENT]])
+def _look(log: Log, weights: Weights, progress: Progress) -> tuple[npt.NDArray[np.uint64], float]:
+    """Of the first messages: addresses in most of them, ascending; by how much their intercept is off."""
+    scored, lookup = Scored(), Lookup(weights)
+    parts = [np.empty(0, np.uint64)]
+    for batch in log.batches("frequent tokens", progress, LOOKED_AT):
+        scored.add(batch, lookup.score(batch)[0])
+        parts.append(batch.addresses.copy())
+    found, counts = np.unique(np.concatenate(parts), return_counts=True)
+    most = np.sort(found[np.argsort(-counts, kind="stable")[:FREQUENT]])
+    return most, best_intercept(scored.margins, scored.labels, scored.weights)
 
 
 def _nearer(
@@ -310,13 +322,14 @@ def _nearer(
     step = np.zeros(len(known))
     solve_model(np.append(gradient[at], pull), full, np.append(here[at], 0.0), strength, step, ROUNDS)
     moved[at] = here[at] + step[:-1]
+    moved = np.clip(np.nan_to_num(moved), -FARTHEST, FARTHEST)  # any weights do for the bound
     some = np.flatnonzero(moved.astype(np.float32))
     return Weights(
         addresses[some],
         moved[some].astype(np.float32),
         (b"",) * len(some),
         np.zeros(len(some)),
-        weights.intercept + float(step[-1]),
+        weights.intercept + float(np.clip(step[-1], -FARTHEST, FARTHEST)),
         weights.learned,
         weights.fingerprint,
     )
