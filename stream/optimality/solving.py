@@ -92,7 +92,7 @@ def solve(
     objective = _objective(log, margins, here, strength, total)
     while True:
         p = probabilities(margins)
-        up, down = _sums(log, p, len(here))
+        up, down = _sums(log, margins, len(here))
         bound = lower_bound(margins, log.labels, log.weights, up, down, strength)
         best = max(best, bound, key=lambda one: one.value)
         tell((objective - best.value) / objective)
@@ -112,11 +112,12 @@ def solve(
     return Solution(here, intercept, objective, best.value, steps)
 
 
-def _sums(log: Columns, p: Floats, count: int) -> tuple[Floats, Floats]:
+def _sums(log: Columns, margins: Floats, count: int) -> tuple[Floats, Floats]:
     up, down = np.empty(count), np.empty(count)
     one = log.labels == 1
-    column_sums(log.starts, log.rows, log.values, np.where(one, log.weights * (1 - p), 0.0), up)
-    column_sums(log.starts, log.rows, log.values, np.where(one, 0.0, log.weights * p), down)
+    residuals = log.weights * probabilities(np.where(one, -margins, margins))  # 1 - p would round to 0
+    column_sums(log.starts, log.rows, log.values, np.where(one, residuals, 0.0), up)
+    column_sums(log.starts, log.rows, log.values, np.where(one, 0.0, residuals), down)
     return up, down
 
 
