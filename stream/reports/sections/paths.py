@@ -49,7 +49,7 @@ def paths(document: Mapping[str, Any]) -> Section:
     rate = plain(document["paths"]["learning_rate"])
     tokens = len(document["paths"]["tokens"])
     shown = (
-        f"Learning rate {rate}; the {tokens} tokens that move the scores most: largest weight times the square "
+        f"Learning rate {rate}; the {tokens} tokens that move scores most: largest weight times the square "
         "root of the share of messages that have the token."
     )
     listed = two_way("model", chosen["towards_yes"], chosen["towards_no"])
