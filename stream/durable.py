@@ -29,6 +29,7 @@ __all__ = [
     "make_folder",
     "move_folder",
     "os_errors",
+    "point",
     "remove_folder",
     "remove_leftovers",
     "write_file",
@@ -212,6 +213,23 @@ def write_file(path: Path, content: Content) -> None:
             raise
 
 
+def point(link: Path, name: str) -> None:
+    """Makes the symbolic link `link` lead to `name` beside it; who follows it finds the old or the new.
+
+    Raises CannotCreate, NoPermission, FileTrouble.
+    """
+    with os_errors("write", link):
+        temporary = link.with_name(_WRITING + secrets.token_hex(8))
+        try:
+            os.symlink(name, temporary)
+            os.rename(temporary, link)
+            _sync_folder(link.parent)
+        except BaseException:
+            with suppress(OSError):
+                temporary.unlink()
+            raise
+
+
 def move_folder(folder: Path, into: Path, name: str) -> Path:
     """Moves `folder` into the folder `into` (made if missing), as `name`, or name-2, name-3 where taken."""
     make_folder(into)
@@ -248,7 +266,7 @@ def remove_leftovers(parent: Path) -> list[str]:
             home = path.with_name(path.name.removeprefix(_REPLACED))
             if path.name.startswith(_REPLACED) and not home.exists():
                 os.rename(path, home)
-            elif path.is_dir():
+            elif path.is_dir() and not path.is_symlink():
                 shutil.rmtree(path)
             else:
                 path.unlink()

@@ -366,7 +366,7 @@ def test_going_back_to_an_older_checkpoint_and_on_again_ends_where_it_was(learne
 def test_check_finds_a_flipped_bit(learned, config, tmp_path, capsys):
     state = ["--config", config, "--state", str(tmp_path / "s")]
     assert main(["replay", *state]) == 0
-    (path,) = (tmp_path / "s/snapshots").glob("*/*.safetensors")
+    (path,) = (tmp_path / "s/snapshots").glob("[0-9]*/*.safetensors")
     content = bytearray(path.read_bytes())
     content[-3] ^= 4
     path.write_bytes(content)

@@ -514,6 +514,14 @@ def test_a_log_that_was_read_and_is_gone_without_a_checkpoint_is_named(tmp_path)
         work(settings, tmp_path / "state", until_end=True)
 
 
+def checkpointed(folder):
+    """Returns once the first checkpoint is durable."""
+    deadline = time.monotonic() + 60
+    while not any((folder / "checkpoints").glob("[0-9]*")):
+        assert time.monotonic() < deadline, "no checkpoint was written"
+        time.sleep(0.02)
+
+
 def test_killed_again_and_again_while_the_log_grows_and_turns_over_it_loses_and_doubles_nothing(
     courier, tmp_path, workers
 ):
@@ -532,6 +540,8 @@ def test_killed_again_and_again_while_the_log_grows_and_turns_over_it_loses_and_
             write(log, waiting[written : written + some])
             written = min(written + some, len(waiting))
             time.sleep(0.01)
+        if kill == 0:  # what was renamed is known again by its beginning, which the first checkpoint holds
+            checkpointed(folder)
         os.kill(workers.pid, signal.SIGKILL)
         workers.wait()
         if kill % 3 == 1:

@@ -18,6 +18,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from stream.arrays_file import ARRAYS, write_array_folder
+from stream.durable import remove_leftovers
 from stream.errors import BadData, BadSettings, FileTrouble, InputMissing, UsageError
 from stream.manifest import MANIFEST
 from stream.snapshots import About, Snapshots, compare, export, read_snapshot
@@ -281,6 +282,47 @@ def test_a_broken_snapshot_does_not_push_out_a_whole_one(tmp_path: Path) -> None
     damage(tmp_path / name(1) / MANIFEST)
     assert Snapshots(tmp_path, 1).prune() == (name(1),)
     assert listed(snapshots) == [name(3), name(2)]
+
+
+def test_current_leads_to_the_snapshot_that_readers_take(tmp_path: Path) -> None:
+    current = tmp_path / "current"
+    snapshots = filled(tmp_path, 10, 20, 30, keep=2)
+    assert os.readlink(current) == name(30) and read_snapshot(current).messages == 30
+    snapshots.use(name(20))
+    assert os.readlink(current) == name(20)
+    filled(tmp_path, 40, 50, keep=2)
+    assert os.readlink(current) == name(20), "as long as it is the one in use"
+    snapshots.use(None)
+    assert os.readlink(current) == name(50)
+    damage(tmp_path / name(50) / "manifest.json")
+    filled(tmp_path, 45)
+    assert os.readlink(current) == name(45), "what is of a history that was left, or broken, is no choice"
+    snapshots.retire_after(-1)
+    assert os.readlink(current) == f"earlier-2-{name(45)}"
+    assert all(entry.name != "current" for entry in snapshots.list())
+
+
+def test_current_never_leads_nowhere_while_a_history_is_left(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    snapshots, seen = filled(tmp_path, 10, 20, 30), []
+    rename = Snapshots._rename
+
+    def watched(*args):
+        seen.append((tmp_path / "current" / "manifest.json").exists())
+        rename(*args)
+        seen.append((tmp_path / "current" / "manifest.json").exists())
+
+    monkeypatch.setattr(Snapshots, "_rename", watched)
+    snapshots.retire_after(10)
+    assert seen == [True] * 4 and os.readlink(tmp_path / "current") == name(10)
+
+
+def test_a_link_that_was_not_finished_is_swept_away(tmp_path: Path) -> None:
+    filled(tmp_path, 10)
+    os.symlink(name(10), tmp_path / ".writing-0123456789abcdef")
+    assert remove_leftovers(tmp_path) == [".writing-0123456789abcdef"]
+    assert read_snapshot(tmp_path / name(10)).messages == 10
 
 
 def test_the_one_in_use_is_checked_first_and_never_swapped_silently(tmp_path: Path) -> None:

@@ -2,6 +2,7 @@
 
 import json
 import math
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -288,6 +289,23 @@ def test_the_forward_test_tells_the_loss_after_learning_ended(tuned, found):
     assert [row["forward_log_loss"] for row in found["candidates"]] == pytest.approx(blocks.tolist())
     without = document(replace(tuned, frozen=None, frozen_plan=None))
     assert {row["forward_log_loss"] for row in without["candidates"]} == {None}
+    (said,) = [line for line in found["choice"]["said"] if line.startswith("Forward test")]
+    before, after = tuned.frozen.block_totals[:60].sum(axis=0), tuned.frozen.block_totals[60:].sum(axis=0)
+    learned, met = before[3] / before[2], after[3] / after[2]
+    constant = -met * np.log(learned) - (1 - met) * np.log(1 - learned)
+    numbers = [float(number) for number in re.findall(r"[0-9]\.[0-9]+", said)]
+    assert numbers == pytest.approx([blocks[found["choice"]["index"]], min(blocks), constant], abs=6e-5)
+    assert not any("Forward test" in line for line in without["choice"]["said"])
+
+
+def test_few_of_one_outcome_are_told(tuned, found):
+    assert not any("messages of the last part have" in line for line in found["warnings"])
+    totals = tuned.trial.block_totals.copy()
+    totals[:, 3] = totals[:, 2] * 0.01
+    rare = replace(tuned, trial=replace(tuned.trial, block_totals=totals), frozen=None)
+    yes = round(0.01 * totals[tuned.plan.last_from :, 1].sum())
+    expected = f"Only {yes} messages of the last part have the outcome yes"
+    assert any(line.startswith(expected) for line in document(rare)["warnings"])
 
 
 def test_paths_and_models_go_along_the_strengths_at_the_chosen_rate(found):

@@ -110,7 +110,8 @@ def tune(
     """Try many L1 strengths over a log at once, and say which one to use.
 
     Every strength learns the log in its order, each message scored before it is learned. The report shows log
-    loss against the number of weights; finished trials are kept, so that an interrupted run goes on."""
+    loss against the number of weights. Up to 64 settings go through the log together, and are kept once they
+    have: an interrupted run goes on behind those."""
     from stream.runs.tuning.grid import Grid
     from stream.runs.tuning.tune import Job
     from stream.runs.tuning.tune import tune as run_tune
@@ -215,12 +216,37 @@ def _show(found: dict[str, Any], report: Path, written: Path | None) -> None:
             if one["learning_rate"] == rate
         ],
     )
+    _show_rates(found)
     print()
     for sentence in (*choice["said"], *found["warnings"]):
         print(visible(sentence))
     print(f"\nReport: {report}")
     if written is not None:
         print(f"Settings with the choice: {written}")
+
+
+def _show_rates(found: dict[str, Any]) -> None:
+    """The best of each learning rate, where several were tried."""
+    rates = found["grid"]["learning_rates"]
+    if len(rates) < 2:
+        return
+    print("\nThe best of each learning rate:\n")
+    best = [
+        min((one for one in found["candidates"] if one["learning_rate"] == rate), key=_loss_of)
+        for rate in rates
+    ]
+    unit = found["grid"]["unit"]
+    show_table(
+        [Column("learning rate", 14), Column(unit, 14), Column("non-zeros", 11), Column("log loss", 9)],
+        [
+            [f"{one['learning_rate']:g}", f"{one[unit]:.4g}", count(one["nnz"]), decimal(one["log_loss"], 5)]
+            for one in best
+        ],
+    )
+
+
+def _loss_of(candidate: dict[str, Any]) -> float:
+    return float(candidate["log_loss"])
 
 
 def _strengths(text: str) -> int | tuple[float, ...]:

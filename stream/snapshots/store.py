@@ -2,7 +2,8 @@
 
 A name is the number of messages, zero-padded, of the present history; `earlier-K-NUMBER` is a snapshot of
 a history that was left (started afresh, or gone back to an older checkpoint). `pinned/NAME` is an
-empty file for each pinned snapshot; `in-use` names the one that readers were told to take.
+empty file for each pinned snapshot; `in-use` names the one that readers were told to take; `current` is a
+symbolic link to the one that they take, told or not.
 """
 
 from __future__ import annotations
@@ -10,7 +11,7 @@ from __future__ import annotations
 import fcntl
 import os
 import re
-from collections.abc import Iterator
+from collections.abc import Collection, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -18,7 +19,7 @@ from typing import Any
 
 import numpy as np
 
-from stream.durable import make_folder, move_folder, os_errors, remove_folder, write_file
+from stream.durable import make_folder, move_folder, os_errors, point, remove_folder, write_file
 from stream.errors import BadData, InputMissing
 from stream.manifest import read_manifest
 from stream.retention import Retention
@@ -78,6 +79,7 @@ class Snapshots:
         self._keep = keep if isinstance(keep, Retention) else Retention(keep)
         self._pins = folder / "pinned"
         self._in_use = folder / "in-use"
+        self._current = folder / "current"
 
     def write(self, messages: int, weights: Weights, about: About) -> Path:
         """Writes the weights after `messages` messages, then prunes.
@@ -90,6 +92,7 @@ class Snapshots:
         path = self.folder / f"{messages:015d}"
         if not _same(path, weights, about):
             write_snapshot(path, messages, weights, about, lambda: self.retire_after(messages - 1))
+        self._point()
         self.prune()
         return path
 
@@ -182,11 +185,13 @@ class Snapshots:
         if name is None:
             with os_errors("write", self._in_use):
                 self._in_use.unlink(missing_ok=True)
+            self._point()
             return
         with self._still():
             path = self.find(name)
             read_snapshot(path)
             write_file(self._in_use, path.name.encode() + b"\n")
+        self._point()
 
     def in_use(self) -> str | None:
         """Name of the snapshot that readers were told to take; None: the newest whole one."""
@@ -228,10 +233,25 @@ class Snapshots:
         leaving = [name for name in reversed(names) if name.isdecimal() and int(name) > messages]
         renamed = tuple((name, label + name) for name in leaving)
         if renamed:
+            self._point(without=leaving)  # so that it does not lead to a name that is gone
             with self._still():
                 for old, new in renamed:
                     self._rename(old, new)
+            self._point()
         return renamed
+
+    def _point(self, without: Collection[str] = ()) -> None:
+        """Makes `current` lead to the snapshot in use, else to the newest whose manifest is whole.
+
+        Never to one of `without`. Where the one in use is broken, and where no other is there, it stays.
+        """
+        chosen = self.in_use()
+        if chosen in without:
+            chosen = None
+        whole = [entry.name for entry in self.list() if not entry.trouble and entry.name not in without]
+        found = [name for name in whole if chosen in (None, name)]
+        if found and not (self._current.is_symlink() and os.readlink(self._current) == found[0]):
+            point(self._current, found[0])
 
     def _rename(self, old: str, new: str) -> None:
         """Renames a snapshot with its pin; killed half-way, it is pinned under the name that it has."""

@@ -129,7 +129,8 @@ def translated(feed: Feed) -> Iterator[None]:
         raise BadSettings(f"{', '.join(feed.servers)}: {error}; check [feed]") from None
     except (errors.KafkaError, OSError) as error:
         cause = TROUBLES.last
-        if feed.sasl and "socket disconnected" in cause:  # the answer is lost when a closed socket follows it
+        # the answer is lost when a closed socket follows it, or when time runs out as it is tried again
+        if feed.sasl and ("socket disconnected" in cause or "timed out" in cause):
             cause += " (a user or password that the broker refuses looks like this too)"
         raise Away("; ".join(filter(None, (_told(error), cause)))) from None
 

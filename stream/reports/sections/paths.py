@@ -47,7 +47,11 @@ def paths(document: Mapping[str, Any]) -> Section:
         f"{escaped(_said(document, chosen))}</p></div>"
     )
     rate = plain(document["paths"]["learning_rate"])
-    shown = f"Learning rate {rate}; the {len(document['paths']['tokens'])} tokens with the largest weights."
+    tokens = len(document["paths"]["tokens"])
+    shown = (
+        f"Learning rate {rate}; the {tokens} tokens that move scores most: largest weight times the square "
+        "root of the share of messages that have the token."
+    )
     listed = two_way("model", chosen["towards_yes"], chosen["towards_no"])
     body = (
         pictured("paths", picture, _GIST, f"{_READING} {shown}", below=slider)
@@ -88,7 +92,11 @@ def _said(document: Mapping[str, Any], model: Mapping[str, Any]) -> str:
     text += f", log loss {loss(model['log_loss'])}"
     if model["index"] == document["choice"]["index"]:
         text += " (the choice)"
-    return text + (f"; {difference(at['difference'], at['log_loss_se'])} to the lowest loss" if at else "")
+    if at is None:
+        return text
+    if model["index"] == document["choice"]["best"]:
+        return text + ", the lowest of all"
+    return text + f"; {difference(at['difference'], at['log_loss_se'])} over the lowest"
 
 
 def _picture(document: Mapping[str, Any], chosen: float) -> Picture:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -12,6 +13,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.metrics.slices import OTHER
+from stream.reports import texts
 from stream.runs.tuning import histograms
 from stream.runs.tuning.candidate_rows import (
     LAST,
@@ -37,6 +39,7 @@ PATHS = 40
 LISTED = 10
 STRONGEST = 25
 DAY_MS = 86_400_000
+FEW_OUTCOMES = 100
 Floats = npt.NDArray[np.float64]
 
 
@@ -84,7 +87,7 @@ def document(tuned: Tuned) -> dict[str, Any]:
         "grid": _grid(tuned, candidates),
         "blocks": {"messages": list(plan.ends), "last_part_from": plan.last_from},
         "candidates": candidate_rows(trial, plan, candidates, choice.best, _forward(tuned)),
-        "choice": _choice(candidates, choice),
+        "choice": _choice(candidates, choice, _forward_said(tuned, choice.index)),
         "paths": {
             "learning_rate": trial.lanes[choice.index].learning_rate,
             "strengths": [candidates.strength(i) for i in along],
@@ -112,9 +115,46 @@ def _forward(tuned: Tuned) -> list[float | None]:
     return forward_losses(tuned.frozen, tuned.frozen_plan)
 
 
+def _forward_said(tuned: Tuned, index: int) -> list[str]:
+    """What the choice loses once frozen, beside the best of the candidates and a constant."""
+    losses = _forward(tuned)
+    known = [nats for nats in losses if nats is not None]
+    chosen = losses[index]
+    if chosen is None or tuned.frozen is None or tuned.frozen_plan is None:
+        return []
+    frozen_from = tuned.frozen_plan.frozen_from
+    before = tuned.frozen.block_totals[:frozen_from, 2:].sum(axis=0)
+    after = tuned.frozen.block_totals[frozen_from:, 2:].sum(axis=0)
+    learned, met = float(before[1] / before[0]), float(after[1] / after[0])
+    constant = f", the share of yes before it {_constant(learned, met)}" if 0.0 < learned < 1.0 else ""
+    return [
+        f"Forward test: frozen, the choice loses {texts.loss(chosen)} nats a message over the rest of the "
+        f"log; the best candidate {texts.loss(min(known))}{constant}."
+    ]
+
+
+def _constant(learned: float, met: float) -> str:
+    return texts.loss(-met * math.log(learned) - (1.0 - met) * math.log1p(-learned))
+
+
+def _few_outcomes(tuned: Tuned) -> list[str]:
+    """Whether so few messages carry the figures that chance has much to say in them."""
+    labelled, weight, positive = tuned.trial.block_totals[tuned.plan.last_from :, 1:].sum(axis=0).tolist()
+    if not weight > 0:
+        return []
+    yes = round(labelled * positive / weight)
+    fewest, said = min((yes, "yes"), (round(labelled) - yes, "no"))
+    if fewest >= FEW_OUTCOMES:
+        return []
+    return [
+        f"Only {fewest:,} messages of the last part have the outcome {said}: log loss, AUC, calibration and "
+        "thresholds all hang on those few, and may be quite other on the next log."
+    ]
+
+
 def _warnings(tuned: Tuned, index: int) -> list[str]:
     """What of this run keeps its figures from being those of a replay with the chosen settings."""
-    lines = []
+    lines = _few_outcomes(tuned)
     state = tuned.settings.state
     bounds = [name for name in ("max_live", "idle_after") if getattr(state, name) is not None]
     if bounds:
@@ -184,7 +224,7 @@ def _grid(tuned: Tuned, candidates: Candidates) -> dict[str, Any]:
     }
 
 
-def _choice(candidates: Candidates, choice: Choice) -> dict[str, Any]:
+def _choice(candidates: Candidates, choice: Choice, forward: list[str]) -> dict[str, Any]:
     halved = None
     if choice.halved is not None and choice.halved_costs is not None:
         halved = {
@@ -198,7 +238,7 @@ def _choice(candidates: Candidates, choice: Choice) -> dict[str, Any]:
         "index": choice.index,
         "best": choice.best,
         "runner_up": choice.runner_up,
-        "said": said(candidates, choice),
+        "said": [*said(candidates, choice), *forward],
         "halved": halved,
     }
 

@@ -18,6 +18,8 @@ from stream.settings import Settings
 
 __all__ = ["Pool", "groups_of", "run_passes", "workers_on_this_machine"]
 
+MOST_GROUPS = 8
+"""Groups in one pass: more would be faster, but what is interrupted within a pass is tried again."""
 Group = tuple[Lane, ...]
 Tell = Callable[[float, str], None]
 
@@ -76,7 +78,7 @@ def run_passes(
     missing = [group for group, trial in found.items() if trial is None]
     if done := len(found) - len(missing):
         say(f"{done} of {len(found)} groups of settings were tried before, with the same settings and data")
-    share = max(1, -(-len(missing) // workers)) if missing else 1
+    share = min(MOST_GROUPS, max(1, -(-len(missing) // workers)))
     queue = [_Pass(tuple(missing[i : i + share])) for i in range(0, len(missing), share)]
     budget = memory_bytes // max(1, min(workers, len(queue)))
     for one, trial in _run_all(settings, plan, queue, budget, pool, tell, say):
