@@ -5,6 +5,7 @@ import errno
 import json
 import os
 import re
+import shutil
 import subprocess
 import sys
 from dataclasses import replace
@@ -300,6 +301,15 @@ def test_current_leads_to_the_snapshot_that_readers_take(tmp_path: Path) -> None
     snapshots.retire_after(-1)
     assert os.readlink(current) == f"earlier-2-{name(45)}"
     assert all(entry.name != "current" for entry in snapshots.list())
+
+
+def test_a_copy_that_made_a_folder_of_the_link_is_put_right(tmp_path: Path) -> None:
+    filled(tmp_path / "state", 10, 20)
+    shutil.copytree(tmp_path / "state", tmp_path / "copy")
+    current = tmp_path / "copy" / "current"
+    assert current.is_dir() and not current.is_symlink()
+    filled(tmp_path / "copy", 30)
+    assert os.readlink(current) == name(30) and listed(Snapshots(tmp_path / "copy", 9))[0] == name(30)
 
 
 def test_current_never_leads_nowhere_while_a_history_is_left(

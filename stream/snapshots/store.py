@@ -250,8 +250,11 @@ class Snapshots:
             chosen = None
         whole = [entry.name for entry in self.list() if not entry.trouble and entry.name not in without]
         found = [name for name in whole if chosen in (None, name)]
-        if found and not (self._current.is_symlink() and os.readlink(self._current) == found[0]):
-            point(self._current, found[0])
+        if not found or (self._current.is_symlink() and os.readlink(self._current) == found[0]):
+            return
+        if self._current.is_dir() and not self._current.is_symlink():  # a state copied without its links
+            remove_folder(self._current)
+        point(self._current, found[0])
 
     def _rename(self, old: str, new: str) -> None:
         """Renames a snapshot with its pin; killed half-way, it is pinned under the name that it has."""

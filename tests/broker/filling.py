@@ -24,6 +24,7 @@ REQUEST = struct.Struct(">hhihhhi")
 HEAD = struct.Struct(">qiib")
 SUM = struct.Struct(">I")
 BODY = struct.Struct(">hiqqqhii")
+NOT_LEADER = 6
 ANSWER = struct.Struct(">ihqqq")
 
 
@@ -50,22 +51,36 @@ class Filler:
         self._socket.close()
 
     def send(self, batches: Mapping[int, Sequence[bytes]]) -> None:
-        """One batch of values for each partition. Returns when the broker has them."""
-        now_ms = int(time.time() * 1000)
-        parts = [REQUEST.pack(PRODUCE, VERSION, next(self._numbers), -1, -1, 1, 60_000), _count(1)]
-        parts += [struct.pack(">h", len(self._topic)), self._topic, _count(len(batches))]
-        for partition, values in batches.items():
-            batch = packed(values, now_ms, self._lz4)
-            parts += [_count(partition), _count(len(batch)), batch]
-        request = b"".join(parts)
-        self._socket.sendall(_count(len(request)) + request)
-        self._check(self._take(*struct.unpack(">i", self._take(4))), len(batches))
+        """One batch of values for each partition. Returns when the broker has them.
 
-    def _check(self, answer: bytes, partitions: int) -> None:
+        What a topic that was made this moment has no leader for yet is sent again.
+        """
+        deadline = time.monotonic() + 30
+        while batches:
+            assert time.monotonic() < deadline, f"partitions {list(batches)} have had no leader for 30 s"
+            now_ms = int(time.time() * 1000)
+            parts = [REQUEST.pack(PRODUCE, VERSION, next(self._numbers), -1, -1, 1, 60_000), _count(1)]
+            parts += [struct.pack(">h", len(self._topic)), self._topic, _count(len(batches))]
+            for partition, values in batches.items():
+                batch = packed(values, now_ms, self._lz4)
+                parts += [_count(partition), _count(len(batch)), batch]
+            request = b"".join(parts)
+            self._socket.sendall(_count(len(request)) + request)
+            again = self._without_leader(self._take(*struct.unpack(">i", self._take(4))), len(batches))
+            batches = {partition: batches[partition] for partition in again}
+            if again:
+                time.sleep(0.05)
+
+    def _without_leader(self, answer: bytes, partitions: int) -> list[int]:
+        again = []
         first = 4 + 4 + 2 + len(self._topic) + 4
         for place in range(partitions):
             partition, error, *_ = ANSWER.unpack_from(answer, first + place * ANSWER.size)
+            if error == NOT_LEADER:
+                again.append(partition)
+                continue
             assert error == 0, f"partition {partition}: the broker refused a batch with error {error}"
+        return again
 
     def _take(self, size: int) -> bytes:
         taken = bytearray()
