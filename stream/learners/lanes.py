@@ -13,7 +13,7 @@ from stream.coordinate import CELLS, FIRST, NO_UNDO
 from stream.errors import CannotCreate
 from stream.learners import ftrl_lanes, truncated_gradient_lanes
 from stream.learners.eight import LANES
-from stream.learners.layout import LEARNED, REFUSED
+from stream.learners.layout import REFUSED
 from stream.memory import reserve
 from stream.settings.models import Learner as LearnerSettings
 
@@ -87,11 +87,6 @@ class Lanes:
     def learned(self) -> int:
         """Labelled examples learned so far."""
         return int(self._used[1])
-
-    @property
-    def learned_by_lane(self) -> npt.NDArray[np.int64]:
-        """As each lane counts, which leaves out what it refused: int64[lanes]."""
-        return self._counts[LEARNED, : self.count].copy()
 
     @property
     def refused(self) -> npt.NDArray[np.int64]:

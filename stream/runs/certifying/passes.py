@@ -33,7 +33,7 @@ from stream.tables import Table
 from stream.tables.lookup import Lookup
 from stream.weights import Weights
 
-__all__ = ["Findings", "Log", "Progress", "Scored", "examine"]
+__all__ = ["Findings", "Log", "Progress", "Scored", "examine", "places_of"]
 
 BLOCK = 4_096
 LOOKED_AT = 20_000
@@ -309,14 +309,14 @@ def _nearer(
     up, down, curve = sums
     gradient = down - up
     here = np.zeros(len(addresses))
-    at, there = _places(addresses, weights.addresses)
+    at, there = places_of(addresses, weights.addresses)
     here[at] = weights.values[there]
     with np.errstate(divide="ignore", invalid="ignore"):
         steep = curve / DAMPING
         wanted = here - gradient / steep
         moved = np.sign(wanted) * np.maximum(np.abs(wanted) - strength / steep, 0.0)
     moved = np.where(curve > 0, moved, 0.0)
-    at, there = _places(addresses, taken.frequent)
+    at, there = places_of(addresses, taken.frequent)
     known = np.append(np.flatnonzero(there), len(taken.frequent))
     full = (np.tril(taken.full) + np.tril(taken.full, -1).T)[np.ix_(known, known)]
     step = np.zeros(len(known))
@@ -335,7 +335,7 @@ def _nearer(
     )
 
 
-def _places(
+def places_of(
     addresses: npt.NDArray[np.uint64], wanted: npt.NDArray[np.uint64]
 ) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.bool_]]:
     """Where those of `wanted` stand that are among `addresses` (ascending), and which these are."""

@@ -11,7 +11,7 @@ import numpy.typing as npt
 from stream.errors import CannotCreate
 from stream.optimality.bound import log_losses
 from stream.optimality.solving import Columns, Solution, solve
-from stream.runs.certifying.passes import Log, Progress, Scored
+from stream.runs.certifying.passes import Log, Progress, Scored, places_of
 from stream.settings import Settings
 from stream.tables import NamePile
 from stream.tables.lookup import Lookup
@@ -61,7 +61,7 @@ def refine(
         entries += int(kept.sum())
         if entries * ENTRY_BYTES > memory_bytes:
             raise CannotCreate(
-                f"refining holds the log in memory: {entries:,} tokens of its first {log.messages:,} "
+                f"refining holds the log in memory: {entries:,} tokens of {log.messages:,} messages so far "
                 f"take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer files"
             )
         fresh, first = np.unique(batch.addresses, return_index=True)
@@ -76,10 +76,8 @@ def refine(
         len(addresses),
     )  # fmt: skip
     start = np.zeros(len(addresses))
-    places = np.searchsorted(addresses, weights.addresses)
-    there = places < len(addresses)
-    there[there] = addresses[places[there]] == weights.addresses[there]
-    start[places[there]] = weights.values[there]
+    at, there = places_of(addresses, weights.addresses)
+    start[at] = weights.values[there]
     steps = 0
 
     def tell(gap: float) -> None:
