@@ -14,6 +14,7 @@ from kafka.errors import CoordinatorNotAvailableError, KafkaTimeoutError, Retria
 
 from stream.errors import BadSettings, FileTrouble, InputMissing, NoPermission, Unavailable
 from stream.settings import Settings
+from stream.settings.models import Feed
 from stream.topics import Publisher, Secrets, TopicSource, client, opening, reading
 from tests.broker import start_or_skip
 from tests.broker.filling import Filler
@@ -801,6 +802,17 @@ def test_a_wrong_password_is_told_without_showing_it(broker, topic, opened, capl
     with pytest.raises((NoPermission, Unavailable), match=r"a user or password|refused gauge") as raised:
         source.start()
     assert "silt-and-clay" not in caplog.text + str(raised.value)
+
+
+def test_a_refusal_that_only_the_log_tells_is_a_refusal():
+    def never_ready(kafka_client):
+        logging.getLogger("kafka.net").warning("failed: SaslAuthenticationFailedError: wrong")
+        raise KafkaTimeoutError("Unable to bootstrap")
+
+    door = {"sasl": "PLAIN", "username": "gauge", "password_variable": "DEPOT_PASSWORD"}
+    feed = Feed(kind="topic", topic="hauls", servers=("127.0.0.1:1",), **door)
+    with pytest.raises(NoPermission, match="refused gauge"), client.translated(feed):
+        client._started(never_ready)
 
 
 def test_a_broker_signed_by_a_stranger_is_not_believed(broker, topic, opened):

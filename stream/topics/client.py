@@ -9,7 +9,7 @@ Checked against kafka-python 3.0.12, whose ways the rest of the house need not k
 - What is left of a fetch when its partition is paused comes again, once that is resumed, only while nothing
   else was taken up: where the others go on, the partition stands still for ever. `poll` sees to it.
 - Its debugging lines show requests and configuration, with passwords and records: they are off.
-- A refusal of user or password mostly looks like a lost connection: see `translated`.
+- A refusal of user or password mostly looks like a lost connection: see `translated` and `_started`.
 """
 
 from __future__ import annotations
@@ -314,7 +314,9 @@ def close_producer(producer: Any) -> None:
 
 
 def _started(kind: Callable[..., Any], **options: Any) -> tuple[Any, Any]:
-    """A client of the library and its network part, which is closed where the client does not start."""
+    """A client of the library and its network part, which is closed where the client does not start.
+
+    A refused user may come as time that ran out, since the library tries again; the line it logged tells."""
     made: list[Any] = []
 
     def make(**configs: Any) -> Any:
@@ -323,12 +325,16 @@ def _started(kind: Callable[..., Any], **options: Any) -> tuple[Any, Any]:
         made.append(net)
         return net
 
+    TROUBLES.last = ""
     try:
         client = kind(kafka_client=make, **options)
         return made[0], client
-    except BaseException:
+    except BaseException as error:
         for net in made:
             net.close()
+        refused = errors.SaslAuthenticationFailedError
+        if isinstance(error, errors.KafkaTimeoutError) and refused.__name__ in TROUBLES.last:
+            raise refused(TROUBLES.last) from error
         raise
 
 
