@@ -16,7 +16,15 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Bound", "best_intercept", "log_losses", "lower_bound", "probabilities"]
+__all__ = [
+    "Bound",
+    "DualPoint",
+    "best_intercept",
+    "log_losses",
+    "lower_bound",
+    "probabilities",
+    "residuals_of",
+]
 
 Floats = npt.NDArray[np.float64]
 TRIED = 24
@@ -73,17 +81,35 @@ def probabilities(margins: Floats) -> Floats:
     return np.where(margins >= 0, 1.0, e) / (1.0 + e)
 
 
-def lower_bound(
-    margins: Floats, labels: npt.NDArray[np.int8], weights: Floats, up: Floats, down: Floats, strength: float
-) -> Bound:
-    """The best bound from the residuals of weights with these margins.
+def residuals_of(margins: Floats, labels: npt.NDArray[np.int8]) -> Floats:
+    """1 - p where the label is 1, p where it is 0: float64[m]; small ones keep their digits."""
+    return probabilities(np.where(labels == 1, -margins, margins))
 
-    `margins`, `weights` float64[m], `labels` int8[m], 0 or 1; `up`, `down` float64[n]: sums of o x (1 - p)
-    over label 1 and of o x p over label 0 of every coordinate of the log; `strength`: per example.
-    """
+
+@dataclass(frozen=True, slots=True)
+class DualPoint:
+    """Residuals u, or any other numbers between 0 and 1, float64[m]; `labels` int8[m], 0 or 1; `weights`
+    float64[m]; `up`, `down` float64[n]: sums of o x u over label 1 and over label 0 of every coordinate."""
+
+    residuals: Floats
+    labels: npt.NDArray[np.int8]
+    weights: Floats
+    up: Floats
+    down: Floats
+
+    @classmethod
+    def of(
+        cls, margins: Floats, labels: npt.NDArray[np.int8], weights: Floats, up: Floats, down: Floats
+    ) -> DualPoint:
+        """The residuals of weights that give these margins (float64[m])."""
+        return cls(residuals_of(margins, labels), labels, weights, up, down)
+
+
+def lower_bound(point: DualPoint, strength: float) -> Bound:
+    """The best bound from this point scaled; `strength`: per example."""
+    residuals, weights, up, down = point.residuals, point.weights, point.up, point.down
     total = float(weights.sum())
-    residuals = probabilities(np.where(labels == 1, -margins, margins))
-    one = labels == 1
+    one = point.labels == 1
     of_one, of_zero = float((weights * residuals)[one].sum()), float((weights * residuals)[~one].sum())
     if not (of_one > 0.0 and of_zero > 0.0):
         return Bound(0.0, 0.0)
