@@ -2,9 +2,9 @@
 
 import argparse
 
-from tests.evidence import references
+from tests.evidence import references, regret
 
-TABLES = {"references": references.compare}
+TABLES = {"references": references.compare, "regret": regret.compare}
 
 
 def main():
