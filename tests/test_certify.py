@@ -156,11 +156,11 @@ def test_a_sample_is_even_and_within_its_size():
             text_lengths=np.zeros(1_000, np.int32),
         )
         sample.add(batch, np.arange(begin, begin + 500))
-    numbers = sample.rows.numbers
-    assert 150 <= len(numbers) <= 300 and sample.rows.entries == 2 * len(numbers)
+    numbers = sample.held.numbers
+    assert 150 <= len(numbers) <= 300 and sample.held.entries == 2 * len(numbers)
     groups = np.unique(numbers // 64)
     assert len(set(np.diff(groups))) == 1 and groups[0] == 0
-    addresses, columns = sample.rows.columns()
+    addresses, columns = sample.held.columns()
     assert addresses.tolist() == [*range(7), 10]
     assert columns.labels.tolist() == (numbers % 2).tolist()
     assert np.diff(columns.starts).tolist() == [*np.bincount(numbers % 7), len(numbers)]

@@ -27,8 +27,7 @@ __all__ = [
 ]
 
 Floats = npt.NDArray[np.float64]
-TRIED = 24
-GOLDEN = (5**0.5 - 1) / 2
+HALVINGS = 30
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,19 +119,17 @@ def lower_bound(point: DualPoint, strength: float) -> Bound:
     most = min(1.0 / float(u.max()), strength / steepest if steepest > 0 else np.inf)
     most *= 1 - 1e-12  # rounding may not carry it over the edge
 
-    def value(scale: float) -> float:
-        v = u * scale
-        return float((weights * _entropy(v)).sum()) / total
+    def slope(scale: float) -> float:
+        """Of the bound in the scale, times the total weight."""
+        v = np.clip(u * scale, 1e-300, 1.0 - 1e-16)
+        return float((weights * u * np.log((1.0 - v) / v)).sum())
 
     low, high = 0.0, most
-    for _ in range(TRIED):  # concave in the scale: golden section, or the edge
-        a, b = high - GOLDEN * (high - low), low + GOLDEN * (high - low)
-        if value(a) < value(b):
-            low = a
-        else:
-            high = b
-    found = max((value(low), low), (value(high), high), (value(most), most))
-    return Bound(*found)
+    if slope(most) < 0.0:  # concave in the scale: nearly always the edge, else inside
+        for _ in range(HALVINGS):
+            middle = (low + high) / 2
+            low, high = (middle, high) if slope(middle) > 0.0 else (low, middle)
+    return Bound(float((weights * _entropy(u * high)).sum()) / total, high)
 
 
 def _entropy(u: Floats) -> Floats:

@@ -45,7 +45,7 @@ class HeldRows:
 
     def __init__(self) -> None:
         self._parts: list[_Part] = []
-        self.entries = 0
+        self.rows = self.entries = 0
 
     def add(self, batch: Batch, chosen: npt.NDArray[np.bool_], numbers: npt.NDArray[np.int64]) -> None:
         """Takes the chosen examples (bool[m]) of the batch; `numbers` int64[m]: which of the log's labelled
@@ -55,11 +55,15 @@ class HeldRows:
                 batch.addresses, batch.values, np.diff(batch.row_ptr), batch.labels, batch.weights, numbers
             )
             self._parts.append(whole.only(chosen))
-            self.entries += len(self._parts[-1].addresses)
+            self._count()
 
     def thin(self, stride: int) -> None:
         """Lets go of all but every `stride`-th group of 64 labelled examples of the log."""
         self._parts = [part.only(part.numbers // GROUP % stride == 0) for part in self._parts]
+        self._count()
+
+    def _count(self) -> None:
+        self.rows = sum(len(part.lengths) for part in self._parts)
         self.entries = sum(len(part.addresses) for part in self._parts)
 
     @property
@@ -89,15 +93,14 @@ class EvenSample:
     def __init__(self, most_rows: int, most_entries: int) -> None:
         self._most_rows, self._most_entries = most_rows, most_entries
         self._stride = 1
-        self.rows = HeldRows()
+        self.held = HeldRows()
 
     def add(self, batch: Batch, numbers: npt.NDArray[np.int64]) -> None:
         """`numbers` int64[m]: as in HeldRows.add, -1 without a label."""
-        self.rows.add(batch, (numbers >= 0) & (numbers // GROUP % self._stride == 0), numbers)
+        self.held.add(batch, (numbers >= 0) & (numbers // GROUP % self._stride == 0), numbers)
         while self._stride < 1 << 40 and self._too_many():
             self._stride *= 2
-            self.rows.thin(self._stride)
+            self.held.thin(self._stride)
 
     def _too_many(self) -> bool:
-        held = self.rows
-        return held.entries > self._most_entries or len(held.numbers) > max(self._most_rows, GROUP)
+        return self.held.entries > self._most_entries or self.held.rows > max(self._most_rows, GROUP)

@@ -192,7 +192,7 @@ def _first(log: Log, weights: Weights, progress: Progress) -> tuple[Scored, _Coo
         scored.add(batch, margins)
         coordinates.add(batch, margins)
     coordinates.settle()
-    return scored, coordinates, sample.rows
+    return scored, coordinates, sample.held
 
 
 def _numbers(batch: Batch, before: int) -> npt.NDArray[np.int64]:
