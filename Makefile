@@ -10,7 +10,7 @@ MESSAGES ?= 20000000
 KILLS ?= 200
 SEED ?= 7
 
-.PHONY: demo test lint bench soak chaos clean
+.PHONY: demo test lint bench proof soak chaos clean
 
 demo: $(READY)
 	$(BIN)/bedload demo
@@ -25,6 +25,9 @@ lint: $(READY)
 
 bench: $(READY)
 	$(BIN)/python -m tests.bench
+
+proof: $(READY)
+	$(BIN)/python -m tests.evidence
 
 soak: $(READY)
 	$(BIN)/python -m tests.soak --messages $(MESSAGES)

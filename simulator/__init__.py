@@ -6,6 +6,8 @@ Shares no code with `stream`, so that a bug in one cannot hide itself in the oth
 from simulator.bench import bench_log
 from simulator.courier import FeedBlock, blocks
 from simulator.feed import CourierFeed
-from simulator.log_file import Truth, write_log
+from simulator.log_file import write_log
+from simulator.scenarios import SCENARIOS
+from simulator.truth import Truth
 
-__all__ = ["CourierFeed", "FeedBlock", "Truth", "bench_log", "blocks", "write_log"]
+__all__ = ["SCENARIOS", "CourierFeed", "FeedBlock", "Truth", "bench_log", "blocks", "write_log"]

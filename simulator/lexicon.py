@@ -31,7 +31,7 @@ class Lexicon:
 
     A unit is a word of a class, a fixed run of words inside a phrase ("no answer at"), or one of these with
     a slip of the pen. `units`: their texts; `slips`: int64[..., 4], four misspellings of a unit without one,
-    or the unit itself where nothing in it can be misspelt;
+    or the unit itself where nothing in it can be misspelt; `meant`: the word that a misspelt one was to be;
     `phrase_of`: int64[512], phrase by nine random bits; `phrase_start`, `phrase_length`: its slots;
     `phrase_words`: its words; `slots`: int64[...], slot number of each place in each phrase, one phrase
     after the other; `unit_of`: int64[slots * 512], unit by slot and nine random bits;
@@ -81,6 +81,7 @@ class Lexicon:
             self.units += found
             rows.append([first + k % len(found) if found else i for k in range(1 << SLIP_BITS)])
         self.slips = np.array(rows)
+        self.meant = {slip: word for word, found in made.items() for slip in found}
 
 
 def _parts(line: str) -> list[str]:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 
 import numpy as np
 import numpy.typing as npt
 
+from simulator.companions import doubled
 from simulator.draws import Raw, bits
 from simulator.feed import BLOCK
 from simulator.lexicon import OPEN_KINDS, lexicon
@@ -52,7 +54,8 @@ class Notes:
 
     `phrases_in`, `words`: int64[m], of each note; `phrase_raw`: uint64[k], bits 9 and up are for style;
     `length`: int64[k], in units; `unit`: int64[u], number in the lexicon; `is_open`: int64[o], units that are
-    a word of an open class instead, with `rank` and `kind`, int64[o].
+    a word of an open class instead, with `rank` and `kind`, int64[o], and `newcomer`, int64[o], the number
+    of the newcomer that stands there instead, or -1.
     """
 
     phrases_in: Ints
@@ -63,6 +66,7 @@ class Notes:
     is_open: Ints
     rank: Ints
     kind: Ints
+    newcomer: Ints
 
     def row_of_unit(self) -> Ints:
         """int64[u]: which note each unit stands in."""
@@ -73,10 +77,11 @@ class Lines:
     """Writes blocks; its store of pieces grows with the vocabulary.
 
     The first 2 * BLOCK pieces belong to the block in hand (beginnings of ids, days), then come the fixed
-    ones, then streets, codes and shops by rank.
+    ones, then streets, codes and shops by rank. Words of `accompanied` get their companions.
     """
 
-    def __init__(self) -> None:
+    def __init__(self, newcomers: Sequence[str] = (), accompanied: frozenset[str] = frozenset()) -> None:
+        self._accompanied = accompanied
         self._store = np.empty(1 << 16, dtype=object)
         self._filled = 2 * BLOCK
         add = self._add
@@ -103,7 +108,8 @@ class Lines:
         )
         self._join = add([text for text, _ in JOINS])
         self._note_end = add([text for text, _ in ENDS])
-        self._unit = add([form for unit in lexicon().units for form in cased(unit)])
+        self._unit = add([form for unit in lexicon().units for form in cased(doubled(unit, accompanied))])
+        self._newcomer = add([" " + word for word in newcomers])
         self._open = self._filled
 
     def write(self, first: int, count: int, fields: Fields, notes: Notes, outcome: Flags) -> bytes:
@@ -145,7 +151,7 @@ class Lines:
         """Adds the open words up to this rank."""
         known = (self._filled - self._open) // OPEN_KINDS
         made = zip(*(maker(known, rank + 1) for maker in MAKERS), strict=True)
-        self._add([" " + word for words in made for word in words])
+        self._add([" " + doubled(word, self._accompanied) for words in made for word in words])
 
     def _unit_pieces(self, notes: Notes, first_phrase: Ints, first_unit: Ints) -> Ints:
         """int64[u]: the piece of each unit: as it is, with a Capital or SHOUTED, with or without a space."""
@@ -160,7 +166,8 @@ class Lines:
         case[first_unit] = opening
         pieces = self._unit + notes.unit * CASES + case
         self._know(int(notes.rank.max(initial=-1)))
-        pieces[notes.is_open] = self._open + notes.rank * OPEN_KINDS + notes.kind
+        ordinary = self._open + notes.rank * OPEN_KINDS + notes.kind
+        pieces[notes.is_open] = np.where(notes.newcomer < 0, ordinary, self._newcomer + notes.newcomer)
         return pieces
 
     def _punctuation(self, notes: Notes, last_phrase: Ints) -> Ints:

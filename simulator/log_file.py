@@ -3,52 +3,20 @@
 from __future__ import annotations
 
 import gzip
-import json
-import math
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import IO, Any
 
-import numpy as np
-
 from simulator.courier import Courier, FeedBlock
 from simulator.feed import CourierFeed
+from simulator.truth import Tally, Truth
 
-__all__ = ["Progress", "Truth", "open_log", "write_log"]
+__all__ = ["Progress", "open_log", "write_log"]
 
 Progress = Callable[[int, int], None]
 """Called with messages written so far and messages in all."""
-
-
-@dataclass(frozen=True, slots=True)
-class Truth:
-    """What a simulated log was drawn from, and what came out.
-
-    `intercept`; `weights`: {field, token, weight} of each token whose true weight is not zero;
-    `crosses`: {fields, tokens, weight}, the same for a route and an hour together;
-    `mean_probability`: mean of the true probabilities, before label noise;
-    `redelivered_share`: share of outcomes written as true; `flipped`: outcomes that label noise turned;
-    `words`: words in all notes; `words_known`: streets, codes and shops, of each, at the end;
-    `settings`: of the feed.
-    """
-
-    intercept: float
-    weights: list[dict[str, Any]]
-    crosses: list[dict[str, Any]]
-    messages: int
-    mean_probability: float
-    redelivered_share: float
-    flipped: int
-    words: int
-    words_known: int
-    settings: dict[str, Any]
-
-    def to_json(self) -> str:
-        """One indented JSON document, ending in a line end."""
-        return json.dumps(asdict(self), ensure_ascii=False, indent=1) + "\n"
 
 
 def write_log(
@@ -67,7 +35,7 @@ def write_log(
     ImportError for .zst without zstandard.
     """
     courier = Courier(feed)
-    tally = _Tally()
+    tally = Tally(courier)
     with open_log(path) as log, _maybe(probability_path) as probabilities:
         for number in range(feed.block_count):
             block = courier.block(number)
@@ -77,45 +45,13 @@ def write_log(
             tally.add(block)
             if progress is not None:
                 progress(tally.messages, feed.messages)
-        truth = tally.truth(courier)
+        truth = tally.truth()
         if truth_path is None and str(path) != "-":
             truth_path = f"{path}.truth.json"
         if truth_path is not None:
             with open_log(truth_path) as out:
                 out.write(truth.to_json().encode())
     return truth
-
-
-class _Tally:
-    """Sums over the blocks written; probabilities are summed exactly rounded, block by block."""
-
-    def __init__(self) -> None:
-        self.messages = 0
-        self._words = 0
-        self._redelivered = 0
-        self._flipped = 0
-        self._probability: list[float] = []
-
-    def add(self, block: FeedBlock) -> None:
-        self.messages += len(block)
-        self._words += block.words
-        self._redelivered += int(np.count_nonzero(block.outcome))
-        self._flipped += int(np.count_nonzero(block.flipped))
-        self._probability.append(math.fsum(block.probability.tolist()))
-
-    def truth(self, courier: Courier) -> Truth:
-        return Truth(
-            intercept=courier.intercept,
-            weights=courier.planting.tokens(),
-            crosses=courier.planting.crosses(),
-            messages=self.messages,
-            mean_probability=math.fsum(self._probability) / self.messages,
-            redelivered_share=self._redelivered / self.messages,
-            flipped=self._flipped,
-            words=self._words,
-            words_known=courier.words_known,
-            settings=asdict(courier.feed),
-        )
 
 
 def _probability_lines(block: FeedBlock) -> bytes:

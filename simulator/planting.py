@@ -1,4 +1,4 @@
-"""A feed and its random stream in, the sparse true weights out: nearly every token has weight exactly zero.
+"""Sparse true weights: what they stand on, how they are told, and the intercept that goes with them.
 
 Weights are multiples of 1/64 and the intercept of 2**-20, so that sums of them are exact in any order.
 """
@@ -6,17 +6,15 @@ Weights are multiples of 1/64 and the intercept of 2**-20, so that sums of them 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from simulator.arithmetic import sigmoid
-from simulator.draws import raw_stream, uniform
-from simulator.feed import CourierFeed
-from simulator.lexicon import OPEN_KINDS, lexicon
-from simulator.phrases import TOWARDS_NO, TOWARDS_YES
+from simulator.lexicon import OPEN_KINDS
 from simulator.words import MAKERS
 
 __all__ = [
@@ -25,10 +23,11 @@ __all__ = [
     "PLANTED_SENDERS",
     "ROUTES",
     "STOPS",
+    "WEIGHTS",
     "Planting",
     "intercept_for",
     "open_word",
-    "plant",
+    "sender_number",
 ]
 
 ROUTES = tuple(f"R{i:02d}" for i in range(1, 37))
@@ -36,9 +35,9 @@ STOPS = ("doorstep", "flat", "locker", "shop", "office", "farm", "school", "site
 LOCKERS = tuple(f"L{i:02d}" for i in range(1, 31))
 HOURS = 24
 PLANTED_SENDERS = 120
-PLANTED_OPEN = 300
-PLANT_STREAM = 1
-GRID = 64
+
+WEIGHTS = ("note", "route", "stop", "hour", "sender", "locker", "route_hour")
+"""The arrays of weights of a planting."""
 
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
@@ -52,8 +51,9 @@ def open_word(rank: int, kind: int) -> str:
 @dataclass(frozen=True, slots=True)
 class Planting:
     """True weights. `note`: float64[p], those of the planted note words;
-    `column_of_unit`: int64[units], `column_of_open`: int64[300 * 3], place in `note` of the one planted
-    word of a unit, or -1; `leaning`: the planted words of units, the first of `note`;
+    `column_of_unit`: int64[units], `column_of_open`: int64[3 * 300 or more], place in `note` of the one
+    planted word of a unit, or -1; `leaning`: the planted words of units, the first of `note`;
+    `newcomers`: words that the scenario brings in, `column_of_newcomer`: int64 of each, as above;
     `route` [36], `stop` [8], `hour` [24], `sender` [121] (the last for all others), `locker` [31] (the last
     for none), `route_hour` [36, 24]: float64, mostly zero."""
 
@@ -61,6 +61,8 @@ class Planting:
     leaning: tuple[str, ...]
     column_of_unit: Ints
     column_of_open: Ints
+    newcomers: tuple[str, ...]
+    column_of_newcomer: Ints
     route: Floats
     stop: Floats
     hour: Floats
@@ -68,30 +70,72 @@ class Planting:
     locker: Floats
     route_hour: Floats
 
-    def tokens(self) -> list[dict[str, Any]]:
-        """Every non-zero weight of one token: field, token (case folded in notes), weight."""
-        planted = dict(zip(self.leaning, self.note.tolist(), strict=False))
+    def note_words(self) -> dict[str, float]:
+        """Weight by word of a note, case folded; zeros too, where a word has weight at another time."""
+        weights = dict(zip(self.leaning, self.note.tolist(), strict=False))
         for place in np.flatnonzero(self.column_of_open >= 0):
             word = open_word(*divmod(int(place), OPEN_KINDS))
-            planted[word.casefold()] = self.note[self.column_of_open[place]]
-        found = [("note", token, weight) for token, weight in sorted(planted.items())]
-        found += [("route", name, w) for name, w in zip(ROUTES, self.route, strict=True)]
-        found += [("stop", name, w) for name, w in zip(STOPS, self.stop, strict=True)]
-        found += [("hour", str(i), w) for i, w in enumerate(self.hour)]
-        found += [("sender", sender_code(i), w) for i, w in enumerate(self.sender[:-1])]
-        found += [("locker", name, w) for name, w in zip(LOCKERS, self.locker[:-1], strict=True)]
-        return [{"field": field, "token": token, "weight": float(w)} for field, token, w in found if w != 0]
+            weights[word.casefold()] = float(self.note[self.column_of_open[place]])
+        for i in np.flatnonzero(self.column_of_newcomer >= 0):
+            weights[self.newcomers[i].casefold()] = float(self.note[self.column_of_newcomer[i]])
+        return weights
+
+    def tokens(self) -> list[dict[str, Any]]:
+        """Every non-zero weight of one token: field, token (case folded in notes), weight."""
+        return [
+            {"field": field, "token": token, "weight": weight}
+            for field, token, weight in self.each()
+            if weight
+        ]
+
+    def each(self) -> Iterator[tuple[str, str, float]]:
+        """Field, token and weight, zero or not, of every token that may have one."""
+        yield from (("note", word, weight) for word, weight in sorted(self.note_words().items()))
+        senders = [sender_code(i) for i in range(PLANTED_SENDERS)]
+        hours = [str(i) for i in range(HOURS)]
+        for field, names, weights in (
+            ("route", ROUTES, self.route),
+            ("stop", STOPS, self.stop),
+            ("hour", hours, self.hour),
+            ("sender", senders, self.sender[:-1]),
+            ("locker", LOCKERS, self.locker[:-1]),
+        ):
+            yield from ((field, name, float(w)) for name, w in zip(names, weights, strict=True))
 
     def crosses(self) -> list[dict[str, Any]]:
         """Every non-zero weight of a route and an hour together."""
+        return [self.cross(int(route), int(hour)) for route, hour in np.argwhere(self.route_hour != 0)]
+
+    def cross(self, route: int, hour: int) -> dict[str, Any]:
+        """The weight of one route and hour together."""
+        return {
+            "fields": ["route", "hour"],
+            "tokens": [ROUTES[route], str(hour)],
+            "weight": float(self.route_hour[route, hour]),
+        }
+
+    def other_tokens(self, later: Planting) -> list[dict[str, Any]]:
+        """Of every token whose weight is another in `later` that one, which may be zero."""
         return [
-            {
-                "fields": ["route", "hour"],
-                "tokens": [ROUTES[route], str(hour)],
-                "weight": float(self.route_hour[route, hour]),
-            }
-            for route, hour in np.argwhere(self.route_hour != 0)
+            {"field": field, "token": token, "weight": weight}
+            for (field, token, before), (_, _, weight) in zip(self.each(), later.each(), strict=True)
+            if weight != before
         ]
+
+    def other_crosses(self, later: Planting) -> list[dict[str, Any]]:
+        """The same of routes and hours together."""
+        return [
+            later.cross(int(route), int(hour))
+            for route, hour in np.argwhere(self.route_hour != later.route_hour)
+        ]
+
+    def towards(self, later: Planting, share: float) -> Planting:
+        """The weights on their way to those of `later`, which stand on the same words; exact for shares that
+        are multiples of 1/32."""
+
+        ways = {name: (getattr(self, name), getattr(later, name)) for name in WEIGHTS}
+        there: dict[str, Any] = {name: start + share * (end - start) for name, (start, end) in ways.items()}
+        return replace(self, **there)
 
 
 def sender_code(rank: int) -> str:
@@ -102,74 +146,6 @@ def sender_code(rank: int) -> str:
 def sender_number(rank: Ints) -> Ints:
     """int64 numbers below 1,000,000, different for different ranks below that."""
     return (rank + 1) * 387_421 % 1_000_000
-
-
-class _Planter:
-    """Draws which places get a weight, and how large it is."""
-
-    def __init__(self, feed: CourierFeed) -> None:
-        self._stream = raw_stream(feed.seed, PLANT_STREAM)
-        self._effect = feed.effect
-
-    def places(self, size: int, count: int) -> Ints:
-        """`count` different places below `size`."""
-        order = np.argsort(self._stream.random_raw(size), kind="stable")
-        return order[:count]
-
-    def sizes(self, count: int) -> Floats:
-        """Positive weights between half and one and a half times the effect, on the grid."""
-        size = self._effect * (0.5 + uniform(self._stream.random_raw(count)))
-        return np.rint(size * GRID) / GRID
-
-    def signed(self, count: int) -> Floats:
-        """Weights of either sign."""
-        size = self.sizes(count)
-        return np.where(uniform(self._stream.random_raw(count)) < 0.5, -size, size)
-
-    def spread(self, size: int, candidates: int, count: int) -> Floats:
-        """float64[size] with `count` signed weights among the first `candidates` places, else zero."""
-        weights = np.zeros(size)
-        weights[self.places(candidates, count)] = self.signed(count)
-        return weights
-
-
-def plant(feed: CourierFeed) -> Planting:
-    """The true weights of this feed; of those of notes, up to half stand on words that lean."""
-    planter = _Planter(feed)
-    leanings = [(word, 1.0) for word in TOWARDS_YES] + [(word, -1.0) for word in TOWARDS_NO]
-    count = min(len(leanings) * 4 // 5, feed.planted_words // 2)
-    chosen = [leanings[i] for i in planter.places(len(leanings), count)]
-    lean = planter.sizes(count) * np.array([sign for _, sign in chosen])
-    leaning = tuple(word for word, _ in chosen)
-
-    rest = feed.planted_words - count
-    column_of_open = np.full(PLANTED_OPEN * OPEN_KINDS, -1)
-    column_of_open[planter.places(PLANTED_OPEN * OPEN_KINDS, rest)] = count + np.arange(rest)
-    note = np.concatenate([lean, planter.signed(rest)])
-
-    open_hours = slice(6, 22)
-    hour = np.zeros(HOURS)
-    hour[open_hours] = planter.spread(16, 16, 4)
-    route_hour = np.zeros((len(ROUTES), HOURS))
-    route_hour[:, open_hours] = planter.spread(len(ROUTES) * 16, len(ROUTES) * 16, 30).reshape(-1, 16)
-    return Planting(
-        note=note,
-        leaning=leaning,
-        column_of_unit=_columns_of_units(leaning),
-        column_of_open=column_of_open,
-        route=planter.spread(len(ROUTES), len(ROUTES), 8),
-        stop=planter.spread(len(STOPS), len(STOPS), 3),
-        hour=hour,
-        sender=planter.spread(PLANTED_SENDERS + 1, PLANTED_SENDERS, 24),
-        locker=planter.spread(len(LOCKERS) + 1, len(LOCKERS), 6),
-        route_hour=route_hour,
-    )
-
-
-def _columns_of_units(leaning: tuple[str, ...]) -> Ints:
-    """int64[units]: place in `leaning` of the word of it that the unit holds (no unit holds two), or -1."""
-    place = {word: i for i, word in enumerate(leaning)}
-    return np.array([max(place.get(word, -1) for word in unit.split()) for unit in lexicon().units])
 
 
 def intercept_for(margins: Floats, base_rate: float) -> float:

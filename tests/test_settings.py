@@ -527,6 +527,7 @@ def test_known_keys_of_kinds_are_those_of_the_models():
         "BEDLOAD_LONG",
         "BEDLOAD_REQUIRE_BROKER",
         "BEDLOAD_REQUIRE_BROWSER",
+        "BEDLOAD_REQUIRE_R",
         "BEDLOAD_REQUIRE_SPAMBASE",
     ],
 )

@@ -30,6 +30,10 @@ def simulate(
     ] = None,
     messages: Annotated[int, typer.Option("--messages", metavar="N", help="How many messages.")] = 100_000,
     seed: Annotated[int, typer.Option("--seed", metavar="N", help="Same seed, same bytes.")] = 0,
+    scenario: Annotated[
+        str,
+        typer.Option("--scenario", metavar="NAME", help="What moves in the feed: see docs/simulator.md."),
+    ] = "steady",
     changes: Annotated[
         list[str] | None,
         typer.Option(
@@ -51,7 +55,7 @@ def simulate(
         raise UsageError("give one of --out FILE (a log in a file) and --json (messages on standard output)")
     from simulator import write_log
 
-    feed = feed_of(messages, seed, changes or [])
+    feed = feed_of(messages, seed, scenario, changes or [])
     for path, option in ((out, "--out"), (truth, "--truth"), (probabilities, "--probabilities")):
         if path is not None and str(path) != "-":
             check_output(path, option, new=True)
@@ -70,14 +74,14 @@ def simulate(
         )
 
 
-def feed_of(messages: int, seed: int, changes: list[str]) -> CourierFeed:
+def feed_of(messages: int, seed: int, scenario: str, changes: list[str]) -> CourierFeed:
     """The feed that the options mean. Raises BadSettings naming the key, its value and what is allowed."""
     from dataclasses import fields
 
     from simulator import CourierFeed
 
-    kinds = {field.name: field.type for field in fields(CourierFeed)}
-    given: dict[str, Any] = {"messages": messages, "seed": seed}
+    kinds = {field.name: field.type for field in fields(CourierFeed) if field.type != "str"}
+    given: dict[str, Any] = {"messages": messages, "seed": seed, "scenario": scenario}
     for change in changes:
         name, _, text = change.partition("=")
         if name not in kinds:

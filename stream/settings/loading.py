@@ -24,7 +24,7 @@ ENVIRONMENT_PREFIX = "BEDLOAD_"
 LISTS = ("fields", "crosses")
 NOT_SETTINGS = frozenset(
     f"{ENVIRONMENT_PREFIX}{name}"
-    for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER", "REQUIRE_BROWSER", "REQUIRE_SPAMBASE")
+    for name in ("TRACEBACK", "LONG", "REQUIRE_BROKER", "REQUIRE_BROWSER", "REQUIRE_R", "REQUIRE_SPAMBASE")
 )
 """Switches of the command line and of the tests."""
 

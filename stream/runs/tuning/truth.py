@@ -51,7 +51,7 @@ class Truth:
 
 
 def read_truth(path: Path) -> Truth:
-    """Raises InputMissing without the file, BadData where it is no truth file."""
+    """Raises InputMissing without the file, BadData where it is no truth file, or where its truth moves."""
     with os_errors("read", path):
         text = path.read_bytes()
     try:
@@ -59,12 +59,20 @@ def read_truth(path: Path) -> Truth:
         single = [Planted((w["field"],), (w["token"],), float(w["weight"])) for w in found["weights"]]
         crosses = [Planted((*c["fields"],), (*c["tokens"],), float(c["weight"])) for c in found["crosses"]]
         noise = float(found["settings"]["label_noise"])
-        return Truth(float(found["intercept"]), (*single, *crosses), noise)
+        steps = len(found.get("course", "1"))
+        intercept = float(found["intercept"])
     except (ValueError, KeyError, TypeError) as error:
         raise BadData(
             f"{path} is no truth file: expected intercept, weights, crosses and settings as "
             f"`bedload simulate` writes them ({type(error).__name__}: {error})"
         ) from error
+    if steps > 1:
+        raise BadData(
+            f"{path} tells a truth of {steps} steps (scenario {found['settings']['scenario']}), and a "
+            "comparison needs one that stands: tune without --truth, or simulate a scenario in which nothing "
+            "moves"
+        )
+    return Truth(intercept, (*single, *crosses), noise)
 
 
 class TrueRates:
