@@ -1,4 +1,4 @@
-"""Sparse rows in, batch fits of them by general libraries out: the outside judges of what is learned online."""
+"""Sparse rows in, batch fits of them by general libraries out: judges from outside."""
 
 from stream.batch_fits.fits import BatchFit, batch_fit
 from stream.batch_fits.rows import Rows

@@ -1,8 +1,8 @@
 """Rows and a strength in, the L1 logistic fit of a general library out.
 
-All minimise (1/W) sum o loss + strength * sum |w| with a free intercept; scikit-learn says C = 1 / (strength W).
-liblinear presses on its intercept too: an intercept column of INTERCEPT_SCALE makes that a thousandth. How near
-a fit came to the optimum is for the caller to prove: iterative solvers stop where they please.
+All minimise (1/W) sum o loss + strength * sum |w| with a free intercept; scikit-learn says
+C = 1 / (strength W). liblinear presses on its intercept too: an intercept column of INTERCEPT_SCALE makes
+that a thousandth. How near a fit came to the optimum is for the caller to prove.
 """
 
 from __future__ import annotations

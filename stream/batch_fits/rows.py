@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -49,18 +50,21 @@ class Rows:
     def squeezed(self) -> tuple[Rows, npt.NDArray[np.int32]]:
         """The same without empty columns, and int32[count] which columns are left."""
         left, columns = np.unique(self.columns, return_inverse=True)
-        rows = Rows(
-            self.row_ptr, columns.astype(np.int32), self.values, self.labels, self.weights, len(left)
-        )
+        rows = Rows(self.row_ptr, columns.astype(np.int32), self.values, self.labels, self.weights, len(left))
         return rows, left
 
     def margins(self, weights: Floats, intercept: float) -> Floats:
         """float64[m] from weights float64[n], n >= count."""
-        return intercept + np.bincount(self._rows(), weights[self.columns] * self.values, len(self))
+        return intercept + _sums(self._rows(), weights[self.columns] * self.values, len(self))
 
     def column_sums(self, of_examples: Floats) -> Floats:
         """float64[count]: over all examples, value times the number float64[m] of its example."""
-        return np.bincount(self.columns, of_examples[self._rows()] * self.values, self.count)
+        return _sums(self.columns, of_examples[self._rows()] * self.values, self.count)
 
     def _rows(self) -> npt.NDArray[np.int64]:
         return np.repeat(np.arange(len(self)), np.diff(self.row_ptr))
+
+
+def _sums(places: npt.NDArray[Any], amounts: Floats, size: int) -> Floats:
+    """float64[size]: the amounts that fall on each place."""
+    return np.bincount(places, amounts, size).astype(np.float64, copy=False)

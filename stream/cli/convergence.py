@@ -16,7 +16,7 @@ OF = {"gap": "gap to the batch fit", "excess_log_loss": "excess over the truth"}
 def show_convergence(found: dict[str, Any], report: Path | None) -> None:
     """Prints a table for each strength, the slopes, and the windows where there are some."""
     log = found["log"]
-    name = "the log" if log["scenario"] is None else f"scenario {log['scenario'].get('scenario', 'steady')}"
+    name = "the log" if log["scenario"] is None else f"scenario {log['scenario']['scenario']}"
     rates = ", ".join(f"{w['method']} {w['learning_rate']:g}" for w in found["learners"])
     print(
         f"{name}: {count(log['messages'])} messages learned, {count(log['fresh'])} fresh after them; "
@@ -133,6 +133,6 @@ def _show_windows(windows: dict[str, Any]) -> None:
     rows.append(["from the 2nd", "", *(decimal(mean) for mean in last)])
     show_table([Column("through"), Column("base rate"), *map(Column, titles)], rows)
     print(
-        "Learners: predicted before each update. hindsight: one batch fit of all windows, which it has seen;\n"
+        "Learners: predicted before each update. hindsight: a batch fit of all windows, which it has seen;\n"
         "refitted: one of all windows before; last window: one of the window before alone."
     )

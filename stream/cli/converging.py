@@ -61,7 +61,9 @@ def converge(
     ] = None,
     scenario: Annotated[
         str | None,
-        typer.Option("--scenario", metavar="NAME", help="Invented stream; steady by default."),
+        typer.Option(
+            "--scenario", metavar="NAME", help="Invented stream: see docs/simulator.md; steady by default."
+        ),
     ] = None,
     messages: Annotated[
         int | None,
@@ -131,7 +133,7 @@ def converge(
         if logs:
             stream = _of_logs(logs, settings_from(config, changes), messages, fresh, tell)
         else:
-            drawn = _feed_of(scenario or STEADY, messages or LEARNED, fresh or FRESH, seed, feed or [])
+            drawn = feed_of((messages or LEARNED) + (fresh or FRESH), seed, scenario or STEADY, feed or [])
             stream = _of_scenario(drawn, fresh or FRESH, Path(folder), config, changes, tell)
         job = _job(stream, learners, strengths, at, epochs, solver, windows, size)
         for one in job.learners:
@@ -150,19 +152,13 @@ def converge(
 
 @dataclass(frozen=True, slots=True)
 class _Stream:
-    """A log as `settings` read it: so many `messages` to learn, `fresh` ones after them, what is known of it."""
+    """A log as `settings` read it: `messages` to learn, `fresh` ones after them, what is known of it."""
 
     settings: Settings
     known: Known | None
     messages: int
     fresh: int
     about: dict[str, Any]
-
-
-def _feed_of(scenario: str, messages: int, fresh: int, seed: int, changes: list[str]) -> CourierFeed:
-    if scenario != STEADY:
-        raise UsageError(f"--scenario {scenario}: there is only {STEADY}")
-    return feed_of(messages + fresh, seed, changes)
 
 
 def _of_scenario(
@@ -181,7 +177,9 @@ def _of_scenario(
     log = folder / "stream.jsonl"
     own = [f"feed.paths={json.dumps([str(log)])}", 'feed.kind="log"']
     settings = (
-        courier_settings(log, changes or []) if config is None else settings_from(config, [*(changes or ()), *own])
+        courier_settings(log, changes or [])
+        if config is None
+        else settings_from(config, [*(changes or ()), *own])
     )
     known = write_stream(feed, log, tell)
     return _Stream(settings, known, feed.messages - fresh, fresh, {"files": [], "scenario": asdict(feed)})
@@ -199,7 +197,9 @@ def _of_logs(
     from stream.sources.files import matching_files
 
     if "-" in logs:
-        raise UsageError("converge reads the log more than once: save standard input to a file, and name that")
+        raise UsageError(
+            "converge reads the log more than once: save standard input to a file, and name that"
+        )
     paths = tuple(str(Path(log_pattern(text, "for a scenario")).absolute()) for text in logs)
     feed = settings.feed.model_copy(update={"kind": "log", "paths": paths})
     settings = settings.model_copy(update={"feed": feed})
@@ -258,7 +258,9 @@ def _wanted(text: str, stream: _Stream) -> Wanted:
 
 def _strengths(asked: list[float] | None, stream: _Stream) -> tuple[float, ...]:
     if asked and not all(0 < strength < 1e9 for strength in asked):
-        raise UsageError("--strength takes numbers above 0: without a penalty, a batch fit may have no optimum")
+        raise UsageError(
+            "--strength takes numbers above 0: without a penalty, a batch fit may have no optimum"
+        )
     found = tuple(dict.fromkeys(asked or [stream.settings.learner.l1_per_example]))
     if not found[0] > 0:
         raise UsageError("the settings have learner.l1_per_example = 0: give --strength X above 0")

@@ -58,7 +58,18 @@ def bedload(
     """
 
 
-for commands in (demo, learning, working, tuning, certifying, scoring, stored, rejecting, simulating, converging):
+for commands in (
+    demo,
+    learning,
+    working,
+    tuning,
+    certifying,
+    scoring,
+    stored,
+    rejecting,
+    simulating,
+    converging,
+):
     commands.add_to(app)
 
 

@@ -58,7 +58,7 @@ def write_stream(feed: CourierFeed, log: Path, tell: Callable[[float, str], None
 def _planted(courier: Courier, message: int) -> tuple[Planted, ...]:
     from stream.runs.tuning.truth import Planted
 
-    truth = courier.planting
+    truth = courier.truth_at(message)
     single = [Planted((w["field"],), (w["token"],), w["weight"]) for w in truth.tokens()]
     crossed = [Planted((*c["fields"],), (*c["tokens"],), c["weight"]) for c in truth.crosses()]
     return (*single, *crossed)

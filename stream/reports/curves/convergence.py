@@ -9,7 +9,7 @@ from typing import Any
 
 from stream.durable import write_file
 from stream.reports.curves.falling import excess, gaps, seconds
-from stream.reports.curves.looks import BATCH, Row, at_strength, row_name
+from stream.reports.curves.looks import BATCH, Row, at_strength, row_name, share
 from stream.reports.curves.shifting import shifting
 from stream.reports.curves.supports import supports
 from stream.reports.markup import Section, facts, table
@@ -57,7 +57,7 @@ def _under(document: Row) -> str:
         name = ", ".join(bdi(str(name), 60) for name in log["files"][:3])
         name += f" and {len(log['files']) - 3} more" if len(log["files"]) > 3 else ""
     else:
-        name = f"Scenario {escaped(str(scenario.get('scenario', 'steady')))}, seed {scenario['seed']}"
+        name = f"Scenario {escaped(str(scenario['scenario']))}, seed {scenario['seed']}"
     return (
         f"{name}: {count(log['messages'])} messages learned, {count(log['fresh'])} fresh ones after them, "
         f"{percent(log['base_rate'])} of the outcomes yes"
@@ -66,40 +66,33 @@ def _under(document: Row) -> str:
 
 def _head(document: Row) -> str:
     """What holds after all messages."""
-    last = [at_strength(document, strength)[-1] for strength in document["strengths"]]
-    titles = ("weights of", "strength", "gap", "fresh loss above the batch fit's", "F1", "non-zero")
-    rows = []
-    for fit in last:
+    titles = ("weights of", "gap", "fresh loss", "F1", "non-zero")
+    tables = []
+    for strength in document["strengths"]:
+        fit = at_strength(document, strength)[-1]
         batch = fit["batch"]
-        rows.append(
-            (
-                BATCH,
-                plain(fit["strength"]),
-                f"≤ {percent(batch['proved_gap'])}",
-                UNKNOWN,
-                UNKNOWN,
-                count(batch["nnz"]),
-            )
-        )
+        rows = [(BATCH, f"≤ {share(batch['proved_gap'])}", UNKNOWN, UNKNOWN, count(batch["nnz"]))]
         rows += [
             (
                 escaped(row_name(one["method"], one["epochs"])),
-                plain(fit["strength"]),
-                percent(one["gap"]),
-                percent(one["fresh_over_batch"]),
+                share(one["gap"]),
+                share(one["fresh_over_batch"], signed=True),
                 ratio(one["against_batch"]["f1"]),
                 count(one["nnz"]),
             )
             for one in fit["learned"]
         ]
+        tables.append(f"<h3>Strength {plain(strength)}</h3>")
+        tables.append(table(f"At the end, strength {plain(strength)}", titles, rows))
     return (
         '<section class="answer" id="end" aria-labelledby="end-title">'
         '<p class="rule">Learned online, beside batch fits of the same messages at the same strength</p>'
         f'<h2 id="end-title">After {count(document["log"]["messages"])} messages</h2>'
-        + table("At the end", titles, rows, kind="whole")
-        + "<p>The gap of a learner is that of its objective, mean log loss and penalty, above the batch fit's; "
-        "that of a batch fit is what is proved: no weights at all are better by more. F1 is that of the "
-        "non-zero weights against the batch fit's.</p></section>"
+        + "".join(tables)
+        + "<p>The gap of a learner is that of its objective, mean log loss and penalty, above the batch "
+        "fit's; that of a batch fit is what is proved: no weights at all are better by more. Fresh loss: log "
+        "loss on the fresh messages, above the batch fit's. F1 is that of the non-zero weights against the "
+        "batch fit's.</p></section>"
         "<noscript><p>Pictures need JavaScript; texts and tables do not.</p></noscript>"
     )
 
@@ -124,7 +117,7 @@ def _tables(document: Row) -> Section:
 
 def _row(messages: int, name: str, one: Row) -> tuple[str, ...]:
     batch = name == BATCH
-    gap = f"≤ {percent(one['proved_gap'])}" if batch else percent(one["gap"])
+    gap = f"≤ {share(one['proved_gap'])}" if batch else share(one["gap"])
     against_batch = None if batch else one["against_batch"]
     return (
         count(messages),
@@ -161,7 +154,10 @@ def _making(document: Row) -> Section:
         ("seconds in all", f"{document['seconds']:,.1f}"),
         ("drawn with", f"plotly.js {escaped(script_version())}, inside this file"),
     ]
-    kept = {**{f"feed: {k}": v for k, v in scenario.items()}, **{f"learner.{k}": v for k, v in learner.items()}}
+    kept = {
+        **{f"feed: {k}": v for k, v in scenario.items()},
+        **{f"learner.{k}": v for k, v in learner.items()},
+    }
     rows = [(escaped(k), bdi(json.dumps(v, ensure_ascii=False), 200)) for k, v in kept.items()]
     listed = table("Settings", ["setting", "value"], rows, texts=2)
     body = (

@@ -1,15 +1,14 @@
-"""Figures at ever more messages in; curves on log axes with the lines fitted to them, and their slopes, out."""
+"""Figures at ever more messages in; curves on log axes, the lines fitted to them, and their slopes, out."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Any
 
 from stream.reports.curves.looks import BATCH, Row, at_strength, entries, look_of, names_of, row_name, trace
 from stream.reports.drawing import Figure, LogPlaces, Picture, layout
 from stream.reports.markup import Section, pictured, table
-from stream.reports.texts import UNKNOWN, count, escaped, percent, plain
+from stream.reports.texts import UNKNOWN, count, escaped, plain
 
 __all__ = ["excess", "gaps", "seconds"]
 
@@ -39,8 +38,8 @@ _GAPS = _Kind(
     "gap, share of the objective",
     False,
     True,
-    "The objective (mean log loss and penalty, over the messages learned so far) of each learner above that of "
-    "the batch fit of the same messages, as a share of it. Both axes are logarithmic.",
+    "The objective (mean log loss and penalty, over the messages learned so far) of each learner above that "
+    "of the batch fit of the same messages, as a share of it. Both axes are logarithmic.",
     "A straight line down means that the gap shrinks as a power of the messages: the thin dotted lines are "
     "fitted, and the table has their exponents. Several passes are over the same messages.",
 )
@@ -96,9 +95,7 @@ def _section(document: Row, kind: _Kind) -> Section:
         last = i + 1 == len(document["strengths"])
         body.append(
             f"<h3>Strength {plain(strength)}</h3>"
-            + pictured(
-                f"{kind.name}-{i}", picture, kind.gist if i == 0 else "", kind.reading if last else ""
-            )
+            + pictured(f"{kind.name}-{i}", picture, kind.gist if i == 0 else "", kind.reading if last else "")
         )
     return Section(kind.name, kind.title, kind.short, "".join(body) + _slopes(document, kind), pictures)
 
@@ -127,8 +124,12 @@ def _value(row: Row, kind: _Kind) -> float | None:
     return None if found is None else float(found)
 
 
-def _said(kind: _Kind) -> Any:
-    return percent if kind.shares else plain
+def _said(kind: _Kind) -> Callable[[float], str]:
+    return _percentage if kind.shares else plain
+
+
+def _percentage(value: float) -> str:
+    return f"{100 * value:.3g} %"
 
 
 def _line(slope: Row, messages: Sequence[int]) -> Figure:
@@ -145,7 +146,7 @@ def _line(slope: Row, messages: Sequence[int]) -> Figure:
     }
 
 
-def _slopes(document: Mapping[str, Any], kind: _Kind) -> str:
+def _slopes(document: Row, kind: _Kind) -> str:
     rows = [
         (
             escaped(BATCH if s["epochs"] is None else row_name(s["method"], s["epochs"])),

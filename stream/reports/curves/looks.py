@@ -6,22 +6,30 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from stream.reports.drawing import Entry, Figure, LogPlaces, swatch_dash
-from stream.reports.texts import count
+from stream.reports.texts import UNKNOWN, count
 
-__all__ = ["BATCH", "Row", "at_strength", "entries", "look_of", "names_of", "row_name", "trace"]
+__all__ = ["BATCH", "Row", "at_strength", "entries", "look_of", "names_of", "row_name", "share", "trace"]
 
 Row = Mapping[str, Any]
 
 BATCH = "batch fit"
-_COLOURS = {"ftrl": "--series-1", "truncated-gradient": "--series-2", BATCH: "--series-3"}
-_SHAPES = {"ftrl": "circle", "truncated-gradient": "square", BATCH: "diamond"}
+_COLOURS = {"ftrl": "--series-1", "truncated gradient": "--series-2", BATCH: "--series-3"}
+_SHAPES = {"ftrl": "circle", "truncated gradient": "square", BATCH: "diamond"}
 
 
 def row_name(method: str, epochs: int | None) -> str:
     """What a row is called: `ftrl, 5 passes`."""
     if epochs is None:
         return BATCH
-    return f"{method}, {'one pass' if epochs == 1 else f'{epochs} passes'}"
+    said = method.replace("-", " ")
+    return f"{said}, {'one pass' if epochs == 1 else f'{epochs} passes'}"
+
+
+def share(value: float | None, signed: bool = False) -> str:
+    """A share as a percentage with two digits, so that a column of them lines up."""
+    if value is None:
+        return UNKNOWN
+    return f"{100 * value:{'+' if signed else ''}.2f} %".replace("-", "−")
 
 
 def at_strength(document: Row, strength: float) -> list[Row]:

@@ -24,8 +24,8 @@ _GIST = (
     "seen them all, and shows what the best fixed model could have lost."
 )
 _READING = (
-    "Where a learner runs below the model in hindsight, it has followed a feed that no fixed model fits. Where a "
-    "fit of the last window alone runs below one of everything before, the past misleads."
+    "Where a learner runs below the model in hindsight, it has followed a feed that no fixed model fits. "
+    "Where a fit of the last window alone runs below one of everything before, the past misleads."
 )
 
 Line = tuple[str, str, str, list[float | None], float | None]
@@ -54,7 +54,7 @@ def _lines(windows: Row) -> list[Line]:
     if windows["truth"]:
         found.append(("truth", "--muted", "dot", windows["truth"], means["truth"]))
     for one, mean in zip(windows["learners"], means["learners"], strict=True):
-        found.append((one["method"], *_LEARNERS[one["method"]], one["losses"], mean))
+        found.append((one["method"].replace("-", " "), *_LEARNERS[one["method"]], one["losses"], mean))
     for key, look in _BATCH.items():
         found.append((*look, windows["batch"][key], means["batch"][key]))
     return found

@@ -13,11 +13,12 @@ __all__ = ["supports"]
 
 HEIGHT = 340
 _BATCH = (
-    "F1 of the non-zero weights, taken for a guess at which weights the batch fit keeps: 1 where they are the same."
+    "F1 of the non-zero weights, taken for a guess at which weights the batch fit keeps: 1 where they are "
+    "the same."
 )
 _TRUTH = (
-    "F1 of the non-zero weights, taken for a guess at which tokens were planted. Rare planted tokens cannot be "
-    "told from noise yet, so that the batch fit stays below 1 as well."
+    "F1 of the non-zero weights, taken for a guess at which tokens were planted. Rare planted tokens cannot "
+    "be told from noise yet, so that the batch fit stays below 1 as well."
 )
 _READING = (
     "F1 is the harmonic mean of precision (non-zero weights that are right) and recall (right ones that are "

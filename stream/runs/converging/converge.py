@@ -41,7 +41,7 @@ def converge(
     refuse_unlearnable(settings)
     refuse_missing(job.solver)
     if settings.feed.kind != "log":
-        raise BadSettings("converge reads logs, more than once: name the LOG, or set feed.kind = \"log\"")
+        raise BadSettings('converge reads logs, more than once: name the LOG, or set feed.kind = "log"')
     began = time.monotonic()
     held = hold(settings, job.messages + job.fresh, job.memory_bytes, tell)
     if held.messages < job.messages + job.fresh:
@@ -53,9 +53,7 @@ def converge(
     for wanted in job.learners:
         warm_up(learner_settings(settings, wanted, job.strengths[0]))
     fits = [
-        fit
-        for strength in job.strengths
-        for fit in _at_strength(settings, job, strength, held, judge, tell)
+        fit for strength in job.strengths for fit in _at_strength(settings, job, strength, held, judge, tell)
     ]
     windows = [
         windows_of(settings, held, job, known, strength, tell) for strength in job.strengths if job.windows
@@ -103,8 +101,7 @@ def _at_strength(
                 own = learner_settings(settings, wanted, strength)
                 runs.append((job.epochs, after_epochs(own, cut, job.epochs, tell)))
             learned += [
-                _learned(held, judge, optimum, strength, cut, wanted, epochs, found)
-                for epochs, found in runs
+                _learned(held, judge, optimum, strength, cut, wanted, epochs, found) for epochs, found in runs
             ]
         yield {
             "strength": strength,
@@ -168,4 +165,10 @@ def _slopes(fits: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
                     yield row | {"of": of, **asdict(slope)}
         slope = slope_of(messages, [fit["batch"]["excess_log_loss"] for fit in some])
         if slope is not None:
-            yield {"strength": strength, "method": "batch", "epochs": None, "of": SLOPES_OF[1], **asdict(slope)}
+            yield {
+                "strength": strength,
+                "method": "batch",
+                "epochs": None,
+                "of": SLOPES_OF[1],
+                **asdict(slope),
+            }

@@ -1,4 +1,4 @@
-"""What is to be compared: learners, strengths, where to stop and look; and a stream with what is known of it."""
+"""What is to be compared, with what and when; and what is known of the stream."""
 
 from __future__ import annotations
 

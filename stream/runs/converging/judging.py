@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -66,7 +65,9 @@ def excess(rows: Rows, weights: Floats, intercept: float, shares: Floats) -> flo
     """What the weights lose more than the true shares of yes, float64[m], on average over the outcomes' true
     distribution: a mean of Kullback-Leibler divergences, free of the luck of the outcomes."""
     margins = rows.margins(weights, intercept)
-    return float(np.average(np.logaddexp(0.0, margins) - shares * margins - entropies(shares), weights=rows.weights))
+    return float(
+        np.average(np.logaddexp(0.0, margins) - shares * margins - entropies(shares), weights=rows.weights)
+    )
 
 
 def entropies(shares: Floats) -> Floats:

@@ -13,8 +13,8 @@ __all__ = ["Slope", "slope_of"]
 
 @dataclass(frozen=True, slots=True)
 class Slope:
-    """value = factor * messages**exponent, by least squares of the logarithms; `error`: the exponent's standard
-    error, from how the `points` scatter about the line (they are not independent: a rough guide)."""
+    """value = factor * messages**exponent, by least squares of the logarithms; `error`: standard error of the
+    exponent, from how the `points` scatter about the line (they are not independent: a rough guide)."""
 
     exponent: float
     error: float

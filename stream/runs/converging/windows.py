@@ -1,4 +1,4 @@
-"""A log cut into windows in; what learners lose in each beside batch fits of all of it, and of what came before."""
+"""A log cut into windows in; what learners lose in each, and batch fits of all and of the past, out."""
 
 from __future__ import annotations
 
@@ -30,10 +30,11 @@ def windows_of(
     size = job.messages // job.windows
     ends = [size * (i + 1) for i in range(job.windows)]
     spans = [(end - size, end) for end in ends]
-    learners = []
+    learners, losses_of = [], []
     for wanted in job.learners:
         own = learner_settings(settings, wanted, strength)
         losses = window_losses(own, ends[-1], size, tell)
+        losses_of.append(losses)
         learners.append({"method": wanted.method, "learning_rate": wanted.learning_rate, "losses": losses})
     batch = _batch(held, job, strength, spans, tell)
     truth = None if known is None else [_of_truth(held, known, *span) for span in spans]
@@ -46,7 +47,7 @@ def windows_of(
         "batch": batch,
         "means": {
             "truth": _mean(truth),
-            "learners": [_mean(one["losses"]) for one in learners],
+            "learners": [_mean(losses) for losses in losses_of],
             "batch": {name: _mean(losses) for name, losses in batch.items()},
         },
     }
