@@ -26,7 +26,7 @@ Solver = Literal["liblinear", "saga", "skglm"]
 INTERCEPT_SCALE = 1_000.0
 SCIKIT_LEARN: dict[str, dict[str, Any]] = {
     "liblinear": {"tol": 1e-7, "max_iter": 2_000, "intercept_scaling": INTERCEPT_SCALE},
-    "saga": {"tol": 1e-5, "max_iter": 1_000},
+    "saga": {"tol": 1e-6, "max_iter": 2_000},
 }
 SKGLM_TOLERANCE = 1e-7
 

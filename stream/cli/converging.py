@@ -33,7 +33,7 @@ __all__ = ["add_to"]
 
 STEADY = "steady"
 METHODS = ("ftrl", "truncated-gradient")
-RATES = {"ftrl": 0.2, "truncated-gradient": 0.02}
+RATES = {"ftrl": 0.2, "truncated-gradient": 0.005}
 """Learning rates on a courier feed: the best of a grid (docs/proof.md)."""
 LEARNED, FRESH = 100_000, 50_000
 FEWEST_IN_WINDOW = 100
