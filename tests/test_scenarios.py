@@ -14,10 +14,11 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from simulator import SCENARIOS, CourierFeed, blocks, write_log
+from simulator import CourierFeed, blocks, write_log
 from simulator.courier import Courier
 from simulator.crafted import CRAFTED
 from simulator.feed import BLOCK
+from simulator.scenarios import SCENARIOS
 from stream.runs.tuning.truth import Planted, Truth, planted_at
 from stream.settings import Settings
 
