@@ -53,8 +53,8 @@ def simulate(
         typer.Option(
             "--scenario",
             metavar="NAME",
-            help="Kind of feed: steady, sudden-change, slow-drift, base-rate-shift, seasonal, "
-            "new-vocabulary, rare-tokens, label-noise, duplicated-tokens, collisions.",
+            help="One of steady, sudden-change, slow-drift, base-rate-shift, seasonal, new-vocabulary, "
+            "rare-tokens, duplicated-tokens, label-noise, collisions.",
         ),
     ] = "steady",
     changes: Annotated[
