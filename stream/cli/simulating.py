@@ -54,7 +54,7 @@ def simulate(
             "--scenario",
             metavar="NAME",
             help="One of steady, sudden-change, slow-drift, base-rate-shift, seasonal, new-vocabulary, "
-            "rare-tokens, duplicated-tokens, label-noise, collisions.",
+            "rare-tokens, duplicated-tokens, collisions, label-noise.",
         ),
     ] = "steady",
     changes: Annotated[
