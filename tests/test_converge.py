@@ -85,6 +85,13 @@ def by_scikit_learn(x, y):
     return solver.coef_[0], solver.intercept_[0]
 
 
+def test_learners_of_one_method_are_told_apart_by_their_rates():
+    fast, slow, other = Wanted("ftrl", 0.3), Wanted("ftrl", 0.05), Wanted("ftrl", 0.3, averaged=True)
+    named = [one.to_json((fast, slow, other))["name"] for one in (fast, slow, other)]
+    assert named == ["ftrl 0.3", "ftrl 0.05", "averaged ftrl"]
+    assert fast.to_json((fast, other))["name"] == "ftrl"
+
+
 def test_looks_are_at_thousands_and_three_thousands_up_to_all_messages():
     assert cuts_of(200_000) == (1_000, 3_000, 10_000, 30_000, 100_000, 200_000)
     assert cuts_of(30_000) == (1_000, 3_000, 10_000, 30_000)
@@ -210,7 +217,7 @@ def test_a_power_of_the_messages_is_found_with_its_error():
 
 
 def test_slopes_are_those_of_the_rows(document):
-    slope = next(s for s in document["slopes"] if (s["method"], s["epochs"], s["of"]) == ("ftrl", 1, "gap"))
+    slope = next(s for s in document["slopes"] if (s["name"], s["epochs"], s["of"]) == ("ftrl", 1, "gap"))
     gaps = [learned(document, n, "ftrl", 1)["gap"] for n in (1_000, 2_000, LEARNED)]
     again = slope_of([1_000, 2_000, LEARNED], gaps)
     assert (slope["exponent"], slope["error"]) == (again.exponent, again.error)

@@ -13,7 +13,7 @@ from stream.errors import BadData, BadSettings
 from stream.runs.converging.fitting import Optimum, fitted
 from stream.runs.converging.following import Followed, Tell, after_epochs, followed, warm_up
 from stream.runs.converging.held import Held, hold
-from stream.runs.converging.job import Job, Known, Wanted, learner_settings
+from stream.runs.converging.job import Job, Known, learner_settings
 from stream.runs.converging.judging import Fitted, Judge, agreement
 from stream.runs.converging.slopes import slope_of
 from stream.runs.converging.windows import windows_of
@@ -74,7 +74,7 @@ def converge(
         "batch": job.solver,
         "epochs": job.epochs,
         "has_truth": known is not None,
-        "learners": [{"method": w.method, "learning_rate": w.learning_rate} for w in job.learners],
+        "learners": [wanted.to_json(job.learners) for wanted in job.learners],
         "strengths": list(job.strengths),
         "fits": fits,
         "slopes": list(_slopes(fits)),
@@ -101,7 +101,10 @@ def _at_strength(
                 own = learner_settings(settings, wanted, strength)
                 runs.append((job.epochs, after_epochs(own, cut, job.epochs, tell)))
             learned += [
-                _learned(held, judge, optimum, strength, cut, wanted, epochs, found) for epochs, found in runs
+                wanted.to_json(job.learners)
+                | {"epochs": epochs}
+                | _learned(held, judge, optimum, strength, cut, found)
+                for epochs, found in runs
             ]
         yield {
             "strength": strength,
@@ -129,8 +132,6 @@ def _learned(
     optimum: Optimum,
     strength: float,
     cut: int,
-    wanted: Wanted,
-    epochs: int,
     found: Followed,
 ) -> dict[str, Any]:
     own = Fitted(held.dense(found.weights), found.weights.intercept, found.seconds)
@@ -139,9 +140,6 @@ def _learned(
     figures = judge.figures(own, cut)
     loss = figures["fresh_log_loss"]
     return {
-        "method": wanted.method,
-        "learning_rate": wanted.learning_rate,
-        "epochs": epochs,
         "objective": objective,
         "gap": objective / optimum.objective - 1.0,
         "fresh_over_batch": None if loss is None else loss / batch_loss - 1.0,
@@ -158,7 +156,7 @@ def _slopes(fits: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
         some = [fit for fit in fits if fit["strength"] == strength]
         messages = [fit["messages"] for fit in some]
         for i, one in enumerate(some[0]["learned"]):
-            row = {"strength": strength, "method": one["method"], "epochs": one["epochs"]}
+            row = {"strength": strength, "name": one["name"], "epochs": one["epochs"]}
             for of in SLOPES_OF:
                 slope = slope_of(messages, [fit["learned"][i][of] for fit in some])
                 if slope is not None:
@@ -167,7 +165,7 @@ def _slopes(fits: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
         if slope is not None:
             yield {
                 "strength": strength,
-                "method": "batch",
+                "name": None,
                 "epochs": None,
                 "of": SLOPES_OF[1],
                 **asdict(slope),
