@@ -133,8 +133,8 @@ class Rows:
     """Messages as sparse rows whose columns are numbered by ascending address.
 
     `ends` int64[m + 1], `columns` int32[nnz], `values` float32[nnz], `labels` int8[m]; `addresses` uint64[n],
-    and `recent` bool[n], whether a column was seen less than a tenth of its mean gap ago. By chance it is so for
-    one weight in ten, or fewer, since gaps are whole messages.
+    and `recent` bool[n], whether a column was seen less than a tenth of its mean gap ago. By chance it is so
+    for one weight in ten, or fewer, since gaps are whole messages.
     """
 
     def __init__(self, lengths, addresses, values, labels):

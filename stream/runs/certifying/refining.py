@@ -11,7 +11,8 @@ import numpy.typing as npt
 from stream.errors import CannotCreate
 from stream.optimality.bound import log_losses
 from stream.optimality.solving import Columns, Solution, solve
-from stream.runs.certifying.passes import Log, Progress, Scored, places_of
+from stream.runs.certifying.log import Log, Progress, Scored
+from stream.runs.certifying.passes import places_of
 from stream.settings import Settings
 from stream.tables import NamePile
 from stream.tables.lookup import Lookup

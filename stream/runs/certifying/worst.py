@@ -6,12 +6,13 @@ At an optimum the gradient of the mean loss is -strength * sign(weight) where a 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
+from stream.tables.lookup import Lookup
 from stream.weights import Weights
 
 __all__ = ["Watched", "Worst", "violations"]
@@ -55,6 +56,9 @@ class Watched:
         chosen = np.sort(seem)
         self._addresses, self._weights, self._strength = every[chosen], here[chosen], strength
         self._sums = np.zeros(len(chosen))
+        count = np.arange(1, len(chosen) + 1, dtype=np.float32)
+        self._numbers = Lookup(replace(weights, addresses=self._addresses, values=count))
+        """Of the addresses watched, from 1."""
         known = dict(zip(weights.addresses.tolist(), weights.names, strict=True))
         self._names = [known.get(address, b"") for address in self._addresses.tolist()]
 
@@ -62,11 +66,10 @@ class Watched:
         """`pulls` float64[m]: of each example its weight times (probability - label); 0 without a label."""
         if not len(self._addresses):
             return
-        places = np.searchsorted(self._addresses, batch.addresses)
-        places[places == len(self._addresses)] = 0
-        entries = np.flatnonzero(self._addresses[places] == batch.addresses)
+        numbers = self._numbers.weights_of(batch.addresses)
+        entries = np.flatnonzero(numbers)
         rows = np.searchsorted(batch.row_ptr, entries, side="right") - 1
-        found = places[entries]
+        found = numbers[entries].astype(np.int64) - 1
         self._sums += np.bincount(found, pulls[rows] * batch.values[entries], len(self._sums))
         for place, first in zip(*np.unique(found, return_index=True), strict=True):
             if not self._names[place]:

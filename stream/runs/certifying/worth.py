@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from stream.runs.certifying.certify import Certificate
-from stream.runs.certifying.passes import Progress
+from stream.runs.certifying.log import Progress
 from stream.runs.certifying.refining import Refined, fresh_loss, refine
 from stream.runs.scoring import settings_of
 from stream.settings import Settings
