@@ -33,7 +33,9 @@ def cluster_of(config: Path | None, servers: Sequence[str], topic: str) -> Setti
     try:
         return load(config, kind)
     except BadSettings as error:
-        told = str(error).replace("--set feed.servers:", "--servers:").replace("--set feed.topic:", "--topic:")
+        told = (
+            str(error).replace("--set feed.servers:", "--servers:").replace("--set feed.topic:", "--topic:")
+        )
         raise BadSettings(told) from None
 
 

@@ -38,7 +38,7 @@ from stream.tables import Table
 from stream.tables.lookup import Lookup
 from stream.weights import Weights
 
-__all__ = ["Findings", "examine", "places_of"]
+__all__ = ["Findings", "examine"]
 
 SAMPLE_ROWS = 20_000
 SAMPLE_ENTRIES = 1_500_000
@@ -208,11 +208,9 @@ def _near(
     sample: HeldRows,
     strength: float,
 ) -> Nearby:
-    here = np.zeros(len(addresses))
-    at, there = places_of(addresses, weights.addresses)
-    here[at] = weights.values[there]
     columns_at, columns = sample.columns()
-    return nearby(sums, here, weights.intercept, columns, np.searchsorted(addresses, columns_at), strength)
+    places = np.searchsorted(addresses, columns_at)
+    return nearby(sums, weights.at(addresses), weights.intercept, columns, places, strength)
 
 
 def _second(
@@ -286,13 +284,3 @@ def _total_of_both(labels: npt.NDArray[np.int8], weights: Floats) -> float:
             "fit to compare with. Check message.label, or give a longer log"
         )
     return total
-
-
-def places_of(
-    addresses: npt.NDArray[np.uint64], wanted: npt.NDArray[np.uint64]
-) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.bool_]]:
-    """Where those of `wanted` stand that are among `addresses` (ascending), and which these are."""
-    places = np.searchsorted(addresses, wanted)
-    there = places < len(addresses)
-    there[there] = addresses[places[there]] == wanted[there]
-    return places[there], there

@@ -6,13 +6,13 @@ At an optimum the gradient of the mean loss is -strength * sign(weight) where a 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
-from stream.tables.lookup import Lookup
+from stream.runs.certifying.numbered import Numbered
 from stream.weights import Weights
 
 __all__ = ["Watched", "Worst", "violations"]
@@ -54,26 +54,17 @@ class Watched:
         slope[np.searchsorted(every, addresses)] = gradient
         seem = np.argsort(-violations(here, slope, strength), kind="stable")[:CANDIDATES]
         chosen = np.sort(seem)
-        self._addresses, self._weights, self._strength = every[chosen], here[chosen], strength
+        self._weights, self._strength = here[chosen], strength
         self._sums = np.zeros(len(chosen))
-        count = np.arange(1, len(chosen) + 1, dtype=np.float32)
-        self._numbers = Lookup(replace(weights, addresses=self._addresses, values=count))
-        """Of the addresses watched, from 1."""
         known = dict(zip(weights.addresses.tolist(), weights.names, strict=True))
-        self._names = [known.get(address, b"") for address in self._addresses.tolist()]
+        names = [known.get(address, b"") for address in every[chosen].tolist()]
+        self._numbered = Numbered(every[chosen], names)
 
     def add(self, batch: Batch, pulls: Floats) -> None:
         """`pulls` float64[m]: of each example its weight times (probability - label); 0 without a label."""
-        if not len(self._addresses):
-            return
-        numbers = self._numbers.weights_of(batch.addresses)
-        entries = np.flatnonzero(numbers)
+        entries, places = self._numbered.found(batch)
         rows = np.searchsorted(batch.row_ptr, entries, side="right") - 1
-        found = numbers[entries].astype(np.int64) - 1
-        self._sums += np.bincount(found, pulls[rows] * batch.values[entries], len(self._sums))
-        for place, first in zip(*np.unique(found, return_index=True), strict=True):
-            if not self._names[place]:
-                self._names[place] = batch.text(int(entries[first]))
+        self._sums += np.bincount(places, pulls[rows] * batch.values[entries], len(self._sums))
 
     def worst(self, total: float, most: int) -> tuple[Worst, ...]:
         """The `most` worst that break their conditions at all, worst first; `total` example weight."""
@@ -82,8 +73,8 @@ class Watched:
         order = np.argsort(-broken, kind="stable")[:most]
         return tuple(
             Worst(
-                int(self._addresses[i]),
-                self._names[i],
+                int(self._numbered.addresses[i]),
+                self._numbered.names[i],
                 float(self._weights[i]),
                 float(gradient[i]),
                 float(broken[i]),

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.batch_fits import Rows
-from stream.optimality.bound import best_intercept, log_losses, lower_bound, probabilities
+from stream.optimality.bound import DualPoint, best_intercept, log_losses, lower_bound, residuals_of
 from stream.runs.converging.held import Held
 from stream.runs.converging.job import Known
 from stream.runs.tuning.truth import Planted, Truth, planted_at
@@ -85,10 +85,10 @@ def with_best_intercept(rows: Rows, weights: Floats, intercept: float) -> float:
 def proved(rows: Rows, weights: Floats, intercept: float, strength: float) -> float:
     """No weights at all have a lower objective than this, for an intercept that fits the rows best."""
     margins, one = rows.margins(weights, intercept), rows.labels == 1
-    residuals = rows.weights * probabilities(np.where(one, -margins, margins))
+    residuals = rows.weights * residuals_of(margins, rows.labels)
     up = rows.column_sums(np.where(one, residuals, 0.0))
     down = rows.column_sums(np.where(one, 0.0, residuals))
-    return lower_bound(margins, rows.labels, rows.weights, up, down, strength).value
+    return lower_bound(DualPoint.of(margins, rows.labels, rows.weights, up, down), strength).value
 
 
 class Judge:
