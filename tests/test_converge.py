@@ -49,7 +49,7 @@ def stream(tmp_path_factory):
     feed = CourierFeed(seed=SEED, messages=LEARNED + FRESH, scenario="sudden-change")
     known = write_stream(feed, log, lambda share, text: None)
     settings = courier_settings(log, [])
-    return settings, hold(settings, None, 10**9, lambda share, text: None), known
+    return settings, hold(settings, LEARNED + FRESH, 10**9, lambda share, text: None), known
 
 
 @pytest.fixture(scope="module")

@@ -94,6 +94,7 @@ def _at_strength(
         rows = held.part(0, cut)
         tell(i / len(job.cuts), f"batch fits by {job.solver}, strength {strength:g}")
         optimum = fitted(job.solver, rows, strength, len(held.addresses))
+        batch = _of_batch(judge, optimum, cut)
         learned = []
         for wanted, one in zip(job.learners, passes, strict=True):
             runs = [(1, next(one))]
@@ -103,13 +104,13 @@ def _at_strength(
             learned += [
                 wanted.to_json(job.learners)
                 | {"epochs": epochs}
-                | _learned(held, judge, optimum, strength, cut, found)
+                | _learned(held, judge, batch, optimum, strength, found)
                 for epochs, found in runs
             ]
         yield {
             "strength": strength,
             "messages": cut,
-            "batch": _of_batch(judge, optimum, cut),
+            "batch": batch,
             "learned": learned,
         }
     for one in passes:
@@ -129,20 +130,19 @@ def _of_batch(judge: Judge, optimum: Optimum, cut: int) -> dict[str, Any]:
 def _learned(
     held: Held,
     judge: Judge,
+    batch: dict[str, Any],
     optimum: Optimum,
     strength: float,
-    cut: int,
     found: Followed,
 ) -> dict[str, Any]:
     own = Fitted(held.dense(found.weights), found.weights.intercept, found.seconds)
-    objective = judge.objective(held.part(0, cut), own, strength)
-    batch_loss = judge.figures(optimum.fitted, cut)["fresh_log_loss"]
-    figures = judge.figures(own, cut)
+    objective = judge.objective(held.part(0, found.messages), own, strength)
+    figures = judge.figures(own, found.messages)
     loss = figures["fresh_log_loss"]
     return {
         "objective": objective,
         "gap": objective / optimum.objective - 1.0,
-        "fresh_over_batch": None if loss is None else loss / batch_loss - 1.0,
+        "fresh_over_batch": None if loss is None else loss / batch["fresh_log_loss"] - 1.0,
         "against_batch": agreement(own.weights != 0, optimum.fitted.weights != 0).to_json(),
         "seconds": found.seconds,
         "learning_seconds": found.learning_seconds,
