@@ -15,13 +15,19 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from kafka import KafkaConsumer, TopicPartition
 
 from simulator import CourierFeed, Faults, Pace, write_log
-from simulator.faults import MALFORMED
+from simulator.faults import MALFORMED, Records, Transport
 from simulator.feed import BLOCK
-from simulator.outcomes import DELAYS
+from simulator.log_file import FileSink
+from simulator.outcomes import DELAYS, LateOutcomes, time_text
+from simulator.scenarios import SCENARIOS
 from stream.cli.main import main
+from stream.cli.topic_sink import TopicSink
+from stream.errors import Unavailable
 from stream.runs.replay import replay
 from tests import replays
 
@@ -115,12 +121,64 @@ def test_a_replay_counts_what_the_truth_file_counts(
     faulty: tuple[list[bytes], dict[str, Any]], tmp_path: Path
 ) -> None:
     (tmp_path / "log.jsonl").write_bytes(b"\n".join(faulty[0]) + b"\n")
-    settings: Any = replays.settings_for
-    chosen = settings([tmp_path / "log.jsonl"], message={"max_reject_share": 1.0})
+    settings_for: Any = replays.settings_for
+    chosen = settings_for([tmp_path / "log.jsonl"], message={"max_reject_share": 1.0})
     summary = replay(chosen, tmp_path / "state").summary
     told = faulty[1]["records"]
     assert summary.messages == told["written"]
     assert summary.rejected == sum(told["malformed"].values())
+
+
+def taken(source: Transport, lines: list[bytes], step: int) -> list[tuple[int, bytes]]:
+    """What a transport hands over of these messages when it is given `step` of them at a time."""
+    parts = [source.take(first, lines[first : first + step]) for first in range(0, len(lines), step)]
+    return [pair for part in (*parts, source.rest()) for pair in zip(part.number, part.values, strict=True)]
+
+
+SHARES = st.floats(0, 0.5)
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.integers(0, 2**63 - 1), st.tuples(SHARES, SHARES, SHARES, SHARES), st.integers(1, 400))
+def test_counts_add_up_whatever_the_shares_and_however_the_feed_is_cut(
+    seed: int, shares: tuple[float, float, float, float], step: int
+) -> None:
+    feed, faults = CourierFeed(seed=seed, messages=400), Faults(*shares)
+    lines = [b'{"id":"h%09d","note":"n"}' % number for number in range(400)]
+    source = Transport(feed, faults)
+    records = taken(source, lines, step)
+    assert records == taken(Transport(feed, faults), lines, 400)
+    told, good = source.counts(), [number for number, line in records if line == lines[number]]
+    assert told["written"] == len(records)
+    assert told["duplicates"] == len(good) - len(set(good))
+    assert sum(told["malformed"].values()) == len(records) - len(good)
+    assert told["missing"] == 400 - len({number for number, _ in records})
+    assert sorted(set(good)) == sorted(good) or faults.duplicates > 0
+
+
+@settings(max_examples=30, deadline=None)
+@given(st.integers(0, 2**63 - 1), SHARES, SHARES, st.integers(1, 400))
+def test_outcomes_add_up_and_come_in_time_however_the_feed_is_cut(
+    seed: int, lost: float, repeated: float, step: int
+) -> None:
+    feed = CourierFeed(seed=seed, messages=400)
+    faults = Faults(lost_outcomes=lost, repeated_outcomes=repeated)
+    second, outcome = np.arange(400) * 700, np.arange(400) % 3 == 0
+
+    def written(step: int) -> tuple[list[bytes], dict[str, Any]]:
+        late, found = LateOutcomes(feed, faults), list[bytes]()
+        for first in range(0, 400, step):
+            rows = slice(first, min(first + step, 400))
+            late.take(first, second[rows], outcome[rows])
+            now = late.due(int(second[rows.stop - 1]))
+            assert all(json.loads(line)["at"] <= time_text(int(second[rows.stop - 1])) for line in now.values)
+            found += now.values
+        return found + list(late.rest().values), late.counts()
+
+    lines, told = written(step)
+    assert (lines, told) == written(400)
+    assert told["written"] == len(lines) == 400 - told["lost"] + told["repeated"]
+    assert told["lost"] == 400 - len({json.loads(line)["id"] for line in lines})
 
 
 # Late outcomes
@@ -293,7 +351,38 @@ def test_what_cannot_be_is_refused_with_the_cure(
     assert list(tmp_path.iterdir()) == []
 
 
+def test_the_help_names_every_scenario() -> None:
+    pages = (Path(__file__).parent.parent / "docs" / "commands.md").read_text("utf-8")
+    text = " ".join(pages.split("## bedload simulate\n")[1].split("\n## ")[0].split())
+    names = text.split("--scenario NAME One of ")[1].split(". ")[0]
+    assert sorted(names.split(", ")) == sorted(SCENARIOS)
+
+
 # Topics
+
+
+class Brokers:
+    """A publisher whose brokers are away at some calls."""
+
+    def __init__(self, *away: int) -> None:
+        self.calls, self.away, self.sent = 0, away, list[bytes]()
+
+    def send(self, topic: str, key: bytes, value: bytes, headers: dict[str, bytes]) -> None:
+        self.calls += 1
+        if self.calls in self.away:
+            raise Unavailable("nobody there")
+        self.sent.append(value)
+
+
+def test_brokers_that_went_away_are_waited_for_and_those_that_never_came_are_not() -> None:
+    records = Records(np.arange(4), [b"a", b"b", b"c", b"d"])
+    brokers: Any = Brokers(3, 4, 6)
+    TopicSink(brokers, "t", None, FileSink(None)).messages(records)
+    assert brokers.sent == records.values
+    never: Any = Brokers(1)
+    with pytest.raises(Unavailable):
+        TopicSink(never, "t", None, FileSink(None)).messages(records)
+    assert never.calls == 1
 
 
 def everything(servers: list[str], topic: str) -> list[Any]:

@@ -50,7 +50,12 @@ def simulate(
     seed: Annotated[int, typer.Option("--seed", metavar="N", help="Same seed, same bytes.")] = 0,
     scenario: Annotated[
         str,
-        typer.Option("--scenario", metavar="NAME", help="What moves in the feed: see docs/simulator.md."),
+        typer.Option(
+            "--scenario",
+            metavar="NAME",
+            help="One of steady, sudden-change, slow-drift, base-rate-shift, seasonal, new-vocabulary, "
+            "rare-tokens, duplicated-tokens, label-noise, collisions.",
+        ),
     ] = "steady",
     changes: Annotated[
         list[str] | None,
