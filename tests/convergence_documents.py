@@ -20,6 +20,7 @@ def bare():
     document = _document([1e-4], [_fit(1e-4, cut, False) for cut in CUTS], False, [])
     document["log"] |= {"scenario": None, "files": ["handoffs.jsonl"]}
     document["epochs"] = 1
+    document["slopes"] = [slope for slope in document["slopes"] if slope["epochs"] == 1]
     for fit in document["fits"]:
         fit["learned"] = [one for one in fit["learned"] if one["epochs"] == 1]
     return document
@@ -63,8 +64,10 @@ def _learned(method, epochs, strength, cut, truth):
     worse = (1 if method == "ftrl" else 6) / epochs
     gap = 40 * worse * cut**-0.8
     return {
+        "name": method,
         "method": method,
         "learning_rate": 0.2,
+        "averaged": False,
         "epochs": epochs,
         "objective": (0.43 + 10 * strength) * (1 + gap),
         "gap": gap,
@@ -93,7 +96,7 @@ def _windows(strength, truth):
         "through": [5_000 * (i + 1) for i in range(6)],
         "base_rate": [0.2] * 6,
         "truth": lower if truth else None,
-        "learners": [{"method": m, "learning_rate": 0.2, "losses": losses} for m in METHODS],
+        "learners": [{"name": m, "learning_rate": 0.2, "losses": losses} for m in METHODS],
         "batch": {"hindsight": lower, "all_before": higher, "last_window": higher},
         "means": {
             "truth": 0.42 if truth else None,
@@ -113,7 +116,7 @@ def _document(strengths, fits, truth, windows):
                 slopes.append(
                     {
                         "strength": strength,
-                        "method": some[0]["learned"][i]["method"],
+                        "name": some[0]["learned"][i]["name"],
                         "epochs": some[0]["learned"][i]["epochs"],
                         "of": "gap",
                         "exponent": slope.exponent,
@@ -140,7 +143,7 @@ def _document(strengths, fits, truth, windows):
         "batch": "liblinear",
         "epochs": 5,
         "has_truth": truth,
-        "learners": [{"method": method, "learning_rate": 0.2} for method in METHODS],
+        "learners": [{"name": method, "learning_rate": 0.2} for method in METHODS],
         "strengths": strengths,
         "fits": fits,
         "slopes": slopes,

@@ -49,7 +49,7 @@ def stream(tmp_path_factory):
     feed = CourierFeed(seed=SEED, messages=LEARNED + FRESH, scenario="sudden-change")
     known = write_stream(feed, log, lambda share, text: None)
     settings = courier_settings(log, [])
-    return settings, hold(settings, None, 10**9, lambda share, text: None), known
+    return settings, hold(settings, LEARNED + FRESH, 10**9, lambda share, text: None), known
 
 
 @pytest.fixture(scope="module")
@@ -83,6 +83,13 @@ def by_scikit_learn(x, y):
     )  # fmt: skip
     solver.fit(x, y)
     return solver.coef_[0], solver.intercept_[0]
+
+
+def test_learners_of_one_method_are_told_apart_by_their_rates():
+    fast, slow, other = Wanted("ftrl", 0.3), Wanted("ftrl", 0.05), Wanted("ftrl", 0.3, averaged=True)
+    named = [one.to_json((fast, slow, other))["name"] for one in (fast, slow, other)]
+    assert named == ["ftrl 0.3", "ftrl 0.05", "averaged ftrl"]
+    assert fast.to_json((fast, other))["name"] == "ftrl"
 
 
 def test_looks_are_at_thousands_and_three_thousands_up_to_all_messages():
@@ -210,7 +217,7 @@ def test_a_power_of_the_messages_is_found_with_its_error():
 
 
 def test_slopes_are_those_of_the_rows(document):
-    slope = next(s for s in document["slopes"] if (s["method"], s["epochs"], s["of"]) == ("ftrl", 1, "gap"))
+    slope = next(s for s in document["slopes"] if (s["name"], s["epochs"], s["of"]) == ("ftrl", 1, "gap"))
     gaps = [learned(document, n, "ftrl", 1)["gap"] for n in (1_000, 2_000, LEARNED)]
     again = slope_of([1_000, 2_000, LEARNED], gaps)
     assert (slope["exponent"], slope["error"]) == (again.exponent, again.error)

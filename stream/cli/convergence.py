@@ -9,7 +9,6 @@ from stream.cli.screen import Column, count, decimal, note, share, show_table, v
 
 __all__ = ["show_convergence"]
 
-NAMES = {"ftrl": "ftrl", "truncated-gradient": "truncated"}
 OF = {"gap": "gap to the batch fit", "excess_log_loss": "excess over the truth"}
 
 
@@ -17,7 +16,10 @@ def show_convergence(found: dict[str, Any], report: Path | None) -> None:
     """Prints a table for each strength, the slopes, and the windows where there are some."""
     log = found["log"]
     name = "the log" if log["scenario"] is None else f"scenario {log['scenario']['scenario']}"
-    rates = ", ".join(f"{w['method']} {w['learning_rate']:g}" for w in found["learners"])
+    rates = ", ".join(
+        one["name"] if one["name"][-1].isdigit() else f"{one['name']} {one['learning_rate']:g}"
+        for one in found["learners"]
+    )
     print(
         f"{name}: {count(log['messages'])} messages learned, {count(log['fresh'])} fresh after them; "
         f"{count(log['different_tokens'])} different tokens\n"
@@ -61,11 +63,10 @@ def _show_fits(fits: list[dict[str, Any]], has_truth: bool) -> None:
 
 
 def _row(messages: int, one: dict[str, Any], has_truth: bool) -> list[str]:
-    batch = "method" not in one
-    passes = "" if batch or one["epochs"] == 1 else f" x{one['epochs']}"
+    batch = "name" not in one
     cells = [
         count(messages) if batch else "",
-        "batch fit" if batch else NAMES[one["method"]] + passes,
+        "batch fit" if batch else _name(one),
         f"<= {share(one['proved_gap'])}" if batch else share(one["gap"]),
         decimal(one["fresh_log_loss"]),
         count(one["nnz"]),
@@ -112,7 +113,13 @@ def _show_slopes(slopes: list[dict[str, Any]]) -> None:
 
 
 def _name(one: dict[str, Any]) -> str:
-    return NAMES[one["method"]] + ("" if one["epochs"] == 1 else f" x{one['epochs']}")
+    """Short, for a column of twelve: `truncated x5`, `averaged x5`."""
+    return _short(one) + ("" if one["epochs"] == 1 else f" x{one['epochs']}")
+
+
+def _short(one: dict[str, Any]) -> str:
+    name = str(one["name"]).replace("truncated-gradient", "truncated")
+    return name.replace("averaged ftrl", "averaged").replace("averaged truncated", "av. trunc.")
 
 
 def _show_windows(windows: dict[str, Any]) -> None:
@@ -121,7 +128,7 @@ def _show_windows(windows: dict[str, Any]) -> None:
     parts += [one["losses"] for one in windows["learners"]]
     parts += [windows["batch"][name] for name in ("hindsight", "all_before", "last_window")]
     titles = ["truth"] if windows["truth"] else []
-    titles += [NAMES[one["method"]] for one in windows["learners"]]
+    titles += [_short(one) for one in windows["learners"]]
     titles += ["hindsight", "refitted", "last window"]
     means = windows["means"]
     last = [means["truth"]] if windows["truth"] else []

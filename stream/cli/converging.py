@@ -32,6 +32,7 @@ if TYPE_CHECKING:
 __all__ = ["add_to"]
 
 STEADY = "steady"
+AVERAGED = "averaged"
 METHODS = ("ftrl", "truncated-gradient")
 RATES = {"ftrl": 0.2, "truncated-gradient": 0.005}
 """Learning rates on a courier feed: the best of a grid (docs/proof.md)."""
@@ -92,8 +93,9 @@ def converge(
         list[str] | None,
         typer.Option(
             "--learner",
-            metavar="METHOD[:RATE]",
-            help="ftrl or truncated-gradient, and its learning rate; may be given many times.",
+            metavar="METHOD[:RATE][:averaged]",
+            help="ftrl or truncated-gradient, its learning rate, and whether by learner.averaging; may be "
+            "given many times.",
         ),
     ] = None,
     epochs: Annotated[
@@ -240,20 +242,24 @@ def _wanted(text: str, stream: _Stream) -> Wanted:
     """A learner that `text` names; without a rate: that of the settings if these name this method."""
     from stream.runs.converging.job import Wanted
 
-    method, _, rate = text.partition(":")
-    if method not in METHODS:
-        raise UsageError(f"--learner {text}: give one of {', '.join(METHODS)}, then :RATE if wanted")
+    method, *rest = text.split(":")
+    averaged = rest[-1:] == [AVERAGED]
+    rate, *more = rest[: len(rest) - averaged] or [""]
+    if method not in METHODS or more:
+        raise UsageError(
+            f"--learner {text}: give one of {', '.join(METHODS)}, then :RATE, then :{AVERAGED} if wanted"
+        )
     own = stream.settings.learner
     if not rate:
         of_settings = stream.known is None and own.method == method
-        return Wanted(cast(Any, method), own.learning_rate if of_settings else RATES[method])
+        return Wanted(cast(Any, method), own.learning_rate if of_settings else RATES[method], averaged)
     try:
         found = float(rate)
     except ValueError:
         found = 0.0
     if not 0 < found <= 1e6:
         raise UsageError(f"--learner {text}: the learning rate must be a number above 0, up to 1e6")
-    return Wanted(cast(Any, method), found)
+    return Wanted(cast(Any, method), found, averaged)
 
 
 def _strengths(asked: list[float] | None, stream: _Stream) -> tuple[float, ...]:

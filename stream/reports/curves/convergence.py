@@ -74,7 +74,7 @@ def _head(document: Row) -> str:
         rows = [(BATCH, f"≤ {share(batch['proved_gap'])}", UNKNOWN, UNKNOWN, count(batch["nnz"]))]
         rows += [
             (
-                escaped(row_name(one["method"], one["epochs"])),
+                escaped(row_name(one["name"], one["epochs"])),
                 share(one["gap"]),
                 share(one["fresh_over_batch"], signed=True),
                 ratio(one["against_batch"]["f1"]),
@@ -109,7 +109,7 @@ def _tables(document: Row) -> Section:
         for fit in at_strength(document, strength):
             rows.append(_row(fit["messages"], BATCH, fit["batch"]))
             for one in fit["learned"]:
-                rows.append(_row(fit["messages"], row_name(one["method"], one["epochs"]), one))
+                rows.append(_row(fit["messages"], row_name(one["name"], one["epochs"]), one))
         body.append(f"<h3>Strength {plain(strength)}</h3>")
         body.append(table(f"All figures at strength {plain(strength)}", titles, rows, texts=2))
     return Section("figures", "All figures", "Figures", "".join(body), {})
@@ -143,7 +143,7 @@ def _support(support: Row | None) -> tuple[str, str, str]:
 def _making(document: Row) -> Section:
     """Command, stream, settings."""
     log, learner = document["log"], document["settings"]["learner"]
-    rates = ", ".join(f"{w['method']} {plain(w['learning_rate'])}" for w in document["learners"])
+    rates = ", ".join(f"{w['name']}: {plain(w['learning_rate'])}" for w in document["learners"])
     scenario = log["scenario"] or {}
     pairs = [
         ("command", f"<code>{escaped(visible(document['command']))}</code>"),

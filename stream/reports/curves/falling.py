@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-from stream.reports.curves.looks import BATCH, Row, at_strength, entries, look_of, names_of, row_name, trace
+from stream.reports.curves.looks import Row, at_strength, curves, entries, row_name, trace
 from stream.reports.drawing import Figure, LogPlaces, Picture, layout
 from stream.reports.markup import Section, pictured, table
 from stream.reports.texts import UNKNOWN, count, escaped, plain
@@ -102,25 +102,26 @@ def _section(document: Row, kind: _Kind) -> Section:
 
 def _picture(fits: Sequence[Row], kind: _Kind, strength: float, slopes: Sequence[Row]) -> Picture:
     messages = [fit["messages"] for fit in fits]
-    named = names_of(fits, kind.batch)
-    values = {name: [_value(row, kind) for row in rows] for name, rows in named.items()}
-    up = LogPlaces((v for line in values.values() for v in line if v is not None), _said(kind))
+    drawn = curves(fits, kind.batch)
+    values = [[_value(row, kind) for row in curve.rows] for curve in drawn]
+    up = LogPlaces((v for line in values for v in line if v is not None), _said(kind))
     across = LogPlaces(messages, count)
     traces = [
-        trace(name, messages, line, [_said(kind)(v) if v is not None else UNKNOWN for v in line], up)
-        for name, line in values.items()
+        trace(curve, messages, line, [_said(kind)(v) if v is not None else UNKNOWN for v in line], up)
+        for curve, line in zip(drawn, values, strict=True)
     ]
-    fitted = [_line(slope, messages) for slope in slopes]
+    colours = {curve.name: curve.colour for curve in drawn}
+    fitted = [_line(s, messages, colours[row_name(s["name"], s["epochs"])]) for s in slopes]
     figure = {
         "data": [*fitted, *traces],
         "layout": layout(HEIGHT, xaxis=across.axis("messages"), yaxis=up.axis(kind.up)),
     }
-    summary = f"{kind.title} at strength {plain(strength)}, of {', '.join(named)}."
-    return Picture(figure, HEIGHT, summary, entries(named))
+    summary = f"{kind.title} at strength {plain(strength)}, of {', '.join(colours)}."
+    return Picture(figure, HEIGHT, summary, entries(drawn))
 
 
 def _value(row: Row, kind: _Kind) -> float | None:
-    found = row["learning_seconds"] if kind.key == "seconds" and "method" in row else row[kind.key]
+    found = row["learning_seconds"] if kind.key == "seconds" and "name" in row else row[kind.key]
     return None if found is None else float(found)
 
 
@@ -132,9 +133,8 @@ def _percentage(value: float) -> str:
     return f"{100 * value:.3g} %"
 
 
-def _line(slope: Row, messages: Sequence[int]) -> Figure:
+def _line(slope: Row, messages: Sequence[int], colour: str) -> Figure:
     """The fitted power of the messages, from the first to the last."""
-    colour, _, _ = look_of(row_name(slope["method"], slope["epochs"]))
     ends = [messages[0], messages[-1]]
     return {
         "type": "scatter",
@@ -149,7 +149,7 @@ def _line(slope: Row, messages: Sequence[int]) -> Figure:
 def _slopes(document: Row, kind: _Kind) -> str:
     rows = [
         (
-            escaped(BATCH if s["epochs"] is None else row_name(s["method"], s["epochs"])),
+            escaped(row_name(s["name"], s["epochs"])),
             plain(s["strength"]),
             f"{s['exponent']:+.2f} ± {s['error']:.2f}".replace("-", "−"),
             count(s["points"]),

@@ -3,26 +3,60 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 from stream.reports.drawing import Entry, Figure, LogPlaces, swatch_dash
 from stream.reports.texts import UNKNOWN, count
 
-__all__ = ["BATCH", "Row", "at_strength", "entries", "look_of", "names_of", "row_name", "share", "trace"]
+__all__ = [
+    "BATCH",
+    "Curve",
+    "Row",
+    "at_strength",
+    "curves",
+    "entries",
+    "learner_look",
+    "row_name",
+    "share",
+    "spoken",
+    "trace",
+]
 
 Row = Mapping[str, Any]
 
 BATCH = "batch fit"
-_COLOURS = {"ftrl": "--series-1", "truncated gradient": "--series-2", BATCH: "--series-3"}
-_SHAPES = {"ftrl": "circle", "truncated gradient": "square", BATCH: "diamond"}
+_OF_BATCH = "--series-3", "diamond"
+_OF_LEARNERS = (
+    ("--series-1", "circle"),
+    ("--series-2", "square"),
+    ("--series-4", "triangle-up"),
+    ("--series-5", "cross"),
+    ("--series-6", "triangle-down"),
+)
 
 
-def row_name(method: str, epochs: int | None) -> str:
-    """What a row is called: `ftrl, 5 passes`."""
-    if epochs is None:
+@dataclass(frozen=True, slots=True)
+class Curve:
+    """A learner after so many passes, or the batch fit: its rows, one for each look, and how it is drawn."""
+
+    name: str
+    rows: Sequence[Row]
+    colour: str
+    shape: str
+    dash: str
+
+
+def row_name(name: str | None, epochs: int | None) -> str:
+    """What a row is called: `ftrl, 5 passes`; None: the batch fit."""
+    if name is None:
         return BATCH
-    said = method.replace("-", " ")
-    return f"{said}, {'one pass' if epochs == 1 else f'{epochs} passes'}"
+    return f"{spoken(name)}, {'one pass' if epochs == 1 else f'{epochs} passes'}"
+
+
+def spoken(name: str) -> str:
+    """A learner's name with spaces to break it at."""
+    return name.replace("-", " ")
 
 
 def share(value: float | None, signed: bool = False) -> str:
@@ -37,48 +71,46 @@ def at_strength(document: Row, strength: float) -> list[Row]:
     return [fit for fit in document["fits"] if fit["strength"] == strength]
 
 
-def names_of(fits: Sequence[Row], batch: bool) -> dict[str, list[Row]]:
-    """Rows by name, one for each comparison; those of the batch fit first, where wanted."""
-    found: dict[str, list[Row]] = {BATCH: [fit["batch"] for fit in fits]} if batch else {}
+def curves(fits: Sequence[Row], batch: bool) -> list[Curve]:
+    """A curve for each row that comes at every look; that of the batch fit first, where wanted."""
+    found = [Curve(BATCH, [fit["batch"] for fit in fits], *_OF_BATCH, "solid")] if batch else []
+    learners = list(dict.fromkeys(one["name"] for one in fits[0]["learned"]))
     for i, one in enumerate(fits[0]["learned"]):
-        found[row_name(one["method"], one["epochs"])] = [fit["learned"][i] for fit in fits]
+        colour, shape = learner_look(learners.index(one["name"]))
+        dash = "solid" if one["epochs"] == 1 else "dash"
+        name = row_name(one["name"], one["epochs"])
+        found.append(Curve(name, [fit["learned"][i] for fit in fits], colour, shape, dash))
     return found
 
 
-def look_of(name: str) -> tuple[str, str, str]:
-    """Colour, shape and dash of a row."""
-    method = name.partition(",")[0]
-    return _COLOURS[method], _SHAPES[method], "dash" if name.endswith("passes") else "solid"
+def learner_look(place: int) -> tuple[str, str]:
+    """Colour and shape of the learner at this place."""
+    return _OF_LEARNERS[place % len(_OF_LEARNERS)]
 
 
-def entries(names: Iterable[str]) -> list[Entry]:
+def entries(drawn: Iterable[Curve]) -> list[Entry]:
     """The key of a picture."""
-    return [
-        Entry(name, {"colour": colour, "shape": shape, "dash": swatch_dash(dash)})
-        for name in names
-        for colour, shape, dash in [look_of(name)]
-    ]
+    return [Entry(c.name, {"colour": c.colour, "shape": c.shape, "dash": swatch_dash(c.dash)}) for c in drawn]
 
 
 def trace(
-    name: str,
+    curve: Curve,
     messages: Sequence[int],
     values: Sequence[float | None],
     texts: Sequence[str],
     places: LogPlaces | None = None,
 ) -> Figure:
     """A line with points; `places` where the axis up is logarithmic."""
-    colour, shape, dash = look_of(name)
     return {
         "type": "scatter",
         "mode": "lines+markers",
         "x": list(messages),
         "y": [None if v is None else v if places is None else places.of(v) for v in values],
-        "line": {"color": colour, "width": 2, "dash": dash},
-        "marker": {"color": colour, "symbol": shape, "size": 8},
-        "name": name,
+        "line": {"color": curve.colour, "width": 2, "dash": curve.dash},
+        "marker": {"color": curve.colour, "symbol": curve.shape, "size": 8},
+        "name": curve.name,
         "customdata": [[count(m), text] for m, text in zip(messages, texts, strict=True)],
         "hovertemplate": (
-            f"<b>{name}</b><br>%{{customdata[0]}} messages<br>%{{customdata[1]}}<extra></extra>"
+            f"<b>{curve.name}</b><br>%{{customdata[0]}} messages<br>%{{customdata[1]}}<extra></extra>"
         ),
     }

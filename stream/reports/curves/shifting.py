@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from stream.reports.curves.looks import Row
+from stream.reports.curves.looks import Row, learner_look, spoken
 from stream.reports.drawing import Entry, Picture, axis, layout, padded, swatch_dash
 from stream.reports.markup import Section, pictured, table
 from stream.reports.texts import UNKNOWN, count, loss, percent, plain
@@ -14,10 +14,9 @@ __all__ = ["shifting"]
 HEIGHT = 420
 _BATCH = {
     "hindsight": ("batch fit in hindsight", "--series-3", "dash"),
-    "all_before": ("refitted on all before", "--series-4", "solid"),
+    "all_before": ("refitted on all before", "--ink", "solid"),
     "last_window": ("refitted on the last window", "--series-6", "dashdot"),
 }
-_LEARNERS = {"ftrl": ("--series-1", "solid"), "truncated-gradient": ("--series-2", "longdash")}
 _GIST = (
     "Mean log loss in each window, under the outcomes as they came. Learners are judged by predictions from "
     "before each update, refitted batch models by messages that they have not seen; the fit in hindsight has "
@@ -53,8 +52,9 @@ def _lines(windows: Row) -> list[Line]:
     found: list[Line] = []
     if windows["truth"]:
         found.append(("truth", "--muted", "dot", windows["truth"], means["truth"]))
-    for one, mean in zip(windows["learners"], means["learners"], strict=True):
-        found.append((one["method"].replace("-", " "), *_LEARNERS[one["method"]], one["losses"], mean))
+    for i, (one, mean) in enumerate(zip(windows["learners"], means["learners"], strict=True)):
+        dash = "solid" if i == 0 else "longdash"
+        found.append((spoken(one["name"]), learner_look(i)[0], dash, one["losses"], mean))
     for key, look in _BATCH.items():
         found.append((*look, windows["batch"][key], means["batch"][key]))
     return found

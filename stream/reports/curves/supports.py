@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from stream.reports.curves.looks import Row, at_strength, entries, names_of, trace
+from stream.reports.curves.looks import Row, at_strength, curves, entries, trace
 from stream.reports.drawing import LogPlaces, Picture, axis, layout
 from stream.reports.markup import Section, pictured
 from stream.reports.texts import UNKNOWN, count, plain, ratio
@@ -44,19 +44,19 @@ def supports(document: Row) -> Section:
 
 def _picture(fits: Sequence[Row], key: str, batch: bool, strength: float) -> Picture:
     messages = [fit["messages"] for fit in fits]
-    named = names_of(fits, batch)
+    drawn = curves(fits, batch)
     traces = []
-    for name, rows in named.items():
-        values = [row[key]["f1"] for row in rows]
+    for curve in drawn:
+        values = [row[key]["f1"] for row in curve.rows]
         texts = [
             f"F1 {UNKNOWN if v is None else ratio(v)}, {count(row['nnz'])} weights"
-            for v, row in zip(values, rows, strict=True)
+            for v, row in zip(values, curve.rows, strict=True)
         ]
-        traces.append(trace(name, messages, values, texts))
+        traces.append(trace(curve, messages, values, texts))
     across = LogPlaces(messages, count)
     figure = {
         "data": traces,
         "layout": layout(HEIGHT, xaxis=across.axis("messages"), yaxis=axis("F1", range=[0, 1.03])),
     }
     of = "the planted tokens" if batch else "the batch fit"
-    return Picture(figure, HEIGHT, f"F1 against {of} at strength {plain(strength)}.", entries(named))
+    return Picture(figure, HEIGHT, f"F1 against {of} at strength {plain(strength)}.", entries(drawn))

@@ -13,7 +13,7 @@ from stream.errors import BadData, BadSettings
 from stream.runs.converging.fitting import Optimum, fitted
 from stream.runs.converging.following import Followed, Tell, after_epochs, followed, warm_up
 from stream.runs.converging.held import Held, hold
-from stream.runs.converging.job import Job, Known, Wanted, learner_settings
+from stream.runs.converging.job import Job, Known, learner_settings
 from stream.runs.converging.judging import Fitted, Judge, agreement
 from stream.runs.converging.slopes import slope_of
 from stream.runs.converging.windows import windows_of
@@ -74,7 +74,7 @@ def converge(
         "batch": job.solver,
         "epochs": job.epochs,
         "has_truth": known is not None,
-        "learners": [{"method": w.method, "learning_rate": w.learning_rate} for w in job.learners],
+        "learners": [wanted.to_json(job.learners) for wanted in job.learners],
         "strengths": list(job.strengths),
         "fits": fits,
         "slopes": list(_slopes(fits)),
@@ -94,6 +94,7 @@ def _at_strength(
         rows = held.part(0, cut)
         tell(i / len(job.cuts), f"batch fits by {job.solver}, strength {strength:g}")
         optimum = fitted(job.solver, rows, strength, len(held.addresses))
+        batch = _of_batch(judge, optimum, cut)
         learned = []
         for wanted, one in zip(job.learners, passes, strict=True):
             runs = [(1, next(one))]
@@ -101,12 +102,15 @@ def _at_strength(
                 own = learner_settings(settings, wanted, strength)
                 runs.append((job.epochs, after_epochs(own, cut, job.epochs, tell)))
             learned += [
-                _learned(held, judge, optimum, strength, cut, wanted, epochs, found) for epochs, found in runs
+                wanted.to_json(job.learners)
+                | {"epochs": epochs}
+                | _learned(held, judge, batch, optimum, strength, found)
+                for epochs, found in runs
             ]
         yield {
             "strength": strength,
             "messages": cut,
-            "batch": _of_batch(judge, optimum, cut),
+            "batch": batch,
             "learned": learned,
         }
     for one in passes:
@@ -126,25 +130,19 @@ def _of_batch(judge: Judge, optimum: Optimum, cut: int) -> dict[str, Any]:
 def _learned(
     held: Held,
     judge: Judge,
+    batch: dict[str, Any],
     optimum: Optimum,
     strength: float,
-    cut: int,
-    wanted: Wanted,
-    epochs: int,
     found: Followed,
 ) -> dict[str, Any]:
     own = Fitted(held.dense(found.weights), found.weights.intercept, found.seconds)
-    objective = judge.objective(held.part(0, cut), own, strength)
-    batch_loss = judge.figures(optimum.fitted, cut)["fresh_log_loss"]
-    figures = judge.figures(own, cut)
+    objective = judge.objective(held.part(0, found.messages), own, strength)
+    figures = judge.figures(own, found.messages)
     loss = figures["fresh_log_loss"]
     return {
-        "method": wanted.method,
-        "learning_rate": wanted.learning_rate,
-        "epochs": epochs,
         "objective": objective,
         "gap": objective / optimum.objective - 1.0,
-        "fresh_over_batch": None if loss is None else loss / batch_loss - 1.0,
+        "fresh_over_batch": None if loss is None else loss / batch["fresh_log_loss"] - 1.0,
         "against_batch": agreement(own.weights != 0, optimum.fitted.weights != 0).to_json(),
         "seconds": found.seconds,
         "learning_seconds": found.learning_seconds,
@@ -158,7 +156,7 @@ def _slopes(fits: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
         some = [fit for fit in fits if fit["strength"] == strength]
         messages = [fit["messages"] for fit in some]
         for i, one in enumerate(some[0]["learned"]):
-            row = {"strength": strength, "method": one["method"], "epochs": one["epochs"]}
+            row = {"strength": strength, "name": one["name"], "epochs": one["epochs"]}
             for of in SLOPES_OF:
                 slope = slope_of(messages, [fit["learned"][i][of] for fit in some])
                 if slope is not None:
@@ -167,7 +165,7 @@ def _slopes(fits: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
         if slope is not None:
             yield {
                 "strength": strength,
-                "method": "batch",
+                "name": None,
                 "epochs": None,
                 "of": SLOPES_OF[1],
                 **asdict(slope),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from contextlib import closing
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,11 +13,12 @@ from stream.batch_fits import Rows
 from stream.decoding import Decoder
 from stream.errors import BadData, CannotCreate
 from stream.features import Batcher
+from stream.message import Block
 from stream.settings import Settings
 from stream.sources import LogSource
 from stream.weights import Weights
 
-__all__ = ["ENTRY_BYTES", "Held", "hold"]
+__all__ = ["Held", "hold"]
 
 ENTRY_BYTES = 48
 """Of memory for each token of a message while columns are numbered, and then for a batch fit."""
@@ -56,59 +58,65 @@ class Held:
         return found
 
 
-def hold(settings: Settings, messages: int | None, memory_bytes: int, tell: Tell) -> Held:
-    """Reads the first `messages` messages of the log, or all.
+def hold(settings: Settings, messages: int, memory_bytes: int, tell: Tell) -> Held:
+    """Reads the first `messages` messages of the log, or all where there are fewer.
 
     Raises CannotCreate where they take more than `memory_bytes`, BadData without a labelled one, and what
     reading raises.
     """
+    reading = _Reading(settings)
     source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
-    decoder, batcher = Decoder(settings), Batcher(settings)
-    addresses, values, lengths = [np.empty(0, np.uint64)], [np.empty(0, np.float32)], [np.empty(0, np.int64)]
-    labels, weights, numbers = [np.empty(0, np.int8)], [np.empty(0)], [np.empty(0, np.int64)]
-    read = scored = entries = 0
-    try:
-        while len(block := source.read(BLOCK if messages is None else min(BLOCK, messages - read) or 1)):
-            if read == messages:
+    with closing(source):
+        while reading.messages < messages:
+            block = source.read(min(BLOCK, messages - reading.messages))
+            if not len(block):
                 break
-            examples, _ = decoder.decode(block)
-            batch, over = batcher.batch(examples)
-            rows = examples.rows[~np.isin(examples.rows, [reject.row for reject in over])]
-            there = batch.labels >= 0
-            kept = np.repeat(there, np.diff(batch.row_ptr))
-            addresses.append(batch.addresses[kept])
-            values.append(batch.values[kept])
-            lengths.append(np.diff(batch.row_ptr)[there])
-            labels.append(batch.labels[there])
-            weights.append(batch.weights[there])
-            numbers.append(read + rows[there])
-            read, scored, entries = read + len(block), scored + len(batch), entries + len(addresses[-1])
-            if entries * ENTRY_BYTES > memory_bytes:
+            reading.add(block)
+            if reading.entries * ENTRY_BYTES > memory_bytes:
                 raise CannotCreate(
-                    f"batch fits hold the log in memory: {entries:,} tokens of {read:,} messages so far take "
-                    f"more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer messages"
+                    f"batch fits hold the log in memory: {reading.entries:,} tokens of {reading.messages:,} "
+                    f"messages so far take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or "
+                    "take fewer messages"
                 )
-            tell(read / messages if messages else source.fraction_read() or 0.0, "reading")
-    finally:
-        source.close()
-    if not sum(map(len, labels)):
-        raise BadData(f"none of {read:,} messages has an outcome: a batch fit needs some")
-    columns, by_column = _numbered(np.concatenate(addresses))
-    row_ptr = np.concatenate([np.zeros(1, np.int64), np.cumsum(np.concatenate(lengths))])
-    return Held(
-        Rows(
-            row_ptr,
-            columns,
-            np.concatenate(values),
-            np.concatenate(labels),
-            np.concatenate(weights),
-            len(by_column),
-        ),
-        by_column,
-        np.concatenate(numbers),
-        read,
-        read - scored,
-    )
+            tell(reading.messages / messages, "reading")
+    return reading.held()
+
+
+class _Reading:
+    """Blocks of a log, gathered as rows."""
+
+    def __init__(self, settings: Settings) -> None:
+        self._decoder, self._batcher = Decoder(settings), Batcher(settings)
+        self._addresses, self._values = [np.empty(0, np.uint64)], [np.empty(0, np.float32)]
+        self._lengths, self._numbers = [np.empty(0, np.int64)], [np.empty(0, np.int64)]
+        self._labels, self._weights = [np.empty(0, np.int8)], [np.empty(0)]
+        self.messages = self.entries = self._rejected = 0
+
+    def add(self, block: Block) -> None:
+        examples, _ = self._decoder.decode(block)
+        batch, over = self._batcher.batch(examples)
+        rows = examples.rows[~np.isin(examples.rows, [reject.row for reject in over])]
+        there, lengths = batch.labels >= 0, np.diff(batch.row_ptr)
+        kept = np.repeat(there, lengths)
+        self._addresses.append(batch.addresses[kept])
+        self._values.append(batch.values[kept])
+        self._lengths.append(lengths[there])
+        self._labels.append(batch.labels[there])
+        self._weights.append(batch.weights[there])
+        self._numbers.append(self.messages + rows[there])
+        self.messages += len(block)
+        self.entries += len(self._values[-1])
+        self._rejected += len(block) - len(batch)
+
+    def held(self) -> Held:
+        labels = np.concatenate(self._labels)
+        if not len(labels):
+            raise BadData(f"none of {self.messages:,} messages has an outcome: a batch fit needs some")
+        columns, addresses = _numbered(np.concatenate(self._addresses))
+        row_ptr = np.concatenate([np.zeros(1, np.int64), np.cumsum(np.concatenate(self._lengths))])
+        values, weights = np.concatenate(self._values), np.concatenate(self._weights)
+        rows = Rows(row_ptr, columns, values, labels, weights, len(addresses))
+        return Held(rows, addresses, np.concatenate(self._numbers), self.messages, self._rejected)
 
 
 def _numbered(

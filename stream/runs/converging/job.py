@@ -20,6 +20,8 @@ __all__ = ["Job", "Known", "Method", "Wanted", "cuts_of", "learner_settings"]
 Method = Literal["ftrl", "truncated-gradient"]
 FTRL_ALONE = ("damping", "horizon")
 FIRST_CUT = 1_000
+NEVER_HALVED = 10**15
+"""`learner.averaging` that counts all messages of a pass alike."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,10 +38,24 @@ class Known:
 
 @dataclass(frozen=True, slots=True)
 class Wanted:
-    """A learner to compare: method and learning rate."""
+    """A learner to compare; `averaged`: with the weights that `learner.averaging` gives to readers."""
 
     method: Method
     learning_rate: float
+    averaged: bool = False
+
+    def to_json(self, others: tuple[Wanted, ...] = ()) -> dict[str, Any]:
+        """As JSON types, with a name that none of the `others` has."""
+        name = f"averaged {self.method}" if self.averaged else self.method
+        alike = [one for one in others if (one.method, one.averaged) == (self.method, self.averaged)]
+        if len(alike) > 1:
+            name += f" {self.learning_rate:g}"
+        return {
+            "name": name,
+            "method": self.method,
+            "learning_rate": self.learning_rate,
+            "averaged": self.averaged,
+        }
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,4 +118,6 @@ def learner_settings(settings: Settings, wanted: Wanted, strength: float) -> Set
         "learning_rate": wanted.learning_rate,
         "l1_per_example": strength,
     }
+    if wanted.averaged:
+        keys["averaging"] = NEVER_HALVED
     return settings.model_copy(update={"learner": Learner.model_validate(keys)})

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -23,19 +24,20 @@ def windows_of(
 ) -> dict[str, Any]:
     """Mean log loss in each window, nats a message, under the actual outcomes.
 
-    `learners`: of predictions from before each update; `batch`: of a fit of the whole log in hindsight, which
-    has seen what it is judged by, of one of everything before the window, and of one of the window before;
-    `truth`: of the true shares of yes. `means`: over all windows but the first, which nothing comes before.
+    `learners`: of predictions from before each update, in which averages take no part; `batch`: of a fit of
+    the whole log in hindsight, which has seen what it is judged by, of one of everything before the window,
+    and of one of the window before; `truth`: of the true shares of yes. `means`: over all windows but the
+    first, which nothing comes before.
     """
     size = job.messages // job.windows
     ends = [size * (i + 1) for i in range(job.windows)]
     spans = [(end - size, end) for end in ends]
     learners, losses_of = [], []
-    for wanted in job.learners:
+    for wanted in dict.fromkeys(replace(one, averaged=False) for one in job.learners):
         own = learner_settings(settings, wanted, strength)
         losses = window_losses(own, ends[-1], size, tell)
         losses_of.append(losses)
-        learners.append({"method": wanted.method, "learning_rate": wanted.learning_rate, "losses": losses})
+        learners.append({**wanted.to_json(job.learners), "losses": losses})
     batch = _batch(held, job, strength, spans, tell)
     truth = None if known is None else [_of_truth(held, known, *span) for span in spans]
     return {
