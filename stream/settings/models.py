@@ -32,6 +32,7 @@ __all__ = [
     "ListOf",
     "MessagePaths",
     "Metrics",
+    "Outcomes",
     "Quantity",
     "Rejects",
     "Scores",
@@ -56,6 +57,11 @@ Topic = Annotated[
     str,
     AfterValidator(checks.topic_name),
     Field(json_schema_extra={"allowed": "the name of a topic"}),
+]
+Duration = Annotated[
+    str,
+    AfterValidator(checks.duration),
+    Field(json_schema_extra={"allowed": 'a text such as "90m", "48h" or "30d", from "1s" to "3650d"'}),
 ]
 Partition = Annotated[int, BeforeValidator(checks.number), Field(ge=0, le=(1 << 31) - 1)]
 Server = Annotated[str, AfterValidator(checks.server)]
@@ -179,6 +185,62 @@ class MessagePaths(Section):
         description="Messages before the share of a whole run is judged; a window that is judged by itself "
         "has at least so many, and ends the run as soon as it has more rejects than its share allows.",
     )
+
+
+class Outcomes(Section):
+    """Where outcomes come from that are not in the messages, and how long messages wait for them."""
+
+    kind: Literal["inline", "log", "topic"] = Field(
+        default="inline",
+        description="Where outcomes are: in the messages (message.label), in log files of their own, or in a "
+        "topic of the brokers of [feed].",
+    )
+    paths: tuple[str, ...] = Field(
+        default=(),
+        description="Log files of outcomes, as feed.paths. One text counts as a list of one.",
+    )
+    topic: Topic | None = Field(default=None, description="Topic of outcomes; it is never made.")
+    id: DottedPath | None = Field(
+        default=None, description="Dotted path, in an outcome, of the id of its message."
+    )
+    label: DottedPath | None = Field(
+        default=None, description="Dotted path, in an outcome, of the label: true, false, 1 or 0."
+    )
+    time: DottedPath | None = Field(
+        default=None, description="Dotted path, in an outcome, of its event time, as message.time."
+    )
+    wait: Duration | None = Field(
+        default=None, description="How long, in event time, a message waits for its outcome."
+    )
+    when_absent: Literal["negative", "drop"] = Field(
+        default="negative",
+        description="A message whose waiting time ends without an outcome: learned as negative, or not at all.",
+    )
+    on_conflict: Literal["first", "last", "reject"] = Field(
+        default="first",
+        description="Of outcomes of one message that differ the first counts, or the last within the waiting "
+        "time, or none and the message is not learned. With the latter two every message waits to the end.",
+    )
+    allow_early: StrictBool = Field(
+        default=False,
+        description="Keep an outcome whose event time is before that of its message; else it has no message.",
+    )
+
+    @field_validator("paths", mode="before")
+    @classmethod
+    def _one_is_a_list(cls, texts: Any) -> Any:
+        return (texts,) if isinstance(texts, str) else texts
+
+    @model_validator(mode="after")
+    def _keys_fit(self) -> Outcomes:
+        checks.refuse(checks.outcomes_problems(self))
+        return self
+
+    @property
+    def wait_ms(self) -> int:
+        """`wait` in milliseconds."""
+        assert self.wait is not None  # checked where kind is not "inline"
+        return checks.duration_ms(self.wait)
 
 
 class Named(Section):
@@ -434,6 +496,7 @@ class Settings(Section):
 
     feed: Feed = Feed()
     message: MessagePaths = MessagePaths()
+    outcomes: Outcomes = Outcomes()
     fields: tuple[FieldSettings, ...] = ()
     crosses: tuple[Cross, ...] = ()
     space: Space = Space()

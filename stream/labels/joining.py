@@ -1,0 +1,477 @@
+"""Messages and their late outcomes in, in any order of partitions; decided messages out, in one order.
+
+Everything follows from event times. The watermark is the lowest event time that any partition of the two
+feeds has reached; what is earlier has been seen, and is gone through in the order of (event time, messages
+before outcomes, partition, offset). A message is released at the time of its outcome, or when its waiting
+time is over, and released messages come out in the order of (time of release, partition, offset). So feeds
+whose partitions ascend in event time give the same, however their partitions were interleaved.
+"""
+
+from __future__ import annotations
+
+import heapq
+import struct
+from collections.abc import Iterable, Mapping
+from dataclasses import asdict, dataclass
+from enum import IntEnum
+from hashlib import blake2b
+from typing import Any, NamedTuple, TypeVar
+
+import numpy as np
+import numpy.typing as npt
+
+from stream.labels.counts import JoinCounts
+from stream.labels.delays import Delays
+from stream.labels.id_index import ABSENT, IdIndex
+from stream.labels.segments import ROWS, WaitingRow
+from stream.labels.store import WaitingStore
+from stream.labels.watermark import Feed, Watermark
+from stream.settings.models import Outcomes
+
+__all__ = ["Join", "Released", "digest_of"]
+
+SEGMENTS_AT_ONCE = 64
+"""Segments whose expiry one step looks at, more only where they begin at one time."""
+
+
+BEGINNING, END = -(1 << 60), 1 << 60
+"""Before and after every event time."""
+HALVES = struct.Struct("<QQ")
+
+
+class Fate(IntEnum):
+    """What became of a row, in the lowest three bits of its byte."""
+
+    AHEAD = 0  # its event time was not reached yet
+    WAITING = 1
+    HELD = 2  # has an outcome, which may still be replaced or contradicted
+    CONTRADICTED = 3  # has outcomes that differ, with on_conflict = "reject"
+    JOINED = 4
+    EXPIRED = 5
+    REPEATED = 6  # another message had its id before
+    DISCARDED = 7  # was contradicted when its time was over
+
+
+KIND = 7
+POSITIVE = 8
+"""Added to the byte where the outcome that counts, or the late one, is positive."""
+CAME_LATE = 16
+"""Added where an outcome came after the waiting time."""
+UNSETTLED = (Fate.AHEAD, Fate.WAITING, Fate.HELD, Fate.CONTRADICTED)
+EXPIRING = UNSETTLED[1:]
+DIFFERING = -1
+"""Label of early outcomes that contradict each other."""
+
+
+class Released(NamedTuple):
+    """A decided message: time of release (ms), place, label, whether it expired, and its payload."""
+
+    time: int
+    partition: int
+    offset: int
+    label: int
+    expired: bool
+    payload: bytes
+
+
+class _Ahead(NamedTuple):
+    time: int
+    partition: int
+    offset: int
+    digest: bytes
+    handle: int
+
+
+class _Outcome(NamedTuple):
+    time: int
+    partition: int
+    offset: int
+    digest: bytes
+    label: int
+
+
+class _Leaving(NamedTuple):
+    time: int
+    partition: int
+    offset: int
+    handle: int
+    label: int
+    expired: bool
+
+
+@dataclass(slots=True)
+class _Known:
+    """The message that an id stands for; `slot`: its place in the index, ABSENT while it has none."""
+
+    handle: int
+    time: int
+    partition: int
+    offset: int
+    fate: int
+    slot: int
+
+
+def digest_of(ident: str | int) -> bytes:
+    """16 bytes that stand for an id; 17 and "17" are one id. They are safe from ids made to collide."""
+    return blake2b(str(ident).encode("utf-8", "surrogatepass"), digest_size=16).digest()
+
+
+class Join:
+    """Joins two feeds over a store; `counts` and `delays` say what happened so far.
+
+    The partitions of both feeds are named by `watermark.expect` before anything is released. State is split:
+    rows, and what became of them, are in the store, the rest in `state()`.
+    """
+
+    def __init__(self, outcomes: Outcomes, store: WaitingStore) -> None:
+        self._wait = outcomes.wait_ms
+        self._learn_absent = outcomes.when_absent == "negative"
+        self._on_conflict = outcomes.on_conflict
+        self._allow_early = outcomes.allow_early
+        self._store = store
+        self._index = IdIndex()
+        self.watermark = Watermark()
+        self.counts = JoinCounts()
+        self.delays = Delays()
+        self._clock = BEGINNING
+        self._ahead: list[_Ahead] = []
+        self._inbox: list[_Outcome] = []
+        self._early: dict[bytes, _Outcome] = {}
+        self._settled = store.first
+        self._unsettled: list[tuple[int, int]] = []  # lowest time of what may be unsettled in a segment
+        self._latest: dict[int, int] = {}  # the latest time in a segment
+        self._open = (ABSENT, 0)  # the segment being filled, and a time in self._unsettled for it
+
+    @property
+    def waiting(self) -> int:
+        """Messages that have been taken and are not decided."""
+        return self.counts.waiting
+
+    def add_message(self, partition: int, offset: int, time: int, ident: str | int, payload: bytes) -> None:
+        """Takes a message with its event time in ms."""
+        digest = digest_of(ident)
+        low, high = HALVES.unpack(digest)
+        row = WaitingRow(time, partition, offset, low, high, payload)
+        handle = self._store.append(row, Fate.AHEAD)
+        segment = handle // ROWS
+        if self._open[0] != segment or time < self._open[1]:
+            heapq.heappush(self._unsettled, (time, segment))
+            self._open = (segment, time)
+        self._latest[segment] = max(time, self._latest.get(segment, time))
+        heapq.heappush(self._ahead, _Ahead(time, partition, offset, digest, handle))
+        self.counts.messages += 1
+        self.watermark.reach(Feed.MESSAGES, partition, time)
+
+    def add_outcome(self, partition: int, offset: int, time: int, ident: str | int, label: int) -> None:
+        """Takes an outcome, 0 or 1, with its event time in ms."""
+        heapq.heappush(self._inbox, _Outcome(time, partition, offset, digest_of(ident), label))
+        self.counts.outcomes += 1
+        self.watermark.reach(Feed.OUTCOMES, partition, time)
+
+    def release(self) -> list[Released] | None:
+        """The next messages that are decided, in order; None when there is nothing to do before more comes.
+
+        Some thousands at once; the list may be empty. All of them must be dealt with before state is saved.
+        """
+        until = self.watermark.time()
+        return None if until is None else self._step(until)
+
+    def release_all(self) -> list[Released] | None:
+        """As `release`, but as if time had come to its end: what has no outcome by now has none."""
+        return self._step(END)
+
+    def state(self) -> dict[str, npt.NDArray[Any]]:
+        """Outcomes whose time has not come, or whose message has not; equal for equal feeds."""
+        return {
+            **{f"ahead.{name}": array for name, array in _as_arrays(sorted(self._inbox)).items()},
+            **{f"early.{name}": array for name, array in _as_arrays(sorted(self._early.values())).items()},
+            "delays": self.delays.counts,
+        }
+
+    def about(self) -> dict[str, Any]:
+        """The rest of the state as JSON types."""
+        return {"clock": self._clock, "counts": asdict(self.counts), "watermark": self.watermark.state()}
+
+    def restore(self, about: Mapping[str, Any], arrays: Mapping[str, npt.NDArray[Any]]) -> None:
+        """Goes on from what `about` and `state` gave, over a store opened at the moment kept with them."""
+        self._clock = about["clock"]
+        self.counts = JoinCounts(**about["counts"])
+        self.watermark.restore(about["watermark"])
+        self._inbox = _as_outcomes(arrays, "ahead.")
+        self._early = {outcome.digest: outcome for outcome in _as_outcomes(arrays, "early.")}
+        self.delays.counts = arrays["delays"].astype(np.int64)
+        for segment, columns, fates in self._store.segments():
+            kinds = fates & KIND
+            self._latest[segment] = int(columns.times.max())
+            handles = segment * ROWS + np.arange(len(columns))
+            remembered = columns.times + 2 * self._wait >= self._clock
+            named = remembered & ~np.isin(kinds, (Fate.AHEAD, Fate.REPEATED))
+            self._index.insert(columns.low[named], handles[named])
+            for at in np.flatnonzero(kinds == Fate.AHEAD).tolist():
+                digest = HALVES.pack(int(columns.low[at]), int(columns.high[at]))
+                place = int(columns.times[at]), int(columns.partitions[at]), int(columns.offsets[at])
+                self._ahead.append(_Ahead(*place, digest, int(handles[at])))
+            unsettled = np.isin(kinds, UNSETTLED)
+            if unsettled.any():
+                self._unsettled.append((int(columns.times[unsettled].min()), segment))
+        heapq.heapify(self._ahead)
+        heapq.heapify(self._unsettled)
+        self._index.forget_below(self._store.first_handle)
+
+    def _step(self, watermark: int) -> list[Released] | None:
+        until, segments = self._next_stop(watermark)
+        if until <= self._clock and not segments and not self._pending(until):
+            return None
+        leaving: list[_Leaving] = []
+        self._go_through(until, leaving)
+        self._give_up_early(until)
+        self._clock = until
+        for segment in segments:
+            self._expire(segment, until, leaving)
+        leaving.sort()
+        payload = self._store.payload
+        released = [
+            Released(row.time, row.partition, row.offset, row.label, row.expired, payload(row.handle))
+            for row in leaving
+        ]
+        self._forget()
+        return released
+
+    def _pending(self, until: int) -> bool:
+        ahead, inbox = self._ahead, self._inbox
+        return bool((ahead and ahead[0].time < until) or (inbox and inbox[0].time < until))
+
+    def _next_stop(self, watermark: int) -> tuple[int, list[int]]:
+        """A time to go to, up to the watermark, and the segments in which something may expire before it."""
+        heap, wait = self._unsettled, self._wait
+        segments: dict[int, None] = {}
+        time = BEGINNING
+        while heap and heap[0][0] + wait < watermark:
+            if len(segments) >= SEGMENTS_AT_ONCE and heap[0][0] > time:
+                break
+            time, segment = heapq.heappop(heap)
+            segments[segment] = None
+        until = max(min(watermark, heap[0][0] + wait) if heap else watermark, self._clock)
+        while heap and heap[0][0] + wait < until:
+            segments[heapq.heappop(heap)[1]] = None
+        return until, list(segments)
+
+    def _go_through(self, until: int, leaving: list[_Leaving]) -> None:
+        """All events before `until`, in order."""
+        messages, outcomes = _taken(self._ahead, until), _taken(self._inbox, until)
+        digests = dict.fromkeys([*(m.digest for m in messages), *(o.digest for o in outcomes)])
+        known = self._look_up(list(digests))
+        new: dict[bytes, _Known] = {}
+        at = 0
+        for outcome in outcomes:
+            while at < len(messages) and messages[at].time <= outcome.time:
+                self._arrive(messages[at], known, new, leaving)
+                at += 1
+            self._decide(outcome, known.get(outcome.digest), leaving)
+        for message in messages[at:]:
+            self._arrive(message, known, new, leaving)
+        if new:
+            low, _ = _split(list(new))
+            self._index.insert(low, np.array([entry.handle for entry in new.values()], np.int64))
+
+    def _look_up(self, digests: list[bytes]) -> dict[bytes, _Known]:
+        """The messages of those ids that have one."""
+        known: dict[bytes, _Known] = {}
+        if not digests:
+            return known
+        low, high = _split(digests)
+        left = np.arange(len(digests))
+        after = None
+        while len(left):
+            handles, slots = self._index.find(low[left], after)
+            again = []
+            for place in np.flatnonzero(handles != ABSENT).tolist():
+                at, handle = int(left[place]), int(handles[place])
+                row = self._store.row(handle)
+                if row.high != high[at]:  # another id with the same first half
+                    again.append(place)
+                    continue
+                fate = self._store.fate(handle)
+                known[digests[at]] = _Known(
+                    handle, row.time, row.partition, row.offset, fate, int(slots[place])
+                )
+            left, after = left[again], slots[again]
+        return known
+
+    def _arrive(
+        self, message: _Ahead, known: dict[bytes, _Known], new: dict[bytes, _Known], leaving: list[_Leaving]
+    ) -> None:
+        """The event time of a message has come."""
+        entry = known.get(message.digest)
+        if entry is not None and message.time <= entry.time + 2 * self._wait:
+            self._store.settle(message.handle, Fate.REPEATED)
+            self.counts.repeated_messages += 1
+            return
+        slot = ABSENT if entry is None else entry.slot
+        entry = _Known(message.handle, message.time, message.partition, message.offset, Fate.WAITING, slot)
+        known[message.digest] = entry
+        if slot == ABSENT:
+            new[message.digest] = entry
+        else:
+            self._index.replace(slot, entry.handle)
+        self._settle(entry, Fate.WAITING)
+        early = self._early.get(message.digest)
+        if early is not None and message.time - early.time <= self._wait:
+            del self._early[message.digest]
+            self._take(entry, early, leaving)
+
+    def _decide(self, outcome: _Outcome, entry: _Known | None, leaving: list[_Leaving]) -> None:
+        """The event time of an outcome has come."""
+        if entry is None or outcome.time > entry.time + 2 * self._wait:
+            if self._allow_early:
+                self._hold_early(outcome)
+            else:
+                self.counts.orphans += 1
+        elif outcome.time < entry.time and not (
+            self._allow_early and entry.time - outcome.time <= self._wait
+        ):  # out of order: it would have met no message in time
+            self.counts.orphans += 1
+        elif entry.fate & KIND == Fate.WAITING and not entry.fate & CAME_LATE:
+            if outcome.time <= entry.time + self._wait:
+                self._take(entry, outcome, leaving)
+            else:
+                self._come_late(entry, outcome)
+        elif entry.fate & KIND == Fate.EXPIRED and not entry.fate & CAME_LATE:
+            self._come_late(entry, outcome)
+        else:
+            self._come_again(entry, outcome)
+
+    def _take(self, entry: _Known, outcome: _Outcome, leaving: list[_Leaving]) -> None:
+        """The first outcome of a message that waits."""
+        early = outcome.time < entry.time
+        self.counts.early += early
+        if outcome.label == DIFFERING:
+            self._settle(entry, Fate.CONTRADICTED)
+            return
+        if outcome.label:
+            self.delays.add(max(0, outcome.time - entry.time))
+        if self._on_conflict != "first":
+            self._settle(entry, Fate.HELD + POSITIVE * outcome.label)
+            return
+        self._settle(entry, Fate.JOINED + POSITIVE * outcome.label)
+        self.counts.joined += 1
+        due = max(entry.time, outcome.time)
+        leaving.append(_Leaving(due, entry.partition, entry.offset, entry.handle, outcome.label, False))
+
+    def _come_late(self, entry: _Known, outcome: _Outcome) -> None:
+        self.counts.late += 1
+        if outcome.label:
+            self.delays.add(outcome.time - entry.time)
+        self._settle(entry, entry.fate + CAME_LATE + POSITIVE * outcome.label)
+
+    def _come_again(self, entry: _Known, outcome: _Outcome) -> None:
+        """A further outcome of a message."""
+        if outcome.label == (entry.fate & POSITIVE) // POSITIVE:
+            self.counts.repeated += 1
+            return
+        self.counts.conflicting += 1
+        if entry.fate & KIND == Fate.HELD and outcome.time <= entry.time + self._wait:
+            if self._on_conflict == "last":
+                self._settle(entry, Fate.HELD + POSITIVE * outcome.label)
+            else:
+                self._settle(entry, Fate.CONTRADICTED + (entry.fate & POSITIVE))
+
+    def _hold_early(self, outcome: _Outcome) -> None:
+        """Keeps an outcome whose message may still come."""
+        held = self._early.get(outcome.digest)
+        if held is None or held.time + self._wait < outcome.time:
+            self.counts.orphans += held is not None
+            self._early[outcome.digest] = outcome
+        elif held.label == outcome.label:
+            self.counts.repeated += 1
+        else:
+            self.counts.conflicting += 1
+            if self._on_conflict == "last":
+                self._early[outcome.digest] = outcome
+            elif self._on_conflict == "reject":
+                self._early[outcome.digest] = held._replace(label=DIFFERING)
+
+    def _give_up_early(self, until: int) -> None:
+        gone = [digest for digest, outcome in self._early.items() if outcome.time + self._wait < until]
+        for digest in gone:
+            del self._early[digest]
+        self.counts.orphans += len(gone)
+
+    def _settle(self, entry: _Known, fate: int) -> None:
+        entry.fate = int(fate)
+        self._store.settle(entry.handle, entry.fate)
+
+    def _expire(self, segment: int, until: int, leaving: list[_Leaving]) -> None:
+        """Ends the waiting of the rows of a segment whose time is over before `until`."""
+        columns = self._store.columns(segment)
+        fates = self._store.fates_of(segment)[: len(columns)].copy()
+        kinds = fates & KIND
+        over = np.isin(kinds, EXPIRING) & (columns.times + self._wait < until)
+        for at in np.flatnonzero(over).tolist():
+            fate, handle = int(fates[at]), segment * ROWS + at
+            due = int(columns.times[at]) + self._wait
+            row = due, int(columns.partitions[at]), int(columns.offsets[at]), handle
+            kind, label = fate & KIND, (fate & POSITIVE) // POSITIVE
+            if kind == Fate.CONTRADICTED:
+                self.counts.discarded += 1
+                self._store.settle(handle, Fate.DISCARDED + (fate & POSITIVE))
+            elif kind == Fate.HELD:
+                self.counts.joined += 1
+                self._store.settle(handle, Fate.JOINED + (fate & POSITIVE))
+                leaving.append(_Leaving(*row, label, False))
+            else:
+                self.counts.expired += 1
+                self._store.settle(handle, Fate.EXPIRED + (fate & ~KIND))
+                if self._learn_absent:
+                    leaving.append(_Leaving(*row, 0, True))
+        left = np.isin(kinds, UNSETTLED) & ~over
+        if left.any():
+            heapq.heappush(self._unsettled, (int(columns.times[left].min()), segment))
+        if segment == self._open[0]:
+            self._open = (ABSENT, 0)
+
+    def _forget(self) -> None:
+        """Lets go of segments whose rows are all decided, and of those that nobody may ask for any more."""
+        first, sealed = self._store.first, self._store.next_handle // ROWS
+        while self._settled < sealed and self._latest[self._settled] + self._wait < self._clock:
+            self._settled += 1
+        while first < self._settled and self._latest[first] + 2 * self._wait < self._clock:
+            del self._latest[first]
+            first += 1
+        self._store.forget(first, self._settled)
+        self._index.forget_below(self._store.first_handle)
+
+
+E = TypeVar("E", _Ahead, _Outcome)
+
+
+def _taken(heap: list[E], until: int) -> list[E]:
+    """Takes what is before `until` out of a heap, in order."""
+    taken = []
+    while heap and heap[0].time < until:
+        taken.append(heapq.heappop(heap))
+    return taken
+
+
+def _split(digests: list[bytes]) -> tuple[npt.NDArray[np.uint64], npt.NDArray[np.uint64]]:
+    """Both halves of hashed ids."""
+    halves = np.frombuffer(b"".join(digests), "<u8").astype(np.uint64).reshape(-1, 2)
+    return halves[:, 0], halves[:, 1]
+
+
+def _as_arrays(outcomes: Iterable[_Outcome]) -> dict[str, npt.NDArray[Any]]:
+    outcomes = list(outcomes)
+    return {
+        "times": np.array([o.time for o in outcomes], np.int64),
+        "partitions": np.array([o.partition for o in outcomes], np.int64),
+        "offsets": np.array([o.offset for o in outcomes], np.int64),
+        "ids": np.frombuffer(b"".join(o.digest for o in outcomes), np.uint8).reshape(-1, 16),
+        "labels": np.array([o.label for o in outcomes], np.int8),
+    }
+
+
+def _as_outcomes(arrays: Mapping[str, npt.NDArray[Any]], prefix: str) -> list[_Outcome]:
+    """What `_as_arrays` gave, in the same order, which is that of a heap."""
+    columns = [arrays[prefix + name].tolist() for name in ("times", "partitions", "offsets")]
+    digests = [row.tobytes() for row in arrays[prefix + "ids"]]
+    return [_Outcome(*row) for row in zip(*columns, digests, arrays[prefix + "labels"].tolist(), strict=True)]
