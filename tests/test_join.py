@@ -51,10 +51,10 @@ class Bench:
     def feed(self, event):
         if len(event) == 4:
             time, partition, offset, ident = event
-            self.join.add_message(partition, offset, time, ident, payload_of(event))
+            self.join.add_messages(partition, [offset], [time], [ident], [payload_of(event)])
         else:
             time, partition, offset, ident, label = event
-            self.join.add_outcome(partition, offset, time, ident, label)
+            self.join.add_outcomes(partition, [offset], [time], [ident], [label])
 
     def drain(self, release=None):
         while (some := (release or self.join.release)()) is not None:

@@ -1,13 +1,14 @@
 """Rows of a batch with the scores given at arrival in, compressed payloads out; and back to a batch of many.
 
 Little-endian, before compression: f64 weight, f64 margin at arrival, u32 n, u64[n] addresses, f32[n] values,
-u32[n] lengths of the token texts, then those. Each payload is a Zstandard frame of its own with a checksum.
+u32[n] lengths of the token texts, then those. A payload is the crc32 (u32) of a Zstandard frame, then that.
 """
 
 from __future__ import annotations
 
 import struct
 from collections.abc import Sequence
+from zlib import crc32
 
 import numpy as np
 import numpy.typing as npt
@@ -19,6 +20,7 @@ from stream.errors import BadData
 __all__ = ["ExampleCodec"]
 
 HEAD = struct.Struct("<ddI")
+SUM = struct.Struct("<I")
 LEVEL = 1
 """Higher levels gain little on some hundred bytes, and every message passes here twice."""
 
@@ -27,7 +29,7 @@ class ExampleCodec:
     """Packs and unpacks examples; the label is not in a payload, the join knows it."""
 
     def __init__(self) -> None:
-        self._compressor = zstandard.ZstdCompressor(LEVEL, write_checksum=True)
+        self._compressor = zstandard.ZstdCompressor(LEVEL)
         self._decompressor = zstandard.ZstdDecompressor()
 
     def pack(self, batch: Batch, margins: npt.NDArray[np.float64]) -> list[bytes]:
@@ -40,7 +42,7 @@ class ExampleCodec:
         text_ptr = np.concatenate(([0], ends))[batch.row_ptr].tolist()
         row_ptr = batch.row_ptr.tolist()
         compress, head = self._compressor.compress, HEAD.pack
-        return [
+        frames = [
             compress(
                 b"".join(
                     (
@@ -54,6 +56,7 @@ class ExampleCodec:
             )
             for row, (weight, margin) in enumerate(zip(batch.weights.tolist(), margins.tolist(), strict=True))
         ]
+        return [SUM.pack(crc32(frame)) + frame for frame in frames]
 
     def unpack(
         self, payloads: Sequence[bytes], labels: Sequence[int]
@@ -65,13 +68,7 @@ class ExampleCodec:
         heads: list[tuple[float, float, int]] = []
         parts: tuple[list[bytes], ...] = ([], [], [], [])
         for payload in payloads:
-            try:
-                data = self._decompressor.decompress(payload)
-            except zstandard.ZstdError as error:
-                raise BadData(
-                    f"a waiting message is damaged: {error}. Take an older checkpoint, or begin again in "
-                    "another state.folder"
-                ) from None
+            data = self._frame_of(payload)
             head = HEAD.unpack_from(data)
             heads.append(head)
             at = HEAD.size
@@ -91,6 +88,16 @@ class ExampleCodec:
             text_lengths,
         )
         return batch, np.array([margin for _, margin, _ in heads], np.float64)
+
+    def _frame_of(self, payload: bytes) -> bytes:
+        """What was compressed into a payload."""
+        frame = payload[SUM.size :]
+        if len(payload) < SUM.size or SUM.unpack_from(payload)[0] != crc32(frame):
+            raise BadData(
+                "a waiting message is damaged: it has not the sum that was stored with it. Take an older "
+                "checkpoint, or begin again in another state.folder"
+            )
+        return self._decompressor.decompress(frame)
 
 
 def _gathered(batch: Batch) -> npt.NDArray[np.uint8]:

@@ -11,9 +11,8 @@ from __future__ import annotations
 
 import heapq
 import struct
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict, dataclass
-from enum import IntEnum
 from hashlib import blake2b
 from typing import Any, NamedTuple, TypeVar
 
@@ -39,26 +38,22 @@ BEGINNING, END = -(1 << 60), 1 << 60
 HALVES = struct.Struct("<QQ")
 
 
-class Fate(IntEnum):
-    """What became of a row, in the lowest three bits of its byte."""
-
-    AHEAD = 0  # its event time was not reached yet
-    WAITING = 1
-    HELD = 2  # has an outcome, which may still be replaced or contradicted
-    CONTRADICTED = 3  # has outcomes that differ, with on_conflict = "reject"
-    JOINED = 4
-    EXPIRED = 5
-    REPEATED = 6  # another message had its id before
-    DISCARDED = 7  # was contradicted when its time was over
-
-
+AHEAD, WAITING, HELD, CONTRADICTED, JOINED, EXPIRED, REPEATED, DISCARDED = range(8)
+"""What became of a row, in the lowest three bits of its byte: its event time was not reached yet; it waits;
+it has an outcome that may still be replaced or contradicted; it has outcomes that differ (on_conflict =
+"reject"); it was released with its outcome; it was released or dropped without; another message had its id
+before; it had outcomes that differ when its time was over. The first four are not settled."""
 KIND = 7
 POSITIVE = 8
 """Added to the byte where the outcome that counts, or the late one, is positive."""
 CAME_LATE = 16
 """Added where an outcome came after the waiting time."""
-UNSETTLED = (Fate.AHEAD, Fate.WAITING, Fate.HELD, Fate.CONTRADICTED)
-EXPIRING = UNSETTLED[1:]
+ENDED = np.array([AHEAD, EXPIRED, JOINED, DISCARDED], np.uint8)
+"""What becomes of unsettled rows when their time is over."""
+REMEMBERED = np.array([kind not in (AHEAD, REPEATED) for kind in range(8)])
+"""Whether a row is the one that its id stands for."""
+AT_ONCE = 256
+"""Segments whose ids are put into the index together when a store is opened."""
 DIFFERING = -1
 """Label of early outcomes that contradict each other."""
 
@@ -88,15 +83,6 @@ class _Outcome(NamedTuple):
     offset: int
     digest: bytes
     label: int
-
-
-class _Leaving(NamedTuple):
-    time: int
-    partition: int
-    offset: int
-    handle: int
-    label: int
-    expired: bool
 
 
 @dataclass(slots=True)
@@ -147,26 +133,46 @@ class Join:
         """Messages that have been taken and are not decided."""
         return self.counts.waiting
 
-    def add_message(self, partition: int, offset: int, time: int, ident: str | int, payload: bytes) -> None:
-        """Takes a message with its event time in ms."""
-        digest = digest_of(ident)
-        low, high = HALVES.unpack(digest)
-        row = WaitingRow(time, partition, offset, low, high, payload)
-        handle = self._store.append(row, Fate.AHEAD)
-        segment = handle // ROWS
-        if self._open[0] != segment or time < self._open[1]:
-            heapq.heappush(self._unsettled, (time, segment))
-            self._open = (segment, time)
-        self._latest[segment] = max(time, self._latest.get(segment, time))
-        heapq.heappush(self._ahead, _Ahead(time, partition, offset, digest, handle))
-        self.counts.messages += 1
-        self.watermark.reach(Feed.MESSAGES, partition, time)
+    def add_messages(
+        self,
+        partition: int,
+        offsets: Iterable[int],
+        times: Sequence[int],
+        ids: Iterable[str | int],
+        payloads: Iterable[bytes],
+    ) -> None:
+        """Takes messages of one partition with their event times in ms."""
+        if not times:
+            return
+        append, ahead, latest = self._store.append, self._ahead, self._latest
+        for offset, time, digest, payload in zip(offsets, times, map(digest_of, ids), payloads, strict=True):
+            low, high = HALVES.unpack(digest)
+            handle = append(WaitingRow(time, partition, offset, low, high, payload), AHEAD)
+            segment = handle // ROWS
+            if self._open[0] != segment or time < self._open[1]:
+                heapq.heappush(self._unsettled, (time, segment))
+                self._open = (segment, time)
+            if latest.get(segment, BEGINNING) < time:
+                latest[segment] = time
+            heapq.heappush(ahead, _Ahead(time, partition, offset, digest, handle))
+        self.counts.messages += len(times)
+        self.watermark.reach(Feed.MESSAGES, partition, max(times))
 
-    def add_outcome(self, partition: int, offset: int, time: int, ident: str | int, label: int) -> None:
-        """Takes an outcome, 0 or 1, with its event time in ms."""
-        heapq.heappush(self._inbox, _Outcome(time, partition, offset, digest_of(ident), label))
-        self.counts.outcomes += 1
-        self.watermark.reach(Feed.OUTCOMES, partition, time)
+    def add_outcomes(
+        self,
+        partition: int,
+        offsets: Iterable[int],
+        times: Sequence[int],
+        ids: Iterable[str | int],
+        labels: Iterable[int],
+    ) -> None:
+        """Takes outcomes of one partition, 0 or 1, with their event times in ms."""
+        if not times:
+            return
+        for offset, time, digest, label in zip(offsets, times, map(digest_of, ids), labels, strict=True):
+            heapq.heappush(self._inbox, _Outcome(time, partition, offset, digest, label))
+        self.counts.outcomes += len(times)
+        self.watermark.reach(Feed.OUTCOMES, partition, max(times))
 
     def release(self) -> list[Released] | None:
         """The next messages that are decided, in order; None when there is nothing to do before more comes.
@@ -200,20 +206,26 @@ class Join:
         self._inbox = _as_outcomes(arrays, "ahead.")
         self._early = {outcome.digest: outcome for outcome in _as_outcomes(arrays, "early.")}
         self.delays.counts = arrays["delays"].astype(np.int64)
+        keys: list[npt.NDArray[np.uint64]] = []
+        named: list[npt.NDArray[np.int64]] = []
         for segment, columns, fates in self._store.segments():
             kinds = fates & KIND
             self._latest[segment] = int(columns.times.max())
-            handles = segment * ROWS + np.arange(len(columns))
-            remembered = columns.times + 2 * self._wait >= self._clock
-            named = remembered & ~np.isin(kinds, (Fate.AHEAD, Fate.REPEATED))
-            self._index.insert(columns.low[named], handles[named])
-            for at in np.flatnonzero(kinds == Fate.AHEAD).tolist():
+            held = np.flatnonzero((columns.times + 2 * self._wait >= self._clock) & REMEMBERED[kinds])
+            keys.append(columns.low[held])
+            named.append(held + segment * ROWS)
+            if len(keys) == AT_ONCE:
+                self._index.insert(np.concatenate(keys), np.concatenate(named))
+                keys, named = [], []
+            for at in np.flatnonzero(kinds == AHEAD).tolist():
                 digest = HALVES.pack(int(columns.low[at]), int(columns.high[at]))
                 place = int(columns.times[at]), int(columns.partitions[at]), int(columns.offsets[at])
-                self._ahead.append(_Ahead(*place, digest, int(handles[at])))
-            unsettled = np.isin(kinds, UNSETTLED)
+                self._ahead.append(_Ahead(*place, digest, segment * ROWS + at))
+            unsettled = kinds <= CONTRADICTED
             if unsettled.any():
                 self._unsettled.append((int(columns.times[unsettled].min()), segment))
+        if keys:
+            self._index.insert(np.concatenate(keys), np.concatenate(named))
         heapq.heapify(self._ahead)
         heapq.heapify(self._unsettled)
         self._index.forget_below(self._store.first_handle)
@@ -222,20 +234,15 @@ class Join:
         until, segments = self._next_stop(watermark)
         if until <= self._clock and not segments and not self._pending(until):
             return None
-        leaving: list[_Leaving] = []
+        leaving: list[Released] = []
         self._go_through(until, leaving)
         self._give_up_early(until)
         self._clock = until
         for segment in segments:
             self._expire(segment, until, leaving)
         leaving.sort()
-        payload = self._store.payload
-        released = [
-            Released(row.time, row.partition, row.offset, row.label, row.expired, payload(row.handle))
-            for row in leaving
-        ]
         self._forget()
-        return released
+        return leaving
 
     def _pending(self, until: int) -> bool:
         ahead, inbox = self._ahead, self._inbox
@@ -256,7 +263,7 @@ class Join:
             segments[heapq.heappop(heap)[1]] = None
         return until, list(segments)
 
-    def _go_through(self, until: int, leaving: list[_Leaving]) -> None:
+    def _go_through(self, until: int, leaving: list[Released]) -> None:
         """All events before `until`, in order."""
         messages, outcomes = _taken(self._ahead, until), _taken(self._inbox, until)
         digests = dict.fromkeys([*(m.digest for m in messages), *(o.digest for o in outcomes)])
@@ -299,28 +306,28 @@ class Join:
         return known
 
     def _arrive(
-        self, message: _Ahead, known: dict[bytes, _Known], new: dict[bytes, _Known], leaving: list[_Leaving]
+        self, message: _Ahead, known: dict[bytes, _Known], new: dict[bytes, _Known], leaving: list[Released]
     ) -> None:
         """The event time of a message has come."""
         entry = known.get(message.digest)
         if entry is not None and message.time <= entry.time + 2 * self._wait:
-            self._store.settle(message.handle, Fate.REPEATED)
+            self._store.settle(message.handle, REPEATED)
             self.counts.repeated_messages += 1
             return
         slot = ABSENT if entry is None else entry.slot
-        entry = _Known(message.handle, message.time, message.partition, message.offset, Fate.WAITING, slot)
+        entry = _Known(message.handle, message.time, message.partition, message.offset, WAITING, slot)
         known[message.digest] = entry
         if slot == ABSENT:
             new[message.digest] = entry
         else:
             self._index.replace(slot, entry.handle)
-        self._settle(entry, Fate.WAITING)
+        self._settle(entry, WAITING)
         early = self._early.get(message.digest)
         if early is not None and message.time - early.time <= self._wait:
             del self._early[message.digest]
             self._take(entry, early, leaving)
 
-    def _decide(self, outcome: _Outcome, entry: _Known | None, leaving: list[_Leaving]) -> None:
+    def _decide(self, outcome: _Outcome, entry: _Known | None, leaving: list[Released]) -> None:
         """The event time of an outcome has come."""
         if entry is None or outcome.time > entry.time + 2 * self._wait:
             if self._allow_early:
@@ -331,32 +338,33 @@ class Join:
             self._allow_early and entry.time - outcome.time <= self._wait
         ):  # out of order: it would have met no message in time
             self.counts.orphans += 1
-        elif entry.fate & KIND == Fate.WAITING and not entry.fate & CAME_LATE:
+        elif entry.fate & KIND == WAITING and not entry.fate & CAME_LATE:
             if outcome.time <= entry.time + self._wait:
                 self._take(entry, outcome, leaving)
             else:
                 self._come_late(entry, outcome)
-        elif entry.fate & KIND == Fate.EXPIRED and not entry.fate & CAME_LATE:
+        elif entry.fate & KIND == EXPIRED and not entry.fate & CAME_LATE:
             self._come_late(entry, outcome)
         else:
             self._come_again(entry, outcome)
 
-    def _take(self, entry: _Known, outcome: _Outcome, leaving: list[_Leaving]) -> None:
+    def _take(self, entry: _Known, outcome: _Outcome, leaving: list[Released]) -> None:
         """The first outcome of a message that waits."""
         early = outcome.time < entry.time
         self.counts.early += early
         if outcome.label == DIFFERING:
-            self._settle(entry, Fate.CONTRADICTED)
+            self._settle(entry, CONTRADICTED)
             return
         if outcome.label:
             self.delays.add(max(0, outcome.time - entry.time))
         if self._on_conflict != "first":
-            self._settle(entry, Fate.HELD + POSITIVE * outcome.label)
+            self._settle(entry, HELD + POSITIVE * outcome.label)
             return
-        self._settle(entry, Fate.JOINED + POSITIVE * outcome.label)
+        self._settle(entry, JOINED + POSITIVE * outcome.label)
         self.counts.joined += 1
         due = max(entry.time, outcome.time)
-        leaving.append(_Leaving(due, entry.partition, entry.offset, entry.handle, outcome.label, False))
+        payload = self._store.payload(entry.handle)
+        leaving.append(Released(due, entry.partition, entry.offset, outcome.label, False, payload))
 
     def _come_late(self, entry: _Known, outcome: _Outcome) -> None:
         self.counts.late += 1
@@ -370,11 +378,11 @@ class Join:
             self.counts.repeated += 1
             return
         self.counts.conflicting += 1
-        if entry.fate & KIND == Fate.HELD and outcome.time <= entry.time + self._wait:
+        if entry.fate & KIND == HELD and outcome.time <= entry.time + self._wait:
             if self._on_conflict == "last":
-                self._settle(entry, Fate.HELD + POSITIVE * outcome.label)
+                self._settle(entry, HELD + POSITIVE * outcome.label)
             else:
-                self._settle(entry, Fate.CONTRADICTED + (entry.fate & POSITIVE))
+                self._settle(entry, CONTRADICTED + (entry.fate & POSITIVE))
 
     def _hold_early(self, outcome: _Outcome) -> None:
         """Keeps an outcome whose message may still come."""
@@ -401,34 +409,37 @@ class Join:
         entry.fate = int(fate)
         self._store.settle(entry.handle, entry.fate)
 
-    def _expire(self, segment: int, until: int, leaving: list[_Leaving]) -> None:
+    def _expire(self, segment: int, until: int, leaving: list[Released]) -> None:
         """Ends the waiting of the rows of a segment whose time is over before `until`."""
         columns = self._store.columns(segment)
         fates = self._store.fates_of(segment)[: len(columns)].copy()
         kinds = fates & KIND
-        over = np.isin(kinds, EXPIRING) & (columns.times + self._wait < until)
-        for at in np.flatnonzero(over).tolist():
-            fate, handle = int(fates[at]), segment * ROWS + at
-            due = int(columns.times[at]) + self._wait
-            row = due, int(columns.partitions[at]), int(columns.offsets[at]), handle
-            kind, label = fate & KIND, (fate & POSITIVE) // POSITIVE
-            if kind == Fate.CONTRADICTED:
-                self.counts.discarded += 1
-                self._store.settle(handle, Fate.DISCARDED + (fate & POSITIVE))
-            elif kind == Fate.HELD:
-                self.counts.joined += 1
-                self._store.settle(handle, Fate.JOINED + (fate & POSITIVE))
-                leaving.append(_Leaving(*row, label, False))
-            else:
-                self.counts.expired += 1
-                self._store.settle(handle, Fate.EXPIRED + (fate & ~KIND))
-                if self._learn_absent:
-                    leaving.append(_Leaving(*row, 0, True))
-        left = np.isin(kinds, UNSETTLED) & ~over
+        over = (kinds >= WAITING) & (kinds <= CONTRADICTED) & (columns.times + self._wait < until)
+        left = (kinds <= CONTRADICTED) & ~over
         if left.any():
             heapq.heappush(self._unsettled, (int(columns.times[left].min()), segment))
         if segment == self._open[0]:
             self._open = (ABSENT, 0)
+        rows = np.flatnonzero(over)
+        self._store.settle_all(segment, rows, fates[rows] - kinds[rows] + ENDED[kinds[rows]])
+        tally = np.bincount(kinds[rows], minlength=CONTRADICTED + 1).tolist()
+        self.counts.expired += tally[WAITING]
+        self.counts.joined += tally[HELD]
+        self.counts.discarded += tally[CONTRADICTED]
+        rows = rows[(kinds[rows] == HELD) | ((kinds[rows] == WAITING) & self._learn_absent)]
+        expired = kinds[rows] == WAITING
+        labels = np.where(expired, 0, (fates[rows] & POSITIVE) // POSITIVE)
+        leaving.extend(
+            map(
+                Released,
+                (columns.times[rows] + self._wait).tolist(),
+                columns.partitions[rows].tolist(),
+                columns.offsets[rows].tolist(),
+                labels.tolist(),
+                expired.tolist(),
+                self._store.payloads(segment, rows.tolist()),
+            )
+        )
 
     def _forget(self) -> None:
         """Lets go of segments whose rows are all decided, and of those that nobody may ask for any more."""

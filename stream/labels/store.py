@@ -22,7 +22,7 @@ import json
 import os
 import struct
 import zlib
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -121,17 +121,28 @@ class WaitingStore:
 
     def payload(self, handle: int) -> bytes:
         """The payload of a row that was not settled when the oldest kept moment was."""
-        segment, at = divmod(handle, ROWS)
+        return self.payloads(handle // ROWS, [handle % ROWS])[0]
+
+    def payloads(self, segment: int, rows: Sequence[int]) -> list[bytes]:
+        """The payloads of some rows of a segment, as `payload`."""
         if segment == self._next:
-            return self._gathering.rows[at].payload
-        return payload_of(self._data(segment), at)
+            return [self._gathering.rows[row].payload for row in rows]
+        data = self._data(segment)
+        return [payload_of(data, row) for row in rows]
+
+    def settle_all(self, segment: int, rows: npt.NDArray[np.int64], fates: npt.NDArray[np.uint8]) -> None:
+        """Notes what became of some rows of a segment."""
+        if len(rows):
+            self.fates_of(segment)[rows] = fates
+            self._dirty.add(segment)
 
     def _data(self, segment: int) -> bytes | memoryview:
         if segment == self._next:
             return self._gathering.pack()
-        with self._trouble("read"):
-            data: memoryview | None
-            data = self._transaction.get(NUMBER.pack(segment), db=self._tables[b"segments"])
+        try:
+            data: memoryview | None = self._transaction.get(NUMBER.pack(segment), db=self._segments)
+        except lmdb.Error as error:
+            raise self._named(error, "read") from error
         if data is None:
             raise BadData(f"{self._place(segment)} is missing. {self._cure()}")
         return data
@@ -218,6 +229,7 @@ class WaitingStore:
             )  # fmt: skip
             self._check_length(path)
             self._tables = {name: self._environment.open_db(name) for name in TABLES}
+            self._segments = self._tables[b"segments"]
             self._begin()
             about = self._tables[b"about"]
             found = self._transaction.get(b"format", db=about)

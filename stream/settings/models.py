@@ -214,7 +214,7 @@ class Outcomes(Section):
     )
     when_absent: Literal["negative", "drop"] = Field(
         default="negative",
-        description="A message whose waiting time ends without an outcome: learned as negative, or not at all.",
+        description="A message whose waiting time ends without outcome: learned as negative, or dropped.",
     )
     on_conflict: Literal["first", "last", "reject"] = Field(
         default="first",
