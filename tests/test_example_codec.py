@@ -19,9 +19,10 @@ examples = st.builds(
     st.floats(0, 1e6),
     st.integers(0, 3),
 )
+long = st.builds(lambda n: Example(dict.fromkeys(range(n), 1.0)), st.integers(40, 90))
 
 
-@given(st.lists(st.tuples(examples, finite), max_size=8), st.randoms())
+@given(st.lists(st.tuples(examples | long, finite), max_size=8), st.randoms())
 def test_rows_come_back_as_they_were_in_any_order(rows, chance):
     codec = ExampleCodec()
     payloads = codec.pack(batch_of([row for row, _ in rows]), np.array([m for _, m in rows], np.float64))
@@ -44,8 +45,10 @@ def test_token_texts_that_lie_anywhere_in_their_buffer_are_kept():
     assert [back.text(entry) for entry in range(3)] == [batch.text(entry) for entry in range(3)]
 
 
-def test_a_damaged_payload_is_told_and_never_learned():
-    (payload,) = ExampleCodec().pack(batch_of([Example({5: 1.0})]), np.zeros(1))
+@pytest.mark.parametrize("entries", [1, 60])
+def test_a_damaged_payload_is_told_and_never_learned(entries):
+    row = dict.fromkeys(range(entries), 1.0)
+    (payload,) = ExampleCodec().pack(batch_of([Example(row)]), np.zeros(1))
     for at in range(len(payload)):
         damaged = bytearray(payload)
         damaged[at] ^= 4

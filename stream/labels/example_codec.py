@@ -1,13 +1,16 @@
-"""Rows of a batch with the scores given at arrival in, compressed payloads out; and back to a batch of many.
+"""Rows of a batch with the scores given at arrival in, payloads out; and back to a batch of many.
 
-Little-endian, before compression: f64 weight, f64 margin at arrival, u32 n, u64[n] addresses, f32[n] values,
-u32[n] lengths of the token texts, then those. A payload is the crc32 (u32) of a Zstandard frame, then that.
+A payload is the crc32 (u32) of all that follows, then `HEAD`, then a body: addresses, values (left out where all
+are 1), lengths of the token texts, the texts. Numbers are little-endian and no wider than the batch needs.
+Bodies of COMPRESSED_FROM bytes or more are Zstandard frames: in shorter ones the layout has taken out
+what a compressor would find (measured on a row of 17 tokens: 268 bytes against 319 of a compressed plain row).
 """
 
 from __future__ import annotations
 
 import struct
 from collections.abc import Sequence
+from typing import NamedTuple
 from zlib import crc32
 
 import numpy as np
@@ -19,10 +22,22 @@ from stream.errors import BadData
 
 __all__ = ["ExampleCodec"]
 
-HEAD = struct.Struct("<ddI")
 SUM = struct.Struct("<I")
+HEAD = struct.Struct("<ddIBBBB")
+COMPRESSED_FROM = 1024
 LEVEL = 1
-"""Higher levels gain little on some hundred bytes, and every message passes here twice."""
+
+
+class _Head(NamedTuple):
+    """`entries`: of the row; bytes of an address, of a value (0: all are 1), of a length; 1: compressed."""
+
+    weight: float
+    margin: float
+    entries: int
+    address_bytes: int
+    value_bytes: int
+    length_bytes: int
+    compressed: int
 
 
 class ExampleCodec:
@@ -34,29 +49,30 @@ class ExampleCodec:
 
     def pack(self, batch: Batch, margins: npt.NDArray[np.float64]) -> list[bytes]:
         """A payload for each row; `margins`: float64[m], those given at arrival."""
-        addresses = batch.addresses.astype("<u8").tobytes()
-        values = batch.values.astype("<f4").tobytes()
-        lengths = batch.text_lengths.astype("<u4").tobytes()
-        texts = _gathered(batch).tobytes()
-        ends = np.cumsum(batch.text_lengths, dtype=np.int64)
-        text_ptr = np.concatenate(([0], ends))[batch.row_ptr].tolist()
-        row_ptr = batch.row_ptr.tolist()
-        compress, head = self._compressor.compress, HEAD.pack
-        frames = [
-            compress(
-                b"".join(
-                    (
-                        head(weight, margin, row_ptr[row + 1] - row_ptr[row]),
-                        addresses[8 * row_ptr[row] : 8 * row_ptr[row + 1]],
-                        values[4 * row_ptr[row] : 4 * row_ptr[row + 1]],
-                        lengths[4 * row_ptr[row] : 4 * row_ptr[row + 1]],
-                        texts[text_ptr[row] : text_ptr[row + 1]],
-                    )
+        wide, narrow = _width(batch.addresses), _width(batch.text_lengths)
+        addresses, lengths = _cut(batch.addresses, wide), _cut(batch.text_lengths, narrow)
+        values, texts = batch.values.astype("<f4").tobytes(), _gathered(batch).tobytes()
+        ends = np.concatenate(([0], np.cumsum(batch.text_lengths, dtype=np.int64)))
+        row_ptr, text_ptr = batch.row_ptr.tolist(), ends[batch.row_ptr].tolist()
+        plain = np.concatenate(([0], np.cumsum(batch.values != 1.0)))[batch.row_ptr]
+        value_bytes = np.where(plain[1:] > plain[:-1], 4, 0).tolist()
+        payloads = []
+        for row, (weight, margin) in enumerate(zip(batch.weights.tolist(), margins.tolist(), strict=True)):
+            first, last, each = row_ptr[row], row_ptr[row + 1], value_bytes[row]
+            body = b"".join(
+                (
+                    addresses[wide * first : wide * last],
+                    values[4 * first : 4 * last] if each else b"",
+                    lengths[narrow * first : narrow * last],
+                    texts[text_ptr[row] : text_ptr[row + 1]],
                 )
             )
-            for row, (weight, margin) in enumerate(zip(batch.weights.tolist(), margins.tolist(), strict=True))
-        ]
-        return [SUM.pack(crc32(frame)) + frame for frame in frames]
+            compressed = len(body) >= COMPRESSED_FROM
+            if compressed:
+                body = self._compressor.compress(body)
+            body = HEAD.pack(weight, margin, last - first, wide, each, narrow, compressed) + body
+            payloads.append(SUM.pack(crc32(body)) + body)
+        return payloads
 
     def unpack(
         self, payloads: Sequence[bytes], labels: Sequence[int]
@@ -65,39 +81,80 @@ class ExampleCodec:
 
         Raises BadData where a payload is damaged.
         """
-        heads: list[tuple[float, float, int]] = []
-        parts: tuple[list[bytes], ...] = ([], [], [], [])
+        heads: list[_Head] = []
+        addresses, values, lengths, texts = _Runs("<u8"), _Runs("<f4"), _Runs("<u4"), []
         for payload in payloads:
-            data = self._frame_of(payload)
-            head = HEAD.unpack_from(data)
+            head, body = self._opened(payload)
             heads.append(head)
-            at = HEAD.size
-            for part, size in zip(parts, (8 * head[2], 4 * head[2], 4 * head[2], len(data)), strict=True):
-                part.append(data[at : at + size])
-                at += size
-        addresses, values, lengths, texts = (b"".join(part) for part in parts)
-        text_lengths = np.frombuffer(lengths, "<u4").astype(np.int32)
+            at = addresses.add(body, 0, head.entries, head.address_bytes)
+            at = values.add(body, at, head.entries, head.value_bytes)
+            at = lengths.add(body, at, head.entries, head.length_bytes)
+            texts.append(body[at:])
+        text_lengths = lengths.numbers().astype(np.int32)
         batch = Batch(
-            np.cumsum([0, *(count for _, _, count in heads)], dtype=np.int64),
-            np.frombuffer(addresses, "<u8").astype(np.uint64),
-            np.frombuffer(values, "<f4").astype(np.float32),
+            np.cumsum([0, *(head.entries for head in heads)], dtype=np.int64),
+            addresses.numbers().astype(np.uint64),
+            values.numbers().astype(np.float32),
             np.array(labels, np.int8),
-            np.array([weight for weight, _, _ in heads], np.float64),
-            np.frombuffer(texts, np.uint8).copy(),
+            np.array([head.weight for head in heads], np.float64),
+            np.frombuffer(b"".join(texts), np.uint8).copy(),
             np.cumsum(text_lengths, dtype=np.int64) - text_lengths,
             text_lengths,
         )
-        return batch, np.array([margin for _, margin, _ in heads], np.float64)
+        return batch, np.array([head.margin for head in heads], np.float64)
 
-    def _frame_of(self, payload: bytes) -> bytes:
-        """What was compressed into a payload."""
-        frame = payload[SUM.size :]
-        if len(payload) < SUM.size or SUM.unpack_from(payload)[0] != crc32(frame):
+    def _opened(self, payload: bytes) -> tuple[_Head, bytes]:
+        """Head and body of a payload, its sum checked."""
+        if len(payload) < SUM.size + HEAD.size or SUM.unpack_from(payload)[0] != crc32(payload[SUM.size :]):
             raise BadData(
                 "a waiting message is damaged: it has not the sum that was stored with it. Take an older "
                 "checkpoint, or begin again in another state.folder"
             )
-        return self._decompressor.decompress(frame)
+        head = _Head(*HEAD.unpack_from(payload, SUM.size))
+        body = payload[SUM.size + HEAD.size :]
+        return head, self._decompressor.decompress(body) if head.compressed else body
+
+
+class _Runs:
+    """Numbers of one column, row by row, in runs of rows that have them equally wide."""
+
+    def __init__(self, dtype: str) -> None:
+        self._dtype = np.dtype(dtype)
+        self._runs: list[tuple[int, list[bytes]]] = []
+        self._entries: list[int] = []
+
+    def add(self, body: bytes, at: int, entries: int, width: int) -> int:
+        """Takes `entries` numbers of `width` bytes; where the next column begins."""
+        if not self._runs or self._runs[-1][0] != width:
+            self._runs.append((width, []))
+            self._entries.append(0)
+        end = at + width * entries
+        self._runs[-1][1].append(body[at:end])
+        self._entries[-1] += entries
+        return end
+
+    def numbers(self) -> npt.NDArray[np.generic]:
+        """All of them; 1 where they were left out."""
+        pieces = [np.empty(0, self._dtype)]
+        for (width, parts), entries in zip(self._runs, self._entries, strict=True):
+            if not width:
+                pieces.append(np.ones(entries, self._dtype))
+                continue
+            full = np.zeros((entries, self._dtype.itemsize), np.uint8)
+            full[:, :width] = np.frombuffer(b"".join(parts), np.uint8).reshape(-1, width)
+            pieces.append(full.reshape(-1).view(self._dtype))
+        return np.concatenate(pieces)
+
+
+def _width(numbers: npt.NDArray[np.generic]) -> int:
+    """Bytes that hold the largest."""
+    largest = int(numbers.max()) if len(numbers) else 0
+    return max(1, (largest.bit_length() + 7) // 8)
+
+
+def _cut(numbers: npt.NDArray[np.generic], width: int) -> bytes:
+    """The lowest `width` bytes of each."""
+    return numbers.astype("<u8").view(np.uint8).reshape(-1, 8)[:, :width].tobytes()
 
 
 def _gathered(batch: Batch) -> npt.NDArray[np.uint8]:
