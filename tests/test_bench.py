@@ -16,6 +16,7 @@ TINY = {
     "width": {"messages": 300, "rounds": 1, "distinct": 200},
     "score": {"messages": 300, "rounds": 1, "distinct": 200},
     "tune": {"messages": 600, "rounds": 1, "distinct": 200},
+    "certify": {"messages": 600, "rounds": 1, "distinct": 200},
     "memory": {"live": 200_000},
     "checkpoint": {"live": 100_000, "rounds": 1},
     "worker": {"messages": 300, "rounds": 1, "distinct": 200},

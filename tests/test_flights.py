@@ -68,19 +68,22 @@ def log_file(tmp_path_factory):
     return path
 
 
-@pytest.fixture(scope="module")
-def replayed(log_file):
-    settings = Settings.model_validate(
+def settings_for(log_file, **learner):
+    return Settings.model_validate(
         {
             "feed": {"paths": [str(log_file)]},
             "message": {"label": "late"},
             "fields": [{"path": field, "kind": "category"} for field in FIELDS],
             "crosses": [{"paths": paths} for paths in CROSSES],
-            "learner": {"learning_rate": 0.5, "l1_per_example": 1e-5},
+            "learner": learner,
             "metrics": {"window": FIRST},
         }
     )
-    return replay(settings, log_file.parent / "state")
+
+
+@pytest.fixture(scope="module")
+def replayed(log_file):
+    return replay(settings_for(log_file, learning_rate=0.5, l1_per_example=1e-5), log_file.parent / "state")
 
 
 def test_the_log_is_the_feed_that_the_published_figures_are_about(log_file, replayed):

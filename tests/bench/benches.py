@@ -37,6 +37,7 @@ BENCHES = {
     "width": Bench("width", {"messages": 400_000, "rounds": 5}, {"messages": 60_000, "rounds": 3}),
     "score": Bench("score", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
     "tune": Bench("tune", {"messages": 400_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
+    "certify": Bench("certify", {"messages": 1_000_000, "rounds": 3}, {"messages": 60_000, "rounds": 2}),
     "memory": Bench("memory", {"live": 20_000_000}, {"live": 20_000_000}),
     "checkpoint": Bench("checkpoint", {"live": 10_000_000, "rounds": 4}, {"live": 2_000_000, "rounds": 2}),
     "worker": Bench("worker", {"messages": 1_000_000, "rounds": 3}, {"messages": 100_000, "rounds": 2}),

@@ -2,9 +2,9 @@
 
 import argparse
 
-from tests.evidence import references
+from tests.evidence import references, regret, sparsity
 
-TABLES = {"references": references.compare}
+TABLES = {"references": references.compare, "regret": regret.compare, "sparsity": sparsity.compare}
 
 
 def main():
