@@ -65,6 +65,8 @@ def _halvings(number: np.uint64, every: np.uint64) -> int:
 @small
 def _fade(word: np.uint64, halvings: int, every: np.uint64) -> float:
     """What a row with this touch word counts, now that the sums have been halved so often in all."""
+    if halvings == 0:  # as long as a log that is learned once lasts: no division
+        return 1.0
     due = halvings - _halvings(word >> TOUCH_SHIFT, every)
     return math.ldexp(1.0, -due) if due > 0 else 1.0
 

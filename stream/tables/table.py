@@ -102,20 +102,19 @@ class Table:
 
         The slots hold until the next change. Neither admission nor `max_live` is asked.
         """
-        slots = self.slots_of(addresses)
-        new = np.unique(addresses[wanted & (slots < 0)])
-        if not len(new):
+        slots, before = self.slots_of(addresses), self._capacity
+        missing = np.flatnonzero(wanted & (slots < 0))
+        if not len(missing):
             return slots
+        new = np.unique(addresses[missing])
         self._grow(len(new))
-        probing.place(
-            self.cells,
-            np.uint64(self._capacity),
-            self._secret,
-            new,
-            np.zeros((len(new), CELLS - 1), np.uint64),
-        )
+        nothing = np.zeros((len(new), CELLS - 1), np.uint64)
+        probing.place(self.cells, np.uint64(self._capacity), self._secret, new, nothing)
         self.live += len(new)
-        return self.slots_of(addresses)
+        if self._capacity > before:  # rows have moved
+            return self.slots_of(addresses)
+        slots[missing] = self.slots_of(addresses[missing])
+        return slots
 
     def forget(self, doomed: npt.NDArray[np.int64]) -> None:
         """Takes the rows at the given slots out."""
