@@ -5,9 +5,10 @@ Shares no code with `stream`, so that a bug in one cannot hide itself in the oth
 
 from simulator.bench import bench_log
 from simulator.courier import FeedBlock, blocks
+from simulator.faults import Faults
 from simulator.feed import CourierFeed
 from simulator.log_file import write_log
-from simulator.scenarios import SCENARIOS
+from simulator.pacing import Pace
 from simulator.truth import Truth
 
-__all__ = ["SCENARIOS", "CourierFeed", "FeedBlock", "Truth", "bench_log", "blocks", "write_log"]
+__all__ = ["CourierFeed", "Faults", "FeedBlock", "Pace", "Truth", "bench_log", "blocks", "write_log"]

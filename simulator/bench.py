@@ -10,7 +10,8 @@ import numpy.typing as npt
 
 from simulator.arithmetic import sigmoid
 from simulator.draws import raw_stream, uniform
-from simulator.log_file import Progress, open_log
+from simulator.log_file import open_log
+from simulator.writing import Progress
 from simulator.zipf import ZipfLaw
 
 __all__ = ["bench_log"]

@@ -43,7 +43,9 @@ class FeedBlock:
     """Consecutive messages of a feed, m of them, the first of them message number `first`.
 
     `lines`: JSON Lines, bytes; `probability`: float64[m], true probability before label noise;
-    `outcome`: bool[m], as written, after label noise; `flipped`: bool[m]; `words`: words in all notes.
+    `outcome`: bool[m], as written, after label noise; `flipped`: bool[m];
+    `second`: int64[m], its time, counted from the midnight before the first message of the log;
+    `words`: int64[m], in each note.
     """
 
     first: int
@@ -51,7 +53,8 @@ class FeedBlock:
     probability: Floats
     outcome: npt.NDArray[np.bool_]
     flipped: npt.NDArray[np.bool_]
-    words: int
+    second: Ints
+    words: Ints
 
     def __len__(self) -> int:
         return len(self.outcome)
@@ -133,8 +136,15 @@ class Courier:
         flipped = uniform(drawn.raws[:, 5]) < self.feed.label_noise
         outcome = (uniform(drawn.raws[:, 4]) < probability) != flipped
         lines = self._lines.write(first, count, drawn.fields, drawn.notes, outcome)
-        words = int(drawn.notes.words[:count].sum())
-        return FeedBlock(first, lines, probability[:count], outcome[:count], flipped[:count], words)
+        return FeedBlock(
+            first,
+            lines,
+            probability[:count],
+            outcome[:count],
+            flipped[:count],
+            drawn.fields.moment()[:count],
+            drawn.notes.words[:count],
+        )
 
     def _solve_intercepts(self) -> Floats:
         """float64[steps]: of each step that which makes the mean of its true probabilities its rate.

@@ -47,6 +47,10 @@ class Fields:
     sender: Ints
     decagrams: Ints
 
+    def moment(self) -> Ints:
+        """int64[m]: seconds since the midnight before the first message of the log."""
+        return (self.day * 24 + self.hour) * 3_600 + self.second
+
 
 @dataclass(frozen=True, slots=True)
 class Notes:

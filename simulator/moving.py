@@ -18,8 +18,8 @@ __all__ = ["NEWCOMER_SHARE", "plant_course"]
 
 MOVE_STREAM = 5
 FRESH_WORDS = 500
-FRESH_CANDIDATES = 300
-NEWCOMER_SHARE = 512
+FRESH_CANDIDATES = 100
+NEWCOMER_SHARE = 1_024
 """Of 2,048 streets, codes and shops: how many a newcomer replaces, once there are some."""
 
 Floats = npt.NDArray[np.float64]

@@ -32,3 +32,12 @@ class Weights:
 
     def __len__(self) -> int:
         return len(self.addresses)
+
+    def at(self, addresses: npt.NDArray[np.uint64]) -> npt.NDArray[np.float64]:
+        """The weight at each of `addresses`, uint64[n]; 0 where there is none."""
+        found = np.zeros(len(addresses))
+        places = np.searchsorted(self.addresses, addresses)
+        there = places < len(self)
+        there[there] = self.addresses[places[there]] == addresses[there]
+        found[there] = self.values[places[there]]
+        return found

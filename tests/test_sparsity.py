@@ -39,4 +39,4 @@ def test_weights_are_interpolated_at_the_auc_on_the_way_to_the_best():
     assert curve.kept_at(0.6) != curve.kept_at(0.6), "below it there is no weight to begin from"
     assert curve.kept_at(0.72) == pytest.approx(2_000)
     assert np.isnan(curve.kept_at(0.73))
-    assert curve.rare_at(0.65) == 0.5
+    assert curve.recent_at(0.65) == 0.5

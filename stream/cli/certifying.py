@@ -68,45 +68,28 @@ def certify(
     The batch optimum: the weights with the least mean log loss plus L1 penalty over the whole log. The
     bound is guaranteed and needs no batch fit; the log is read twice, and nothing is learned."""
     from stream.runs.certifying.certify import certify as run_certify
+    from stream.runs.certifying.worth import worth
 
-    if strength is not None and not 0.0 <= strength < float("inf"):
-        raise UsageError(f"--strength {strength:g}: give a number above 0")
-    if not refine and (fresh or out is not None):
-        raise UsageError("--fresh and --out are about the batch optimum: give --refine too")
+    _check(strength, refine, fresh, out)
     memory_bytes = size_of(memory, "--memory")
-    if out is not None:
-        check_output(out, new=True)
+    later = tuple(log_pattern(text, "for no comparison") for text in fresh or ())
     settings, paths, folder = _log(logs, config)
     snapshot = read_snapshot_of(config, state, name)
     note_compiling("sums_kernel")
     with stage_bar() as tell:
-        found = run_certify(
-            snapshot,
-            paths,
-            settings,
-            folder=folder,
-            strength=strength,
-            progress=lambda stage, fraction: tell(fraction or 0.0, stage),
-        )
+
+        def progress(stage: str, fraction: float | None) -> None:
+            tell(fraction or 0.0, stage)
+
+        found = run_certify(snapshot, paths, settings, folder=folder, strength=strength, progress=progress)
         refined = None
         if refine:
-            from stream.runs.certifying.worth import worth
-
-            refined = worth(
-                snapshot,
-                found,
-                tuple(paths),
-                folder,
-                settings,
-                tuple(log_pattern(text, "for no comparison") for text in fresh or ()),
-                memory_bytes,
-                lambda stage, fraction: tell(fraction or 0.0, stage),
-            )
-    document = found.to_json() | ({} if refined is None else refined.to_json())
+            refined = worth(snapshot, found, tuple(paths), folder, settings, later, memory_bytes, progress)
     if out is not None and refined is not None:
         from stream.snapshots import write_snapshot
 
         write_snapshot(out, snapshot.messages, refined.refined.weights, snapshot.about)
+    document = found.to_json() | ({} if refined is None else refined.to_json())
     if as_json:
         show_json(document)
     else:
@@ -115,6 +98,15 @@ def certify(
             _show_refined(document, out)
     if found.findings.rejected:
         note(f"bedload: {count(found.findings.rejected)} rejected messages were left out")
+
+
+def _check(strength: float | None, refine: bool, fresh: list[str] | None, out: Path | None) -> None:
+    if strength is not None and not 0.0 <= strength < float("inf"):
+        raise UsageError(f"--strength {strength:g}: give a number above 0")
+    if not refine and (fresh or out is not None):
+        raise UsageError("--fresh and --out are about the batch optimum: give --refine too")
+    if out is not None:
+        check_output(out, new=True)
 
 
 def _log(logs: list[str] | None, config: Path | None) -> tuple[Settings | None, list[str], Path]:

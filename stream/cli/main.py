@@ -11,7 +11,18 @@ from typing import Annotated
 
 import typer
 
-from stream.cli import certifying, demo, learning, rejecting, scoring, simulating, stored, tuning, working
+from stream.cli import (
+    certifying,
+    converging,
+    demo,
+    learning,
+    rejecting,
+    scoring,
+    simulating,
+    stored,
+    tuning,
+    working,
+)
 from stream.cli.exits import exit_code_of
 
 __all__ = ["app", "main", "run"]
@@ -47,7 +58,18 @@ def bedload(
     """
 
 
-for commands in (demo, learning, working, tuning, certifying, scoring, stored, rejecting, simulating):
+for commands in (
+    demo,
+    learning,
+    working,
+    tuning,
+    certifying,
+    scoring,
+    stored,
+    rejecting,
+    simulating,
+    converging,
+):
     commands.add_to(app)
 
 

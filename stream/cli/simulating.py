@@ -1,21 +1,28 @@
-"""The command `simulate`: settings of an invented feed in, a log with known truth out."""
+"""The command `simulate`: settings of an invented feed in, a log or topic with known truth out."""
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from contextlib import ExitStack, closing
+from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar
 
 import typer
 
+from stream.cli.exits import INTERRUPTED
 from stream.cli.options import AsJsonLines
 from stream.cli.outputs import check_output
-from stream.cli.screen import count, progress_bar, share
+from stream.cli.screen import count, note, progress_bar, share
 from stream.errors import BadSettings, UsageError
 
 if TYPE_CHECKING:
-    from simulator import CourierFeed
+    from simulator import CourierFeed, Faults, Pace, Truth
 
 __all__ = ["add_to", "feed_of"]
+
+Advance = Callable[[int, int], None]
+Made = TypeVar("Made")
 
 
 def add_to(app: typer.Typer) -> None:
@@ -28,16 +35,53 @@ def simulate(
         Path | None,
         typer.Option("--out", metavar="FILE", help="Log to write, never overwritten; .gz, .zst: compressed."),
     ] = None,
+    topic: Annotated[
+        str | None, typer.Option("--topic", metavar="NAME", help="Topic to write to instead; never made.")
+    ] = None,
+    servers: Annotated[
+        list[str] | None,
+        typer.Option("--servers", metavar="HOST:PORT", help="Brokers of the topic; may be given many times."),
+    ] = None,
+    config: Annotated[
+        Path | None,
+        typer.Option("--config", metavar="FILE", help="Settings whose [feed] says how to reach the brokers."),
+    ] = None,
     messages: Annotated[int, typer.Option("--messages", metavar="N", help="How many messages.")] = 100_000,
     seed: Annotated[int, typer.Option("--seed", metavar="N", help="Same seed, same bytes.")] = 0,
     scenario: Annotated[
         str,
-        typer.Option("--scenario", metavar="NAME", help="What moves in the feed: see docs/simulator.md."),
+        typer.Option(
+            "--scenario",
+            metavar="NAME",
+            help="One of steady, sudden-change, slow-drift, base-rate-shift, seasonal, new-vocabulary, "
+            "rare-tokens, duplicated-tokens, collisions, label-noise.",
+        ),
     ] = "steady",
     changes: Annotated[
         list[str] | None,
         typer.Option(
             "--set", metavar="KEY=VALUE", help="Another setting of the feed: see docs/simulator.md."
+        ),
+    ] = None,
+    rate: Annotated[
+        float | None, typer.Option("--rate", metavar="N", help="Messages a second; without it, flat out.")
+    ] = None,
+    faults: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--fault",
+            metavar="NAME=SHARE",
+            help="Of messages: duplicates, reordering, malformed, gaps; of outcomes: lost_outcomes, "
+            "repeated_outcomes. May be given many times.",
+        ),
+    ] = None,
+    outcomes: Annotated[
+        str | None,
+        typer.Option(
+            "--outcomes",
+            metavar="PLACE",
+            help="Keep outcomes out of the messages and write them, when they are known, to this file; with "
+            "--topic, to this topic.",
         ),
     ] = None,
     truth: Annotated[
@@ -51,27 +95,129 @@ def simulate(
     as_json: AsJsonLines = False,
 ) -> None:
     """Make an invented courier feed, with known truth."""
-    if (out is None) != as_json:
-        raise UsageError("give one of --out FILE (a log in a file) and --json (messages on standard output)")
+    places = _Places(out, topic, tuple(servers or ()), config, outcomes, truth, probabilities)
+    places.check(as_json)
+    from stream.runs.stopping import stop_on_signal
+
+    feed, chosen = feed_of(messages, seed, scenario, changes or []), faults_of(faults or [], outcomes)
+    with progress_bar("simulating") as progress:
+
+        def advance(done: int, whole: int) -> None:
+            progress(done / whole, done)
+
+        if rate is None and topic is None:  # a log that gets its name when it is whole: a stop leaves nothing
+            drawn = _to_files(feed, chosen, pace_of(None, lambda: False), places, advance)
+        else:
+            with stop_on_signal() as came:
+                pace = pace_of(rate, lambda: bool(came))
+                drawn = (_to_topic if topic else _to_files)(feed, chosen, pace, places, advance)
+    if not as_json:
+        places.tell(drawn)
+    if drawn.messages < messages:
+        note(f"bedload: stopped after {count(drawn.messages)} of {count(messages)} messages; each is whole")
+        raise typer.Exit(INTERRUPTED)
+
+
+@dataclass(frozen=True, slots=True)
+class _Places:
+    """Where everything goes, as the options say."""
+
+    log: Path | None
+    topic: str | None
+    servers: tuple[str, ...]
+    config: Path | None
+    outcomes: str | None
+    truth: Path | None
+    probabilities: Path | None
+
+    def check(self, as_json: bool) -> None:
+        """Raises UsageError for options that do not fit, and what `check_output` raises."""
+        if (self.log is not None) + (self.topic is not None) + as_json != 1:
+            raise UsageError(
+                "give one of --out FILE (a log in a file), --topic NAME (a topic of a cluster) and --json "
+                "(messages on standard output)"
+            )
+        cluster = bool(self.servers) or self.config is not None
+        if self.topic is not None and not cluster:
+            raise UsageError("--topic needs --servers HOST:PORT, or --config FILE whose [feed] names them")
+        if self.topic is None and cluster:
+            raise UsageError("--servers and --config say where a --topic is; without one they mean nothing")
+        outcomes = None if self.outcomes is None or self.topic is not None else Path(self.outcomes)
+        files = [
+            (self.log, "--out"),
+            (outcomes, "--outcomes"),
+            (self.truth, "--truth"),
+            (self.probabilities, "--probabilities"),
+        ]
+        named = [(path, option) for path, option in files if path is not None and str(path) != "-"]
+        for path, option in named:
+            check_output(path, option, new=True)
+        for i, (path, option) in enumerate(named):
+            for other, its in named[i + 1 :]:
+                if path.absolute() == other.absolute():
+                    raise UsageError(f"{option} and {its} are both {path}; give one of them another place")
+
+    def tell(self, drawn: Truth) -> None:
+        """Says what was written and where the truth is."""
+        truth = self.truth or (f"{self.log}.truth.json" if self.topic is None else None)
+        where = f"the truth is in {truth}" if truth else "the truth is in no file: --truth FILE keeps it"
+        print(
+            f"{self.log or f'topic {self.topic}'}: {count(drawn.messages)} messages, "
+            f"{share(drawn.redelivered_share)} redelivered, {count(drawn.words)} words; {where}"
+        )
+        faults = {**drawn.records, "malformed": sum(drawn.records["malformed"].values())}
+        written = faults.pop("written")
+        if any(faults.values()):
+            print(
+                f"on the way: {count(faults['missing'])} missing, {count(faults['malformed'])} malformed, "
+                f"{count(faults['duplicates'])} duplicates, {count(faults['reordered'])} behind a later one; "
+                f"{count(written)} records written"
+            )
+        if drawn.outcomes is not None:
+            told = {name: count(value) for name, value in drawn.outcomes.items()}
+            waiting = f", {told['waiting']} not known yet" if drawn.outcomes["waiting"] else ""
+            print(
+                f"{self.outcomes}: {told['written']} outcomes, {told['lost']} lost, {told['repeated']} "
+                f"repeated{waiting}"
+            )
+
+
+def _to_files(feed: CourierFeed, faults: Faults, pace: Pace, places: _Places, advance: Advance) -> Truth:
     from simulator import write_log
 
-    feed = feed_of(messages, seed, scenario, changes or [])
-    for path, option in ((out, "--out"), (truth, "--truth"), (probabilities, "--probabilities")):
-        if path is not None and str(path) != "-":
-            check_output(path, option, new=True)
-    with progress_bar("simulating") as progress:
-        drawn = write_log(
-            feed,
-            "-" if out is None else out,
-            truth_path=truth,
-            probability_path=probabilities,
-            progress=lambda done, all_of_them: progress(done / all_of_them, done),
-        )
-    if out is not None:
-        print(
-            f"{out}: {count(drawn.messages)} messages, {share(drawn.redelivered_share)} redelivered, "
-            f"{count(drawn.words)} words; the truth is in {truth or f'{out}.truth.json'}"
-        )
+    return write_log(
+        feed,
+        "-" if places.log is None else places.log,
+        truth_path=places.truth,
+        probability_path=places.probabilities,
+        outcome_path=places.outcomes,
+        faults=faults,
+        pace=pace,
+        progress=advance,
+    )
+
+
+def _to_topic(feed: CourierFeed, faults: Faults, pace: Pace, places: _Places, advance: Advance) -> Truth:
+    from simulator.log_file import FileSink, open_log
+    from simulator.writing import write_feed
+    from stream.cli.topic_sink import TopicSink, cluster_of
+    from stream.topics import Publisher, Secrets
+
+    assert places.topic is not None
+    settings = cluster_of(places.config, places.servers, places.topic)
+    with ExitStack() as kept:
+        opened = [
+            None if path is None else kept.enter_context(open_log(path))
+            for path in (places.probabilities, places.truth)
+        ]
+        publisher = Publisher(settings.feed, Secrets(settings), "the topics of --topic and --outcomes")
+        kept.enter_context(closing(publisher))
+        sink = TopicSink(publisher, places.topic, places.outcomes, FileSink(None, None, opened[0]))
+        truth = write_feed(feed, sink, faults, pace, advance)
+        sink.flush()
+        if opened[1] is not None:
+            opened[1].write(truth.to_json().encode())
+    return truth
 
 
 def feed_of(messages: int, seed: int, scenario: str, changes: list[str]) -> CourierFeed:
@@ -80,18 +226,51 @@ def feed_of(messages: int, seed: int, scenario: str, changes: list[str]) -> Cour
 
     from simulator import CourierFeed
 
-    kinds = {field.name: field.type for field in fields(CourierFeed) if field.type != "str"}
+    kinds = {field.name: str(field.type) for field in fields(CourierFeed) if field.type != "str"}
     given: dict[str, Any] = {"messages": messages, "seed": seed, "scenario": scenario}
-    for change in changes:
-        name, _, text = change.partition("=")
+    given |= _numbers("--set", changes, kinds, "setting of the feed")
+    return _made("simulate", lambda: CourierFeed(**given))
+
+
+def faults_of(shares: list[str], outcomes: str | None) -> Faults:
+    """The faults that the options mean. Raises BadSettings as `feed_of` does, and for faults of outcomes that
+    stand in the messages."""
+    from dataclasses import fields
+
+    from simulator import Faults
+
+    kinds = {field.name: str(field.type) for field in fields(Faults)}
+    faults = _made("--fault", lambda: Faults(**_numbers("--fault", shares, kinds, "fault")))
+    if faults.in_outcomes and outcomes is None:
+        raise UsageError("lost and repeated outcomes need --outcomes PLACE: else they stand in the messages")
+    return faults
+
+
+def pace_of(rate: float | None, stopped: Callable[[], bool]) -> Pace:
+    """The pace of this rate. Raises BadSettings for a rate that cannot be."""
+    from simulator import Pace
+
+    return _made("--rate", lambda: Pace(rate, stopped))
+
+
+def _numbers(option: str, texts: list[str], kinds: dict[str, str], what: str) -> dict[str, Any]:
+    """Values by name of texts NAME=VALUE."""
+    given: dict[str, Any] = {}
+    for text in texts:
+        name, _, value = text.partition("=")
         if name not in kinds:
-            raise BadSettings(f"--set {change}: no such setting of the feed; there are {', '.join(kinds)}")
+            raise BadSettings(f"{option} {text}: no such {what}; there are {', '.join(kinds)}")
         try:
-            given[name] = int(text) if kinds[name] == "int" else float(text)
+            given[name] = int(value) if kinds[name] == "int" else float(value)
         except ValueError:
             kind = "a whole number" if kinds[name] == "int" else "a number"
-            raise BadSettings(f"--set {change}: {name} must be {kind}") from None
+            raise BadSettings(f"{option} {text}: {name} must be {kind}") from None
+    return given
+
+
+def _made(place: str, make: Callable[[], Made]) -> Made:
+    """What `make` gives, its ValueError told as BadSettings."""
     try:
-        return CourierFeed(**given)
+        return make()
     except ValueError as error:
-        raise BadSettings(f"simulate: {error}") from None
+        raise BadSettings(f"{place}: {error}") from None

@@ -16,11 +16,18 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Bound", "best_intercept", "log_losses", "lower_bound", "probabilities"]
+__all__ = [
+    "Bound",
+    "DualPoint",
+    "best_intercept",
+    "log_losses",
+    "lower_bound",
+    "probabilities",
+    "residuals_of",
+]
 
 Floats = npt.NDArray[np.float64]
-TRIED = 24
-GOLDEN = (5**0.5 - 1) / 2
+HALVINGS = 30
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,17 +80,35 @@ def probabilities(margins: Floats) -> Floats:
     return np.where(margins >= 0, 1.0, e) / (1.0 + e)
 
 
-def lower_bound(
-    margins: Floats, labels: npt.NDArray[np.int8], weights: Floats, up: Floats, down: Floats, strength: float
-) -> Bound:
-    """The best bound from the residuals of weights with these margins.
+def residuals_of(margins: Floats, labels: npt.NDArray[np.int8]) -> Floats:
+    """1 - p where the label is 1, p where it is 0: float64[m]; small ones keep their digits."""
+    return probabilities(np.where(labels == 1, -margins, margins))
 
-    `margins`, `weights` float64[m], `labels` int8[m], 0 or 1; `up`, `down` float64[n]: sums of o x (1 - p)
-    over label 1 and of o x p over label 0 of every coordinate of the log; `strength`: per example.
-    """
+
+@dataclass(frozen=True, slots=True)
+class DualPoint:
+    """Residuals u, or any other numbers between 0 and 1, float64[m]; `labels` int8[m], 0 or 1; `weights`
+    float64[m]; `up`, `down` float64[n]: sums of o x u over label 1 and over label 0 of every coordinate."""
+
+    residuals: Floats
+    labels: npt.NDArray[np.int8]
+    weights: Floats
+    up: Floats
+    down: Floats
+
+    @classmethod
+    def of(
+        cls, margins: Floats, labels: npt.NDArray[np.int8], weights: Floats, up: Floats, down: Floats
+    ) -> DualPoint:
+        """The residuals of weights that give these margins (float64[m])."""
+        return cls(residuals_of(margins, labels), labels, weights, up, down)
+
+
+def lower_bound(point: DualPoint, strength: float) -> Bound:
+    """The best bound from this point scaled; `strength`: per example."""
+    residuals, weights, up, down = point.residuals, point.weights, point.up, point.down
     total = float(weights.sum())
-    residuals = probabilities(np.where(labels == 1, -margins, margins))
-    one = labels == 1
+    one = point.labels == 1
     of_one, of_zero = float((weights * residuals)[one].sum()), float((weights * residuals)[~one].sum())
     if not (of_one > 0.0 and of_zero > 0.0):
         return Bound(0.0, 0.0)
@@ -94,19 +119,17 @@ def lower_bound(
     most = min(1.0 / float(u.max()), strength / steepest if steepest > 0 else np.inf)
     most *= 1 - 1e-12  # rounding may not carry it over the edge
 
-    def value(scale: float) -> float:
-        v = u * scale
-        return float((weights * _entropy(v)).sum()) / total
+    def slope(scale: float) -> float:
+        """Of the bound in the scale, times the total weight."""
+        v = np.clip(u * scale, 1e-300, 1.0 - 1e-16)
+        return float((weights * u * np.log((1.0 - v) / v)).sum())
 
     low, high = 0.0, most
-    for _ in range(TRIED):  # concave in the scale: golden section, or the edge
-        a, b = high - GOLDEN * (high - low), low + GOLDEN * (high - low)
-        if value(a) < value(b):
-            low = a
-        else:
-            high = b
-    found = max((value(low), low), (value(high), high), (value(most), most))
-    return Bound(*found)
+    if slope(most) < 0.0:  # concave in the scale: nearly always the edge, else inside
+        for _ in range(HALVINGS):
+            middle = (low + high) / 2
+            low, high = (middle, high) if slope(middle) > 0.0 else (low, middle)
+    return Bound(float((weights * _entropy(u * high)).sum()) / total, high)
 
 
 def _entropy(u: Floats) -> Floats:

@@ -64,6 +64,7 @@ def descend(
     weights: Floats,
     gradient: Floats,
     curvature: Floats,
+    extra: Floats,
     curve: Floats,
     pull: float,
     strength: float,
@@ -74,10 +75,11 @@ def descend(
 ) -> float:
     """Minimises the model over the chosen columns and the intercept; returns the intercept's step.
 
-    `columns` int64[k], with `weights`, `gradient` and `curvature` float64[k] of each; `curve` float64[m] of
-    each example; `pull` the gradient in the intercept; all of sums over examples. `step` float64[k] and
-    `moved` float64[m], zeros, are filled: the change of weights, and of margins. Ends after `rounds` passes,
-    or when the largest gain of a pass is under `tolerance` of the first's.
+    `columns` int64[k], with `weights`, `gradient` and `curvature` float64[k] of each, and the part `extra` of
+    its curvature that comes from no example; `curve` float64[m] of each example; `pull` the gradient in the
+    intercept; all of sums over examples. `step` float64[k] and `moved` float64[m], zeros, are filled: the
+    change of weights, and of margins. Ends after `rounds` passes, or when the largest gain of a pass is under
+    `tolerance` of the first's.
     """
     total_curve = curve.sum()
     shift, first = 0.0, 0.0
@@ -93,7 +95,7 @@ def descend(
             moved[i] += change
         for c in range(len(columns)):
             j = columns[c]
-            slope = gradient[c]
+            slope = gradient[c] + extra[c] * step[c]
             for e in range(starts[j], starts[j + 1]):
                 slope += values[e] * curve[rows[e]] * moved[rows[e]]
             here = weights[c] + step[c]

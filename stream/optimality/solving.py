@@ -1,4 +1,7 @@
-"""A log in memory and weights to begin with in; the batch optimum, as near as wanted, with its proof out."""
+"""A log in memory and weights to begin with in; the batch optimum, as near as wanted, with its proof out.
+
+`approach` does the same for part of a log, with a tilt that stands for the rest of it.
+"""
 
 from __future__ import annotations
 
@@ -8,10 +11,18 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from stream.optimality.bound import Bound, best_intercept, log_losses, lower_bound, probabilities
+from stream.optimality.bound import (
+    Bound,
+    DualPoint,
+    best_intercept,
+    log_losses,
+    lower_bound,
+    probabilities,
+    residuals_of,
+)
 from stream.optimality.solver_kernel import add_columns, column_sums, curvatures, descend
 
-__all__ = ["Columns", "Solution", "solve"]
+__all__ = ["Columns", "Solution", "Tilt", "approach", "solve"]
 
 Floats = npt.NDArray[np.float64]
 MOST_STEPS = 500
@@ -50,6 +61,37 @@ class Columns:
         starts = np.concatenate([np.zeros(1, np.int64), np.cumsum(np.bincount(columns, minlength=count))])
         return cls(starts, rows[order], values[order], labels, weights)
 
+    def margins(self, weights: Floats, intercept: float) -> Floats:
+        """float64[m] of weights float64[n]."""
+        margins = np.full(len(self.labels), float(intercept))
+        add_columns(self.starts, self.rows, self.values, np.arange(len(weights)), weights, margins)
+        return margins
+
+    def sums(self, residuals: Floats) -> tuple[Floats, Floats]:
+        """Of each column, the sums of o x u over label 1 and over label 0, u the residual (float64[m])."""
+        up, down = np.empty(len(self.starts) - 1), np.empty(len(self.starts) - 1)
+        one, weighted = self.labels == 1, self.weights * residuals
+        column_sums(self.starts, self.rows, self.values, np.where(one, weighted, 0.0), up)
+        column_sums(self.starts, self.rows, self.values, np.where(one, 0.0, weighted), down)
+        return up, down
+
+    def curvatures(self, curve: Floats, columns: npt.NDArray[np.int64] | None = None) -> Floats:
+        """Sums of value^2 * curve (float64[m]) of the columns given, or of all."""
+        chosen = np.arange(len(self.starts) - 1) if columns is None else columns
+        steep = np.empty(len(chosen))
+        curvatures(self.starts, self.rows, self.values, chosen, curve, steep)
+        return steep
+
+
+@dataclass(frozen=True, slots=True)
+class Tilt:
+    """What is added to the sum of losses: slope * weights + curvature / 2 * (weights - start)^2, of each
+    column (float64[n]), and `pull` * intercept."""
+
+    slope: Floats
+    curvature: Floats
+    pull: float
+
 
 @dataclass(frozen=True, slots=True)
 class Solution:
@@ -81,91 +123,134 @@ def solve(
     each step.
     """
     total = float(log.weights.sum())
-    here = np.array(weights, np.float64)
-    margins = np.full(len(log.labels), float(intercept))
-    everything = np.arange(len(here))
-    add_columns(log.starts, log.rows, log.values, everything, here, margins)
-    shift = best_intercept(margins, log.labels, log.weights)
-    margins += shift
-    intercept += shift
+    point = _Point.at(log, weights, intercept)
+    point = _Point(point.weights, *_with_best_intercept(log, point))
     best, steps = Bound(0.0, 0.0), 0
-    objective = _objective(log, margins, here, strength, total)
+
+    def value(at: _Point) -> float:
+        losses = float((log_losses(at.margins, log.labels) * log.weights).sum())
+        return losses / total + strength * float(np.abs(at.weights).sum())
+
+    objective, none = value(point), np.zeros(len(weights))
     while True:
-        p = probabilities(margins)
-        up, down = _sums(log, margins, len(here))
-        bound = lower_bound(margins, log.labels, log.weights, up, down, strength)
+        up, down = log.sums(residuals_of(point.margins, log.labels))
+        bound = lower_bound(DualPoint.of(point.margins, log.labels, log.weights, up, down), strength)
         best = max(best, bound, key=lambda one: one.value)
         tell((objective - best.value) / objective)
         if objective - best.value <= tolerance * objective or steps == MOST_STEPS:
             break
-        gradient = down - up
-        chosen = np.flatnonzero((here != 0.0) | (np.abs(gradient) > NEAR * strength * total))
-        moved, step, shift = _direction(log, p, chosen, here, gradient, strength * total, steps)
-        size, reached = _along(log, margins, moved, here, chosen, step, strength, total, objective)
-        if size == 0.0:
+        pull = float((log.weights * (probabilities(point.margins) - log.labels)).sum())
+        step = _direction(log, point, down - up, none, pull, strength * total, steps)
+        reached = _along(point, step, value, objective)
+        if reached is None:
             break
-        here[chosen] += size * step
-        margins += size * moved
-        intercept += size * shift
-        objective = reached
+        point, objective = reached
         steps += 1
-    return Solution(here, intercept, objective, best.value, steps)
+    return Solution(point.weights, point.intercept, objective, best.value, steps)
 
 
-def _sums(log: Columns, margins: Floats, count: int) -> tuple[Floats, Floats]:
-    up, down = np.empty(count), np.empty(count)
-    one = log.labels == 1
-    residuals = log.weights * probabilities(np.where(one, -margins, margins))  # 1 - p would round to 0
-    column_sums(log.starts, log.rows, log.values, np.where(one, residuals, 0.0), up)
-    column_sums(log.starts, log.rows, log.values, np.where(one, 0.0, residuals), down)
-    return up, down
+def approach(
+    log: Columns,
+    weights: Floats,
+    intercept: float,
+    strength: float,
+    tilt: Tilt,
+    tolerance: float,
+    most_steps: int,
+) -> tuple[Floats, float, Floats]:
+    """Weights and intercept from the given ones towards where losses, `tilt` and penalty are least together,
+    and the gradient of the first two there.
+
+    `strength`: on the sum of losses. Ends when no gradient is more than `tolerance` of its limit beyond it,
+    after `most_steps`, or where no step helps.
+    """
+    start = np.array(weights, np.float64)
+    point = _Point.at(log, start, intercept)
+
+    def value(at: _Point) -> float:
+        losses = float((log_losses(at.margins, log.labels) * log.weights).sum())
+        away = at.weights - start
+        tilted = float(tilt.slope @ away + 0.5 * (tilt.curvature * away) @ away)
+        return losses + tilted + tilt.pull * at.intercept + strength * float(np.abs(at.weights).sum())
+
+    objective, steps = value(point), 0
+    while True:
+        up, down = log.sums(residuals_of(point.margins, log.labels))
+        gradient = down - up + tilt.slope + tilt.curvature * (point.weights - start)
+        beyond = float(np.max(np.abs(gradient), initial=0.0)) / strength - 1.0
+        if (steps and beyond <= tolerance) or steps == most_steps:
+            break
+        pull = float((log.weights * (probabilities(point.margins) - log.labels)).sum()) + tilt.pull
+        step = _direction(log, point, gradient, tilt.curvature, pull, strength, steps)
+        reached = _along(point, step, value, objective)
+        if reached is None:
+            break
+        point, objective = reached
+        steps += 1
+    return point.weights, point.intercept, gradient
+
+
+@dataclass(frozen=True, slots=True)
+class _Point:
+    """Weights float64[n], intercept, and the margins float64[m] that they give; or a change of these."""
+
+    weights: Floats
+    intercept: float
+    margins: Floats
+
+    @classmethod
+    def at(cls, log: Columns, weights: Floats, intercept: float) -> _Point:
+        here = np.array(weights, np.float64)
+        return cls(here, intercept, log.margins(here, intercept))
+
+    def plus(self, size: float, step: _Point) -> _Point:
+        return _Point(
+            self.weights + size * step.weights,
+            self.intercept + size * step.intercept,
+            self.margins + size * step.margins,
+        )
+
+
+def _with_best_intercept(log: Columns, point: _Point) -> tuple[float, Floats]:
+    shift = best_intercept(point.margins, log.labels, log.weights)
+    return point.intercept + shift, point.margins + shift
 
 
 def _direction(
     log: Columns,
-    p: Floats,
-    chosen: npt.NDArray[np.int64],
-    here: Floats,
+    point: _Point,
     gradient: Floats,
+    extra: Floats,
+    pull: float,
     strength: float,
     steps: int,
-) -> tuple[Floats, Floats, float]:
-    """Change of margins, of the chosen weights and of the intercept, to where the model is least, nearly."""
+) -> _Point:
+    """The change to where the second-order model is least, nearly."""
+    chosen = np.flatnonzero((point.weights != 0.0) | (np.abs(gradient) > NEAR * strength))
+    p = probabilities(point.margins)
     curve = log.weights * p * (1 - p) + STEEP
-    steep = np.empty(len(chosen))
-    curvatures(log.starts, log.rows, log.values, chosen, curve, steep)
+    steep = log.curvatures(curve, chosen)
     moved, step = np.zeros(len(p)), np.zeros(len(chosen))
-    pull = float((log.weights * (p - log.labels)).sum())
     shift = descend(
-        log.starts, log.rows, log.values, chosen, here[chosen], gradient[chosen], np.maximum(steep, STEEP),
-        curve, pull, strength, step, moved, 10 + 10 * steps, 1e-8,
+        log.starts, log.rows, log.values, chosen, point.weights[chosen], gradient[chosen],
+        np.maximum(steep + extra[chosen], STEEP), extra[chosen], curve, pull, strength, step, moved,
+        10 + 10 * steps, 1e-8,
     )  # fmt: skip
-    return moved, step, float(shift)
+    change = np.zeros(len(point.weights))
+    change[chosen] = step
+    return _Point(change, float(shift), moved)
 
 
 def _along(
-    log: Columns,
-    margins: Floats,
-    moved: Floats,
-    here: Floats,
-    chosen: npt.NDArray[np.int64],
-    step: Floats,
-    strength: float,
-    total: float,
-    objective: float,
-) -> tuple[float, float]:
-    """The largest of 1, 1/2, 1/4, ... that lowers the objective, and what it then is; 0 where none does."""
+    point: _Point, step: _Point, value: Callable[[_Point], float], objective: float
+) -> tuple[_Point, float] | None:
+    """As far as lowers the objective, of 1, 1/2, 1/4, ..., and what it then is; None where nothing does."""
     size = 1.0
     while size > 1e-10:
-        there = here.copy()
-        there[chosen] += size * step
-        reached = _objective(log, margins + size * moved, there, strength, total)
+        there = point.plus(size, step)
+        with np.errstate(over="ignore", invalid="ignore"):  # a tilted problem may have no end
+            reached = value(there)
         if reached < objective:
-            return size, reached
+            return there, reached
         size /= 2
-    return 0.0, objective
-
-
-def _objective(log: Columns, margins: Floats, weights: Floats, strength: float, total: float) -> float:
-    losses = float((log_losses(margins, log.labels) * log.weights).sum())
-    return losses / total + strength * float(np.abs(weights).sum())
+    return None

@@ -1,5 +1,4 @@
-"""Scored examples in, sums that give gradient and curvature of the mean log loss out: by coordinate, and in
-full for a few frequent ones.
+"""Scored examples in, sums that give gradient and curvature of the mean log loss by coordinate out.
 
 Three numbers of a table row, all over labelled examples with example weight o, value x and probability p:
 
@@ -7,7 +6,8 @@ Three numbers of a table row, all over labelled examples with example weight o, 
     SECOND  sum of o x p over label 0: what pulls it down
     TOUCH   sum of o p (1 - p) x x, as the bits of a float64: the curvature
 
-The gradient of the sum of losses is SECOND - FIRST.
+The gradient of the sum of losses is SECOND - FIRST. In a second pass TOUCH is room instead: how far the
+examples kept so far can move the gradient of a coordinate that is near its limit, or infinity for others.
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from stream.coordinate import FIRST, SECOND, TOUCH, row_of
 from stream.exact import sigmoid
 from stream.kernel import kernel, prefetch
 
-__all__ = ["add_sums", "gather_sums", "solve_model"]
+__all__ = ["add_and_keep", "add_sums", "begin_again", "gather_sums"]
 
 Floats = npt.NDArray[np.float64]
 Int64s = npt.NDArray[np.int64]
@@ -37,18 +37,9 @@ def add_sums(
     margins: Floats,
     first: int,
     last: int,
-    frequent: Int64s,
-    full: Floats,
-    held: Int64s,
 ) -> None:
-    """Adds examples first to last - 1, whose margins (float64[m]) are given.
-
-    `frequent` int64[nnz]: place of each entry among the frequent coordinates, or -1; `full`
-    float64[K + 1, K + 1]: the lower half of their curvature, the intercept last; K = 0 leaves it out. `held`
-    int64[K + 1]: room for one row.
-    """
+    """Adds examples first to last - 1, whose margins (float64[m]) are given."""
     top = np.uint64(max(row_ptr[last] - 1, 0))
-    K = full.shape[0] - 1
     for example in range(first, last):
         if labels[example] < 0:
             continue
@@ -57,7 +48,6 @@ def add_sums(
         up = weight * sigmoid(-margins[example]) if labels[example] == 1 else 0.0
         down = weight * p if labels[example] == 0 else 0.0
         curve = weight * p * (1.0 - p)
-        count = 0
         for e in range(np.uint64(row_ptr[example]), np.uint64(row_ptr[example + 1])):
             prefetch(floats, row_of(max(slots[min(e + AHEAD, top)], 0)))
             row = row_of(slots[e])
@@ -65,53 +55,71 @@ def add_sums(
             floats[row + FIRST] += up * x
             floats[row + SECOND] += down * x
             floats[row + TOUCH] += curve * x * x
-            if K > 0 and frequent[e] >= 0:
-                held[count] = np.int64(e)
-                count += 1
-        if K > 0:
-            full[K, K] += curve
-            for i in range(count):
-                a, x = frequent[held[i]], curve * values[held[i]]
-                full[K, a] += x
-                for j in range(i + 1):
-                    b = frequent[held[j]]
-                    full[max(a, b), min(a, b)] += x * values[held[j]]
 
 
 @kernel
-def gather_sums(cells: npt.NDArray[np.uint64], floats: Floats, slots: Int64s, out: Floats) -> None:
-    """out[:, i] = the three sums of the row in slots[i]."""
+def add_and_keep(
+    floats: Floats,
+    slots: Int64s,
+    row_ptr: Int64s,
+    values: npt.NDArray[np.float32],
+    labels: npt.NDArray[np.int8],
+    weights: Floats,
+    margins: Floats,
+    room: float,
+    entries_left: int,
+    most_entries: int,
+    kept: npt.NDArray[np.bool_],
+) -> int:
+    """Adds all examples to FIRST and SECOND, and chooses which to keep: kept bool[m]; returns entries_left.
+
+    An example is kept where one of its coordinates has less than `room` yet; what is wanted falls with the
+    entries that may still be kept, so that late and rare coordinates get some. Returns -1 where a labelled
+    example has a coordinate without row.
+    """
+    top = np.uint64(max(row_ptr[len(labels)] - 1, 0))
+    for example in range(len(labels)):
+        kept[example] = False
+        if labels[example] < 0:
+            continue
+        p, weight = sigmoid(margins[example]), weights[example]
+        up = weight * sigmoid(-margins[example]) if labels[example] == 1 else 0.0
+        down = weight * p if labels[example] == 0 else 0.0
+        begin, end = np.uint64(row_ptr[example]), np.uint64(row_ptr[example + 1])
+        wanted = room * (entries_left / most_entries)
+        short = False
+        for e in range(begin, end):
+            ahead = slots[min(e + AHEAD, top)]
+            prefetch(floats, row_of(max(ahead, 0)))
+            if slots[e] < 0:
+                return -1
+            row = row_of(slots[e])
+            x = np.float64(values[e])
+            floats[row + FIRST] += up * x
+            floats[row + SECOND] += down * x
+            short |= floats[row + TOUCH] < wanted
+        if short and int(end - begin) <= entries_left:
+            kept[example] = True
+            entries_left -= int(end - begin)
+            movable = weight * min(p, 1.0 - p)
+            for e in range(begin, end):
+                floats[row_of(slots[e]) + TOUCH] += movable * abs(np.float64(values[e]))
+    return entries_left
+
+
+@kernel
+def begin_again(floats: Floats, slots: Int64s, near_limit: npt.NDArray[np.bool_]) -> None:
+    """Makes the rows ready for pass two; `near_limit` bool[n]: coordinates that examples are kept for."""
+    for i in range(len(slots)):
+        row = row_of(slots[i])
+        floats[row + FIRST] = 0.0
+        floats[row + SECOND] = 0.0
+        floats[row + TOUCH] = 0.0 if near_limit[i] else np.inf
+
+
+@kernel
+def gather_sums(floats: Floats, slots: Int64s, out: Floats) -> None:
+    """out[:, i] = the three numbers of the row in slots[i]."""
     for i in range(len(slots)):
         row = row_of(slots[i])
         out[0, i], out[1, i], out[2, i] = floats[row + FIRST], floats[row + SECOND], floats[row + TOUCH]
-
-
-@kernel
-def solve_model(
-    gradient: Floats, full: Floats, weights: Floats, strength: float, step: Floats, rounds: int
-) -> None:
-    """step = where gradient * step + step full step / 2 + strength * |weights + step| is least, nearly.
-
-    By coordinate descent, `rounds` times over all K + 1 coordinates; the last, the intercept, has no penalty.
-    All sums are over examples, `full` is symmetric.
-    """
-    K = len(gradient) - 1
-    slope = gradient.copy()
-    for _ in range(rounds):
-        moved = 0.0
-        for j in range(K + 1):
-            curve = full[j, j]
-            if not curve > 0.0:
-                continue
-            here = weights[j] + step[j]
-            wanted = here - slope[j] / curve
-            if j < K:
-                wanted = np.sign(wanted) * max(abs(wanted) - strength / curve, 0.0)
-            change = wanted - here
-            if change != 0.0:
-                step[j] += change
-                moved = max(moved, change * change * curve)
-                for i in range(K + 1):
-                    slope[i] += change * full[j, i]
-        if moved < 1e-12:
-            return

@@ -29,12 +29,14 @@ CLOSE_S = 2.0
 class Publisher:
     """Writes to topics of the cluster of `feed`, which are never made. For one thread.
 
-    Connects when it is made. Raises Unavailable where the cluster does not answer, NoPermission, BadSettings,
-    and what stream.topics.access.Secrets raises.
+    `topics` tells in errors which these are. Connects when it is made. Raises Unavailable where the cluster
+    does not answer, NoPermission, BadSettings, and what stream.topics.access.Secrets raises.
     """
 
-    def __init__(self, feed: Feed, secrets: Secrets) -> None:
-        self._feed = feed
+    def __init__(
+        self, feed: Feed, secrets: Secrets, topics: str = "the topics of rejects.topic and scores.topic"
+    ) -> None:
+        self._feed, self._topics = feed, topics
         try:
             self._producer: Any = open_producer(feed, secrets.options(), LARGEST_BYTES)
         except Away as away:
@@ -108,6 +110,6 @@ class Publisher:
 
     def _unavailable(self, why: str) -> Unavailable:
         return Unavailable(
-            f"{', '.join(self._feed.servers)}: {why}; see to the brokers and whether the topics of "
-            "rejects.topic and scores.topic are there: they are never made"
+            f"{', '.join(self._feed.servers)}: {why}; see to the brokers and whether "
+            f"{self._topics} are there: they are never made"
         )

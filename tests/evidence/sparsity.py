@@ -9,6 +9,7 @@ truncated gradient are ours, as `bedload tune` runs them; adaptive forward-backw
 import json
 import tempfile
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 
 import numpy as np
@@ -38,20 +39,19 @@ RATES = {
 BELOW = (0.001, 0.005, 0.02)
 """How far under the lowest of the methods' best AUCs they are compared."""
 MESSAGES = 100_000
-SELDOM = 10
 
 
 @dataclass(frozen=True)
 class Curve:
     """AUC and non-zero weights of a method at one rate, from the strongest strength to the weakest.
 
-    `rare`: how many of these weights are of tokens that were seen in at most SELDOM messages.
+    `recent`: how many of these weights are of tokens that were just seen, as `Rows` has it.
     """
 
     rate: float
     auc: np.ndarray
     kept: np.ndarray
-    rare: np.ndarray
+    recent: np.ndarray
 
     @property
     def best(self):
@@ -65,10 +65,10 @@ class Curve:
         two = slice(after - 1, after + 1)
         return float(np.exp(np.interp(auc, self.auc[two], np.log(self.kept[two]))))
 
-    def rare_at(self, auc):
+    def recent_at(self, auc):
         """Share of the weights, at the strongest strength that reaches the AUC."""
         after = self._first_at(auc)
-        return self.rare[after] / self.kept[after]
+        return self.recent[after] / self.kept[after]
 
     def _first_at(self, auc):
         return int(np.argmax(self.auc >= auc))
@@ -100,38 +100,50 @@ class Log:
         lanes = self._lanes(settings, rate)
         trial = run_trial(settings, lanes, blocks_of(self.facts.messages), 1 << 33)
         auc = np.array([histograms.auc(trial.bins[0, lane]) for lane in range(len(lanes))])
-        kept, seldom = trial.weights.values != 0, trial.weights.messages <= SELDOM
-        return Curve(rate, auc, trial.nnz, kept[seldom].sum(axis=0))
+        kept, rows = trial.weights.values != 0, self.rows
+        recent = rows.recent[np.searchsorted(rows.addresses, trial.weights.addresses)]
+        return Curve(rate, auc, trial.nnz, kept[recent].sum(axis=0))
 
     def _plainly(self, _, rate):
-        row_ptr, columns, values, labels = self._rows()
-        seldom = np.bincount(columns, minlength=self.live) <= SELDOM
-        auc, kept, rare = [], [], []
+        rows, auc, kept, recent = self.rows, [], [], []
         for lane in self._lanes(self.settings_of("ftrl"), rate):
             margins, weights = forward_backward(
-                row_ptr, columns, values, labels, self.live, rate, lane.l1_per_example
+                rows.ends, rows.columns, rows.values, rows.labels, self.live, rate, lane.l1_per_example
             )
-            auc.append(roc_auc_score(labels, margins))
+            auc.append(roc_auc_score(rows.labels, margins))
             kept.append(weights.sum())
-            rare.append((weights & seldom).sum())
-        return Curve(rate, np.array(auc), np.array(kept), np.array(rare))
+            recent.append((weights & rows.recent).sum())
+        return Curve(rate, np.array(auc), np.array(kept), np.array(recent))
 
-    def _rows(self):
-        """The log as the learner sees it, columns numbered; read once."""
-        if not hasattr(self, "_held"):
-            settings = self.settings_of("ftrl")
-            source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
-            decoder, batcher, parts = Decoder(settings), Batcher(settings), []
-            while len(block := source.read(4096)):
-                batch, _ = batcher.batch(decoder.decode(block)[0])
-                parts.append(
-                    (np.diff(batch.row_ptr), batch.addresses.copy(), batch.values.copy(), batch.labels.copy())
-                )
-            source.close()
-            lengths, addresses, values, labels = map(np.concatenate, zip(*parts, strict=True))
-            _, columns = np.unique(addresses, return_inverse=True)
-            self._held = np.append(0, np.cumsum(lengths)), columns.astype(np.int32), values, labels
-        return self._held
+    @cached_property
+    def rows(self):
+        """The log as the learner sees it."""
+        settings = self.settings_of("ftrl")
+        source = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
+        decoder, batcher, parts = Decoder(settings), Batcher(settings), []
+        while len(block := source.read(4096)):
+            batch, _ = batcher.batch(decoder.decode(block)[0])
+            columns = (np.diff(batch.row_ptr), batch.addresses, batch.values, batch.labels)
+            parts.append([column.copy() for column in columns])
+        source.close()
+        return Rows(*map(np.concatenate, zip(*parts, strict=True)))
+
+
+class Rows:
+    """Messages as sparse rows whose columns are numbered by ascending address.
+
+    `ends` int64[m + 1], `columns` int32[nnz], `values` float32[nnz], `labels` int8[m]; `addresses` uint64[n],
+    and `recent` bool[n], whether a column was seen less than a tenth of its mean gap ago. By chance it is so
+    for one weight in ten, or fewer, since gaps are whole messages.
+    """
+
+    def __init__(self, lengths, addresses, values, labels):
+        self.addresses, columns = np.unique(addresses, return_inverse=True)
+        self.ends = np.append(0, np.cumsum(lengths))
+        self.columns, self.values, self.labels = columns.astype(np.int32), values, labels
+        seen, last = np.bincount(self.columns), np.zeros(len(self.addresses), np.int64)
+        np.maximum.at(last, self.columns, np.repeat(np.arange(len(labels)), lengths))
+        self.recent = (len(labels) - last) * seen < 0.1 * len(labels)
 
 
 def courier_log(folder, scenario, messages=MESSAGES, strengths=24):
@@ -163,10 +175,10 @@ def compare():
 
 
 def _show(curves, auc, live):
-    """Shares of the live weights; in brackets, how many of those are of tokens that were seldom seen."""
+    """Shares of the live weights; in brackets, how many of them are of tokens just seen."""
     kept = [curve.kept_at(auc) for curve in curves]
     shares = (
-        f"{weights / live:.2%} ({curve.rare_at(auc):.0%})"
+        f"{weights / live:.2%} ({curve.recent_at(auc):.0%})"
         for weights, curve in zip(kept, curves, strict=True)
     )
     less = f"{kept[0] / kept[1]:.3f} and {kept[0] / kept[2]:.3f}"

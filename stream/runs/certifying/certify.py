@@ -8,7 +8,8 @@ from pathlib import Path
 from typing import Any
 
 from stream.errors import BadData, BadSettings, UsageError
-from stream.runs.certifying.passes import Findings, Progress, examine
+from stream.runs.certifying.log import Progress
+from stream.runs.certifying.passes import Findings, examine
 from stream.runs.certifying.worst import Worst
 from stream.runs.scoring import must_match, settings_of
 from stream.settings import Settings

@@ -1,4 +1,4 @@
-"""A snapshot and a log in; the batch optimum of the log, reached from there, and what it is worth out."""
+"""A snapshot and a log in; the batch optimum of the log, reached from there, out."""
 
 from __future__ import annotations
 
@@ -9,15 +9,14 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.errors import CannotCreate
-from stream.optimality.bound import log_losses
-from stream.optimality.solving import Columns, Solution, solve
-from stream.runs.certifying.passes import Log, Progress, Scored, places_of
+from stream.optimality.held_rows import HeldRows
+from stream.optimality.solving import Solution, solve
+from stream.runs.certifying.log import Log, Progress
+from stream.runs.certifying.numbered import Numbered
 from stream.settings import Settings
-from stream.tables import NamePile
-from stream.tables.lookup import Lookup
 from stream.weights import Weights
 
-__all__ = ["Refined", "fresh_loss", "refine"]
+__all__ = ["Refined", "refine"]
 
 ENTRY_BYTES = 40
 """Of memory for each token of a message while rows become columns."""
@@ -47,37 +46,8 @@ def refine(
 
     The whole log is held in memory. Raises CannotCreate where that takes more than `memory_bytes`.
     """
-    log, pile = Log(settings, paths, folder), NamePile()
-    known = np.empty(0, np.uint64)
-    parts: list[tuple[npt.NDArray[np.uint64], npt.NDArray[np.float32], npt.NDArray[np.int64]]] = []
-    labels, example_weights, entries = [], [], 0
-    for batch in log.batches("reading the log", progress):
-        there = batch.labels >= 0
-        lengths = np.diff(batch.row_ptr)
-        kept = np.repeat(there, lengths)
-        parts.append((batch.addresses[kept].copy(), batch.values[kept].copy(), lengths[there]))
-        labels.append(batch.labels[there])
-        example_weights.append(batch.weights[there])
-        entries += int(kept.sum())
-        if entries * ENTRY_BYTES > memory_bytes:
-            raise CannotCreate(
-                f"refining holds the log in memory: {entries:,} tokens of {log.messages:,} messages so far "
-                f"take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer files"
-            )
-        fresh, first = np.unique(batch.addresses, return_index=True)
-        new = ~np.isin(fresh, known, assume_unique=True)
-        pile.record(batch, first[new])
-        known = np.union1d(known, fresh[new]) if new.any() else known
-    addresses, columns = np.unique(np.concatenate([part[0] for part in parts]), return_inverse=True)
-    row_ptr = np.concatenate([np.zeros(1, np.int64), np.cumsum(np.concatenate([part[2] for part in parts]))])
-    values = np.concatenate([part[1] for part in parts])
-    held = Columns.of(
-        columns.astype(np.int64), row_ptr, values, np.concatenate(labels), np.concatenate(example_weights),
-        len(addresses),
-    )  # fmt: skip
-    start = np.zeros(len(addresses))
-    at, there = places_of(addresses, weights.addresses)
-    start[at] = weights.values[there]
+    log = Log(settings, paths, folder)
+    addresses, columns = _held(log, memory_bytes, progress).columns()
     steps = 0
 
     def tell(gap: float) -> None:
@@ -85,36 +55,47 @@ def refine(
         progress(f"refining, step {steps}: within {gap:.1e} of the objective", None)
         steps += 1
 
-    solution = solve(held, start, weights.intercept, strength, tolerance, tell)
+    solution = solve(columns, weights.at(addresses), weights.intercept, strength, tolerance, tell)
     found = solution.weights.astype(np.float32)
     some = np.flatnonzero(found)
     return Refined(
         Weights(
             addresses[some],
             found[some],
-            pile.at(addresses[some]),
-            np.diff(held.starts)[some].astype(np.float64),
+            _names(log, addresses[some], weights, progress),
+            np.diff(columns.starts)[some].astype(np.float64),
             solution.intercept,
-            len(held.labels),
+            len(columns.labels),
             weights.fingerprint,
         ),
         solution,
     )
 
 
-def fresh_loss(
-    settings: Settings,
-    paths: tuple[str, ...],
-    folder: Path,
-    models: tuple[Weights, ...],
-    progress: Progress = lambda stage, fraction: None,
-) -> tuple[int, list[float]]:
-    """Labelled messages of other logs, and the mean log loss of each of `models` on them."""
-    log, lookups = Log(settings, paths, folder), [Lookup(model) for model in models]
-    scored = [Scored() for _ in models]
-    for batch in log.batches("fresh messages", progress):
-        for lookup, found in zip(lookups, scored, strict=True):
-            found.add(batch, lookup.score(batch)[0])
-    weight = float(scored[0].weights.sum())
-    losses = [float((log_losses(one.margins, one.labels) * one.weights).sum()) / weight for one in scored]
-    return len(scored[0].labels), losses
+def _held(log: Log, memory_bytes: int, progress: Progress) -> HeldRows:
+    """All labelled messages."""
+    held, seen = HeldRows(), 0
+    for batch in log.batches("reading the log", progress):
+        held.add(batch, batch.labels >= 0, np.arange(seen, seen + len(batch)))
+        seen += len(batch)
+        if held.entries * ENTRY_BYTES > memory_bytes:
+            raise CannotCreate(
+                f"refining holds the log in memory: {held.entries:,} tokens of {log.messages:,} messages "
+                f"so far take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer "
+                "files"
+            )
+    return held
+
+
+def _names(
+    log: Log, addresses: npt.NDArray[np.uint64], before: Weights, progress: Progress
+) -> tuple[bytes, ...]:
+    """Names from the snapshot, others from as much of the log as it takes."""
+    known = dict(zip(before.addresses.tolist(), before.names, strict=True))
+    numbered = Numbered(addresses, [known.get(address, b"") for address in addresses.tolist()])
+    if not all(numbered.names):
+        for batch in log.batches("names", progress):
+            numbered.found(batch)
+            if all(numbered.names):
+                break
+    return tuple(numbered.names)

@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.batch import Batch
+from stream.runs.certifying.numbered import Numbered
 from stream.weights import Weights
 
 __all__ = ["Watched", "Worst", "violations"]
@@ -53,24 +54,17 @@ class Watched:
         slope[np.searchsorted(every, addresses)] = gradient
         seem = np.argsort(-violations(here, slope, strength), kind="stable")[:CANDIDATES]
         chosen = np.sort(seem)
-        self._addresses, self._weights, self._strength = every[chosen], here[chosen], strength
+        self._weights, self._strength = here[chosen], strength
         self._sums = np.zeros(len(chosen))
         known = dict(zip(weights.addresses.tolist(), weights.names, strict=True))
-        self._names = [known.get(address, b"") for address in self._addresses.tolist()]
+        names = [known.get(address, b"") for address in every[chosen].tolist()]
+        self._numbered = Numbered(every[chosen], names)
 
     def add(self, batch: Batch, pulls: Floats) -> None:
         """`pulls` float64[m]: of each example its weight times (probability - label); 0 without a label."""
-        if not len(self._addresses):
-            return
-        places = np.searchsorted(self._addresses, batch.addresses)
-        places[places == len(self._addresses)] = 0
-        entries = np.flatnonzero(self._addresses[places] == batch.addresses)
+        entries, places = self._numbered.found(batch)
         rows = np.searchsorted(batch.row_ptr, entries, side="right") - 1
-        found = places[entries]
-        self._sums += np.bincount(found, pulls[rows] * batch.values[entries], len(self._sums))
-        for place, first in zip(*np.unique(found, return_index=True), strict=True):
-            if not self._names[place]:
-                self._names[place] = batch.text(int(entries[first]))
+        self._sums += np.bincount(places, pulls[rows] * batch.values[entries], len(self._sums))
 
     def worst(self, total: float, most: int) -> tuple[Worst, ...]:
         """The `most` worst that break their conditions at all, worst first; `total` example weight."""
@@ -79,8 +73,8 @@ class Watched:
         order = np.argsort(-broken, kind="stable")[:most]
         return tuple(
             Worst(
-                int(self._addresses[i]),
-                self._names[i],
+                int(self._numbered.addresses[i]),
+                self._numbered.names[i],
                 float(self._weights[i]),
                 float(gradient[i]),
                 float(broken[i]),

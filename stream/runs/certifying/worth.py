@@ -8,12 +8,15 @@ from typing import Any
 
 import numpy as np
 
+from stream.optimality.bound import log_losses
 from stream.runs.certifying.certify import Certificate
-from stream.runs.certifying.passes import Progress
-from stream.runs.certifying.refining import Refined, fresh_loss, refine
+from stream.runs.certifying.log import Log, Progress, Scored
+from stream.runs.certifying.refining import Refined, refine
 from stream.runs.scoring import settings_of
 from stream.settings import Settings
 from stream.snapshots import Snapshot
+from stream.tables.lookup import Lookup
+from stream.weights import Weights
 
 __all__ = ["Worth", "worth"]
 
@@ -71,5 +74,23 @@ def worth(
     if not fresh:
         return Worth(refined, changed, None, None, None)
     models = snapshot.weights, refined.weights
-    messages, (one, two) = fresh_loss(reading, fresh, Path(), models, progress)
+    messages, (one, two) = _fresh_loss(reading, fresh, Path(), models, progress)
     return Worth(refined, changed, messages, one, two)
+
+
+def _fresh_loss(
+    settings: Settings,
+    paths: tuple[str, ...],
+    folder: Path,
+    models: tuple[Weights, ...],
+    progress: Progress = lambda stage, fraction: None,
+) -> tuple[int, list[float]]:
+    """Labelled messages of other logs, and the mean log loss of each of `models` on them."""
+    log, lookups = Log(settings, paths, folder), [Lookup(model) for model in models]
+    scored = [Scored() for _ in models]
+    for batch in log.batches("fresh messages", progress):
+        for lookup, found in zip(lookups, scored, strict=True):
+            found.add(batch, lookup.score(batch)[0])
+    weight = float(scored[0].weights.sum())
+    losses = [float((log_losses(one.margins, one.labels) * one.weights).sum()) / weight for one in scored]
+    return len(scored[0].labels), losses
