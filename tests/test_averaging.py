@@ -17,6 +17,8 @@ from simulator import CourierFeed, write_log
 from stream.arrays_file import ARRAYS
 from stream.cli.main import main
 from stream.optimality.solving import Columns, solve
+from stream.runs.converging.following import after_epochs
+from stream.runs.converging.job import Wanted, learner_settings
 from stream.runs.learning import LearningRun, pinned
 from stream.runs.model import Model
 from stream.runs.replay import replay
@@ -250,6 +252,17 @@ def test_a_replay_stopped_in_its_second_pass_resumes_to_the_same_bytes(log, tmp_
         replay(settings, folder, resume=True, epochs=2)
         assert last_checkpoint(folder) == last_checkpoint(tmp_path / "whole")
         assert snapshot_of(folder) == snapshot_of(tmp_path / "whole")
+
+
+def test_converge_averages_over_passes_as_replay_does(log, tmp_path):
+    own = settings_for([log], learner={"averaging": 99})
+    averaged = learner_settings(own, Wanted("ftrl", 0.2, averaged=True), 5e-4)
+    last = learner_settings(own, Wanted("ftrl", 0.2), 5e-4)
+    for settings in (averaged, last):
+        found = after_epochs(settings, 4_000, 2, lambda share, text: None).weights
+        folder = tmp_path / str(settings is last)
+        assert_same(found, read_snapshot(replay(settings, folder, epochs=2).snapshot).weights)
+    assert averaged.learner.averaging > 4_000 and last.learner.averaging is None
 
 
 class Stopped(Exception):

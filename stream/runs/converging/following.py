@@ -71,6 +71,8 @@ class _Run:
         if epoch:
             self.model.next_pass()
         stage = f"learning, {settings.learner.method}"
+        if epoch:
+            self.model.next_pass()
         log = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
         with closing(log) as source:
             for cut in cuts:
