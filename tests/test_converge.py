@@ -26,6 +26,7 @@ SEED, LEARNED, FRESH, STRENGTH, RATE, WINDOWS = 5, 3_000, 2_000, 1e-3, 0.3, 3
 ASKED = [
     *("--seed", str(SEED), "--messages", str(LEARNED), "--fresh", str(FRESH), "--strength", str(STRENGTH)),
     *("--learner", f"ftrl:{RATE}", "--learner", "truncated-gradient:0.05"),
+    *("--learner", f"ftrl:{RATE}:averaged"),
     *("--epochs", "3", "--windows", str(WINDOWS), "--at", "1000,2000", "--scenario", "sudden-change"),
 ]
 
@@ -65,9 +66,9 @@ def at(document, messages):
     return next(fit for fit in document["fits"] if fit["messages"] == messages)
 
 
-def learned(document, messages, method, epochs):
+def learned(document, messages, name, epochs):
     found = at(document, messages)["learned"]
-    return next(one for one in found if (one["method"], one["epochs"]) == (method, epochs))
+    return next(one for one in found if (one["name"], one["epochs"]) == (name, epochs))
 
 
 def log_loss(x, y, weights, intercept):
@@ -117,22 +118,29 @@ def test_the_batch_fit_is_scikit_learns(document, matrix):
         assert batch["fresh_log_loss"] == pytest.approx(fresh, rel=1e-3)
 
 
-@pytest.mark.parametrize(("method", "rate"), [("ftrl", RATE), ("truncated-gradient", 0.05)])
+@pytest.mark.parametrize(
+    ("name", "wanted"),
+    [
+        ("ftrl", Wanted("ftrl", RATE)),
+        ("truncated-gradient", Wanted("truncated-gradient", 0.05)),
+        ("averaged ftrl", Wanted("ftrl", RATE, averaged=True)),
+    ],
+)
 @pytest.mark.parametrize("epochs", [1, 3])
 def test_a_learner_is_the_replay_of_the_first_messages(
-    document, stream, matrix, tmp_path, method, rate, epochs
+    document, stream, matrix, tmp_path, name, wanted, epochs
 ):
     settings, held, known = stream
     lines = Path(settings.feed.paths[0]).read_bytes().splitlines(keepends=True)
     (tmp_path / "first.jsonl").write_bytes(b"".join(lines[:LEARNED]))
-    own = learner_settings(settings, Wanted(method, rate), STRENGTH)
+    own = learner_settings(settings, wanted, STRENGTH)
     feed = own.feed.model_copy(update={"paths": (str(tmp_path / "first.jsonl"),)})
     result = replay(own.model_copy(update={"feed": feed}), tmp_path / "state", epochs=epochs)
     weights = read_snapshot(result.snapshot).weights
     dense, (x, y) = held.dense(weights), matrix
     objective = log_loss(x[:LEARNED], y[:LEARNED], dense, weights.intercept)
     objective += STRENGTH * np.abs(dense).sum()
-    row = learned(document, LEARNED, method, epochs)
+    row = learned(document, LEARNED, name, epochs)
     assert row["nnz"] == len(weights)
     assert row["objective"] == pytest.approx(objective, rel=1e-12)
     best = at(document, LEARNED)["batch"]
@@ -166,6 +174,7 @@ def test_windows_hold_the_losses_that_a_replay_prints_and_those_of_batch_fits(
     metrics = own.metrics.model_copy(update={"window": size})
     rows = []
     replay(own.model_copy(update={"metrics": metrics}), tmp_path, on_window=rows.append)
+    assert [one["name"] for one in windows["learners"]] == ["ftrl", "truncated-gradient"]
     assert windows["learners"][0]["losses"] == [row.summary.log_loss for row in rows[:WINDOWS]]
     x, y = matrix
     q = known.shares[size : 2 * size]
@@ -248,7 +257,15 @@ def test_tables_fit_100_columns(document, capsys):
     show_convergence(document, None)
     out = capsys.readouterr().out
     assert max(map(len, out.splitlines())) <= 100
-    for text in ("batch fit", "ftrl x3", "truncated x3", "hindsight", "exponent", "truth P/R/F1"):
+    for text in (
+        "batch fit",
+        "ftrl x3",
+        "truncated x3",
+        "averaged x3",
+        "hindsight",
+        "exponent",
+        "truth P/R/F1",
+    ):
         assert text in out
 
 
