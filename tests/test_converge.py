@@ -2,6 +2,7 @@
 
 import json
 import math
+import tempfile
 from pathlib import Path
 
 import numpy as np
@@ -251,6 +252,8 @@ def test_a_log_of_ones_own_is_compared_without_a_truth(tmp_path, monkeypatch, ca
     assert max(map(len, shown.out.splitlines())) <= 100
     assert main(["converge", "log.jsonl", "--messages", "2000", "--fresh", "500"]) == 65
     assert "2,400 messages, fewer than" in capsys.readouterr().err
+    assert main(["converge", "log.jsonl", "--fresh", "2400"]) == 65
+    assert "no more than the 2,400 fresh ones" in capsys.readouterr().err
 
 
 def test_tables_fit_100_columns(document, capsys):
@@ -291,6 +294,33 @@ def test_what_cannot_be_compared_is_refused_with_the_cure(asked, code, said, cap
     shown = capsys.readouterr()
     assert said in shown.err
     assert shown.out == ""
+
+
+def test_an_interrupted_run_leaves_nothing_behind(tmp_path, monkeypatch, capsys):
+    monkeypatch.setattr(tempfile, "tempdir", str(tmp_path))
+    asked = []
+
+    def interrupted(settings, *others, **more):
+        asked.extend(tmp_path.rglob("stream.jsonl"))
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("stream.runs.converging.converge.converge", interrupted)
+    assert main(["converge", "--messages", "300", "--fresh", "100"]) == 130
+    assert len(asked) == 1, "the stream lay in the temporary folder"
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_scenario_is_read_by_the_fields_of_a_settings_file(tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "own.toml").write_text(
+        '[feed]\nkind = "topic"\nservers = ["a:1"]\ntopic = "t"\n[message]\nlabel = "redelivered"\n'
+        '[[fields]]\npath = "stop"\nkind = "category"\n'
+    )
+    asked = ["--config", "own.toml", "--messages", "500", "--fresh", "100", "--epochs", "1"]
+    assert main(["converge", *asked, "--learner", "ftrl", "--json"]) == 0
+    document = json.loads(capsys.readouterr().out)
+    assert document["log"]["different_tokens"] == 8
+    assert document["fits"][0]["batch"]["against_truth"]["recall"] < 0.05, "most tokens are planted elsewhere"
 
 
 def test_a_scenario_and_a_log_at_once_are_refused(capsys):

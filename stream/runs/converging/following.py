@@ -68,8 +68,6 @@ class _Run:
     def follow(self, cuts: Sequence[int], epoch: int = 0) -> Iterator[Followed]:
         """Reads the log from its beginning to the last of `cuts`, and stops at each."""
         settings, self._steps.epoch, begun = self._settings, epoch, self._steps.messages
-        if epoch:
-            self.model.next_pass()
         stage = f"learning, {settings.learner.method}"
         if epoch:
             self.model.next_pass()
