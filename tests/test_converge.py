@@ -27,7 +27,7 @@ SEED, LEARNED, FRESH, STRENGTH, RATE, WINDOWS = 5, 3_000, 2_000, 1e-3, 0.3, 3
 ASKED = [
     *("--seed", str(SEED), "--messages", str(LEARNED), "--fresh", str(FRESH), "--strength", str(STRENGTH)),
     *("--learner", f"ftrl:{RATE}", "--learner", "truncated-gradient:0.05"),
-    *("--learner", f"ftrl:{RATE}:averaged"),
+    *("--learner", "ftrl:0.4:averaged"),
     *("--epochs", "3", "--windows", str(WINDOWS), "--at", "1000,2000", "--scenario", "sudden-change"),
 ]
 
@@ -124,7 +124,7 @@ def test_the_batch_fit_is_scikit_learns(document, matrix):
     [
         ("ftrl", Wanted("ftrl", RATE)),
         ("truncated-gradient", Wanted("truncated-gradient", 0.05)),
-        ("averaged ftrl", Wanted("ftrl", RATE, averaged=True)),
+        ("averaged ftrl", Wanted("ftrl", 0.4, averaged=True)),
     ],
 )
 @pytest.mark.parametrize("epochs", [1, 3])
@@ -175,7 +175,7 @@ def test_windows_hold_the_losses_that_a_replay_prints_and_those_of_batch_fits(
     metrics = own.metrics.model_copy(update={"window": size})
     rows = []
     replay(own.model_copy(update={"metrics": metrics}), tmp_path, on_window=rows.append)
-    assert [one["name"] for one in windows["learners"]] == ["ftrl", "truncated-gradient"]
+    assert [one["name"] for one in windows["learners"]] == ["ftrl 0.3", "truncated-gradient", "ftrl 0.4"]
     assert windows["learners"][0]["losses"] == [row.summary.log_loss for row in rows[:WINDOWS]]
     x, y = matrix
     q = known.shares[size : 2 * size]
