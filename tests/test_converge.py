@@ -22,6 +22,7 @@ from stream.runs.converging.judging import agreement, excess
 from stream.runs.converging.slopes import slope_of
 from stream.runs.replay import replay
 from stream.snapshots import read_snapshot
+from stream.token_names import field_and_token
 
 SEED, LEARNED, FRESH, STRENGTH, RATE, WINDOWS = 5, 3_000, 2_000, 1e-3, 0.3, 3
 ASKED = [
@@ -154,6 +155,12 @@ def test_a_learner_is_the_replay_of_the_first_messages(
     divergence = np.mean(xlogy(q, q / p) + xlogy(1 - q, (1 - q) / (1 - p)))
     assert row["excess_log_loss"] == pytest.approx(divergence, rel=1e-9)
     assert 0 < row["learning_seconds"] < row["seconds"]
+    kept = {field_and_token(token) for token in weights.names}
+    planted = {("&".join(p.fields), "&".join(p.tokens)) for p in known.planted(LEARNED - 1)}
+    assert planted != {("&".join(p.fields), "&".join(p.tokens)) for p in known.planted(0)}, "the truth moved"
+    support = row["against_truth"]
+    assert support["precision"] == len(kept & planted) / len(kept)
+    assert support["recall"] == len(kept & planted) / len(planted)
 
 
 def test_more_messages_and_more_passes_come_nearer_to_the_batch_fit(document):
