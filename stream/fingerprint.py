@@ -56,8 +56,16 @@ def unlivable(
     return (
         fingerprint_difference(kept, there)
         + differences(now["learner"]["method"], then["learner"]["method"], "learner.method")
+        + _of_averages(now["learner"], then["learner"])
         + differences(now["metrics"], then["metrics"], "metrics")
     )
+
+
+def _of_averages(now: Mapping[str, Any], then: Mapping[str, Any]) -> list[str]:
+    """Averages are of the whole stream, and of the penalty on its sum: they begin with it."""
+    keys = ["averaging"] + (["l1", "l2"] if "averaging" in then else [])
+    here, there = ({key: one.get(key) for key in keys} for one in (now, then))
+    return differences(here, there, "learner")
 
 
 def _by_setting(fingerprint: Mapping[str, Any]) -> dict[str, Any]:

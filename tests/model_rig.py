@@ -22,9 +22,9 @@ BOUNDS = [
 ]
 
 
-def settings_of(method="ftrl", *, space=40, l1_per_example=0.02, **state):
+def settings_of(method="ftrl", *, space=40, l1_per_example=0.02, averaging=None, **state):
     """Small numbers, which the limits of real settings would not let pass."""
-    learner = Learner(method=method, learning_rate=0.5, l1_per_example=l1_per_example)
+    learner = Learner(method=method, learning_rate=0.5, l1_per_example=l1_per_example, averaging=averaging)
     bounds = State().model_copy(update={"admission_bytes": 1 << 16} | state)
     return Settings(learner=learner, space=Space(address_bits=space)).model_copy(update={"state": bounds})
 

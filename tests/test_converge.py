@@ -2,6 +2,7 @@
 
 import json
 import math
+import tempfile
 from pathlib import Path
 
 import numpy as np
@@ -21,11 +22,13 @@ from stream.runs.converging.judging import agreement, excess
 from stream.runs.converging.slopes import slope_of
 from stream.runs.replay import replay
 from stream.snapshots import read_snapshot
+from stream.token_names import field_and_token
 
 SEED, LEARNED, FRESH, STRENGTH, RATE, WINDOWS = 5, 3_000, 2_000, 1e-3, 0.3, 3
 ASKED = [
     *("--seed", str(SEED), "--messages", str(LEARNED), "--fresh", str(FRESH), "--strength", str(STRENGTH)),
     *("--learner", f"ftrl:{RATE}", "--learner", "truncated-gradient:0.05"),
+    *("--learner", "ftrl:0.4:averaged"),
     *("--epochs", "3", "--windows", str(WINDOWS), "--at", "1000,2000", "--scenario", "sudden-change"),
 ]
 
@@ -65,9 +68,9 @@ def at(document, messages):
     return next(fit for fit in document["fits"] if fit["messages"] == messages)
 
 
-def learned(document, messages, method, epochs):
+def learned(document, messages, name, epochs):
     found = at(document, messages)["learned"]
-    return next(one for one in found if (one["method"], one["epochs"]) == (method, epochs))
+    return next(one for one in found if (one["name"], one["epochs"]) == (name, epochs))
 
 
 def log_loss(x, y, weights, intercept):
@@ -117,22 +120,29 @@ def test_the_batch_fit_is_scikit_learns(document, matrix):
         assert batch["fresh_log_loss"] == pytest.approx(fresh, rel=1e-3)
 
 
-@pytest.mark.parametrize(("method", "rate"), [("ftrl", RATE), ("truncated-gradient", 0.05)])
+@pytest.mark.parametrize(
+    ("name", "wanted"),
+    [
+        ("ftrl", Wanted("ftrl", RATE)),
+        ("truncated-gradient", Wanted("truncated-gradient", 0.05)),
+        ("averaged ftrl", Wanted("ftrl", 0.4, averaged=True)),
+    ],
+)
 @pytest.mark.parametrize("epochs", [1, 3])
 def test_a_learner_is_the_replay_of_the_first_messages(
-    document, stream, matrix, tmp_path, method, rate, epochs
+    document, stream, matrix, tmp_path, name, wanted, epochs
 ):
     settings, held, known = stream
     lines = Path(settings.feed.paths[0]).read_bytes().splitlines(keepends=True)
     (tmp_path / "first.jsonl").write_bytes(b"".join(lines[:LEARNED]))
-    own = learner_settings(settings, Wanted(method, rate), STRENGTH)
+    own = learner_settings(settings, wanted, STRENGTH)
     feed = own.feed.model_copy(update={"paths": (str(tmp_path / "first.jsonl"),)})
     result = replay(own.model_copy(update={"feed": feed}), tmp_path / "state", epochs=epochs)
     weights = read_snapshot(result.snapshot).weights
     dense, (x, y) = held.dense(weights), matrix
     objective = log_loss(x[:LEARNED], y[:LEARNED], dense, weights.intercept)
     objective += STRENGTH * np.abs(dense).sum()
-    row = learned(document, LEARNED, method, epochs)
+    row = learned(document, LEARNED, name, epochs)
     assert row["nnz"] == len(weights)
     assert row["objective"] == pytest.approx(objective, rel=1e-12)
     best = at(document, LEARNED)["batch"]
@@ -145,6 +155,12 @@ def test_a_learner_is_the_replay_of_the_first_messages(
     divergence = np.mean(xlogy(q, q / p) + xlogy(1 - q, (1 - q) / (1 - p)))
     assert row["excess_log_loss"] == pytest.approx(divergence, rel=1e-9)
     assert 0 < row["learning_seconds"] < row["seconds"]
+    kept = {field_and_token(token) for token in weights.names}
+    planted = {("&".join(p.fields), "&".join(p.tokens)) for p in known.planted(LEARNED - 1)}
+    assert planted != {("&".join(p.fields), "&".join(p.tokens)) for p in known.planted(0)}, "the truth moved"
+    support = row["against_truth"]
+    assert support["precision"] == len(kept & planted) / len(kept)
+    assert support["recall"] == len(kept & planted) / len(planted)
 
 
 def test_more_messages_and_more_passes_come_nearer_to_the_batch_fit(document):
@@ -166,6 +182,7 @@ def test_windows_hold_the_losses_that_a_replay_prints_and_those_of_batch_fits(
     metrics = own.metrics.model_copy(update={"window": size})
     rows = []
     replay(own.model_copy(update={"metrics": metrics}), tmp_path, on_window=rows.append)
+    assert [one["name"] for one in windows["learners"]] == ["ftrl 0.3", "truncated-gradient", "ftrl 0.4"]
     assert windows["learners"][0]["losses"] == [row.summary.log_loss for row in rows[:WINDOWS]]
     x, y = matrix
     q = known.shares[size : 2 * size]
@@ -242,13 +259,23 @@ def test_a_log_of_ones_own_is_compared_without_a_truth(tmp_path, monkeypatch, ca
     assert max(map(len, shown.out.splitlines())) <= 100
     assert main(["converge", "log.jsonl", "--messages", "2000", "--fresh", "500"]) == 65
     assert "2,400 messages, fewer than" in capsys.readouterr().err
+    assert main(["converge", "log.jsonl", "--fresh", "2400"]) == 65
+    assert "no more than the 2,400 fresh ones" in capsys.readouterr().err
 
 
 def test_tables_fit_100_columns(document, capsys):
     show_convergence(document, None)
     out = capsys.readouterr().out
     assert max(map(len, out.splitlines())) <= 100
-    for text in ("batch fit", "ftrl x3", "truncated x3", "hindsight", "exponent", "truth P/R/F1"):
+    for text in (
+        "batch fit",
+        "ftrl x3",
+        "truncated x3",
+        "averaged x3",
+        "hindsight",
+        "exponent",
+        "truth P/R/F1",
+    ):
         assert text in out
 
 
@@ -274,6 +301,33 @@ def test_what_cannot_be_compared_is_refused_with_the_cure(asked, code, said, cap
     shown = capsys.readouterr()
     assert said in shown.err
     assert shown.out == ""
+
+
+def test_an_interrupted_run_leaves_nothing_behind(tmp_path, monkeypatch, capsys):
+    monkeypatch.setattr(tempfile, "tempdir", str(tmp_path))
+    asked = []
+
+    def interrupted(settings, *others, **more):
+        asked.extend(tmp_path.rglob("stream.jsonl"))
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("stream.runs.converging.converge.converge", interrupted)
+    assert main(["converge", "--messages", "300", "--fresh", "100"]) == 130
+    assert len(asked) == 1, "the stream lay in the temporary folder"
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_scenario_is_read_by_the_fields_of_a_settings_file(tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "own.toml").write_text(
+        '[feed]\nkind = "topic"\nservers = ["a:1"]\ntopic = "t"\n[message]\nlabel = "redelivered"\n'
+        '[[fields]]\npath = "stop"\nkind = "category"\n'
+    )
+    asked = ["--config", "own.toml", "--messages", "500", "--fresh", "100", "--epochs", "1"]
+    assert main(["converge", *asked, "--learner", "ftrl", "--json"]) == 0
+    document = json.loads(capsys.readouterr().out)
+    assert document["log"]["different_tokens"] == 8
+    assert document["fits"][0]["batch"]["against_truth"]["recall"] < 0.05, "most tokens are planted elsewhere"
 
 
 def test_a_scenario_and_a_log_at_once_are_refused(capsys):

@@ -7,6 +7,7 @@ import json
 
 import numpy as np
 import pytest
+from threadpoolctl import threadpool_limits
 
 from stream.cli.main import main
 from stream.optimality.solving import solve
@@ -16,6 +17,14 @@ from tests.evidence.references import SHARES, SOLVERS, by_bedload, columns_of, o
 from tests.spambase import spambase_or_skip
 
 pytestmark = pytest.mark.slow
+
+
+@pytest.fixture(scope="module", autouse=True)
+def one_thread():
+    """Two would wait for each other more than they work, at 57 columns."""
+    with threadpool_limits(1):
+        yield
+
 
 PUBLISHED = 0.357061012506
 """The optimum at a tenth, computed for this project with general libraries."""

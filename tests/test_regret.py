@@ -2,11 +2,19 @@
 
 import numpy as np
 import pytest
+from threadpoolctl import threadpool_limits
 
 from tests.evidence.regret import GRAVITIES, RATES, Feed
 from tests.twins import learners_twin as twins
 
 pytestmark = pytest.mark.slow
+
+
+@pytest.fixture(scope="module", autouse=True)
+def one_thread():
+    """Two would wait for each other more than they work, at 57 columns."""
+    with threadpool_limits(1):
+        yield
 
 
 @pytest.fixture(scope="module")

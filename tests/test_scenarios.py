@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
 import math
 import re
@@ -16,7 +17,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from simulator import CourierFeed, FeedBlock, blocks, write_log
+from simulator import CourierFeed, Faults, FeedBlock, blocks, write_log
 from simulator.courier import Courier
 from simulator.crafted import CRAFTED
 from simulator.feed import BLOCK
@@ -153,6 +154,17 @@ def test_a_message_outside_the_log_has_no_truth() -> None:
 
 
 # Bytes
+
+
+def test_same_settings_give_the_same_bytes_on_every_machine(tmp_path: Path) -> None:
+    digest = hashlib.sha256()
+    faults = Faults(0.1, 0.1, 0.1, 0.1, lost_outcomes=0.1, repeated_outcomes=0.1)
+    for scenario in SCENARIOS:
+        feed = feed_of(scenario, messages=600, messages_per_day=200)
+        write_log(feed, tmp_path / "log", outcome_path=tmp_path / "late", faults=faults)
+        for name in ("log", "late", "log.truth.json"):
+            digest.update((tmp_path / name).read_bytes())
+    assert digest.hexdigest() == "44d08db93d0c79d14aea063e7bcc2398aeda1350ee15e349f78202835afded3f"
 
 
 @pytest.mark.parametrize("scenario", SCENARIOS)

@@ -312,7 +312,7 @@ def test_the_command_tells_what_went_wrong_on_the_way(
     said = capsys.readouterr().out.splitlines()
     truth = json.loads(Path("log.jsonl.truth.json").read_text("utf-8"))
     assert len(said) == 3 and all(len(line) <= 130 for line in said)
-    assert said[1].startswith(f"on the way: {truth['records']['missing']} messages missing, ")
+    assert said[1].startswith(f"on the way: {truth['records']['missing']} missing, ")
     assert said[2].startswith(f"late.jsonl: {truth['outcomes']['written']:,} outcomes, ")
     assert truth["settings"]["scenario"] == "slow-drift" and len(truth["course"]) == 33
 

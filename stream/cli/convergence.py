@@ -67,7 +67,7 @@ def _row(messages: int, one: dict[str, Any], has_truth: bool) -> list[str]:
     cells = [
         count(messages) if batch else "",
         "batch fit" if batch else _name(one),
-        f"<= {share(one['proved_gap'])}" if batch else share(one["gap"]),
+        f"<={100 * one['proved_gap']:.3f} %" if batch else share(one["gap"]),
         decimal(one["fresh_log_loss"]),
         count(one["nnz"]),
         "" if batch else _support(one["against_batch"]),

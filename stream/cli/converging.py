@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import shlex
 import sys
 import tempfile
@@ -22,7 +21,7 @@ from stream.cli.outputs import check_output
 from stream.cli.scoring import log_pattern
 from stream.cli.screen import show_json, stage_bar
 from stream.cli.simulating import feed_of
-from stream.errors import UsageError
+from stream.errors import BadData, UsageError
 
 if TYPE_CHECKING:
     from simulator import CourierFeed
@@ -177,12 +176,10 @@ def _of_scenario(
     from stream.cli.scenario import courier_settings, write_stream
 
     log = folder / "stream.jsonl"
-    own = [f"feed.paths={json.dumps([str(log)])}", 'feed.kind="log"']
-    settings = (
-        courier_settings(log, changes or [])
-        if config is None
-        else settings_from(config, [*(changes or ()), *own])
-    )
+    if config is None:
+        settings = courier_settings(log, changes or [])
+    else:
+        settings = _reading(settings_from(config, changes), (str(log),))
     known = write_stream(feed, log, tell)
     return _Stream(settings, known, feed.messages - fresh, fresh, {"files": [], "scenario": asdict(feed)})
 
@@ -203,12 +200,22 @@ def _of_logs(
             "converge reads the log more than once: save standard input to a file, and name that"
         )
     paths = tuple(str(Path(log_pattern(text, "for a scenario")).absolute()) for text in logs)
-    feed = settings.feed.model_copy(update={"kind": "log", "paths": paths})
-    settings = settings.model_copy(update={"feed": feed})
+    settings = _reading(settings, paths)
     whole = count(settings, lambda share, done: tell(share or 0.0, "counting")).messages
     fresh = fresh or min(FRESH, whole // FRESH_SHARE)
+    learned = messages or whole - fresh
+    if learned < 1:
+        raise BadData(
+            f"the log has {whole:,} messages, no more than the {fresh:,} fresh ones: give --fresh N"
+        )
     names = [file.name for file in matching_files(settings.feed.paths, settings.folder)]
-    return _Stream(settings, None, messages or whole - fresh, fresh, {"files": names, "scenario": None})
+    return _Stream(settings, None, learned, fresh, {"files": names, "scenario": None})
+
+
+def _reading(settings: Settings, paths: tuple[str, ...]) -> Settings:
+    """The same settings, but for the feed."""
+    feed = settings.feed.model_copy(update={"kind": "log", "paths": paths})
+    return settings.model_copy(update={"feed": feed})
 
 
 def _job(
@@ -226,7 +233,7 @@ def _job(
     if windows == 1 or windows > stream.messages // FEWEST_IN_WINDOW:
         raise UsageError(f"--windows {windows}: give 2 or more, of {FEWEST_IN_WINDOW} messages each at least")
     return Job(
-        learners=tuple(_wanted(text, stream) for text in learners or METHODS),
+        learners=tuple(dict.fromkeys(_wanted(text, stream) for text in learners or METHODS)),
         strengths=_strengths(strengths, stream),
         messages=stream.messages,
         fresh=stream.fresh,

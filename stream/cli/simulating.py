@@ -169,9 +169,9 @@ class _Places:
         written = faults.pop("written")
         if any(faults.values()):
             print(
-                f"on the way: {count(faults['missing'])} messages missing, {count(faults['malformed'])} "
-                f"malformed, {count(faults['duplicates'])} duplicates, {count(faults['reordered'])} behind a "
-                f"later message; {count(written)} records written"
+                f"on the way: {count(faults['missing'])} missing, {count(faults['malformed'])} malformed, "
+                f"{count(faults['duplicates'])} duplicates, {count(faults['reordered'])} behind a later one; "
+                f"{count(written)} records written"
             )
         if drawn.outcomes is not None:
             told = {name: count(value) for name, value in drawn.outcomes.items()}

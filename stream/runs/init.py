@@ -50,6 +50,7 @@ EXAMPLES = {
     "feed.topic": "messages",
     "feed.sasl": "SCRAM-SHA-512",
     "learner.horizon": 10_000_000,
+    "learner.averaging": 10_000_000,
     "state.idle_after": 10_000_000,
     "state.max_live": 20_000_000,
     "worker.metrics_port": 9_464,

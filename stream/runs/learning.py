@@ -64,6 +64,7 @@ class LearningRun(Steps[Model]):
         """Begins another pass: the log is read again from its beginning."""
         self.epoch += 1
         self.position = None
+        self.model.next_pass()
 
     def state(self) -> dict[str, npt.NDArray[Any]]:
         """Arrays of a checkpoint, by name."""
@@ -133,10 +134,12 @@ def _cure(lines: list[str], unlivable: list[str]) -> str:
 
 def pinned(settings: Settings) -> dict[str, Any]:
     """Settings that the state is made of, beside the fingerprint."""
-    state = settings.state.model_dump(mode="json")
+    state, learner = settings.state.model_dump(mode="json"), settings.learner.model_dump(mode="json")
+    if settings.learner.averaging is None:
+        del learner["averaging"]  # a checkpoint without averages is that of a program that knew of none
     bounds = ("admit_after", "admission_bytes", "admission_halved_every", "idle_after", "max_live")
     return {
-        "learner": settings.learner.model_dump(mode="json"),
+        "learner": learner,
         "state": {name: state[name] for name in bounds},
         "metrics": settings.metrics.model_dump(mode="json"),
     }

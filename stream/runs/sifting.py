@@ -6,10 +6,12 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
 from stream.arrays_file import Arrays
 from stream.coordinate import CELLS, FIRST, SECOND, TOUCH, tally_of
-from stream.learners import Learner
+from stream.learners import AveragingLearner, Learner
+from stream.runs.averaging import average_weights_of
 from stream.tables import names_at
 from stream.weights import Weights
 
@@ -47,13 +49,18 @@ class Sifting:
         )
 
     def _take(self, piece: Arrays) -> None:
-        rows = np.empty((len(piece["addresses"]), CELLS), np.uint64)
-        rows[:, 0] = 1  # a key of a slot in use
-        rows[:, int(FIRST)] = piece["first"].view(np.uint64)
-        rows[:, int(SECOND)] = piece["second"].view(np.uint64)
-        rows[:, int(TOUCH)] = piece["touch"]
-        weights = self._learner.weights(rows.reshape(-1), 0, len(rows)).astype(np.float32)
+        weights = self._weights_of(piece).astype(np.float32)
         found = np.flatnonzero(weights)
-        self._addresses.append(piece["addresses"][found])
+        self._addresses.append(piece["table.addresses"][found])
         self._values.append(weights[found])
-        self._touches.append(piece["touch"][found])
+        self._touches.append(piece["table.touch"][found])
+
+    def _weights_of(self, piece: Arrays) -> npt.NDArray[np.float64]:
+        if isinstance(self._learner, AveragingLearner):
+            return average_weights_of(self._learner, piece)
+        rows = np.empty((len(piece["table.addresses"]), CELLS), np.uint64)
+        rows[:, 0] = 1  # a key of a slot in use
+        rows[:, int(FIRST)] = piece["table.first"].view(np.uint64)
+        rows[:, int(SECOND)] = piece["table.second"].view(np.uint64)
+        rows[:, int(TOUCH)] = piece["table.touch"]
+        return self._learner.weights(rows.reshape(-1), 0, len(rows))

@@ -372,6 +372,12 @@ class Learner(Section):
         ge=1,
         description="Learned messages after which the accumulated strength stops growing (ftrl only).",
     )
+    averaging: Whole | None = Field(
+        default=None,
+        ge=1,
+        description="Snapshots get weights averaged over the stream; past so many learned messages the older "
+        "ones count half, again and again.",
+    )
 
     @model_validator(mode="after")
     def _penalties_fit_method(self) -> Learner:

@@ -97,6 +97,25 @@ class Table:
         self._grow(int(batch.row_ptr[example + 1] - batch.row_ptr[example]))
         return self._admit(batch, example, example + 1, refuse=True)
 
+    def hold(self, addresses: npt.NDArray[np.uint64], wanted: npt.NDArray[np.bool_]) -> npt.NDArray[np.int64]:
+        """Slots of addresses, int64[k], -1 without state; those that are `wanted` (bool[k]) get state.
+
+        The slots hold until the next change. Neither admission nor `max_live` is asked.
+        """
+        slots, before = self.slots_of(addresses), self._capacity
+        missing = np.flatnonzero(wanted & (slots < 0))
+        if not len(missing):
+            return slots
+        new = np.unique(addresses[missing])
+        self._grow(len(new))
+        nothing = np.zeros((len(new), CELLS - 1), np.uint64)
+        probing.place(self.cells, np.uint64(self._capacity), self._secret, new, nothing)
+        self.live += len(new)
+        if self._capacity > before:  # rows have moved
+            return self.slots_of(addresses)
+        slots[missing] = self.slots_of(addresses[missing])
+        return slots
+
     def forget(self, doomed: npt.NDArray[np.int64]) -> None:
         """Takes the rows at the given slots out."""
         if not len(doomed):

@@ -2,6 +2,7 @@
 # A file of doubles out: for each strength the intercept, then the weights.
 # glmnet's loss is the mean, so lambda is the strength; columns are taken as they are; the whole path goes in one call,
 # since a single lambda would start cold; thresh is for a change of the deviance.
+if (!requireNamespace("glmnet", quietly = TRUE)) quit(status = 3)
 suppressMessages(library(glmnet))
 files <- commandArgs(TRUE)
 from <- file(files[1], "rb")

@@ -38,7 +38,9 @@ RATES = {
 }
 BELOW = (0.001, 0.005, 0.02)
 """How far under the lowest of the methods' best AUCs they are compared."""
+LOGS = (*SCENARIOS, "flights")
 MESSAGES = 100_000
+LAST_DAY = [b"12", b"31"]
 
 
 @dataclass(frozen=True)
@@ -59,7 +61,7 @@ class Curve:
 
     def kept_at(self, auc):
         """NaN where it is not reached by a strength in the grid."""
-        after = self._first_at(auc)
+        after = self.first_at(auc)
         if not self.auc[0] < auc <= self.best or not self.kept[after - 1] > 0:
             return float("nan")
         two = slice(after - 1, after + 1)
@@ -67,10 +69,10 @@ class Curve:
 
     def recent_at(self, auc):
         """Share of the weights, at the strongest strength that reaches the AUC."""
-        after = self._first_at(auc)
+        after = self.first_at(auc)
         return self.recent[after] / self.kept[after]
 
-    def _first_at(self, auc):
+    def first_at(self, auc):
         return int(np.argmax(self.auc >= auc))
 
 
@@ -91,13 +93,13 @@ class Log:
         run = self._plainly if method == "forward-backward" else self._side_by_side
         return max((run(method, rate) for rate in rates or RATES[method]), key=lambda curve: curve.best)
 
-    def _lanes(self, settings, rate):
+    def lanes(self, settings, rate):
         strengths, span = self.grid
         return candidates(Grid(strengths, (rate,), span), settings.learner, self.facts)
 
     def _side_by_side(self, method, rate):
         settings = self.settings_of(method)
-        lanes = self._lanes(settings, rate)
+        lanes = self.lanes(settings, rate)
         trial = run_trial(settings, lanes, blocks_of(self.facts.messages), 1 << 33)
         auc = np.array([histograms.auc(trial.bins[0, lane]) for lane in range(len(lanes))])
         kept, rows = trial.weights.values != 0, self.rows
@@ -106,7 +108,7 @@ class Log:
 
     def _plainly(self, _, rate):
         rows, auc, kept, recent = self.rows, [], [], []
-        for lane in self._lanes(self.settings_of("ftrl"), rate):
+        for lane in self.lanes(self.settings_of("ftrl"), rate):
             margins, weights = forward_backward(
                 rows.ends, rows.columns, rows.values, rows.labels, self.live, rate, lane.l1_per_example
             )
@@ -162,7 +164,7 @@ def flights_log(folder):
 def compare():
     """Prints, for each log and AUC, what share of the live weights each method keeps."""
     with tempfile.TemporaryDirectory() as folder:
-        for name in (*SCENARIOS, "flights"):
+        for name in LOGS:
             log = flights_log(folder) if name == "flights" else courier_log(folder, name)
             curves = [log.best_of(method) for method in METHODS]
             bests = (
@@ -171,7 +173,10 @@ def compare():
             )
             print(f"{name}, {log.live:,} live; best AUC: {'; '.join(bests)}")
             for below in BELOW:
-                _show(curves, min(curve.best for curve in curves) - below, log.live)
+                auc = min(curve.best for curve in curves) - below
+                _show(curves, auc, log.live)
+                if name == "flights":
+                    _show_past(log, curves, auc)
 
 
 def _show(curves, auc, live):
@@ -183,3 +188,14 @@ def _show(curves, auc, live):
     )
     less = f"{kept[0] / kept[1]:.3f} and {kept[0] / kept[2]:.3f}"
     print(f"  at {auc:.4f}: {', '.join(shares)}; FTRL keeps {less} of the others", flush=True)
+
+
+def _show_past(log, curves, auc):
+    """Of the weights of our two methods, how many are of crosses with a day gone by."""
+    for method, curve in zip(METHODS[:2], curves, strict=False):
+        settings = log.settings_of(method)
+        lane = log.lanes(settings, curve.rate)[curve.first_at(auc)]
+        names = run_trial(settings, [lane], blocks_of(log.facts.messages), 1 << 33).weights.names
+        dated = [name.split(b"\x1f")[1:3] for name in names if name.startswith(b"month&day")]
+        past = sum(date != LAST_DAY for date in dated) / len(names)
+        print(f"    {method}: {past:.0%} of its {len(names):,} weights name a day gone by", flush=True)

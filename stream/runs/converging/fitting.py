@@ -34,7 +34,10 @@ def fitted(solver: Solver, rows: Rows, strength: float, columns: int) -> Optimum
     Raises BadData where the rows have one outcome only.
     """
     if not 0 < int(rows.labels.sum()) < len(rows):
-        raise BadData(f"all {len(rows):,} outcomes are the same: a batch fit needs some of both kinds")
+        raise BadData(
+            f"all {len(rows):,} outcomes are the same: a batch fit needs some of both kinds. Look "
+            "later (--at), or cut fewer windows (--windows)"
+        )
     squeezed, there = rows.squeezed()
     found = batch_fit(solver, squeezed, strength)
     weights = np.zeros(columns)

@@ -69,6 +69,8 @@ class _Run:
         """Reads the log from its beginning to the last of `cuts`, and stops at each."""
         settings, self._steps.epoch, begun = self._settings, epoch, self._steps.messages
         stage = f"learning, {settings.learner.method}"
+        if epoch:
+            self.model.next_pass()
         log = LogSource(settings.feed.paths, settings.folder, settings.feed.max_line_bytes)
         with closing(log) as source:
             for cut in cuts:

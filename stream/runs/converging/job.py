@@ -117,7 +117,6 @@ def learner_settings(settings: Settings, wanted: Wanted, strength: float) -> Set
         "method": wanted.method,
         "learning_rate": wanted.learning_rate,
         "l1_per_example": strength,
+        "averaging": NEVER_HALVED if wanted.averaged else None,
     }
-    if wanted.averaged:
-        keys["averaging"] = NEVER_HALVED
     return settings.model_copy(update={"learner": Learner.model_validate(keys)})

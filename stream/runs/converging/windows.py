@@ -33,11 +33,12 @@ def windows_of(
     ends = [size * (i + 1) for i in range(job.windows)]
     spans = [(end - size, end) for end in ends]
     learners, losses_of = [], []
-    for wanted in dict.fromkeys(replace(one, averaged=False) for one in job.learners):
+    plain = tuple(dict.fromkeys(replace(one, averaged=False) for one in job.learners))
+    for wanted in plain:
         own = learner_settings(settings, wanted, strength)
         losses = window_losses(own, ends[-1], size, tell)
         losses_of.append(losses)
-        learners.append({**wanted.to_json(job.learners), "losses": losses})
+        learners.append({**wanted.to_json(plain), "losses": losses})
     batch = _batch(held, job, strength, spans, tell)
     truth = None if known is None else [_of_truth(held, known, *span) for span in spans]
     return {
