@@ -11,7 +11,8 @@ from typing import TYPE_CHECKING, Any
 from pydantic_core import PydanticCustomError
 
 if TYPE_CHECKING:
-    from stream.settings.models import Feed, Learner, Outcomes, Quantity, Rejects, Settings
+    from stream.settings.models import Feed, Learner, Quantity, Rejects, Settings
+    from stream.settings.outcome_feed import Outcomes
 
 __all__ = [
     "CONFLICT",

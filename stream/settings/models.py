@@ -10,10 +10,6 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 from pydantic import (
-    AfterValidator,
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
     Field,
     PrivateAttr,
     StrictBool,
@@ -22,6 +18,20 @@ from pydantic import (
 )
 
 from stream.settings import checks
+from stream.settings.outcome_feed import Outcomes
+from stream.settings.value_types import (
+    DottedPath,
+    File,
+    Number,
+    Partition,
+    Seconds,
+    Section,
+    Server,
+    Strength,
+    TokenValue,
+    Topic,
+    Whole,
+)
 
 __all__ = [
     "Category",
@@ -45,37 +55,6 @@ __all__ = [
 
 UNICODE_VERSION = "14.0.0"
 """Unicode version of the tokenizer's tables (`stream/features/unicode_tables`)."""
-
-MOST = 10**15
-"""Upper limit of plain counts: far past any feed, well inside 64 bits."""
-
-TokenValue = Literal["presence", "count", "log_count"]
-Whole = Annotated[int, BeforeValidator(checks.number), Field(le=MOST)]
-Number = Annotated[float, BeforeValidator(checks.number), Field(allow_inf_nan=False)]
-Seconds = Number
-Topic = Annotated[
-    str,
-    AfterValidator(checks.topic_name),
-    Field(json_schema_extra={"allowed": "the name of a topic"}),
-]
-Duration = Annotated[
-    str,
-    AfterValidator(checks.duration),
-    Field(json_schema_extra={"allowed": 'a text such as "90m", "48h" or "30d", from "1s" to "3650d"'}),
-]
-Partition = Annotated[int, BeforeValidator(checks.number), Field(ge=0, le=(1 << 31) - 1)]
-Server = Annotated[str, AfterValidator(checks.server)]
-File = Annotated[str, Field(min_length=1)]
-Strength = Annotated[Number, Field(ge=0, le=1e9)]
-DottedPath = Annotated[
-    str, AfterValidator(checks.dotted_path), Field(json_schema_extra={"allowed": "a dotted path"})
-]
-
-
-class Section(BaseModel):
-    """Unknown keys are errors; nothing changes after loading."""
-
-    model_config = ConfigDict(extra="forbid", frozen=True)
 
 
 class Feed(Section):
@@ -185,62 +164,6 @@ class MessagePaths(Section):
         description="Messages before the share of a whole run is judged; a window that is judged by itself "
         "has at least so many, and ends the run as soon as it has more rejects than its share allows.",
     )
-
-
-class Outcomes(Section):
-    """Where outcomes come from that are not in the messages, and how long messages wait for them."""
-
-    kind: Literal["inline", "log", "topic"] = Field(
-        default="inline",
-        description="Where outcomes are: in the messages (message.label), in log files of their own, or in a "
-        "topic of the brokers of [feed].",
-    )
-    paths: tuple[str, ...] = Field(
-        default=(),
-        description="Log files of outcomes, as feed.paths. One text counts as a list of one.",
-    )
-    topic: Topic | None = Field(default=None, description="Topic of outcomes; it is never made.")
-    id: DottedPath | None = Field(
-        default=None, description="Dotted path, in an outcome, of the id of its message."
-    )
-    label: DottedPath | None = Field(
-        default=None, description="Dotted path, in an outcome, of the label: true, false, 1 or 0."
-    )
-    time: DottedPath | None = Field(
-        default=None, description="Dotted path, in an outcome, of its event time, as message.time."
-    )
-    wait: Duration | None = Field(
-        default=None, description="How long, in event time, a message waits for its outcome."
-    )
-    when_absent: Literal["negative", "drop"] = Field(
-        default="negative",
-        description="A message whose waiting time ends without outcome: learned as negative, or dropped.",
-    )
-    on_conflict: Literal["first", "last", "reject"] = Field(
-        default="first",
-        description="Of outcomes of one message that differ the first counts, or the last within the waiting "
-        "time, or none and the message is not learned. With the latter two every message waits to the end.",
-    )
-    allow_early: StrictBool = Field(
-        default=False,
-        description="Keep an outcome whose event time is before that of its message; else it has no message.",
-    )
-
-    @field_validator("paths", mode="before")
-    @classmethod
-    def _one_is_a_list(cls, texts: Any) -> Any:
-        return (texts,) if isinstance(texts, str) else texts
-
-    @model_validator(mode="after")
-    def _keys_fit(self) -> Outcomes:
-        checks.refuse(checks.outcomes_problems(self))
-        return self
-
-    @property
-    def wait_ms(self) -> int:
-        """`wait` in milliseconds."""
-        assert self.wait is not None  # checked where kind is not "inline"
-        return checks.duration_ms(self.wait)
 
 
 class Named(Section):
