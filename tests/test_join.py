@@ -8,8 +8,9 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from stream.labels import Feed, Join, WaitingStore, joining, segments
+from stream.labels import ARRIVED, RELEASED, Feed, Join, WaitingStore, joining, segments
 from stream.labels.delays import EDGES_MS, Delays
+from stream.labels.events import digest_of
 from stream.settings import Outcomes
 from tests.replays import LONG
 from tests.twins.join_twin import JoinTwin
@@ -33,7 +34,7 @@ class Bench:
 
     def __init__(self, folder, outcomes, partitions=(2, 2)):
         self.folder, self.outcomes, self.partitions = folder, outcomes, partitions
-        self.released, self.saved = [], {0: None}
+        self.events, self.saved = [], {0: None}
         self.open(0)
 
     def open(self, moment):
@@ -42,9 +43,9 @@ class Bench:
         if self.saved[moment] is not None:
             about, arrays, count = self.saved[moment]
             self.join.restore(about, arrays)
-            del self.released[count:]
+            del self.events[count:]
         else:
-            self.released.clear()
+            self.events.clear()
         for feed, count in zip(Feed, self.partitions, strict=True):
             self.join.watermark.expect(feed, range(count))
 
@@ -56,14 +57,23 @@ class Bench:
             time, partition, offset, ident, label = event
             self.join.add_outcomes(partition, [offset], [time], [ident], [label])
 
-    def drain(self, release=None):
-        while (some := (release or self.join.release)()) is not None:
-            self.released += some
+    def drain(self, advance=None):
+        while (some := (advance or self.join.advance)()) is not None:
+            for event in some:
+                if event.kind == ARRIVED:
+                    self.join.note_score(event.handle, score_of(event))
+                else:
+                    assert self.join.score_of(event.handle) == score_of(event)
+            self.events += [event._replace(handle=None) for event in some]  # where it lies is no result
+
+    @property
+    def released(self):
+        return [event for event in self.events if event.kind == RELEASED]
 
     def keep(self, moment):
         self.store.keep(moment)
         arrays = {name: array.copy() for name, array in self.join.state().items()}
-        self.saved[moment] = (self.join.about(), arrays, len(self.released))
+        self.saved[moment] = (self.join.about(), arrays, len(self.events))
 
     def finish(self):
         for feed in Feed:
@@ -75,8 +85,12 @@ def payload_of(message):
     return f"{message}".encode() * (message[2] % 3 + 1)
 
 
+def score_of(event):
+    return event.partition + 0.1 * event.offset
+
+
 def in_order(released):
-    return [(r.time, r.partition, r.offset, r.label, r.expired) for r in released]
+    return [(r.time, r.partition, r.offset, r.label, r.aside) for r in released]
 
 
 def counts_of(join):
@@ -139,12 +153,12 @@ def test_any_interleaving_gives_the_order_and_the_counts_of_the_plain_join(
     twin = JoinTwin(
         [*partitions[0], *partitions[1]], [*partitions[2], *partitions[3]], until, wait=1000, **chosen
     )
-    assert in_order(bench.released) == twin.released
+    assert [(*e[:4], *e[5:7]) for e in bench.events] == twin.events
     assert counts_of(bench.join) == +twin.counts
     assert int(bench.join.delays.counts.sum()) == len(twin.delays)
     by_place = {event[1:3]: event for events in partitions[:2] for event in events}
-    assert [r.payload for r in bench.released] == [
-        payload_of(by_place[r.partition, r.offset]) for r in bench.released
+    assert [e.payload for e in bench.events] == [
+        payload_of(by_place[e.partition, e.offset]) for e in bench.events
     ]
     bench.store.close()
 
@@ -182,7 +196,7 @@ def test_after_any_crash_the_join_goes_on_as_if_there_had_been_none(
             bench.saved = {m: saved for m, saved in bench.saved.items() if m <= at}
             bench.open(at)
     bench.finish()
-    assert bench.released == whole.released
+    assert bench.events == whole.events
     assert bench.join.about() == whole.join.about()
     assert {n: a.tobytes() for n, a in bench.join.state().items()} == {
         n: a.tobytes() for n, a in whole.join.state().items()
@@ -246,22 +260,53 @@ def test_a_message_behind_the_watermark_is_still_decided_once(tmp_path):
     assert bench.join.waiting == 1
 
 
+def test_a_message_after_quiet_expires_too_though_its_segment_was_done_with(tmp_path, monkeypatch):
+    monkeypatch.setattr(segments, "SIZE", 30_000)
+    bench = Bench(tmp_path / "waiting", outcomes_of(), (1, 1))
+    for number, time in enumerate([0, 5_000, 10_000]):
+        bench.feed((time, 0, number, f"h{number}"))
+        bench.feed((time, 0, number, "unknown", 0))
+        bench.drain()
+    bench.finish()
+    assert in_order(bench.released) == [(1_000, 0, 0, 0, True), (6_000, 0, 1, 0, True)]
+
+
+def test_an_id_that_is_used_again_after_a_crash_stands_for_its_later_message(tmp_path, monkeypatch):
+    monkeypatch.setattr(segments, "SIZE", 30_000)
+    bench = Bench(tmp_path / "waiting", outcomes_of(), (1, 1))
+    for offset, (time, ident) in enumerate([(0, "again"), (2_500, "other"), (2_501, "again")]):
+        bench.feed((time, 0, offset, ident))
+        bench.feed((time, 0, offset, "unknown", 0))
+        bench.drain()
+    bench.feed((2_600, 0, 3, "another"))
+    bench.feed((2_600, 0, 3, "unknown", 0))
+    bench.drain()
+    bench.keep(1)
+    bench.store.close()
+    bench.open(1)
+    bench.feed((2_700, 0, 4, "again", 1))
+    bench.finish()
+    assert in_order(bench.released) == [(1_000, 0, 0, 0, True), (2_700, 0, 2, 1, False)]
+
+
 def test_two_ids_that_share_half_of_their_hash_are_told_apart(tmp_path, monkeypatch):
-    real = joining.digest_of
+    real = digest_of
     monkeypatch.setattr(joining, "digest_of", lambda ident: bytes(8) + real(ident)[8:])
     bench = Bench(tmp_path / "waiting", outcomes_of(), (1, 1))
     for number in range(20):
         bench.feed((number, 0, number, number))
+        bench.feed((number, 0, number, "unknown", 0))
         bench.drain()
     for number in range(20):
-        bench.feed((500 + number, 0, number, str(19 - number), number % 2))
+        bench.feed((500 + number, 0, 20 + number, str(19 - number), number % 2))
+        bench.drain()
     bench.finish()
     assert [(r.offset, r.label) for r in bench.released] == [(19 - n, n % 2) for n in range(20)]
 
 
 def test_whole_numbers_and_their_texts_are_one_id():
-    assert joining.digest_of(17) == joining.digest_of("17") != joining.digest_of("017")
-    assert joining.digest_of("\ud800") != joining.digest_of("?")
+    assert digest_of(17) == digest_of("17") != digest_of("017")
+    assert digest_of("\ud800") != digest_of("?")
 
 
 def test_the_share_of_positives_lost_for_each_waiting_time():

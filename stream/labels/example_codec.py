@@ -1,4 +1,4 @@
-"""Rows of a batch with the scores given at arrival in, payloads out; and back to a batch of many.
+"""Rows of a batch in, payloads out; and back to a batch of many.
 
 A payload is the crc32 (u32) of all that follows, then `HEAD`, then a body: addresses, values (left out where
 all are 1), lengths of the token texts, the texts. Numbers are little-endian, no wider than the batch needs.
@@ -24,7 +24,7 @@ from stream.errors import BadData
 __all__ = ["ExampleCodec"]
 
 SUM = struct.Struct("<I")
-HEAD = struct.Struct("<ddIBBBB")
+HEAD = struct.Struct("<dIBBBB")
 COMPRESSED_FROM = 1024
 LEVEL = 1
 
@@ -33,7 +33,6 @@ class _Head(NamedTuple):
     """`entries`: of the row; bytes of an address, of a value (0: all are 1), of a length; 1: compressed."""
 
     weight: float
-    margin: float
     entries: int
     address_bytes: int
     value_bytes: int
@@ -48,8 +47,8 @@ class ExampleCodec:
         self._compressor = zstandard.ZstdCompressor(LEVEL)
         self._decompressor = zstandard.ZstdDecompressor()
 
-    def pack(self, batch: Batch, margins: npt.NDArray[np.float64]) -> list[bytes]:
-        """A payload for each row; `margins`: float64[m], those given at arrival."""
+    def pack(self, batch: Batch) -> list[bytes]:
+        """A payload for each row."""
         wide, narrow = _width(batch.addresses), _width(batch.text_lengths)
         addresses, lengths = _cut(batch.addresses, wide), _cut(batch.text_lengths, narrow)
         values, texts = batch.values.astype("<f4").tobytes(), _gathered(batch).tobytes()
@@ -58,7 +57,7 @@ class ExampleCodec:
         plain = np.concatenate(([0], np.cumsum(batch.values != 1.0)))[batch.row_ptr]
         value_bytes = np.where(plain[1:] > plain[:-1], 4, 0).tolist()
         payloads = []
-        for row, (weight, margin) in enumerate(zip(batch.weights.tolist(), margins.tolist(), strict=True)):
+        for row, weight in enumerate(batch.weights.tolist()):
             first, last, each = row_ptr[row], row_ptr[row + 1], value_bytes[row]
             body = b"".join(
                 (
@@ -71,14 +70,12 @@ class ExampleCodec:
             compressed = len(body) >= COMPRESSED_FROM
             if compressed:
                 body = self._compressor.compress(body)
-            body = HEAD.pack(weight, margin, last - first, wide, each, narrow, compressed) + body
+            body = HEAD.pack(weight, last - first, wide, each, narrow, compressed) + body
             payloads.append(SUM.pack(crc32(body)) + body)
         return payloads
 
-    def unpack(
-        self, payloads: Sequence[bytes], labels: Sequence[int]
-    ) -> tuple[Batch, npt.NDArray[np.float64]]:
-        """The batch of these rows with these labels (1, 0), and float64[m], the margins given at arrival.
+    def unpack(self, payloads: Sequence[bytes], labels: Sequence[int]) -> Batch:
+        """The batch of these rows with these labels (1, 0, -1 without).
 
         Raises BadData where a payload is damaged.
         """
@@ -92,7 +89,7 @@ class ExampleCodec:
             at = lengths.add(body, at, head.entries, head.length_bytes)
             texts.append(body[at:])
         text_lengths = lengths.numbers().astype(np.int32)
-        batch = Batch(
+        return Batch(
             np.cumsum([0, *(head.entries for head in heads)], dtype=np.int64),
             addresses.numbers().astype(np.uint64),
             values.numbers().astype(np.float32),
@@ -102,7 +99,6 @@ class ExampleCodec:
             np.cumsum(text_lengths, dtype=np.int64) - text_lengths,
             text_lengths,
         )
-        return batch, np.array([head.margin for head in heads], np.float64)
 
     def _opened(self, payload: bytes) -> tuple[_Head, bytes]:
         """Head and body of a payload, its sum checked."""

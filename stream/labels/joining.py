@@ -1,88 +1,71 @@
-"""Messages and their late outcomes in, in any order of partitions; decided messages out, in one order.
+"""Messages and their late outcomes in, in any order of partitions; what to score and learn out, in one order.
 
 Everything follows from event times. The watermark is the lowest event time that any partition of the two
 feeds has reached; what is earlier has been seen, and is gone through in the order of (event time, messages
 before outcomes, partition, offset). A message is released at the time of its outcome, or when its waiting
-time is over, and released messages come out in the order of (time of release, partition, offset). So feeds
-whose partitions ascend in event time give the same, however their partitions were interleaved.
+time is over. Messages come out twice, when they arrive and when they are released, in the order of (event
+time, arrivals before releases, partition, offset). So feeds whose partitions ascend in event time give the
+same, however their partitions were interleaved and cut into blocks.
 """
 
 from __future__ import annotations
 
 import heapq
-import struct
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict, dataclass
-from hashlib import blake2b
-from typing import Any, NamedTuple, TypeVar
+from itertools import repeat
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from stream.labels.counts import JoinCounts
 from stream.labels.delays import Delays
+from stream.labels.events import (
+    ARRIVED,
+    DIFFERING,
+    HALVES,
+    RELEASED,
+    UNKNOWN,
+    Ahead,
+    Event,
+    Outcome,
+    as_arrays,
+    digest_of,
+    from_arrays,
+    halves_of,
+    taken_before,
+)
+from stream.labels.fates import (
+    AHEAD,
+    CAME_LATE,
+    CONTRADICTED,
+    ENDED,
+    EXPIRED,
+    HELD,
+    JOINED,
+    KIND,
+    POSITIVE,
+    REMEMBERED,
+    REPEATED,
+    WAITING,
+)
 from stream.labels.id_index import ABSENT, IdIndex
 from stream.labels.segments import ROWS, WaitingRow
 from stream.labels.store import WaitingStore
 from stream.labels.watermark import Feed, Watermark
-from stream.settings.models import Outcomes
+from stream.settings import Outcomes
 
-__all__ = ["Join", "Released", "digest_of"]
+__all__ = ["Join"]
 
 SEGMENTS_AT_ONCE = 64
 """Segments whose expiry one step looks at, more only where they begin at one time."""
 
 
-BEGINNING, END = -(1 << 60), 1 << 60
-"""Before and after every event time."""
-HALVES = struct.Struct("<QQ")
-
-
-AHEAD, WAITING, HELD, CONTRADICTED, JOINED, EXPIRED, REPEATED, DISCARDED = range(8)
-"""What became of a row, in the lowest three bits of its byte: its event time was not reached yet; it waits;
-it has an outcome that may still be replaced or contradicted; it has outcomes that differ (on_conflict =
-"reject"); it was released with its outcome; it was released or dropped without; another message had its id
-before; it had outcomes that differ when its time was over. The first four are not settled."""
-KIND = 7
-POSITIVE = 8
-"""Added to the byte where the outcome that counts, or the late one, is positive."""
-CAME_LATE = 16
-"""Added where an outcome came after the waiting time."""
-ENDED = np.array([AHEAD, EXPIRED, JOINED, DISCARDED], np.uint8)
-"""What becomes of unsettled rows when their time is over."""
-REMEMBERED = np.array([kind not in (AHEAD, REPEATED) for kind in range(8)])
-"""Whether a row is the one that its id stands for."""
 AT_ONCE = 256
 """Segments whose ids are put into the index together when a store is opened."""
-DIFFERING = -1
-"""Label of early outcomes that contradict each other."""
-
-
-class Released(NamedTuple):
-    """A decided message: time of release (ms), place, label, whether it expired, and its payload."""
-
-    time: int
-    partition: int
-    offset: int
-    label: int
-    expired: bool
-    payload: bytes
-
-
-class _Ahead(NamedTuple):
-    time: int
-    partition: int
-    offset: int
-    digest: bytes
-    handle: int
-
-
-class _Outcome(NamedTuple):
-    time: int
-    partition: int
-    offset: int
-    digest: bytes
-    label: int
+BEGINNING, END = -(1 << 60), 1 << 60
+"""Before and after every event time."""
 
 
 @dataclass(slots=True)
@@ -95,11 +78,6 @@ class _Known:
     offset: int
     fate: int
     slot: int
-
-
-def digest_of(ident: str | int) -> bytes:
-    """16 bytes that stand for an id; 17 and "17" are one id. They are safe from ids made to collide."""
-    return blake2b(str(ident).encode("utf-8", "surrogatepass"), digest_size=16).digest()
 
 
 class Join:
@@ -120,9 +98,9 @@ class Join:
         self.counts = JoinCounts()
         self.delays = Delays()
         self._clock = BEGINNING
-        self._ahead: list[_Ahead] = []
-        self._inbox: list[_Outcome] = []
-        self._early: dict[bytes, _Outcome] = {}
+        self._ahead: list[Ahead] = []
+        self._inbox: list[Outcome] = []
+        self._early: dict[bytes, Outcome] = {}
         self._settled = store.first
         self._unsettled: list[tuple[int, int]] = []  # lowest time of what may be unsettled in a segment
         self._latest: dict[int, int] = {}  # the latest time in a segment
@@ -154,7 +132,7 @@ class Join:
                 self._open = (segment, time)
             if latest.get(segment, BEGINNING) < time:
                 latest[segment] = time
-            heapq.heappush(ahead, _Ahead(time, partition, offset, digest, handle))
+            heapq.heappush(ahead, Ahead(time, partition, offset, digest, handle))
         self.counts.messages += len(times)
         self.watermark.reach(Feed.MESSAGES, partition, max(times))
 
@@ -170,27 +148,37 @@ class Join:
         if not times:
             return
         for offset, time, digest, label in zip(offsets, times, map(digest_of, ids), labels, strict=True):
-            heapq.heappush(self._inbox, _Outcome(time, partition, offset, digest, label))
+            heapq.heappush(self._inbox, Outcome(time, partition, offset, digest, label))
         self.counts.outcomes += len(times)
         self.watermark.reach(Feed.OUTCOMES, partition, max(times))
 
-    def release(self) -> list[Released] | None:
-        """The next messages that are decided, in order; None when there is nothing to do before more comes.
+    def advance(self) -> list[Event] | None:
+        """The next events, in order; None when there is nothing to do before more comes.
 
-        Some thousands at once; the list may be empty. All of them must be dealt with before state is saved.
+        Some thousands at once; the list may be empty. All of them must be dealt with, in this order, before
+        more is asked for or state is saved: each one that arrives scored (`note_score`), each one that is
+        released learned, with what was noted as its score (`score_of`).
         """
         until = self.watermark.time()
         return None if until is None else self._step(until)
 
-    def release_all(self) -> list[Released] | None:
-        """As `release`, but as if time had come to its end: what has no outcome by now has none."""
+    def release_all(self) -> list[Event] | None:
+        """As `advance`, but as if time had come to its end: what has no outcome by now has none."""
         return self._step(END)
+
+    def note_score(self, handle: int, score: float) -> None:
+        """The margin that a message was given when it arrived."""
+        self._store.note_score(handle, score)
+
+    def score_of(self, handle: int) -> float:
+        """What was noted."""
+        return self._store.score_of(handle)
 
     def state(self) -> dict[str, npt.NDArray[Any]]:
         """Outcomes whose time has not come, or whose message has not; equal for equal feeds."""
         return {
-            **{f"ahead.{name}": array for name, array in _as_arrays(sorted(self._inbox)).items()},
-            **{f"early.{name}": array for name, array in _as_arrays(sorted(self._early.values())).items()},
+            **{f"ahead.{name}": array for name, array in as_arrays(sorted(self._inbox)).items()},
+            **{f"early.{name}": array for name, array in as_arrays(sorted(self._early.values())).items()},
             "delays": self.delays.counts,
         }
 
@@ -203,8 +191,8 @@ class Join:
         self._clock = about["clock"]
         self.counts = JoinCounts(**about["counts"])
         self.watermark.restore(about["watermark"])
-        self._inbox = _as_outcomes(arrays, "ahead.")
-        self._early = {outcome.digest: outcome for outcome in _as_outcomes(arrays, "early.")}
+        self._inbox = from_arrays(arrays, "ahead.")
+        self._early = {outcome.digest: outcome for outcome in from_arrays(arrays, "early.")}
         self.delays.counts = arrays["delays"].astype(np.int64)
         keys: list[npt.NDArray[np.uint64]] = []
         named: list[npt.NDArray[np.int64]] = []
@@ -220,7 +208,7 @@ class Join:
             for at in np.flatnonzero(kinds == AHEAD).tolist():
                 digest = HALVES.pack(int(columns.low[at]), int(columns.high[at]))
                 place = int(columns.times[at]), int(columns.partitions[at]), int(columns.offsets[at])
-                self._ahead.append(_Ahead(*place, digest, segment * ROWS + at))
+                self._ahead.append(Ahead(*place, digest, segment * ROWS + at))
             unsettled = kinds <= CONTRADICTED
             if unsettled.any():
                 self._unsettled.append((int(columns.times[unsettled].min()), segment))
@@ -230,19 +218,19 @@ class Join:
         heapq.heapify(self._unsettled)
         self._index.forget_below(self._store.first_handle)
 
-    def _step(self, watermark: int) -> list[Released] | None:
+    def _step(self, watermark: int) -> list[Event] | None:
         until, segments = self._next_stop(watermark)
         if until <= self._clock and not segments and not self._pending(until):
             return None
-        leaving: list[Released] = []
-        self._go_through(until, leaving)
+        events: list[Event] = []
+        self._go_through(until, events)
         self._give_up_early(until)
         self._clock = until
         for segment in segments:
-            self._expire(segment, until, leaving)
-        leaving.sort()
+            self._expire(segment, until, events)
+        events.sort()
         self._forget()
-        return leaving
+        return events
 
     def _pending(self, until: int) -> bool:
         ahead, inbox = self._ahead, self._inbox
@@ -263,22 +251,22 @@ class Join:
             segments[heapq.heappop(heap)[1]] = None
         return until, list(segments)
 
-    def _go_through(self, until: int, leaving: list[Released]) -> None:
+    def _go_through(self, until: int, events: list[Event]) -> None:
         """All events before `until`, in order."""
-        messages, outcomes = _taken(self._ahead, until), _taken(self._inbox, until)
+        messages, outcomes = taken_before(self._ahead, until), taken_before(self._inbox, until)
         digests = dict.fromkeys([*(m.digest for m in messages), *(o.digest for o in outcomes)])
         known = self._look_up(list(digests))
         new: dict[bytes, _Known] = {}
         at = 0
         for outcome in outcomes:
             while at < len(messages) and messages[at].time <= outcome.time:
-                self._arrive(messages[at], known, new, leaving)
+                self._arrive(messages[at], known, new, events)
                 at += 1
-            self._decide(outcome, known.get(outcome.digest), leaving)
+            self._decide(outcome, known.get(outcome.digest), events)
         for message in messages[at:]:
-            self._arrive(message, known, new, leaving)
+            self._arrive(message, known, new, events)
         if new:
-            low, _ = _split(list(new))
+            low, _ = halves_of(list(new))
             self._index.insert(low, np.array([entry.handle for entry in new.values()], np.int64))
 
     def _look_up(self, digests: list[bytes]) -> dict[bytes, _Known]:
@@ -286,7 +274,7 @@ class Join:
         known: dict[bytes, _Known] = {}
         if not digests:
             return known
-        low, high = _split(digests)
+        low, high = halves_of(digests)
         left = np.arange(len(digests))
         after = None
         while len(left):
@@ -306,11 +294,14 @@ class Join:
         return known
 
     def _arrive(
-        self, message: _Ahead, known: dict[bytes, _Known], new: dict[bytes, _Known], leaving: list[Released]
+        self, message: Ahead, known: dict[bytes, _Known], new: dict[bytes, _Known], events: list[Event]
     ) -> None:
         """The event time of a message has come."""
         entry = known.get(message.digest)
-        if entry is not None and message.time <= entry.time + 2 * self._wait:
+        repeated = entry is not None and message.time <= entry.time + 2 * self._wait
+        row = message.time, ARRIVED, message.partition, message.offset, message.handle, UNKNOWN
+        events.append(Event(*row, repeated, self._store.payload(message.handle)))
+        if repeated:
             self._store.settle(message.handle, REPEATED)
             self.counts.repeated_messages += 1
             return
@@ -325,9 +316,9 @@ class Join:
         early = self._early.get(message.digest)
         if early is not None and message.time - early.time <= self._wait:
             del self._early[message.digest]
-            self._take(entry, early, leaving)
+            self._take(entry, early, events)
 
-    def _decide(self, outcome: _Outcome, entry: _Known | None, leaving: list[Released]) -> None:
+    def _decide(self, outcome: Outcome, entry: _Known | None, events: list[Event]) -> None:
         """The event time of an outcome has come."""
         if entry is None or outcome.time > entry.time + 2 * self._wait:
             if self._allow_early:
@@ -340,7 +331,7 @@ class Join:
             self.counts.orphans += 1
         elif entry.fate & KIND == WAITING and not entry.fate & CAME_LATE:
             if outcome.time <= entry.time + self._wait:
-                self._take(entry, outcome, leaving)
+                self._take(entry, outcome, events)
             else:
                 self._come_late(entry, outcome)
         elif entry.fate & KIND == EXPIRED and not entry.fate & CAME_LATE:
@@ -348,7 +339,7 @@ class Join:
         else:
             self._come_again(entry, outcome)
 
-    def _take(self, entry: _Known, outcome: _Outcome, leaving: list[Released]) -> None:
+    def _take(self, entry: _Known, outcome: Outcome, events: list[Event]) -> None:
         """The first outcome of a message that waits."""
         early = outcome.time < entry.time
         self.counts.early += early
@@ -363,16 +354,16 @@ class Join:
         self._settle(entry, JOINED + POSITIVE * outcome.label)
         self.counts.joined += 1
         due = max(entry.time, outcome.time)
-        payload = self._store.payload(entry.handle)
-        leaving.append(Released(due, entry.partition, entry.offset, outcome.label, False, payload))
+        row = due, RELEASED, entry.partition, entry.offset, entry.handle, outcome.label
+        events.append(Event(*row, False, self._store.payload(entry.handle)))
 
-    def _come_late(self, entry: _Known, outcome: _Outcome) -> None:
+    def _come_late(self, entry: _Known, outcome: Outcome) -> None:
         self.counts.late += 1
         if outcome.label:
             self.delays.add(outcome.time - entry.time)
         self._settle(entry, entry.fate + CAME_LATE + POSITIVE * outcome.label)
 
-    def _come_again(self, entry: _Known, outcome: _Outcome) -> None:
+    def _come_again(self, entry: _Known, outcome: Outcome) -> None:
         """A further outcome of a message."""
         if outcome.label == (entry.fate & POSITIVE) // POSITIVE:
             self.counts.repeated += 1
@@ -384,7 +375,7 @@ class Join:
             else:
                 self._settle(entry, CONTRADICTED + (entry.fate & POSITIVE))
 
-    def _hold_early(self, outcome: _Outcome) -> None:
+    def _hold_early(self, outcome: Outcome) -> None:
         """Keeps an outcome whose message may still come."""
         held = self._early.get(outcome.digest)
         if held is None or held.time + self._wait < outcome.time:
@@ -409,7 +400,7 @@ class Join:
         entry.fate = int(fate)
         self._store.settle(entry.handle, entry.fate)
 
-    def _expire(self, segment: int, until: int, leaving: list[Released]) -> None:
+    def _expire(self, segment: int, until: int, events: list[Event]) -> None:
         """Ends the waiting of the rows of a segment whose time is over before `until`."""
         columns = self._store.columns(segment)
         fates = self._store.fates_of(segment)[: len(columns)].copy()
@@ -429,12 +420,14 @@ class Join:
         rows = rows[(kinds[rows] == HELD) | ((kinds[rows] == WAITING) & self._learn_absent)]
         expired = kinds[rows] == WAITING
         labels = np.where(expired, 0, (fates[rows] & POSITIVE) // POSITIVE)
-        leaving.extend(
+        events.extend(
             map(
-                Released,
+                Event,
                 (columns.times[rows] + self._wait).tolist(),
+                repeat(RELEASED),
                 columns.partitions[rows].tolist(),
                 columns.offsets[rows].tolist(),
+                (rows + segment * ROWS).tolist(),
                 labels.tolist(),
                 expired.tolist(),
                 self._store.payloads(segment, rows.tolist()),
@@ -451,38 +444,3 @@ class Join:
             first += 1
         self._store.forget(first, self._settled)
         self._index.forget_below(self._store.first_handle)
-
-
-E = TypeVar("E", _Ahead, _Outcome)
-
-
-def _taken(heap: list[E], until: int) -> list[E]:
-    """Takes what is before `until` out of a heap, in order."""
-    taken = []
-    while heap and heap[0].time < until:
-        taken.append(heapq.heappop(heap))
-    return taken
-
-
-def _split(digests: list[bytes]) -> tuple[npt.NDArray[np.uint64], npt.NDArray[np.uint64]]:
-    """Both halves of hashed ids."""
-    halves = np.frombuffer(b"".join(digests), "<u8").astype(np.uint64).reshape(-1, 2)
-    return halves[:, 0], halves[:, 1]
-
-
-def _as_arrays(outcomes: Iterable[_Outcome]) -> dict[str, npt.NDArray[Any]]:
-    outcomes = list(outcomes)
-    return {
-        "times": np.array([o.time for o in outcomes], np.int64),
-        "partitions": np.array([o.partition for o in outcomes], np.int64),
-        "offsets": np.array([o.offset for o in outcomes], np.int64),
-        "ids": np.frombuffer(b"".join(o.digest for o in outcomes), np.uint8).reshape(-1, 16),
-        "labels": np.array([o.label for o in outcomes], np.int8),
-    }
-
-
-def _as_outcomes(arrays: Mapping[str, npt.NDArray[Any]], prefix: str) -> list[_Outcome]:
-    """What `_as_arrays` gave, in the same order, which is that of a heap."""
-    columns = [arrays[prefix + name].tolist() for name in ("times", "partitions", "offsets")]
-    digests = [row.tobytes() for row in arrays[prefix + "ids"]]
-    return [_Outcome(*row) for row in zip(*columns, digests, arrays[prefix + "labels"].tolist(), strict=True)]

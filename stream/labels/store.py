@@ -8,6 +8,7 @@ checkpoint is written after that.
 
     segments   number -> packed rows (stream.labels.segments), thin once all of them are settled
     fates      number -> a byte a row, as of the newest kept moment
+    scores     number -> f64 a row, given when it arrived; written over where it arrives again
     undo       moment, number -> those bytes before that moment
     moments    moment -> JSON: how many segments there were, and the first that was not forgotten, not settled
     about      "format", and "thin": below it every segment is thin
@@ -40,7 +41,7 @@ __all__ = ["WaitingStore"]
 NUMBER = struct.Struct(">Q")
 UNDO = struct.Struct(">QQ")
 SUM = struct.Struct(">I")
-TABLES = (b"segments", b"fates", b"undo", b"moments", b"about")
+TABLES = (b"segments", b"fates", b"scores", b"undo", b"moments", b"about")
 END = b"\xff" * 17
 FORMAT = b"bedload waiting rows 1"
 MOST_BYTES = 1 << 40
@@ -70,6 +71,7 @@ class WaitingStore:
         self._settled: int = said["settled"]
         self._gathering = Segment()
         self._dirty: set[int] = set()
+        self._scores: dict[int, npt.NDArray[np.float64]] = {}  # what is not written yet
         self._uncommitted = 0
         self._floor = self.first
         self._fates = np.zeros(max(1 << 16, 2 * (self._next - self.first) * ROWS), np.uint8)
@@ -136,6 +138,25 @@ class WaitingStore:
             self.fates_of(segment)[rows] = fates
             self._dirty.add(segment)
 
+    def note_score(self, handle: int, score: float) -> None:
+        """Notes the score that a row was given."""
+        segment, at = divmod(handle, ROWS)
+        if segment not in self._scores:
+            self._scores[segment] = self._written_scores(segment)
+        self._scores[segment][at] = score
+
+    def score_of(self, handle: int) -> float:
+        """The score of a row that was not settled when the oldest kept moment was; NaN without one."""
+        segment, at = divmod(handle, ROWS)
+        scores = self._scores.get(segment)
+        return float((self._written_scores(segment) if scores is None else scores)[at])
+
+    def _written_scores(self, segment: int) -> npt.NDArray[np.float64]:
+        found = self._transaction.get(NUMBER.pack(segment), db=self._tables[b"scores"])
+        if found is None:
+            return np.full(ROWS, np.nan)
+        return np.frombuffer(self._checked(found, f"scores of segment {segment}"), "<f8").astype(np.float64)
+
     def _data(self, segment: int) -> bytes | memoryview:
         if segment == self._next:
             return self._gathering.pack()
@@ -184,6 +205,10 @@ class WaitingStore:
                 old = self._transaction.replace(key, _summed(self.fates_of(segment).tobytes()), db=fates)
                 if old is not None:
                     self._transaction.put(UNDO.pack(moment, segment), old, db=undo)
+            for segment, scores in sorted(self._scores.items()):
+                value = _summed(scores.astype("<f8").tobytes())
+                self._transaction.put(NUMBER.pack(segment), value, db=self._tables[b"scores"])
+            self._scores.clear()
             said = json.dumps({"first": self.first, "next": self._next, "settled": self._settled})
             moments = self._tables[b"moments"]
             self._transaction.put(NUMBER.pack(moment), _summed(said.encode()), db=moments, append=True)
@@ -206,6 +231,7 @@ class WaitingStore:
             for table in (b"segments", b"fates"):
                 self._delete(table, b"", NUMBER.pack(said["first"]))
             self._make_thin(said["first"], said["settled"])
+            self._delete(b"scores", b"", NUMBER.pack(said["settled"]))
             self._commit()
 
     def close(self) -> None:
@@ -261,7 +287,7 @@ class WaitingStore:
             self._transaction.put(NUMBER.pack(segment), fates, db=self._tables[b"fates"])
         self._delete(b"undo", UNDO.pack(moment + 1, 0), END)
         self._delete(b"moments", NUMBER.pack(moment + 1), END)
-        for table in (b"segments", b"fates"):
+        for table in (b"segments", b"fates", b"scores"):
             self._delete(table, NUMBER.pack(said["next"]), END)
         self._commit()
         return said

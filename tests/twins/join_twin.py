@@ -6,13 +6,14 @@ from collections import Counter
 class JoinTwin:
     """`messages`: (time, partition, offset, id); `outcomes`: (time, partition, offset, id, label).
 
-    `released`: (time, partition, offset, label, expired) of all that is decided before `until`.
+    `events` before `until`, in order: messages that arrive, (time, 0, partition, offset, -1, whether it is
+    repeated), and those that are released, (time, 1, partition, offset, label, whether it expired).
     """
 
     def __init__(self, messages, outcomes, until, *, wait, when_absent, on_conflict, allow_early):
         self.wait, self.when_absent = wait, when_absent
         self.on_conflict, self.allow_early = on_conflict, allow_early
-        self.counts, self.released = Counter(), []
+        self.counts, self.events = Counter(), []
         self.holders, self.early, self.delays = {}, {}, []
         events = [(m[0], 0, *m[1:]) for m in messages] + [(o[0], 2, *o[1:]) for o in outcomes]
         for event in sorted(e for e in events if e[0] < until):
@@ -22,7 +23,7 @@ class JoinTwin:
             else:
                 self.outcome(*event[0:1], *event[2:])
         self.expire_before(until)
-        self.released.sort()
+        self.events.sort()
 
     def expire_before(self, time):
         for ident, (at, _) in list(self.early.items()):
@@ -41,17 +42,19 @@ class JoinTwin:
         elif holder["label"] is not None:
             holder["state"] = "joined"
             self.counts["joined"] += 1
-            self.released.append((due, *holder["place"], holder["label"], False))
+            self.events.append((due, 1, *holder["place"], holder["label"], False))
         else:
             holder["state"] = "expired"
             self.counts["expired"] += 1
             if self.when_absent == "negative":
-                self.released.append((due, *holder["place"], 0, True))
+                self.events.append((due, 1, *holder["place"], 0, True))
 
     def message(self, time, partition, offset, ident):
         self.counts["messages"] += 1
         holder = self.holders.get(ident)
-        if holder and time <= holder["time"] + 2 * self.wait:
+        repeated = holder is not None and time <= holder["time"] + 2 * self.wait
+        self.events.append((time, 0, partition, offset, -1, repeated))
+        if repeated:
             self.counts["repeated_messages"] += 1
             return
         self.holders[ident] = {
@@ -76,7 +79,7 @@ class JoinTwin:
         if self.on_conflict == "first":
             holder["state"] = "joined"
             self.counts["joined"] += 1
-            self.released.append((max(time, holder["time"]), *holder["place"], label, False))
+            self.events.append((max(time, holder["time"]), 1, *holder["place"], label, False))
 
     def outcome(self, time, partition, offset, ident, label):
         self.counts["outcomes"] += 1
