@@ -263,11 +263,11 @@ def test_a_message_behind_the_watermark_is_still_decided_once(tmp_path):
 def test_a_message_after_quiet_expires_too_though_its_segment_was_done_with(tmp_path, monkeypatch):
     monkeypatch.setattr(segments, "SIZE", 30_000)
     bench = Bench(tmp_path / "waiting", outcomes_of(), (1, 1))
-    for number, time in enumerate([0, 5_000, 10_000]):
+    for number, time in enumerate([0, 5_000]):
         bench.feed((time, 0, number, f"h{number}"))
-        bench.feed((time, 0, number, "unknown", 0))
+        bench.join.watermark.idle(Feed.MESSAGES, 0)
+        bench.feed((time + 3_000, 0, number, "unknown", 0))
         bench.drain()
-    bench.finish()
     assert in_order(bench.released) == [(1_000, 0, 0, 0, True), (6_000, 0, 1, 0, True)]
 
 
