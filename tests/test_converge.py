@@ -283,7 +283,7 @@ def test_tables_fit_100_columns(document, capsys):
     ("asked", "code", "said"),
     [
         (["--strength", "0"], 64, "above 0"),
-        (["--scenario", "stready"], 78, "there are steady"),
+        (["--scenario", "stready"], 64, "bedload: --scenario: scenario is 'stready'; there are steady"),
         (["--learner", "sgd"], 64, "ftrl, truncated-gradient"),
         (["--learner", "ftrl:fast"], 64, "number above 0"),
         (["--windows", "1"], 64, "2 or more"),

@@ -31,8 +31,13 @@ class Optimum:
 def fitted(solver: Solver, rows: Rows, strength: float, columns: int) -> Optimum:
     """The batch fit, with the intercept that fits best. `columns`: of the whole log.
 
-    Raises BadData where the rows have one outcome only.
+    Raises BadData where the rows have one outcome only, or none.
     """
+    if not len(rows):
+        raise BadData(
+            "none of these messages has an outcome (message.label): a batch fit needs some. Look later "
+            "(--at), or cut fewer windows (--windows)"
+        )
     if not 0 < int(rows.labels.sum()) < len(rows):
         raise BadData(
             f"all {len(rows):,} outcomes are the same: a batch fit needs some of both kinds. Look "
