@@ -10,7 +10,7 @@ import numpy as np
 from simulator.arithmetic import power
 from simulator.scenarios import SCENARIOS, STEADY
 
-__all__ = ["BLOCK", "CourierFeed"]
+__all__ = ["BLOCK", "CourierFeed", "NotAllowed"]
 
 BLOCK = 4_096
 """Messages drawn from one random stream; part of what the bytes of a log depend on."""
@@ -36,6 +36,14 @@ MOST_WORDS = 2_000_000
 MOST_DAYS = 400 * 365
 SEASON_STEPS = 16
 MOST_STEPS = 100_000
+
+
+class NotAllowed(ValueError):
+    """One setting is not what it may be, whatever the others are; `setting`: its name."""
+
+    def __init__(self, setting: str, text: str) -> None:
+        super().__init__(text)
+        self.setting = setting
 
 
 class _Usual(float):
@@ -65,7 +73,8 @@ class CourierFeed:
     `later_rate`: the base rate from then on;
     `season_days`: days of a season.
 
-    Raises ValueError with the setting, its value and what is allowed.
+    Raises ValueError with the setting, its value and what is allowed; NotAllowed where no other setting has
+    a part in it.
     """
 
     seed: int = 0
@@ -87,7 +96,8 @@ class CourierFeed:
 
     def __post_init__(self) -> None:
         if self.scenario not in SCENARIOS:
-            raise ValueError(f"scenario is {self.scenario!r}; there are {', '.join(SCENARIOS)}")
+            there_are = ", ".join(SCENARIOS)
+            raise NotAllowed("scenario", f"scenario is {self.scenario!r}; there are {there_are}")
         self._take_usual_values()
         self._check_limits()
         self._check_scenario()
@@ -116,9 +126,10 @@ class CourierFeed:
             value = getattr(self, name)
             whole = CourierFeed.__annotations__[name] == "int"
             if isinstance(value, bool) or not isinstance(value, int if whole else (int, float)):
-                raise ValueError(f"{name} is {value!r}; it must be a {'whole ' if whole else ''}number")
+                kind = "whole number" if whole else "number"
+                raise NotAllowed(name, f"{name} is {value!r}; it must be a {kind}")
             if not (math.isfinite(value) and low <= value <= high):
-                raise ValueError(f"{name} is {value}; allowed is {low:g} to {high:g}")
+                raise NotAllowed(name, f"{name} is {value}; allowed is {low:g} to {high:g}")
 
     def _check_scenario(self) -> None:
         """A setting that another scenario looks at may not be given, since nothing would come of it."""

@@ -92,8 +92,8 @@ def page_of(command):
         (["checkpoints", "restore", "1", "--state", "absent"], 66, "no such state folder"),
         (["simulate"], 64, "--out FILE"),
         (["simulate", "--out", "x.jsonl", "--set", "base_rate=2"], 78, "base_rate is 2"),
-        (["simulate", "--out", "x.jsonl", "--set", "base_rat=0.2"], 78, "there are seed, messages"),
-        (["simulate", "--out", "x.jsonl", "--set", "seed=x"], 78, "must be a whole number"),
+        (["simulate", "--out", "x.jsonl", "--set", "base_rat=0.2"], 78, "there are words_per_note"),
+        (["simulate", "--out", "x.jsonl", "--set", "first_words=x"], 78, "must be a whole number"),
         (["simulate", "--out", "absent/x.jsonl"], 73, "absent/x.jsonl: there is no folder absent"),
     ],
 )
@@ -259,6 +259,26 @@ def test_simulate_writes_the_same_bytes_to_a_file_and_to_standard_output(tmp_pat
     assert main([*arguments, "--json", "--truth", str(truth)]) == 0
     assert capfdbinary.readouterr().out == log.read_bytes()
     assert json.loads(truth.read_text())["settings"]["seed"] == 4
+
+
+@pytest.mark.parametrize(
+    ("more", "told"),
+    [
+        ([], "; the truth is in no file: --truth FILE keeps it"),
+        (["--truth", "truth.json"], "; the truth is in truth.json"),
+        (["--outcomes", "late.jsonl"], "; the truth is in no file: --truth FILE keeps it"),
+    ],
+)
+def test_a_log_on_standard_output_has_nothing_else_there_and_the_truth_is_where_it_is_told(
+    more, told, tmp_path, monkeypatch, capfdbinary
+):
+    monkeypatch.chdir(tmp_path)
+    assert main(["simulate", "--out", "-", "--messages", "3", *more]) == 0
+    out, said = capfdbinary.readouterr()
+    assert [json.loads(line)["id"] for line in out.splitlines()] == ["h000000000", "h000000001", "h000000002"]
+    first = said.decode().splitlines()[0]
+    assert first.startswith("standard output: 3 messages, ") and first.endswith(told)
+    assert sorted(path.name for path in tmp_path.iterdir()) == sorted(more[1:])
 
 
 # Scores and their reasons

@@ -444,6 +444,19 @@ def test_as_many_as_stop_a_run_are_told_so(drafted_with_odd):
     assert first in text.split("\n\n")[0].replace("\n# ", " ")
 
 
+def test_a_path_that_only_rejected_messages_have_is_left_out(drafted_with_odd):
+    clean = drafted_with_odd(courier(1_000))[1]
+    messages = courier(1_000)
+    for place in range(8):
+        odd = messages[100 * place]
+        odd["text"], odd["note"] = odd["note"], 7
+        messages[100 * place + 1]["extra"] = f"floor {place % 2}"
+    text, settings, doubts, _ = drafted_with_odd(messages)
+    assert "only in messages that will be rejected" in left_out(text, "text")
+    assert kinds(settings) == {**kinds(clean), "extra": "category"}
+    assert len(doubts) == 1 and doubts[0].startswith('"note": 8 of 1,000 values are each a whole number')
+
+
 def test_many_values_of_another_type_are_no_errors_of_the_feed(drafted_with_odd):
     messages = courier(1_000)
     for place in range(30):

@@ -37,6 +37,9 @@ RATES = {"ftrl": 0.2, "truncated-gradient": 0.005}
 """Learning rates on a courier feed: the best of a grid (docs/proof.md)."""
 LEARNED, FRESH = 100_000, 50_000
 FEWEST_IN_WINDOW = 100
+HIGHEST_STRENGTH = 1e9
+IN_OPTIONS = {"messages": "--messages (and --fresh)", "seed": "--seed"}
+IN_LEARNERS = dict.fromkeys(("learner.method", "learner.averaging"), "--learner METHOD[:RATE][:averaged]")
 FRESH_SHARE = 5
 """Of a log, one message in so many is left to be scored only, or FRESH where that is fewer."""
 
@@ -67,13 +70,25 @@ def converge(
     ] = None,
     messages: Annotated[
         int | None,
-        typer.Option("--messages", min=100, metavar="N", help="How many messages to learn."),
+        typer.Option(
+            "--messages",
+            min=100,
+            metavar="N",
+            help=f"How many messages to learn; {LEARNED:,} of a scenario, all of a log but the fresh ones.",
+        ),
     ] = None,
     fresh: Annotated[
         int | None,
-        typer.Option("--fresh", min=1, metavar="N", help="How many messages after them to score only."),
+        typer.Option(
+            "--fresh",
+            min=1,
+            metavar="N",
+            help=f"How many messages after them to score only; {FRESH:,}, of a log a fifth at most.",
+        ),
     ] = None,
-    seed: Annotated[int, typer.Option("--seed", metavar="N", help="Seed of the scenario.")] = 0,
+    seed: Annotated[
+        int | None, typer.Option("--seed", metavar="N", help="Seed of the scenario; 0 by default.")
+    ] = None,
     feed: Annotated[
         list[str] | None,
         typer.Option("--feed", metavar="KEY=VALUE", help="A setting of the feed: see docs/simulator.md."),
@@ -85,7 +100,8 @@ def converge(
         typer.Option(
             "--strength",
             metavar="X",
-            help="l1_per_example of learners and batch fits; may be given many times.",
+            help="l1_per_example of learners and batch fits, that of the settings by default; may be given "
+            "many times.",
         ),
     ] = None,
     learners: Annotated[
@@ -94,7 +110,8 @@ def converge(
             "--learner",
             metavar="METHOD[:RATE][:averaged]",
             help="ftrl or truncated-gradient, its learning rate, and whether by learner.averaging; may be "
-            "given many times.",
+            "given many times; one of each by default. RATE: that of the settings for their method, else "
+            f"{RATES['ftrl']:g} and {RATES['truncated-gradient']:g}.",
         ),
     ] = None,
     epochs: Annotated[
@@ -113,7 +130,8 @@ def converge(
         ),
     ] = 0,
     report: Annotated[
-        Path | None, typer.Option("--report", metavar="FILE", help="An HTML report with the curves.")
+        Path | None,
+        typer.Option("--report", metavar="FILE", help="An HTML report with the curves; replaces one there."),
     ] = None,
     memory: Annotated[str, typer.Option("--memory", metavar="SIZE", help="Memory for the log.")] = "4GB",
     as_json: AsJson = False,
@@ -125,8 +143,9 @@ def converge(
     """
     from stream.runs.converging.converge import converge as run_converge
 
-    if logs and (scenario or feed):
-        raise UsageError("a LOG is there already: leave --scenario and --feed out")
+    if logs and (scenario or feed or seed is not None):
+        raise UsageError("a LOG is there already: leave --scenario, --seed and --feed out")
+    _refuse_without_effect(feed or [], changes or [])
     if report is not None:
         check_output(report, "--report")
     size, at = size_of(memory, "--memory"), _cuts(cuts)
@@ -134,7 +153,7 @@ def converge(
         if logs:
             stream = _of_logs(logs, settings_from(config, changes), messages, fresh, tell)
         else:
-            drawn = feed_of((messages or LEARNED) + (fresh or FRESH), seed, scenario or STEADY, feed or [])
+            drawn = _feed((messages or LEARNED) + (fresh or FRESH), seed, scenario, feed)
             stream = _of_scenario(drawn, fresh or FRESH, Path(folder), config, changes, tell)
         job = _job(stream, learners, strengths, at, epochs, solver, windows, size)
         for one in job.learners:
@@ -149,6 +168,19 @@ def converge(
         show_json(found)
     else:
         show_convergence(found, report)
+
+
+def _refuse_without_effect(feed: list[str], changes: list[str]) -> None:
+    """Raises UsageError for what other options say: how long the stream is, and which learners there are."""
+    for option, texts, cures in (("--feed", feed, IN_OPTIONS), ("--set", changes, IN_LEARNERS)):
+        for text in texts:
+            name = text.partition("=")[0]
+            if name in cures:
+                raise UsageError(f"{option} {text}: here {cures[name]} says that: leave it out")
+
+
+def _feed(messages: int, seed: int | None, scenario: str | None, changes: list[str] | None) -> CourierFeed:
+    return feed_of(messages, seed or 0, scenario or STEADY, changes or [], said=("converge", "--feed"))
 
 
 @dataclass(frozen=True, slots=True)
@@ -202,11 +234,13 @@ def _of_logs(
     paths = tuple(str(Path(log_pattern(text, "for a scenario")).absolute()) for text in logs)
     settings = _reading(settings, paths)
     whole = count(settings, lambda share, done: tell(share or 0.0, "counting")).messages
+    if not whole:
+        raise BadData("the log has no messages: there is nothing to compare")
     fresh = fresh or min(FRESH, whole // FRESH_SHARE)
     learned = messages or whole - fresh
     if learned < 1:
         raise BadData(
-            f"the log has {whole:,} messages, no more than the {fresh:,} fresh ones: give --fresh N"
+            f"the log has {whole:,} messages, no more than the {fresh:,} fresh ones: give a smaller --fresh"
         )
     names = [file.name for file in matching_files(settings.feed.paths, settings.folder)]
     return _Stream(settings, None, learned, fresh, {"files": names, "scenario": None})
@@ -246,7 +280,8 @@ def _job(
 
 
 def _wanted(text: str, stream: _Stream) -> Wanted:
-    """A learner that `text` names; without a rate: that of the settings if these name this method."""
+    """A learner that `text` names; without a rate: that of the settings if these name this method, and, as
+    the default there is none for a scenario, this rate."""
     from stream.runs.converging.job import Wanted
 
     method, *rest = text.split(":")
@@ -258,7 +293,8 @@ def _wanted(text: str, stream: _Stream) -> Wanted:
         )
     own = stream.settings.learner
     if not rate:
-        of_settings = stream.known is None and own.method == method
+        said = stream.known is None or "learning_rate" in own.model_fields_set
+        of_settings = said and own.method == method
         return Wanted(cast(Any, method), own.learning_rate if of_settings else RATES[method], averaged)
     try:
         found = float(rate)
@@ -270,10 +306,12 @@ def _wanted(text: str, stream: _Stream) -> Wanted:
 
 
 def _strengths(asked: list[float] | None, stream: _Stream) -> tuple[float, ...]:
-    if asked and not all(0 < strength < 1e9 for strength in asked):
-        raise UsageError(
-            "--strength takes numbers above 0: without a penalty, a batch fit may have no optimum"
-        )
+    for strength in asked or ():
+        if not 0 < strength < HIGHEST_STRENGTH:
+            raise UsageError(
+                f"--strength {strength:g}: give a number above 0 (without a penalty, a batch fit may have no "
+                f"optimum) and below {HIGHEST_STRENGTH:g}"
+            )
     found = tuple(dict.fromkeys(asked or [stream.settings.learner.l1_per_example]))
     if not found[0] > 0:
         raise UsageError("the settings have learner.l1_per_example = 0: give --strength X above 0")

@@ -12,6 +12,8 @@ from typing import Any
 from unicodedata import combining, east_asian_width
 
 __all__ = [
+    "GAP",
+    "WIDTH",
     "Column",
     "cells",
     "count",
@@ -29,6 +31,9 @@ __all__ = [
 
 WIDTH = 100
 GAP = "  "
+LONGEST_BAR = 40
+BESIDE_BAR = 70
+"""Of the line of `stage_bar`: 35 for what is being done, the rest for its times."""
 Progress = Callable[[float | None, int], None]
 
 
@@ -58,7 +63,7 @@ def decimal(value: float | None, digits: int = 4, signed: bool = False) -> str:
 
 def share(value: float | None) -> str:
     """A share from 0 to 1 as a percentage, `-` for None."""
-    return "-" if value is None else f"{100 * value:.2f} %"
+    return "-" if value is None else f"{100 * value:,.2f} %"
 
 
 def show_json(document: Any) -> None:
@@ -144,9 +149,11 @@ def stage_bar() -> Iterator[Callable[[float, str], None]]:
     from rich.progress import BarColumn, TaskID, TextColumn, TimeElapsedColumn, TimeRemainingColumn
     from rich.progress import Progress as Bar
 
-    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f} %")
+    console = Console(stderr=True)
+    length = min(LONGEST_BAR, max(4, console.width - BESIDE_BAR))
+    columns = TextColumn("{task.description}"), BarColumn(length), TextColumn("{task.percentage:3.0f} %")
     times = TimeElapsedColumn(), TextColumn("elapsed"), TimeRemainingColumn(), TextColumn("left")
-    bar = Bar(*columns, *times, console=Console(stderr=True), auto_refresh=False, transient=True)
+    bar = Bar(*columns, *times, console=console, auto_refresh=False, transient=True)
     stages: dict[str, TaskID] = {}
     shown = 0.0
 

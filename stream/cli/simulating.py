@@ -14,7 +14,7 @@ from stream.cli.exits import INTERRUPTED
 from stream.cli.options import AsJsonLines
 from stream.cli.outputs import check_output
 from stream.cli.screen import count, note, progress_bar, share
-from stream.errors import BadSettings, UsageError
+from stream.errors import BadSettings, BedloadError, UsageError
 
 if TYPE_CHECKING:
     from simulator import CourierFeed, Faults, Pace, Truth
@@ -23,6 +23,7 @@ __all__ = ["add_to", "feed_of"]
 
 Advance = Callable[[int, int], None]
 Made = TypeVar("Made")
+STANDARD_OUTPUT = "standard output"
 
 
 def add_to(app: typer.Typer) -> None:
@@ -33,7 +34,11 @@ def add_to(app: typer.Typer) -> None:
 def simulate(
     out: Annotated[
         Path | None,
-        typer.Option("--out", metavar="FILE", help="Log to write, never overwritten; .gz, .zst: compressed."),
+        typer.Option(
+            "--out",
+            metavar="FILE",
+            help="Log to write, never overwritten; .gz, .zst: compressed; -: standard output.",
+        ),
     ] = None,
     topic: Annotated[
         str | None, typer.Option("--topic", metavar="NAME", help="Topic to write to instead; never made.")
@@ -158,17 +163,22 @@ class _Places:
                     raise UsageError(f"{option} and {its} are both {path}; give one of them another place")
 
     def tell(self, drawn: Truth) -> None:
-        """Says what was written and where the truth is."""
-        truth = self.truth or (f"{self.log}.truth.json" if self.topic is None else None)
+        """Says what was written and where the truth is; on standard error where lines are on the output."""
+        log, late = _named(self.log), None if self.topic else _named(self.outcomes)
+        truth = _named(self.truth) or (f"{log}.truth.json" if log not in (None, STANDARD_OUTPUT) else None)
+        written_to = (log, late, truth, _named(self.probabilities))
+        say = note if STANDARD_OUTPUT in written_to else print
         where = f"the truth is in {truth}" if truth else "the truth is in no file: --truth FILE keeps it"
-        print(
-            f"{self.log or f'topic {self.topic}'}: {count(drawn.messages)} messages, "
+        if truth == STANDARD_OUTPUT:
+            where = f"the truth is on {truth}"
+        say(
+            f"{log or f'topic {self.topic}'}: {count(drawn.messages)} messages, "
             f"{share(drawn.redelivered_share)} redelivered, {count(drawn.words)} words; {where}"
         )
         faults = {**drawn.records, "malformed": sum(drawn.records["malformed"].values())}
         written = faults.pop("written")
         if any(faults.values()):
-            print(
+            say(
                 f"on the way: {count(faults['missing'])} missing, {count(faults['malformed'])} malformed, "
                 f"{count(faults['duplicates'])} duplicates, {count(faults['reordered'])} behind a later one; "
                 f"{count(written)} records written"
@@ -176,10 +186,15 @@ class _Places:
         if drawn.outcomes is not None:
             told = {name: count(value) for name, value in drawn.outcomes.items()}
             waiting = f", {told['waiting']} not known yet" if drawn.outcomes["waiting"] else ""
-            print(
-                f"{self.outcomes}: {told['written']} outcomes, {told['lost']} lost, {told['repeated']} "
-                f"repeated{waiting}"
+            say(
+                f"{late or self.outcomes}: {told['written']} outcomes, {told['lost']} lost, "
+                f"{told['repeated']} repeated{waiting}"
             )
+
+
+def _named(place: Path | str | None) -> str | None:
+    """A file as people call it."""
+    return None if place is None else STANDARD_OUTPUT if str(place) == "-" else str(place)
 
 
 def _to_files(feed: CourierFeed, faults: Faults, pace: Pace, places: _Places, advance: Advance) -> Truth:
@@ -220,57 +235,78 @@ def _to_topic(feed: CourierFeed, faults: Faults, pace: Pace, places: _Places, ad
     return truth
 
 
-def feed_of(messages: int, seed: int, scenario: str, changes: list[str]) -> CourierFeed:
-    """The feed that the options mean. Raises BadSettings naming the key, its value and what is allowed."""
+def feed_of(
+    messages: int,
+    seed: int,
+    scenario: str,
+    changes: list[str],
+    *,
+    said: tuple[str, str] = ("simulate", "--set"),
+) -> CourierFeed:
+    """The feed that the options mean. `said`: whose words these are, and the option of the `changes`.
+
+    Raises UsageError for an option of its own and BadSettings for `changes`, or for what does not fit
+    together, with the key, its value and what is allowed.
+    """
     from dataclasses import fields
 
     from simulator import CourierFeed
+    from simulator.feed import NotAllowed
 
-    kinds = {field.name: str(field.type) for field in fields(CourierFeed) if field.type != "str"}
-    given: dict[str, Any] = {"messages": messages, "seed": seed, "scenario": scenario}
-    given |= _numbers("--set", changes, kinds, "setting of the feed")
-    return _made("simulate", lambda: CourierFeed(**given))
+    options: dict[str, Any] = {"messages": messages, "seed": seed, "scenario": scenario}
+    kinds = {field.name: str(field.type) for field in fields(CourierFeed) if field.name not in options}
+    given = _numbers(said[1], changes, kinds, BadSettings)
+    try:
+        return CourierFeed(**options, **given)
+    except NotAllowed as error:
+        if error.setting in options:
+            raise UsageError(f"--{error.setting}: {error}") from None
+        raise BadSettings(f"{said[1]}: {error}") from None
+    except ValueError as error:
+        raise BadSettings(f"{said[0]}: {error}") from None
 
 
 def faults_of(shares: list[str], outcomes: str | None) -> Faults:
-    """The faults that the options mean. Raises BadSettings as `feed_of` does, and for faults of outcomes that
-    stand in the messages."""
+    """The faults that the options mean. Raises UsageError for those that cannot be, with what is allowed, and
+    for faults of outcomes that stand in the messages."""
     from dataclasses import fields
 
     from simulator import Faults
 
     kinds = {field.name: str(field.type) for field in fields(Faults)}
-    faults = _made("--fault", lambda: Faults(**_numbers("--fault", shares, kinds, "fault")))
+    faults = _made("--fault", lambda: Faults(**_numbers("--fault", shares, kinds, UsageError)))
     if faults.in_outcomes and outcomes is None:
         raise UsageError("lost and repeated outcomes need --outcomes PLACE: else they stand in the messages")
     return faults
 
 
 def pace_of(rate: float | None, stopped: Callable[[], bool]) -> Pace:
-    """The pace of this rate. Raises BadSettings for a rate that cannot be."""
+    """The pace of this rate. Raises UsageError for a rate that cannot be."""
     from simulator import Pace
 
     return _made("--rate", lambda: Pace(rate, stopped))
 
 
-def _numbers(option: str, texts: list[str], kinds: dict[str, str], what: str) -> dict[str, Any]:
-    """Values by name of texts NAME=VALUE."""
+def _numbers(
+    place: str, texts: list[str], kinds: dict[str, str], wrong: type[BedloadError]
+) -> dict[str, Any]:
+    """Values by name of texts NAME=VALUE; raises `wrong` for what is none, told as of `place`."""
     given: dict[str, Any] = {}
     for text in texts:
         name, _, value = text.partition("=")
         if name not in kinds:
-            raise BadSettings(f"{option} {text}: no such {what}; there are {', '.join(kinds)}")
+            raise wrong(f"{place} {text}: there is no {name}; there are {', '.join(kinds)}")
         try:
             given[name] = int(value) if kinds[name] == "int" else float(value)
         except ValueError:
             kind = "a whole number" if kinds[name] == "int" else "a number"
-            raise BadSettings(f"{option} {text}: {name} must be {kind}") from None
+            raise wrong(f"{place} {text}: {name} must be {kind}") from None
     return given
 
 
-def _made(place: str, make: Callable[[], Made]) -> Made:
-    """What `make` gives, its ValueError told as BadSettings."""
+def _made(option: str, make: Callable[[], Made]) -> Made:
+    """What `make` gives, its ValueError told as UsageError of `option`."""
     try:
         return make()
     except ValueError as error:
-        raise BadSettings(f"{place}: {error}") from None
+        raise UsageError(f"{option}: {error}") from None

@@ -12,7 +12,7 @@ from typing import Any
 from stream.decoding.uses import BY_KIND, MAX_QUANTITY, Use
 from stream.runs.columns import Column
 
-__all__ = ["TIME_HINT", "FieldGuess", "guess_field", "is_prose", "rejects", "unfit"]
+__all__ = ["TIME_HINT", "FieldGuess", "guess_field", "is_prose", "only_in_rejects", "rejects", "unfit"]
 
 TIME_HINT = re.compile(r"(^|_)(at|on|time|timestamp|ts|date|datetime|when|created)$|_(s|ms)$")
 CODE_HINT = re.compile(r"(^|_)(id|code|no|nr|number|zip|postcode|type|kind|class)$")
@@ -73,6 +73,23 @@ def guess_field(column: Column, label: Column | None) -> FieldGuess | None:
         return usual
     doubt, rows = rejects(column.usual, BY_KIND[usual.kind])
     return replace(usual, reason=f"{usual.reason}. {doubt}".rstrip(". "), doubt=doubt, rejected=rows)
+
+
+def only_in_rejects(
+    guesses: Sequence[FieldGuess], columns: Sequence[Column], rejected: frozenset[int]
+) -> list[FieldGuess]:
+    """The guesses, but left out where no message has the path that would not be rejected for another one.
+
+    Such a path comes with an error of the feed, and a run would warn that it never meets it.
+    """
+    rows = {one.path: {*one.rows, *one.object_rows} for one in columns if one.addressable}
+    reason = "is there only in messages that will be rejected"
+    return [
+        replace(guess, active=False, reason=reason, doubt="", rejected=frozenset())
+        if guess.active and rows[guess.path] <= rejected
+        else guess
+        for guess in guesses
+    ]
 
 
 def _guess_field(column: Column, label: Column | None) -> FieldGuess | None:

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from stream.runs.columns import Column, columns_of
-from stream.runs.guesses import FieldGuess, guess_field
+from stream.runs.guesses import FieldGuess, guess_field, only_in_rejects
 from stream.runs.roles import Role, guess_roles
 from stream.runs.sample import Sample, read_sample
 from stream.settings import MessagePaths
@@ -78,11 +78,9 @@ def draft(sample: Path, folder: Path | None = None, doubt: Callable[[str], None]
         for column in columns[:MOST_PATHS]
         if column.path not in taken and (guess := guess_field(column, label)) is not None
     ]
-    used: list[Role | FieldGuess] = [
-        *roles.values(),
-        *(guess for guess in guesses if guess.active or _leads_on(guess, guesses, taken)),
-    ]
-    malformed = [*_malformed(read), *_too_many(read, frozenset().union(*(one.rejected for one in used)))]
+    guesses = only_in_rejects(guesses, columns, _rejected(_used(roles, guesses)))
+    used = _used(roles, guesses)
+    malformed = [*_malformed(read), *_too_many(read, _rejected(used))]
     for text in [*malformed, *(one.doubt for one in used if one.doubt)]:
         doubt(text)
     parts = [
@@ -109,6 +107,18 @@ def _feed_path(sample: Path, folder: Path) -> str:
     home = folder.absolute()
     path = absolute.relative_to(home) if absolute.is_relative_to(home) else absolute
     return glob.escape(str(path))
+
+
+def _used(roles: dict[str, Role], guesses: Sequence[FieldGuess]) -> list[Role | FieldGuess]:
+    """What the settings will read."""
+    taken = {role.path for role in roles.values()}
+    read = [guess for guess in guesses if guess.active or _leads_on(guess, guesses, taken)]
+    return [*roles.values(), *read]
+
+
+def _rejected(used: Iterable[Role | FieldGuess]) -> frozenset[int]:
+    """The messages of the sample that a run with these settings would reject."""
+    return frozenset().union(*(one.rejected for one in used))
 
 
 def _leads_on(guess: FieldGuess, guesses: Sequence[FieldGuess], taken: set[str | None]) -> bool:

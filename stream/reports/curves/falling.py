@@ -13,6 +13,7 @@ from stream.reports.texts import UNKNOWN, count, escaped, plain
 __all__ = ["excess", "gaps", "seconds"]
 
 HEIGHT = 380
+_FITTED = "The thin dotted lines are fitted, and the table has their exponents."
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,8 +41,8 @@ _GAPS = _Kind(
     True,
     "The objective (mean log loss and penalty, over the messages learned so far) of each learner above that "
     "of the batch fit of the same messages, as a share of it. Both axes are logarithmic.",
-    "A straight line down means that the gap shrinks as a power of the messages: the thin dotted lines are "
-    "fitted, and the table has their exponents. Several passes are over the same messages.",
+    "A straight line down means that the gap shrinks as a power of the messages. Several passes are over the "
+    "same messages.",
 )
 _EXCESS = _Kind(
     "excess",
@@ -88,6 +89,8 @@ def seconds(document: Row) -> Section:
 def _section(document: Row, kind: _Kind) -> Section:
     pictures: dict[str, Picture] = {}
     body = []
+    fitted = any(slope["of"] == kind.key for slope in document["slopes"])
+    reading = f"{kind.reading} {_FITTED}" if fitted else kind.reading
     for i, strength in enumerate(document["strengths"]):
         slopes = [s for s in document["slopes"] if s["strength"] == strength and s["of"] == kind.key]
         picture = _picture(at_strength(document, strength), kind, strength, slopes)
@@ -95,7 +98,7 @@ def _section(document: Row, kind: _Kind) -> Section:
         last = i + 1 == len(document["strengths"])
         body.append(
             f"<h3>Strength {plain(strength)}</h3>"
-            + pictured(f"{kind.name}-{i}", picture, kind.gist if i == 0 else "", kind.reading if last else "")
+            + pictured(f"{kind.name}-{i}", picture, kind.gist if i == 0 else "", reading if last else "")
         )
     return Section(kind.name, kind.title, kind.short, "".join(body) + _slopes(document, kind), pictures)
 

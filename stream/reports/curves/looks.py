@@ -63,7 +63,7 @@ def share(value: float | None, signed: bool = False) -> str:
     """A share as a percentage with two digits, so that a column of them lines up."""
     if value is None:
         return UNKNOWN
-    return f"{100 * value:{'+' if signed else ''}.2f} %".replace("-", "−")
+    return f"{100 * value:{'+' if signed else ''},.2f} %".replace("-", "−")
 
 
 def at_strength(document: Row, strength: float) -> list[Row]:

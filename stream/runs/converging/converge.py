@@ -92,7 +92,7 @@ def _at_strength(
     ]
     for i, cut in enumerate(job.cuts):
         rows = held.part(0, cut)
-        tell(i / len(job.cuts), f"batch fits by {job.solver}, strength {strength:g}")
+        tell(i / len(job.cuts), f"{job.solver}, strength {strength:g}")
         optimum = fitted(job.solver, rows, strength, len(held.addresses))
         batch = _of_batch(judge, optimum, cut)
         learned = []
@@ -122,6 +122,7 @@ def _of_batch(judge: Judge, optimum: Optimum, cut: int) -> dict[str, Any]:
         "objective": optimum.objective,
         "lower_bound": optimum.lower_bound,
         "proved_gap": optimum.proved_gap,
+        "loose": optimum.loose,
         "seconds": optimum.fitted.seconds,
         **judge.figures(optimum.fitted, cut),
     }

@@ -13,6 +13,9 @@ from stream.runs.converging.judging import Fitted, mean_loss, proved, with_best_
 
 __all__ = ["Optimum", "fitted"]
 
+LOOSE = 0.01
+"""Proved gap past which gaps against a batch fit say little."""
+
 
 @dataclass(frozen=True, slots=True)
 class Optimum:
@@ -27,12 +30,22 @@ class Optimum:
         """The fit is at most this share of its objective above the optimum."""
         return max(self.objective - self.lower_bound, 0.0) / self.objective
 
+    @property
+    def loose(self) -> bool:
+        """It is proved too loosely to measure gaps against."""
+        return self.proved_gap > LOOSE
+
 
 def fitted(solver: Solver, rows: Rows, strength: float, columns: int) -> Optimum:
     """The batch fit, with the intercept that fits best. `columns`: of the whole log.
 
-    Raises BadData where the rows have one outcome only.
+    Raises BadData where the rows have one outcome only, or none.
     """
+    if not len(rows):
+        raise BadData(
+            "none of these messages has an outcome (message.label): a batch fit needs some. Look later "
+            "(--at), or cut fewer windows (--windows)"
+        )
     if not 0 < int(rows.labels.sum()) < len(rows):
         raise BadData(
             f"all {len(rows):,} outcomes are the same: a batch fit needs some of both kinds. Look "

@@ -87,6 +87,7 @@ class _Reading:
 
     def __init__(self, settings: Settings) -> None:
         self._decoder, self._batcher = Decoder(settings), Batcher(settings)
+        self._label = settings.message.label
         self._addresses, self._values = [np.empty(0, np.uint64)], [np.empty(0, np.float32)]
         self._lengths, self._numbers = [np.empty(0, np.int64)], [np.empty(0, np.int64)]
         self._labels, self._weights = [np.empty(0, np.int8)], [np.empty(0)]
@@ -111,7 +112,10 @@ class _Reading:
     def held(self) -> Held:
         labels = np.concatenate(self._labels)
         if not len(labels):
-            raise BadData(f"none of {self.messages:,} messages has an outcome: a batch fit needs some")
+            raise BadData(
+                f"none of {self.messages:,} messages has an outcome, and a batch fit needs some: none had "
+                f"`{self._label}` (message.label). Is the path right, and are the outcomes in this log?"
+            )
         columns, addresses = _numbered(np.concatenate(self._addresses))
         row_ptr = np.concatenate([np.zeros(1, np.int64), np.cumsum(np.concatenate(self._lengths))])
         values, weights = np.concatenate(self._values), np.concatenate(self._weights)
