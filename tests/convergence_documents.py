@@ -53,6 +53,7 @@ def _fit(strength, cut, truth):
             "objective": 0.43 + 10 * strength,
             "lower_bound": (0.43 + 10 * strength) * (1 - 2e-5),
             "proved_gap": 2e-5,
+            "loose": False,
             "seconds": cut / 3_000,
             **_figures(cut, 120, truth),
         },

@@ -114,7 +114,7 @@ def test_the_batch_fit_is_scikit_learns(document, matrix):
         assert batch["objective"] == pytest.approx(objective, rel=1e-5)
         assert batch["lower_bound"] <= objective
         assert batch["proved_gap"] == pytest.approx(1 - batch["lower_bound"] / batch["objective"])
-        assert batch["proved_gap"] < 1e-3
+        assert batch["proved_gap"] < 1e-3 and batch["loose"] is False
         assert batch["nnz"] == pytest.approx(np.count_nonzero(weights), abs=3)
         fresh = log_loss(x[LEARNED:], y[LEARNED:], weights, intercept)
         assert batch["fresh_log_loss"] == pytest.approx(fresh, rel=1e-3)

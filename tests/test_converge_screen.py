@@ -45,7 +45,7 @@ def test_large_gaps_have_their_thousands_set_apart(shown):
 def test_a_batch_fit_that_is_loosely_proved_is_warned_of_under_its_table(shown):
     found = convergence_documents.bare()
     assert "Warning" not in shown(found)
-    found["fits"][1]["batch"]["proved_gap"] = 0.4003
+    found["fits"][1]["batch"] |= {"proved_gap": 0.4003, "loose": True}
     assert "Warning: the batch fit of 3,000 messages may be up to 40.03 % above" in shown(found)
 
 

@@ -66,6 +66,27 @@ def test_the_end_says_gap_support_and_what_is_proved():
     assert "−0.80 ± 0.00" in READ["whole"].texts["gaps"]
 
 
+def test_figures_that_a_log_of_ones_own_has_not_have_no_column():
+    titles = {name: re.findall(r"<th[^>]*>([^<]*)", PAGES[name].split('id="figures"')[1]) for name in PAGES}
+    assert "truth F1" in titles["whole"] and "excess" in titles["whole"]
+    assert "batch F1" in titles["bare"]
+    assert not {"truth P", "truth R", "truth F1", "excess"} & set(titles["bare"])
+
+
+def test_fitted_lines_are_spoken_of_where_there_are_some():
+    assert "dotted" in READ["whole"].texts["gaps"]
+    assert "dotted" not in READ["single"].texts["gaps"]
+    assert "dotted" not in READ["whole"].texts["seconds"]
+
+
+def test_a_batch_fit_that_is_loosely_proved_is_warned_of():
+    assert "may be up to" not in PAGES["bare"]
+    loose = convergence_documents.bare()
+    loose["fits"][1]["batch"] |= {"proved_gap": 0.4003, "loose": True}
+    said = Elements(convergence_page(loose)).texts["end"]
+    assert "batch fit of 3,000 messages may be up to 40.03 %" in said
+
+
 def test_a_fitted_line_goes_through_a_curve_that_is_a_power():
     figure = json.loads(READ["whole"].scripts[0])["figures"]["gaps-0"]
     line, curve = figure["data"][0], figure["data"][4]
@@ -85,6 +106,9 @@ def test_every_picture_is_drawn_without_a_word_or_the_network(browser, folder, w
         assert opened.complaints == []
         assert opened.asked == [(folder / "whole.html").as_uri()]
         if width == 1280:
+            hidden = "e => [e.scrollWidth - e.clientWidth, e.scrollHeight - e.clientHeight]"
+            for part in page.locator("#figures .scroll").all():
+                assert part.evaluate(hidden) == [0, 0], "every figure is in sight"
             assert re.search(r"messages.*%", opened.point_at("gaps-0", ".point"))
 
 

@@ -9,6 +9,7 @@ from sklearn.linear_model import LogisticRegression
 from simulator import CourierFeed, write_log
 from stream.cli.main import main
 from stream.errors import CannotCreate
+from stream.optimality import solving
 from stream.optimality.solving import Columns, solve
 from stream.runs.certifying.refining import refine
 from stream.runs.replay import replay
@@ -79,12 +80,63 @@ def test_refining_is_told_proved_and_left_as_a_snapshot(learned, monkeypatch, ca
     assert found["fresh_log_loss"] != found["fresh_log_loss_refined"]
     weights = read_snapshot(learned / "optimum").weights
     assert len(weights) == found["refined_nnz"] and all(weights.names)
+    assert main(["certify", "--snapshot", "./optimum", "--config", "bedload.toml", "--json"]) == 0
+    again = json.loads(capsys.readouterr().out)
+    assert again["objective"] == pytest.approx(found["refined_objective"]) and again["gap"] < 1e-6
     assert main([*refining, "--out", "optimum"]) == 73
     assert main(["certify", "--state", "state", "--fresh", "later.jsonl"]) == 64
     capsys.readouterr()
     assert main(refining) == 0
     text = capsys.readouterr().out
     assert "batch optimum: objective" in text and max(map(len, text.splitlines())) <= 100
+
+
+def test_a_later_log_without_outcomes_is_refused_before_the_work(learned, tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(learned)
+    refining = [
+        "certify",
+        "--state",
+        "state",
+        "--config",
+        "bedload.toml",
+        "--refine",
+        "--out",
+        str(tmp_path / "o"),
+    ]
+    (tmp_path / "bare.jsonl").write_text('{"note": "left at the door"}\n' * 3)
+    assert main([*refining, "--fresh", str(tmp_path / "bare.jsonl")]) == 65
+    told = capsys.readouterr().err
+    assert "none of 3 messages has an outcome" in told and "redelivered" in told
+    assert not (tmp_path / "o").exists()
+
+
+def test_an_optimum_that_is_not_reached_is_no_optimum(learned, tmp_path, monkeypatch, capsys):
+    monkeypatch.setattr(solving, "MOST_STEPS", 3)
+    monkeypatch.chdir(learned)
+    refining = [
+        "certify",
+        "--state",
+        "state",
+        "--config",
+        "bedload.toml",
+        "--refine",
+        "--out",
+        str(tmp_path / "o"),
+    ]
+    assert main([*refining, "--strength", "1e-5"]) == 65
+    told = capsys.readouterr().err
+    assert "1e-06 is wanted: 3 steps" in told and "--strength" in told
+    assert not (tmp_path / "o").exists()
+
+
+@pytest.mark.parametrize("strength", [1e-4, 1e-6])
+def test_weights_far_out_where_losses_are_flat_find_back(strength):
+    draw = np.random.default_rng(5)
+    x = draw.normal(size=(60, 40))
+    labels = (draw.random(60) < 0.5).astype(np.int8)
+    far = solve(columns_of(x, labels, np.ones(60)), 80 * draw.normal(size=40), 20.0, strength, 1e-6)
+    near = solve(columns_of(x, labels, np.ones(60)), np.zeros(40), 0.0, strength, 1e-6)
+    assert far.gap <= 1e-6 * far.objective and far.objective == pytest.approx(near.objective, rel=2e-6)
 
 
 def test_a_log_too_large_for_the_memory_is_refused(learned, tmp_path):

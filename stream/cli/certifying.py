@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["add_to"]
 
 DIGITS = 6
+STRONGEST = 1e6
 
 
 def add_to(app: typer.Typer) -> None:
@@ -59,8 +60,8 @@ def certify(
         typer.Option("--out", metavar="FOLDER", help="With --refine: a snapshot of the optimum; new."),
     ] = None,
     memory: Annotated[
-        str, typer.Option("--memory", metavar="SIZE", help="With --refine: memory for the log.")
-    ] = "4GB",
+        str | None, typer.Option("--memory", metavar="SIZE", help="With --refine: memory for the log [4GB].")
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """Bound how far a snapshot is from the batch optimum of a log.
@@ -70,8 +71,8 @@ def certify(
     from stream.runs.certifying.certify import certify as run_certify
     from stream.runs.certifying.worth import worth
 
-    _check(strength, refine, fresh, out)
-    memory_bytes = size_of(memory, "--memory")
+    _check(strength, refine, fresh, out, memory)
+    memory_bytes = size_of(memory or "4GB", "--memory")
     later = tuple(log_pattern(text, "for no comparison") for text in fresh or ())
     settings, paths, folder = _log(logs, config)
     snapshot = read_snapshot_of(config, state, name)
@@ -100,11 +101,13 @@ def certify(
         note(f"bedload: {count(found.findings.rejected)} rejected messages were left out")
 
 
-def _check(strength: float | None, refine: bool, fresh: list[str] | None, out: Path | None) -> None:
-    if strength is not None and not 0.0 <= strength < float("inf"):
-        raise UsageError(f"--strength {strength:g}: give a number above 0")
-    if not refine and (fresh or out is not None):
-        raise UsageError("--fresh and --out are about the batch optimum: give --refine too")
+def _check(
+    strength: float | None, refine: bool, fresh: list[str] | None, out: Path | None, memory: str | None
+) -> None:
+    if strength is not None and not 0.0 <= strength <= STRONGEST:
+        raise UsageError(f"--strength {strength:g}: give a number above 0, at most {STRONGEST:g}")
+    if not refine and (fresh or out is not None or memory is not None):
+        raise UsageError("--fresh, --out and --memory are about the batch optimum: give --refine too")
     if out is not None:
         check_output(out, new=True)
 
@@ -165,7 +168,12 @@ def _show_refined(found: dict[str, Any], out: Path | None) -> None:
             f"{after:.5f} refined: {verdict} by {abs(after - before):.5f}."
         )
     if out is not None:
-        print(f"Snapshot of the optimum: {out}")
+        print(f"Snapshot of the optimum: {out}; other commands read it with --snapshot {_as_path(out)}")
+
+
+def _as_path(folder: Path) -> str:
+    """With a / in it, by which --snapshot knows a folder from a name."""
+    return str(folder) if "/" in str(folder) else f"./{folder}"
 
 
 def _shifted(shift: float) -> str:

@@ -16,8 +16,6 @@ UNBROKEN = "\u00a0"
 ALONE, BESIDE_TRUTH = 36, 13
 """Room for a learner's name and passes in a row of figures, without and with those against the truth."""
 GAP_WIDTH = 9
-LOOSE = 0.01
-"""Proved gap of a batch fit, share of its objective, past which gaps against it say little."""
 OF = {"gap": "gap to the batch fit", "excess_log_loss": "excess over the truth"}
 
 
@@ -73,7 +71,7 @@ def _rates(learners: list[dict[str, Any]], names: dict[str, str]) -> str:
 
 def _warn_of_loose(fits: list[dict[str, Any]]) -> None:
     """Says which batch fits are proved too loosely to measure gaps against."""
-    loose = [fit for fit in fits if fit["batch"]["proved_gap"] > LOOSE]
+    loose = [fit for fit in fits if fit["batch"]["loose"]]
     if loose:
         through = ", ".join(count(fit["messages"]) for fit in loose)
         worst = share(max(fit["batch"]["proved_gap"] for fit in loose))

@@ -30,7 +30,11 @@ StateFolder = Annotated[
 ]
 Name = Annotated[
     str | None,
-    typer.Option("--snapshot", metavar="NAME", help="Snapshot to read; the newest whole one by default."),
+    typer.Option(
+        "--snapshot",
+        metavar="NAME",
+        help="Snapshot to read, or its folder (./NAME); the newest whole one by default.",
+    ),
 ]
 AsJson = Annotated[bool, typer.Option("--json", help="One JSON document on standard output.")]
 AsJsonLines = Annotated[

@@ -257,7 +257,12 @@ def restore(name: OneName, config: Config = None, state: StateFolder = None, as_
 
 
 def read_snapshot_of(config: Path | None, state: Path | None, name: str | None) -> Snapshot:
-    """The snapshot that the options name, read whole; newer broken ones are named on standard error."""
+    """The snapshot that the options name (a / in `name`: its folder), read whole; newer broken ones are named
+    on standard error."""
+    if name is not None and "/" in name:
+        from stream.snapshots import read_snapshot
+
+        return read_snapshot(Path(name))
     snapshot = _stored(config, state).load(name)
     for trouble in snapshot.passed_over:
         note(f"bedload: passed over a broken snapshot: {trouble}")

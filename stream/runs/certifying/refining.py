@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 
-from stream.errors import CannotCreate
+from stream.errors import BadData, CannotCreate
 from stream.optimality.held_rows import HeldRows
 from stream.optimality.solving import Solution, solve
 from stream.runs.certifying.log import Log, Progress
@@ -44,7 +44,8 @@ def refine(
     """Solves the batch problem of the log, beginning at `weights`, until the gap is under `tolerance` of the
     objective.
 
-    The whole log is held in memory. Raises CannotCreate where that takes more than `memory_bytes`.
+    The whole log is held in memory. Raises CannotCreate where that takes more than `memory_bytes`, BadData
+    where the gap stays larger.
     """
     log = Log(settings, paths, folder)
     addresses, columns = _held(log, memory_bytes, progress).columns()
@@ -56,6 +57,13 @@ def refine(
         steps += 1
 
     solution = solve(columns, weights.at(addresses), weights.intercept, strength, tolerance, tell)
+    if solution.gap > tolerance * solution.objective:
+        raise BadData(
+            f"refining ended {solution.gap / solution.objective:.1e} of the objective from a proof, where "
+            f"{tolerance:g} is wanted: {solution.steps} steps, the last of which hardly helped. At strength "
+            f"{strength:g} the penalty is worth {strength * float(columns.weights.sum()):.2g} messages, too "
+            "little to hold the weights: give a stronger --strength"
+        )
     found = solution.weights.astype(np.float32)
     some = np.flatnonzero(found)
     return Refined(
@@ -81,7 +89,7 @@ def _held(log: Log, memory_bytes: int, progress: Progress) -> HeldRows:
         if held.entries * ENTRY_BYTES > memory_bytes:
             raise CannotCreate(
                 f"refining holds the log in memory: {held.entries:,} tokens of {log.messages:,} messages "
-                f"so far take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or give fewer "
+                f"so far take more than {memory_bytes / 1e6:,.3g} MB. Allow more (--memory), or give fewer "
                 "files"
             )
     return held

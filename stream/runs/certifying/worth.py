@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from stream.errors import BadData
 from stream.optimality.bound import log_losses
 from stream.runs.certifying.certify import Certificate
 from stream.runs.certifying.log import Log, Progress, Scored
@@ -63,6 +64,7 @@ def worth(
     """
     reading = settings or settings_of(snapshot)
     strength = certificate.l1_per_example
+    messages, before_loss = _fresh_loss(reading, fresh, snapshot.weights, progress) if fresh else (None, None)
     refined = refine(reading, paths, folder, snapshot.weights, strength, memory_bytes, progress)
     before = dict(
         zip(snapshot.weights.addresses.tolist(), np.sign(snapshot.weights.values).tolist(), strict=True)
@@ -71,26 +73,22 @@ def worth(
         zip(refined.weights.addresses.tolist(), np.sign(refined.weights.values).tolist(), strict=True)
     )
     changed = sum(before.get(address) != after.get(address) for address in before.keys() | after.keys())
-    if not fresh:
-        return Worth(refined, changed, None, None, None)
-    models = snapshot.weights, refined.weights
-    messages, (one, two) = _fresh_loss(reading, fresh, Path(), models, progress)
-    return Worth(refined, changed, messages, one, two)
+    after_loss = _fresh_loss(reading, fresh, refined.weights, progress)[1] if fresh else None
+    return Worth(refined, changed, messages, before_loss, after_loss)
 
 
 def _fresh_loss(
-    settings: Settings,
-    paths: tuple[str, ...],
-    folder: Path,
-    models: tuple[Weights, ...],
-    progress: Progress = lambda stage, fraction: None,
-) -> tuple[int, list[float]]:
-    """Labelled messages of other logs, and the mean log loss of each of `models` on them."""
-    log, lookups = Log(settings, paths, folder), [Lookup(model) for model in models]
-    scored = [Scored() for _ in models]
+    settings: Settings, paths: tuple[str, ...], model: Weights, progress: Progress
+) -> tuple[int, float]:
+    """Labelled messages of other logs, BadData where there are none; the mean log loss of `model` on them."""
+    log, lookup, scored = Log(settings, paths, Path()), Lookup(model), Scored()
     for batch in log.batches("fresh messages", progress):
-        for lookup, found in zip(lookups, scored, strict=True):
-            found.add(batch, lookup.score(batch)[0])
-    weight = float(scored[0].weights.sum())
-    losses = [float((log_losses(one.margins, one.labels) * one.weights).sum()) / weight for one in scored]
-    return len(scored[0].labels), losses
+        scored.add(batch, lookup.score(batch)[0])
+    weight = float(scored.weights.sum())
+    if not weight > 0.0:
+        raise BadData(
+            f"{', '.join(paths)}: none of {log.messages:,} messages has an outcome that counts "
+            f"({settings.message.label}), so there is nothing to compare on: give a later log with outcomes"
+        )
+    losses = log_losses(scored.margins, scored.labels)
+    return scored.count, float((losses * scored.weights).sum()) / weight

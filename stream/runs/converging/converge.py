@@ -122,6 +122,7 @@ def _of_batch(judge: Judge, optimum: Optimum, cut: int) -> dict[str, Any]:
         "objective": optimum.objective,
         "lower_bound": optimum.lower_bound,
         "proved_gap": optimum.proved_gap,
+        "loose": optimum.loose,
         "seconds": optimum.fitted.seconds,
         **judge.figures(optimum.fitted, cut),
     }

@@ -13,6 +13,9 @@ from stream.runs.converging.judging import Fitted, mean_loss, proved, with_best_
 
 __all__ = ["Optimum", "fitted"]
 
+LOOSE = 0.01
+"""Proved gap past which gaps against a batch fit say little."""
+
 
 @dataclass(frozen=True, slots=True)
 class Optimum:
@@ -26,6 +29,11 @@ class Optimum:
     def proved_gap(self) -> float:
         """The fit is at most this share of its objective above the optimum."""
         return max(self.objective - self.lower_bound, 0.0) / self.objective
+
+    @property
+    def loose(self) -> bool:
+        """It is proved too loosely to measure gaps against."""
+        return self.proved_gap > LOOSE
 
 
 def fitted(solver: Solver, rows: Rows, strength: float, columns: int) -> Optimum:
