@@ -14,6 +14,10 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from stream.errors import BadSettings, FileTrouble, InputMissing
+from stream.runs.converging.converge import converge
+from stream.runs.replay import replay
+from stream.runs.tuning.tune import tune
+from stream.runs.work import work
 from stream.settings import Settings, load
 from stream.settings.keys import FIELD_KINDS, known_keys
 from stream.token_names import readable
@@ -182,6 +186,81 @@ def test_servers_may_be_ipv6_addresses(write):
 
 
 # ---- refusals ----------------------------------------------------------------------------------------------
+
+
+LATE = """
+message.id = "id"
+message.time = "at"
+[outcomes]
+kind = "log"
+paths = "outcomes.jsonl"
+id = "id"
+label = "redelivered"
+time = "at"
+wait = "48h"
+"""
+
+
+def test_outcomes_of_their_own_are_settings(write):
+    settings = load(write(LATE), environ={})
+    assert settings.outcomes.paths == ("outcomes.jsonl",)
+    assert settings.outcomes.wait_ms == 48 * 3_600_000
+
+
+@pytest.mark.parametrize(
+    ("wait", "ms"), [("1s", 1_000), ("90m", 5_400_000), ("2d", 172_800_000), ("3650d", 3650 * 86_400_000)]
+)
+def test_a_wait_is_a_number_and_its_unit(write, wait, ms):
+    assert load(write(LATE), [f"outcomes.wait={wait}"], {}).outcomes.wait_ms == ms
+
+
+@pytest.mark.parametrize("wait", ["0s", "48", "1.5h", "-1h", "2 d", "4w", "3651d", "9999999999d", "", "٣h"])
+def test_another_wait_is_refused_with_what_one_may_be(write, wait):
+    (line,) = refusal(write(LATE), [f"outcomes.wait={wait}"])
+    assert line.startswith("--set outcomes.wait: outcomes.wait") and '"48h"' in line
+
+
+def test_all_that_outcomes_of_their_own_need_is_told_at_once(write):
+    lines = refusal(write('[outcomes]\nkind = "topic"\n'))
+    assert [line.split(": ")[1] for line in lines] == [
+        "outcomes.id",
+        "outcomes.label",
+        "outcomes.time",
+        "outcomes.wait",
+        "outcomes.topic",
+    ]
+
+
+@pytest.mark.parametrize(
+    ("given", "key"),
+    [
+        ("message.label=redelivered", "message.label"),
+        ("outcomes.kind=topic", "feed.servers"),
+    ],
+)
+def test_what_does_not_go_with_outcomes_of_their_own_is_refused(write, given, key):
+    (line,) = refusal(write(LATE + 'topic = "late"'), [given])
+    assert f": {key}" in line
+
+
+def test_messages_need_id_and_time_to_meet_their_outcomes(write):
+    lines = refusal(write(LATE.partition("[outcomes]")[1] + LATE.partition("[outcomes]")[2]))
+    assert [line.split(": ")[1] for line in lines] == ["message.id", "message.time"]
+
+
+def test_outcomes_come_in_a_topic_of_their_own(write):
+    topics = 'topic = "late"\n[feed]\nkind = "topic"\nservers = "h:1"\nstart = "earliest"\ntopic = "late"\n'
+    path = write(LATE.replace('"log"', '"topic"') + topics)
+    (line,) = refusal(path)
+    assert "outcomes.topic" in line and "feed.topic too" in line
+    for section in ("scores", "rejects"):
+        (line,) = refusal(path, ["feed.topic=handoffs", f"{section}.topic=late"])
+        assert f"{section}.topic" in line and "outcomes.topic too" in line
+
+
+def test_keys_of_late_outcomes_may_stand_beside_outcomes_in_the_messages(write):
+    settings = load(write(LATE), ["outcomes.kind=inline", "message.label=redelivered"], {})
+    assert settings.message.label == "redelivered"
 
 
 def test_every_error_is_shown_one_a_line_with_place_key_value_and_limits(write):
@@ -439,8 +518,11 @@ COMPANIONS = {
     **dict.fromkeys(("feed.ca_file", "feed.cert_file", "feed.key_file"), CERTIFICATE),
     **dict.fromkeys(("feed.sasl", "feed.username", "feed.password_file"), PASSWORD_FILE),
     "feed.password_variable": {"sasl": "PLAIN", "username": "u"},
+    "outcomes.kind": {"id": "id", "label": "late", "time": "at", "wait": "48h"},
 }
-"""What a key does not go without."""
+"""What a key does not go without, in its section."""
+BESIDE = {"outcomes.kind": {"message": {"id": "id", "time": "at"}}}
+"""And in others."""
 
 
 @pytest.mark.parametrize("key", KEYS.values(), ids=KEYS)
@@ -455,6 +537,7 @@ def test_the_documented_example_loads_and_is_not_the_default(key):
         data["crosses"] = [{key.name: example}]
     else:
         data[key.section] = {**COMPANIONS.get(key.dotted, {}), key.name: example}
+        data |= BESIDE.get(key.dotted, {})
     Settings.model_validate(data)
     assert example != key.default or key.dotted in ("feed.kind", "learner.method")
 
@@ -533,3 +616,23 @@ def test_known_keys_of_kinds_are_those_of_the_models():
 )
 def test_switches_in_the_environment_are_no_settings(name):
     assert load(None, environ={name: "1"}) == Settings().placed_in(Path())
+
+
+# ---- what commands do not do yet ---------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("command", ["replay", "work", "tune", "converge"])
+def test_no_command_takes_outcomes_that_it_would_not_join(write, tmp_path, command):
+    """It would learn nothing, or every message as without an outcome."""
+    fields = '[[fields]]\npath = "note"\nkind = "words"\n[feed]\npaths = "handoffs.jsonl"\n'
+    settings = load(write(LATE + fields), environ={})
+    (tmp_path / "handoffs.jsonl").write_text('{"id": "h1", "at": 0, "note": "dog"}\n', encoding="utf-8")
+    started = {
+        "replay": lambda: replay(settings, tmp_path / "state"),
+        "work": lambda: work(settings, tmp_path / "state"),
+        "tune": lambda: tune(settings, tmp_path / "trials", None),
+        "converge": lambda: converge(settings, None, about={}),
+    }
+    with pytest.raises(BadSettings, match=r'outcomes.kind = "log": this version does not join'):
+        started[command]()
+    assert not (tmp_path / "state").exists()

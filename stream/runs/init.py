@@ -26,6 +26,7 @@ WIDTH = 100
 SECTIONS = {
     "feed": "Where messages come from.",
     "message": "Where the parts of a message stand: dotted paths into its JSON object.",
+    "outcomes": "Outcomes that come late, in a feed of their own. No command joins them yet; leave it so.",
     "space": "The weight space. A change here, or of a field, wants a new model; fields and crosses may be "
     "added to a live one (--accept-settings).",
     "learner": "How weights are learned.",
@@ -51,6 +52,11 @@ EXAMPLES = {
     "feed.sasl": "SCRAM-SHA-512",
     "learner.horizon": 10_000_000,
     "learner.averaging": 10_000_000,
+    "outcomes.topic": "outcomes",
+    "outcomes.id": "id",
+    "outcomes.label": "outcome",
+    "outcomes.time": "at",
+    "outcomes.wait": "48h",
     "state.idle_after": 10_000_000,
     "state.max_live": 20_000_000,
     "worker.metrics_port": 9_464,
@@ -87,6 +93,7 @@ def draft(sample: Path, folder: Path | None = None, doubt: Callable[[str], None]
         _head(sample, read, malformed),
         _section("feed", {"feed.paths": ([_feed_path(sample, folder or Path())], "")}),
         _section("message", {f"message.{name}": (role.path, role.remark) for name, role in roles.items()}),
+        _section("outcomes"),
         _fields(guesses, maps, len(columns) - MOST_PATHS),
         _crosses(guesses),
         _section("space"),

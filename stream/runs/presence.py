@@ -8,11 +8,22 @@ from stream.errors import BadSettings
 from stream.message import Examples
 from stream.settings import Settings
 
-__all__ = ["Presence", "refuse_unlearnable"]
+__all__ = ["Presence", "refuse_late_outcomes", "refuse_unlearnable"]
+
+
+def refuse_late_outcomes(settings: Settings) -> None:
+    """Raises BadSettings where outcomes come in a feed of their own: no command joins them yet."""
+    if settings.outcomes.kind != "inline":
+        raise BadSettings(
+            f'outcomes.kind = "{settings.outcomes.kind}": this version does not join outcomes that come in a '
+            "feed of their own yet. Put them into the messages, name their path in message.label, and set "
+            'outcomes.kind = "inline"'
+        )
 
 
 def refuse_unlearnable(settings: Settings) -> None:
-    """Raises BadSettings where the settings name no outcome or no field."""
+    """Raises BadSettings where the settings name no outcome or no field, or one that is not joined yet."""
+    refuse_late_outcomes(settings)
     if settings.message.label is None:
         raise BadSettings(
             "message.label is not set: without the outcome nothing is learned. Give its path in the settings "

@@ -12,18 +12,22 @@ from pydantic_core import PydanticCustomError
 
 if TYPE_CHECKING:
     from stream.settings.models import Feed, Learner, Quantity, Rejects, Settings
+    from stream.settings.outcome_feed import Outcomes
 
 __all__ = [
     "CONFLICT",
     "START",
     "Problem",
     "dotted_path",
+    "duration",
+    "duration_ms",
     "edges",
     "feed_problems",
     "field_name",
     "is_path_key",
     "learner_problems",
     "number",
+    "outcomes_problems",
     "quantity_problems",
     "refuse",
     "rejects_problems",
@@ -104,6 +108,25 @@ def dotted_path(path: str) -> str:
     return path
 
 
+_UNIT_MS = {"s": 1_000, "m": 60_000, "h": 3_600_000, "d": 86_400_000}
+
+
+def duration(text: str) -> str:
+    """A whole number and its unit."""
+    found = re.fullmatch(r"([0-9]{1,10})([smhd])", text)
+    if found is None or not 1_000 <= int(found[1]) * _UNIT_MS[found[2]] <= 3650 * _UNIT_MS["d"]:
+        raise _refused(
+            'must be a whole number and s, m, h or d for its unit, such as "90m", "48h" or "30d", '
+            'from "1s" to "3650d"'
+        )
+    return text
+
+
+def duration_ms(text: str) -> int:
+    """Milliseconds of what `duration` let pass."""
+    return int(text[:-1]) * _UNIT_MS[text[-1]]
+
+
 def topic_name(name: str) -> str:
     """A name that a broker takes: at most 249 of the letters, digits and signs that it allows."""
     if not re.fullmatch(r"[A-Za-z0-9._-]{1,249}", name) or name in (".", ".."):
@@ -167,6 +190,21 @@ def _sasl_problems(feed: Feed) -> list[Problem]:
     return problems
 
 
+def outcomes_problems(outcomes: Outcomes) -> list[Problem]:
+    """What a feed of outcomes needs; all may stand, unused, beside kind = "inline"."""
+    if outcomes.kind == "inline":
+        return []
+    needed = {
+        "id": "name where an outcome has the id of its message",
+        "label": "name where an outcome has its label",
+        "time": "name where an outcome has its event time",
+        "wait": 'say how long a message waits for its outcome, such as "48h"',
+    }
+    if outcomes.kind == "topic":
+        needed["topic"] = "name the topic of outcomes"
+    return [((key,), f"is missing: {why}") for key, why in needed.items() if getattr(outcomes, key) is None]
+
+
 def quantity_problems(field: Quantity) -> list[Problem]:
     """A number is either cut into bins or scaled."""
     if field.bins and field.scale == "logarithmic":
@@ -224,6 +262,7 @@ def settings_problems(settings: Settings) -> list[Problem]:
         *_slice_problems(settings),
         *_memory_problems(settings),
         *_topic_problems(settings),
+        *_outcome_problems(settings),
     ]
 
 
@@ -281,6 +320,29 @@ def _topic_problems(settings: Settings) -> Iterable[Problem]:
             yield (section, "topic"), "is feed.topic too: the worker would read what it wrote; name another"
     if scores is not None and scores == rejects:
         yield ("scores", "topic"), "is rejects.topic too: scores and dead letters need a topic each"
+
+
+def _outcome_problems(settings: Settings) -> Iterable[Problem]:
+    """What outcomes that come apart ask of the messages, and of their topic."""
+    outcomes, message, feed = settings.outcomes, settings.message, settings.feed
+    if outcomes.kind == "inline":
+        return
+    if message.label is not None:
+        why = f'outcomes.kind = "{outcomes.kind}" takes the label from the outcomes; leave this out'
+        yield ("message", "label"), why
+    if message.id is None:
+        yield ("message", "id"), "is missing: outcomes find their message by its id"
+    if message.time is None:
+        yield ("message", "time"), "is missing: messages wait in event time"
+    if outcomes.kind == "topic":
+        if not feed.servers:
+            yield ("feed", "servers"), "is missing: the topic of outcomes is read from the brokers of [feed]"
+        if feed.kind == "topic" and outcomes.topic == feed.topic:
+            yield ("outcomes", "topic"), "is feed.topic too: outcomes need a topic of their own"
+        written = {"rejects": settings.rejects.topic, "scores": settings.scores.topic}
+        for section, topic in written.items():
+            if topic == outcomes.topic:
+                yield (section, "topic"), "is outcomes.topic too: the worker would read what it wrote"
 
 
 def _listed(names: Iterable[str]) -> str:

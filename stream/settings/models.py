@@ -10,10 +10,6 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 from pydantic import (
-    AfterValidator,
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
     Field,
     PrivateAttr,
     StrictBool,
@@ -22,6 +18,20 @@ from pydantic import (
 )
 
 from stream.settings import checks
+from stream.settings.outcome_feed import Outcomes
+from stream.settings.value_types import (
+    DottedPath,
+    File,
+    Number,
+    Partition,
+    Seconds,
+    Section,
+    Server,
+    Strength,
+    TokenValue,
+    Topic,
+    Whole,
+)
 
 __all__ = [
     "Category",
@@ -32,6 +42,7 @@ __all__ = [
     "ListOf",
     "MessagePaths",
     "Metrics",
+    "Outcomes",
     "Quantity",
     "Rejects",
     "Scores",
@@ -44,32 +55,6 @@ __all__ = [
 
 UNICODE_VERSION = "14.0.0"
 """Unicode version of the tokenizer's tables (`stream/features/unicode_tables`)."""
-
-MOST = 10**15
-"""Upper limit of plain counts: far past any feed, well inside 64 bits."""
-
-TokenValue = Literal["presence", "count", "log_count"]
-Whole = Annotated[int, BeforeValidator(checks.number), Field(le=MOST)]
-Number = Annotated[float, BeforeValidator(checks.number), Field(allow_inf_nan=False)]
-Seconds = Number
-Topic = Annotated[
-    str,
-    AfterValidator(checks.topic_name),
-    Field(json_schema_extra={"allowed": "the name of a topic"}),
-]
-Partition = Annotated[int, BeforeValidator(checks.number), Field(ge=0, le=(1 << 31) - 1)]
-Server = Annotated[str, AfterValidator(checks.server)]
-File = Annotated[str, Field(min_length=1)]
-Strength = Annotated[Number, Field(ge=0, le=1e9)]
-DottedPath = Annotated[
-    str, AfterValidator(checks.dotted_path), Field(json_schema_extra={"allowed": "a dotted path"})
-]
-
-
-class Section(BaseModel):
-    """Unknown keys are errors; nothing changes after loading."""
-
-    model_config = ConfigDict(extra="forbid", frozen=True)
 
 
 class Feed(Section):
@@ -440,6 +425,7 @@ class Settings(Section):
 
     feed: Feed = Feed()
     message: MessagePaths = MessagePaths()
+    outcomes: Outcomes = Outcomes()
     fields: tuple[FieldSettings, ...] = ()
     crosses: tuple[Cross, ...] = ()
     space: Space = Space()

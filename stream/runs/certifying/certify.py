@@ -11,6 +11,7 @@ from stream.errors import BadData, BadSettings, UsageError
 from stream.runs.certifying.log import Progress
 from stream.runs.certifying.passes import Findings, examine
 from stream.runs.certifying.worst import Worst
+from stream.runs.presence import refuse_late_outcomes
 from stream.runs.scoring import must_match, settings_of
 from stream.settings import Settings
 from stream.settings.models import Learner
@@ -93,6 +94,7 @@ def certify(
         )
     reading = settings or settings_of(snapshot)
     must_match(reading, snapshot)
+    refuse_late_outcomes(reading)
     if reading.message.label is None:
         raise BadSettings("message.label names no outcome: set it, a batch fit needs labels")
     per_example, on_sum = (strength, 0.0) if strength is not None else strength_in_force(snapshot)

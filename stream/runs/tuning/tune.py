@@ -13,6 +13,7 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.errors import BadData, BadSettings
+from stream.runs.presence import refuse_late_outcomes
 from stream.runs.tuning.choosing import Rule
 from stream.runs.tuning.document import Tuned, document
 from stream.runs.tuning.excess import expected_excess
@@ -65,6 +66,7 @@ def tune(
     share done of the present stage and its name; `say` what a person should know. Returns the document
     of docs/tuning.md. Raises what a replay raises; BadSettings and BadData for what cannot be tuned.
     """
+    refuse_late_outcomes(settings)
     if settings.feed.kind != "log":
         raise BadSettings('tune reads logs: set feed.kind = "log" with feed.paths')
     if job.forward_ms is not None and settings.message.time is None:
