@@ -72,6 +72,7 @@ class WaitingStore:
         self._gathering = Segment()
         self._dirty: set[int] = set()
         self._scores: dict[int, npt.NDArray[np.float64]] = {}  # what is not written yet
+        self._read_scores: tuple[int, npt.NDArray[np.float64]] = (-1, np.empty(0))
         self._uncommitted = 0
         self._floor = self.first
         self._fates = np.zeros(max(1 << 16, 2 * (self._next - self.first) * ROWS), np.uint8)
@@ -149,7 +150,11 @@ class WaitingStore:
         """The score of a row that was not settled when the oldest kept moment was; NaN without one."""
         segment, at = divmod(handle, ROWS)
         scores = self._scores.get(segment)
-        return float((self._written_scores(segment) if scores is None else scores)[at])
+        if scores is not None:
+            return float(scores[at])
+        if self._read_scores[0] != segment:  # rows of a segment are mostly asked for together
+            self._read_scores = segment, self._written_scores(segment)
+        return float(self._read_scores[1][at])
 
     def _written_scores(self, segment: int) -> npt.NDArray[np.float64]:
         found = self._transaction.get(NUMBER.pack(segment), db=self._tables[b"scores"])
@@ -209,6 +214,7 @@ class WaitingStore:
                 value = _summed(scores.astype("<f8").tobytes())
                 self._transaction.put(NUMBER.pack(segment), value, db=self._tables[b"scores"])
             self._scores.clear()
+            self._read_scores = (-1, np.empty(0))
             said = json.dumps({"first": self.first, "next": self._next, "settled": self._settled})
             moments = self._tables[b"moments"]
             self._transaction.put(NUMBER.pack(moment), _summed(said.encode()), db=moments, append=True)
