@@ -109,12 +109,18 @@ def soak(
     broker.make_topic(f"{topic}.scores", 1, {**small, "retention.bytes": str(256 << 20)})
     port = _write_settings(broker, topic, folder, messages, scores)
     with ExitStack() as parts:
-        shared = parts.enter_context(_sender(broker, topic, messages, most_per_s))
         process = parts.enter_context(_worker([*worker, "--json"], folder))
         watch = _Watch(broker, topic, folder, process.pid, port, every_s, seen)
-        while shared.learned.value < messages:
+
+        def look() -> int:
             assert process.poll() is None, f"the worker ended: {(folder / 'log').read_text()[-3000:]}"
-            shared.learned.value = watch.look()
+            return watch.look()
+
+        while not watch.samples:  # what piled up before would be learned between two looks
+            look()
+        shared = parts.enter_context(_sender(broker, topic, messages, most_per_s))
+        while shared.learned.value < messages:
+            shared.learned.value = look()
         while watch.samples[-1].lag != 0:
             watch.look()
         began = time.monotonic()
