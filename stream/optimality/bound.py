@@ -20,6 +20,7 @@ __all__ = [
     "Bound",
     "DualPoint",
     "best_intercept",
+    "entropies",
     "log_losses",
     "lower_bound",
     "probabilities",
@@ -129,11 +130,11 @@ def lower_bound(point: DualPoint, strength: float) -> Bound:
         for _ in range(HALVINGS):
             middle = (low + high) / 2
             low, high = (middle, high) if slope(middle) > 0.0 else (low, middle)
-    return Bound(float((weights * _entropy(u * high)).sum()) / total, high)
+    return Bound(float((weights * entropies(u * high)).sum()) / total, high)
 
 
-def _entropy(u: Floats) -> Floats:
-    """-u ln u - (1 - u) ln(1 - u), 0 at both ends."""
+def entropies(u: Floats) -> Floats:
+    """-u ln u - (1 - u) ln(1 - u), nats, 0 at both ends."""
     inside = np.clip(u, 1e-300, 1.0)
     rest = np.clip(1.0 - u, 1e-300, 1.0)
     return -u * np.log(inside) - (1.0 - u) * np.log(rest)

@@ -33,6 +33,7 @@ NEAR = 0.97
 """A zero weight takes part where its gradient is beyond this share of the strength."""
 STEEP = 1e-18
 CAREFUL = 0.1
+LEAST_CAUTION = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -267,7 +268,9 @@ def _next_caution(caution: float, size: float) -> float:
     curvature left there, and steps run away. A tenth of it where whole steps help."""
     if size < CAREFUL:
         return 1.0
-    return caution / 10 if size == 1.0 and caution > 1e-6 else caution if size < 1.0 else 0.0
+    if size < 1.0:
+        return caution
+    return caution / 10 if caution > LEAST_CAUTION else 0.0
 
 
 def _along(

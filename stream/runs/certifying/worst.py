@@ -49,8 +49,7 @@ class Watched:
         self, addresses: npt.NDArray[np.uint64], gradient: Floats, weights: Weights, strength: float
     ) -> None:
         every = np.union1d(addresses, weights.addresses)
-        here, slope = np.zeros(len(every)), np.zeros(len(every))
-        here[np.searchsorted(every, weights.addresses)] = weights.values
+        here, slope = weights.at(every), np.zeros(len(every))
         slope[np.searchsorted(every, addresses)] = gradient
         seem = np.argsort(-violations(here, slope, strength), kind="stable")[:CANDIDATES]
         chosen = np.sort(seem)

@@ -51,11 +51,7 @@ class Held:
 
     def dense(self, weights: Weights) -> npt.NDArray[np.float64]:
         """float64[columns] of weights that were learned from these messages."""
-        order = np.argsort(self.addresses)
-        at = order[np.searchsorted(self.addresses, weights.addresses, sorter=order)]
-        found = np.zeros(len(self.addresses))
-        found[at] = weights.values
-        return found
+        return weights.at(self.addresses)
 
 
 def hold(settings: Settings, messages: int, memory_bytes: int, tell: Tell) -> Held:
@@ -75,7 +71,7 @@ def hold(settings: Settings, messages: int, memory_bytes: int, tell: Tell) -> He
             if reading.entries * ENTRY_BYTES > memory_bytes:
                 raise CannotCreate(
                     f"batch fits hold the log in memory: {reading.entries:,} tokens of {reading.messages:,} "
-                    f"messages so far take more than {memory_bytes / 1e6:,.0f} MB. Allow more (--memory), or "
+                    f"messages so far take more than {memory_bytes / 1e6:,.3g} MB. Allow more (--memory), or "
                     "take fewer messages"
                 )
             tell(reading.messages / messages, "reading")

@@ -9,7 +9,14 @@ import numpy as np
 import numpy.typing as npt
 
 from stream.batch_fits import Rows
-from stream.optimality.bound import DualPoint, best_intercept, log_losses, lower_bound, residuals_of
+from stream.optimality.bound import (
+    DualPoint,
+    best_intercept,
+    entropies,
+    log_losses,
+    lower_bound,
+    residuals_of,
+)
 from stream.runs.converging.held import Held
 from stream.runs.converging.job import Known
 from stream.runs.tuning.truth import Planted, Truth, planted_at
@@ -68,13 +75,6 @@ def excess(rows: Rows, weights: Floats, intercept: float, shares: Floats) -> flo
     return float(
         np.average(np.logaddexp(0.0, margins) - shares * margins - entropies(shares), weights=rows.weights)
     )
-
-
-def entropies(shares: Floats) -> Floats:
-    """Of yes/no outcomes with these shares of yes, nats."""
-    safe = np.clip(shares, 1e-300, 1.0)
-    rest = np.clip(1.0 - shares, 1e-300, 1.0)
-    return -shares * np.log(safe) - (1.0 - shares) * np.log(rest)
 
 
 def with_best_intercept(rows: Rows, weights: Floats, intercept: float) -> float:
