@@ -128,17 +128,17 @@ def test_on_a_learned_log_the_bound_tells_something(courier):
     assert found.findings.gap < (found.findings.objective - found.findings.plain_bound) / 5
 
 
-@pytest.mark.parametrize("strength", [3e-3, 3e-4])
+@pytest.mark.parametrize("strength", [1e-3, 3e-4])
 def test_a_small_sample_of_the_rows_tells_much_too(courier, monkeypatch, strength):
     settings, path, snapshot = courier
     problem = Problem(settings, path)
     w = np.zeros(len(problem.addresses))
     w[np.searchsorted(problem.addresses, snapshot.weights.addresses)] = snapshot.weights.values
     below = problem.objective(w, strength) - problem.objective(problem.optimum(strength, w), strength)
-    monkeypatch.setattr(passes, "SAMPLE_ROWS", 1_000)
-    monkeypatch.setattr(passes, "KEPT_ENTRIES", 30_000)
+    monkeypatch.setattr(passes, "SAMPLE_ROWS", 2_000)
+    monkeypatch.setattr(passes, "KEPT_ENTRIES", 40_000)
     found = certify(snapshot, [str(path)], strength=strength).findings
-    assert below <= found.gap <= 30 * below
+    assert below <= found.gap <= 5 * below  # 9 and more without nearby weights, or without moving residuals
 
 
 def test_a_sample_is_even_and_within_its_size():
